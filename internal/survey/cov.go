@@ -183,27 +183,36 @@ func (m *block) set(i, j int, v float64) {
 // that is not yet rounding: some tens of units in the last place.
 const minPivot = 1e-14
 
-// inverse inverts the block by its Cholesky factor. A block that is not
-// positive definite gives errNotPSD or errSingular, with the eigenvalues.
-func (m *block) inverse() (inv [6][6]float64, err error) {
-	n := m.n
-	var l, li [6][6]float64
-	for j := range n {
+// cholesky computes the lower factor l of the block and reports whether the
+// block is positive definite.
+func (m *block) cholesky(l *[6][6]float64) bool {
+	for j := range m.n {
 		d := m.a[j][j]
 		for k := range j {
 			d -= l[j][k] * l[j][k]
 		}
 		if !(d > minPivot) {
-			return inv, m.diagnose()
+			return false
 		}
 		l[j][j] = math.Sqrt(d)
-		for i := j + 1; i < n; i++ {
+		for i := j + 1; i < m.n; i++ {
 			s := m.a[i][j]
 			for k := range j {
 				s -= l[i][k] * l[j][k]
 			}
 			l[i][j] = s / l[j][j]
 		}
+	}
+	return true
+}
+
+// inverse inverts the block. A block that is not positive definite gives
+// errNotPSD or errSingular, with the eigenvalues.
+func (m *block) inverse() (inv [6][6]float64, err error) {
+	n := m.n
+	var l, li [6][6]float64
+	if !m.cholesky(&l) {
+		return inv, m.diagnose()
 	}
 	// li is the inverse of l, and inv = li' li.
 	for j := range n {
@@ -228,6 +237,7 @@ func (m *block) inverse() (inv [6][6]float64, err error) {
 	return inv, nil
 }
 
+// diagnose says in what way the block is not positive definite.
 func (m *block) diagnose() error {
 	sym := mat.NewSymDense(m.n, nil)
 	for i := range m.n {

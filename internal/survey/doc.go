@@ -49,9 +49,11 @@ const (
 	maxYAMLBytes  = 256 << 10
 	maxRobots     = 1024
 	maxSessions   = 1024 // of one robot
-	maxText       = 128  // bytes of a name or source
-	maxRobotID    = 32   // characters
-	maxTieID      = 128  // characters
+	maxMounts     = 256  // on one robot
+	maxNotes      = 64 << 10
+	maxText       = 128 // bytes of a name or source
+	maxRobotID    = 32  // characters
+	maxTieID      = 128 // characters
 
 	maxMetres = 1e9   // coordinate, absolute
 	minSigma  = 1e-12 // m or rad

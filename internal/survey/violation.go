@@ -23,7 +23,11 @@ func (v Violation) String() string {
 	}
 	b.WriteString(": ")
 	if v.Column != "" {
-		b.WriteString("column " + v.Column + ": ")
+		kind := "column "
+		if v.File == metaName {
+			kind = "key "
+		}
+		b.WriteString(kind + v.Column + ": ")
 	}
 	b.WriteString("found " + v.Found + ", expected " + v.Expected)
 	return b.String()

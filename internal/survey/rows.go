@@ -1,0 +1,160 @@
+package survey
+
+import (
+	"fmt"
+	"math"
+	"strconv"
+)
+
+// The columns of each table. The number of a column is its place in its list;
+// the pose and the uncertainty stand together and in order, so that they can be
+// read from the number of their first.
+var (
+	poseColumns  = []column{{name: "x_m"}, {name: "y_m"}, {name: "z_m"}, {name: "qx"}, {name: "qy"}, {name: "qz"}, {name: "qw"}}
+	sigmaColumns = []column{{name: "sx_m"}, {name: "sy_m"}, {name: "sz_m"}, {name: "srx_rad"}, {name: "sry_rad"}, {name: "srz_rad"}}
+	corrColumns  = correlationColumns()
+
+	keyframeColumns = columns([]column{{name: "session"}, {name: "id"}, {name: "stamp_ns"}}, poseColumns)
+	relativeColumns = columns([]column{{name: "session"}, {name: "from"}, {name: "to"}, {name: "kind"}},
+		poseColumns, sigmaColumns, corrColumns)
+	tieColumns = columns([]column{{name: "id"}, {name: "from_robot"}, {name: "from_session"}, {name: "from_key"},
+		{name: "to_robot"}, {name: "to_session"}, {name: "to_key"}, {name: "to_stamp_ns", optional: true}, {name: "kind"}},
+		poseColumns, sigmaColumns, corrColumns, []column{{name: "source", optional: true}, {name: "stamp_ns", optional: true}})
+	truthColumns = columns([]column{{name: "robot"}, {name: "session"}, {name: "key"}, {name: "stamp_ns", optional: true}}, poseColumns)
+)
+
+const (
+	keyframeSession, keyframeID, keyframeStamp, keyframePose = 0, 1, 2, 3
+
+	relativeSession, relativeFrom, relativeTo, relativeKind, relativePose = 0, 1, 2, 3, 4
+
+	relativeCov = relativePose + 7
+
+	tieID, tieFromRobot, tieFromSession, tieFromKey           = 0, 1, 2, 3
+	tieToRobot, tieToSession, tieToKey, tieToStamp, tieKind   = 4, 5, 6, 7, 8
+	tiePose, tieCov, tieSource, tieStamp                      = 9, 16, 37, 38
+	truthRobot, truthSession, truthKey, truthStamp, truthPose = 0, 1, 2, 3, 4
+)
+
+func columns(parts ...[]column) []column {
+	var all []column
+	for _, p := range parts {
+		all = append(all, p...)
+	}
+	return all
+}
+
+func correlationColumns() []column {
+	var all []column
+	for i := range 6 {
+		for j := i + 1; j < 6; j++ {
+			all = append(all, column{name: "c_" + componentNames[i] + "_" + componentNames[j], optional: true})
+		}
+	}
+	return all
+}
+
+// pose reads the seven columns from c on. The quaternion must be unit within
+// quatTol and is returned as it stands.
+func (t *table) pose(c, dim int) (p Pose) {
+	for i := range 3 {
+		v, ok := t.float(c + i)
+		if ok && math.Abs(v) > maxMetres {
+			t.faultAt(c+i, strconv.FormatFloat(v, 'g', -1, 64), fmt.Sprintf("at most %g m either way", float64(maxMetres)))
+		}
+		p.T[i] = v
+	}
+	whole := true
+	for i := range 4 {
+		v, ok := t.float(c + 3 + i)
+		p.Q[i] = v
+		whole = whole && ok
+	}
+	if whole {
+		if norm := quatNorm(p.Q); !(math.Abs(norm-1) <= quatTol) {
+			t.fault("qx..qw", fmt.Sprintf("a quaternion of norm %.9g", norm), fmt.Sprintf("1 within %g", quatTol))
+		}
+	}
+	if dim == 2 && !p.Planar() {
+		for i, v := range [3]float64{p.T[2], p.Q[0], p.Q[1]} {
+			if v != 0 {
+				t.faultAt(c+2+i, strconv.FormatFloat(v, 'g', -1, 64), "0 in a survey of dimension 2")
+			}
+		}
+	}
+	return p
+}
+
+func quatNorm(q [4]float64) float64 {
+	return math.Sqrt(q[0]*q[0] + q[1]*q[1] + q[2]*q[2] + q[3]*q[3])
+}
+
+// cov reads the six sigmas and fifteen correlations from column c on.
+func (t *table) cov(c int) (v Cov) {
+	sound := true
+	for i := range 6 {
+		f := t.text(c + i)
+		s, ok := parseFloat(f)
+		switch {
+		case string(f) == "inf" || string(f) == "+inf" || string(f) == "Inf" || string(f) == "+Inf":
+			s = math.Inf(1)
+		case !ok || s < minSigma || s > maxSigma:
+			t.faultAt(c+i, quote(string(f)), fmt.Sprintf("a number from %g to %g, or inf for a component that was not measured", minSigma, maxSigma))
+			sound = false
+		}
+		v.Sigma[i] = s
+	}
+	any := false
+	k := 0
+	for i := range 6 {
+		for j := i + 1; j < 6; j, k = j+1, k+1 {
+			if !t.has(c + 6 + k) {
+				continue
+			}
+			r, ok := t.float(c + 6 + k)
+			switch {
+			case !ok:
+				sound = false
+			case math.Abs(r) > 1:
+				t.faultAt(c+6+k, strconv.FormatFloat(r, 'g', -1, 64), "a correlation from -1 to 1")
+				sound = false
+			case r != 0 && (math.IsInf(v.Sigma[i], 1) || math.IsInf(v.Sigma[j], 1)):
+				t.faultAt(c+6+k, strconv.FormatFloat(r, 'g', -1, 64), "0 where a sigma is inf")
+				sound = false
+			}
+			v.Corr[k] = r
+			any = any || r != 0
+		}
+	}
+	if sound && any {
+		if err := v.checkCorrelation(); err != nil {
+			t.fault("c_x_y..c_ry_rz", err.Error(), "a positive definite correlation matrix")
+		}
+	}
+	return v
+}
+
+// checkCorrelation returns an error when the correlation matrix of the measured
+// components is not positive definite. Sigmas and correlations are within range.
+func (c *Cov) checkCorrelation() error {
+	var m block
+	for i, s := range c.Sigma {
+		if !math.IsInf(s, 1) {
+			m.use(i)
+		}
+	}
+	k := 0
+	for i := range 6 {
+		for j := i + 1; j < 6; j++ {
+			if c.Corr[k] != 0 {
+				m.set(i, j, c.Corr[k])
+			}
+			k++
+		}
+	}
+	var l [6][6]float64
+	if !m.cholesky(&l) {
+		return fmt.Errorf("a correlation matrix that is %w", m.diagnose())
+	}
+	return nil
+}

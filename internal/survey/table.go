@@ -1,0 +1,368 @@
+package survey
+
+import (
+	"bufio"
+	"bytes"
+	"compress/gzip"
+	"errors"
+	"fmt"
+	"io"
+	"io/fs"
+	"math"
+	"os"
+	"path/filepath"
+	"strconv"
+	"strings"
+)
+
+// column is one that a table may have. Its place in the list of columns handed
+// to openTable is the number by which its values are asked for.
+type column struct {
+	name     string
+	optional bool
+}
+
+// table reads a CSV file row by row. One row is one line; a field may be quoted
+// but holds no line end. Every complaint goes to the sink with file and line.
+type table struct {
+	name    string
+	sink    *sink
+	columns []column
+	at      []int // of each column: its place in the line, -1 when absent
+
+	file *os.File
+	gz   *gzip.Reader
+	r    *bufio.Reader
+	left int64 // bytes that may still be read
+	line int
+	rows int
+
+	width  int // fields in the header
+	fields [][]byte
+	bad    bool // something is wrong with the current row
+	lost   bool // a row could not be told apart into fields, or the table not be read to its end
+}
+
+// openTable opens root/name or root/name.gz and reads its header line. It
+// returns nil and no error when there is nothing to read rows from: the file
+// does not exist and is optional, or the sink has been told what is wrong.
+func openTable(root, name string, columns []column, optional bool, s *sink) (*table, error) {
+	plain := filepath.Join(root, filepath.FromSlash(name))
+	hasPlain, err := isFile(plain)
+	if err != nil {
+		return nil, err
+	}
+	hasGz, err := isFile(plain + ".gz")
+	if err != nil {
+		return nil, err
+	}
+	switch {
+	case hasPlain && hasGz:
+		s.add(Violation{File: name, Found: "it and " + name + ".gz", Expected: "one of the two"})
+		return nil, nil
+	case !hasPlain && !hasGz:
+		if !optional {
+			s.add(Violation{File: name, Found: "no such file", Expected: "this table, or " + name + ".gz"})
+		}
+		return nil, nil
+	case hasGz:
+		plain += ".gz"
+		name += ".gz"
+	}
+	f, err := os.Open(plain)
+	if err != nil {
+		return nil, fmt.Errorf("survey: %w", err)
+	}
+	t := &table{name: name, sink: s, columns: columns, file: f, left: maxTableBytes}
+	if hasGz {
+		t.gz, err = gzip.NewReader(bufio.NewReaderSize(f, 64<<10))
+		if err != nil {
+			t.close()
+			return nil, t.ioError(err)
+		}
+		t.r = bufio.NewReaderSize(t.gz, maxLineBytes)
+	} else {
+		t.r = bufio.NewReaderSize(f, maxLineBytes)
+	}
+	if ok, err := t.header(); err != nil || !ok {
+		t.close()
+		return nil, err
+	}
+	return t, nil
+}
+
+func isFile(path string) (bool, error) {
+	info, err := os.Stat(path)
+	if errors.Is(err, fs.ErrNotExist) {
+		return false, nil
+	}
+	if err != nil {
+		return false, fmt.Errorf("survey: %w", err)
+	}
+	if !info.Mode().IsRegular() {
+		return false, fmt.Errorf("survey: %s is not a regular file", path)
+	}
+	return true, nil
+}
+
+func (t *table) close() { t.file.Close() }
+
+// ioError turns damaged gzip data into a violation and returns any other error.
+func (t *table) ioError(err error) error {
+	if strings.HasSuffix(t.name, ".gz") {
+		var pathErr *fs.PathError
+		if !errors.As(err, &pathErr) {
+			t.lost = true
+			t.fault("", "damaged gzip data ("+err.Error()+")", "a complete gzip file")
+			return nil
+		}
+	}
+	return fmt.Errorf("survey: %s: %w", t.name, err)
+}
+
+// fault reports a violation in the current line.
+func (t *table) fault(column, found, expected string) {
+	t.bad = true
+	t.sink.add(Violation{File: t.name, Line: t.line, Column: column, Found: found, Expected: expected})
+}
+
+// faultAt reports a violation in column c of the current row.
+func (t *table) faultAt(c int, found, expected string) { t.fault(t.columns[c].name, found, expected) }
+
+// readLine returns the next line without its end, nil at the end of the table
+// or when the rest cannot be read.
+func (t *table) readLine() ([]byte, error) {
+	t.line++
+	b, err := t.r.ReadSlice('\n')
+	t.left -= int64(len(b))
+	switch {
+	case t.left < 0:
+		t.lost = true
+		t.fault("", fmt.Sprintf("more than %d bytes", maxTableBytes), "a smaller table")
+		return nil, nil
+	case err == nil:
+		b = b[:len(b)-1]
+	case err == io.EOF:
+		if len(b) == 0 {
+			return nil, nil
+		}
+		t.sink.warn("%s:%d: the last line has no line end: was the file cut short?", t.name, t.line)
+	case err == bufio.ErrBufferFull:
+		t.lost = true
+		t.fault("", fmt.Sprintf("a line of more than %d bytes", maxLineBytes), "shorter lines")
+		return nil, nil
+	default:
+		return nil, t.ioError(err)
+	}
+	if n := len(b); n > 0 && b[n-1] == '\r' {
+		b = b[:n-1]
+	}
+	if b == nil {
+		b = []byte{}
+	}
+	return b, nil
+}
+
+// header reads the header line and finds the columns in it.
+func (t *table) header() (bool, error) {
+	line, err := t.readLine()
+	if err != nil {
+		return false, err
+	}
+	if line == nil {
+		if !t.bad {
+			t.fault("", "an empty file", "a header line")
+		}
+		return false, nil
+	}
+	line = bytes.TrimPrefix(line, []byte("\xef\xbb\xbf"))
+	if !t.split(line) {
+		return false, nil
+	}
+	t.width = len(t.fields)
+	t.at = make([]int, len(t.columns))
+	number := make(map[string]int, len(t.columns))
+	for c, col := range t.columns {
+		t.at[c] = -1
+		number[col.name] = c
+	}
+	var unknown []string
+	for i, f := range t.fields {
+		c, known := number[string(f)]
+		switch {
+		case !known:
+			unknown = append(unknown, quote(string(f)))
+		case t.at[c] >= 0:
+			t.faultAt(c, "it a second time", "each column once")
+		default:
+			t.at[c] = i
+		}
+	}
+	for c, col := range t.columns {
+		if t.at[c] < 0 && !col.optional {
+			t.faultAt(c, "no such column", "it in the header line")
+		}
+	}
+	if len(unknown) > 0 {
+		const most = 20
+		more := ""
+		if len(unknown) > most {
+			more = fmt.Sprintf(" and %d more", len(unknown)-most)
+			unknown = unknown[:most]
+		}
+		t.sink.warn("%s: not read, unknown column: %s%s", t.name, strings.Join(unknown, ", "), more)
+	}
+	return !t.bad, nil
+}
+
+// has reports whether the table has column c.
+func (t *table) has(c int) bool { return t.at[c] >= 0 }
+
+// next goes to the next row whose fields can be told apart. Empty lines are
+// passed over.
+func (t *table) next() (bool, error) {
+	for {
+		t.bad = false
+		line, err := t.readLine()
+		if line == nil || err != nil {
+			return false, err
+		}
+		if len(line) == 0 {
+			continue
+		}
+		if t.rows++; t.rows > maxTableRows {
+			t.lost = true
+			t.fault("", fmt.Sprintf("more than %d rows", maxTableRows), "a smaller table")
+			return false, nil
+		}
+		if !t.split(line) {
+			t.lost = true
+			continue
+		}
+		if len(t.fields) != t.width {
+			t.lost = true
+			t.fault("", fmt.Sprintf("%d fields", len(t.fields)), fmt.Sprintf("%d as in the header line", t.width))
+			continue
+		}
+		return true, nil
+	}
+}
+
+// split cuts the line into t.fields, in place.
+func (t *table) split(line []byte) bool {
+	t.fields = t.fields[:0]
+	for {
+		if len(line) > 0 && line[0] == '"' {
+			field, rest, ok := unquote(line)
+			if !ok {
+				t.fault("", "a quoted field that does not end, or goes on after its quote", `quotes around the whole field, "" for a quote in it`)
+				return false
+			}
+			t.fields = append(t.fields, field)
+			if rest == nil {
+				return true
+			}
+			line = rest
+			continue
+		}
+		i := bytes.IndexByte(line, ',')
+		if i < 0 {
+			t.fields = append(t.fields, trim(line))
+			return true
+		}
+		t.fields = append(t.fields, trim(line[:i]))
+		line = line[i+1:]
+	}
+}
+
+// unquote reads the quoted field at the start of line. The rest begins behind
+// the comma that follows and is nil at the end of the line.
+func unquote(line []byte) (field, rest []byte, ok bool) {
+	out := line[1:1]
+	for i := 1; i < len(line); i++ {
+		if line[i] != '"' {
+			out = append(out, line[i])
+			continue
+		}
+		if i+1 < len(line) && line[i+1] == '"' {
+			out = append(out, '"')
+			i++
+			continue
+		}
+		if i+1 == len(line) {
+			return out, nil, true
+		}
+		return out, line[i+2:], line[i+1] == ','
+	}
+	return nil, nil, false
+}
+
+// trim takes the blanks off both ends of a field.
+func trim(f []byte) []byte {
+	for len(f) > 0 && f[0] == ' ' {
+		f = f[1:]
+	}
+	for len(f) > 0 && f[len(f)-1] == ' ' {
+		f = f[:len(f)-1]
+	}
+	return f
+}
+
+// text returns the field in column c, "" when the table has no such column. It
+// is valid until the next row.
+func (t *table) text(c int) []byte {
+	if i := t.at[c]; i >= 0 {
+		return t.fields[i]
+	}
+	return nil
+}
+
+// int64 returns the integer in column c and whether it is one.
+func (t *table) int64(c int) (int64, bool) {
+	v, err := strconv.ParseInt(string(t.text(c)), 10, 64)
+	if err != nil {
+		t.faultAt(c, quote(string(t.text(c))), "an integer of 64 bits")
+	}
+	return v, err == nil
+}
+
+// stamp returns the integer in column c, which may be empty or absent.
+func (t *table) stamp(c int) (ns int64, has bool) {
+	if len(t.text(c)) == 0 {
+		return 0, false
+	}
+	return t.int64(c)
+}
+
+// session returns the session number in column c and whether it is one.
+func (t *table) session(c int) (uint32, bool) {
+	v, err := strconv.ParseUint(string(t.text(c)), 10, 32)
+	if err != nil {
+		t.faultAt(c, quote(string(t.text(c))), "an integer from 0 to 4294967295")
+	}
+	return uint32(v), err == nil
+}
+
+// float returns the number in column c and whether it is one: decimal and
+// finite.
+func (t *table) float(c int) (float64, bool) {
+	f := t.text(c)
+	v, ok := parseFloat(f)
+	if !ok {
+		t.faultAt(c, quote(string(f)), "a finite decimal number")
+	}
+	return v, ok
+}
+
+func parseFloat(f []byte) (float64, bool) {
+	if len(f) == 1 && '0' <= f[0] && f[0] <= '9' { // most fields of most tables
+		return float64(f[0] - '0'), true
+	}
+	for _, b := range f {
+		if ('0' > b || b > '9') && b != '.' && b != '-' && b != '+' && b != 'e' && b != 'E' {
+			return 0, false
+		}
+	}
+	v, err := strconv.ParseFloat(string(f), 64)
+	return v, err == nil && !math.IsInf(v, 0)
+}

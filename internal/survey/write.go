@@ -1,0 +1,175 @@
+package survey
+
+import (
+	"errors"
+	"fmt"
+	"io/fs"
+	"os"
+	"path/filepath"
+	"reflect"
+	"strings"
+)
+
+// Write writes s to the folder dir, which is made or, when it holds a survey,
+// replaced with all its results. The same survey gives the same bytes.
+//
+// The folder is written beside dir under a hidden name, read back, and only
+// then put in place, so dir holds the whole survey or what it held before. A
+// survey that Read would refuse is not written: the error is *Violations and
+// names the lines as they would have stood. Write refuses a dir that holds
+// anything else than a survey, or parts of one that it does not write, such as
+// rulings.csv.
+func Write(dir string, s *Survey) error {
+	if err := s.checkNames(); err != nil {
+		return err
+	}
+	if err := replaceable(dir); err != nil {
+		return err
+	}
+	dir = filepath.Clean(dir)
+	if err := os.MkdirAll(filepath.Dir(dir), 0o755); err != nil {
+		return fmt.Errorf("survey: %w", err)
+	}
+	tmp, err := os.MkdirTemp(filepath.Dir(dir), "."+filepath.Base(dir)+"-")
+	if err != nil {
+		return fmt.Errorf("survey: %w", err)
+	}
+	defer os.RemoveAll(tmp)
+	written := filepath.Join(tmp, "new")
+	if err := writeAll(written, s); err != nil {
+		return err
+	}
+	back, err := Read(written)
+	if err != nil {
+		return err
+	}
+	if !reflect.DeepEqual(back.Meta, s.Meta) {
+		return fmt.Errorf("survey: %s does not read back to what was written; are all texts printable?", metaName)
+	}
+	// Two renames: the old folder goes to where RemoveAll finds it. Should the
+	// second fail, the old one returns.
+	old := filepath.Join(tmp, "old")
+	err = os.Rename(dir, old)
+	if err != nil && !errors.Is(err, fs.ErrNotExist) {
+		return fmt.Errorf("survey: %w", err)
+	}
+	had := err == nil
+	if err := os.Rename(written, dir); err != nil {
+		if had {
+			err = errors.Join(err, os.Rename(old, dir))
+		}
+		return fmt.Errorf("survey: %w", err)
+	}
+	return nil
+}
+
+// checkNames checks what has to be right before anything can be written: the
+// meta data, and that Robots are those of the meta data in the same order.
+func (s *Survey) checkNames() error {
+	var bad sink
+	report := func(path, found, expected string) {
+		bad.add(Violation{File: metaName, Column: path, Found: found, Expected: expected})
+	}
+	s.Meta.check(report)
+	if len(s.Robots) != len(s.Meta.Robots) {
+		report("robots", fmt.Sprintf("%d robots listed, %d with data", len(s.Meta.Robots), len(s.Robots)), "the same robots in the same order")
+		return bad.err()
+	}
+	for i := range s.Robots {
+		if id := s.Robots[i].ID; id != s.Meta.Robots[i].ID {
+			report(fmt.Sprintf("robots[%d].id", i), fmt.Sprintf("%q listed, %q with data", s.Meta.Robots[i].ID, id), "the same robots in the same order")
+		}
+	}
+	return bad.err()
+}
+
+// replaceable returns an error unless dir is absent, empty, or a survey folder
+// with nothing in it that Write would not write again or that is not computed
+// from what it writes.
+func replaceable(dir string) error {
+	info, err := os.Stat(dir)
+	if errors.Is(err, fs.ErrNotExist) {
+		return nil
+	}
+	if err != nil {
+		return fmt.Errorf("survey: %w", err)
+	}
+	if !info.IsDir() {
+		return fmt.Errorf("survey: %s is a file, expected a folder to write to", dir)
+	}
+	entries, err := os.ReadDir(dir)
+	if err != nil {
+		return fmt.Errorf("survey: %w", err)
+	}
+	if len(entries) == 0 {
+		return nil
+	}
+	if ok, err := isFile(filepath.Join(dir, metaName)); err != nil {
+		return err
+	} else if !ok {
+		return fmt.Errorf("survey: %s is not empty and holds no %s, expected a new or empty folder or a survey", dir, metaName)
+	}
+	refuse := func(name string) error {
+		return fmt.Errorf("survey: %s holds %s, which would be lost, expected a survey without it or another folder", dir, name)
+	}
+	for _, e := range entries {
+		switch strings.TrimSuffix(e.Name(), ".gz") {
+		case metaName, robotsName, tiesName, truthName, resultsName:
+		default:
+			return refuse(e.Name())
+		}
+	}
+	robots, err := os.ReadDir(filepath.Join(dir, robotsName))
+	if err != nil && !errors.Is(err, fs.ErrNotExist) {
+		return fmt.Errorf("survey: %w", err)
+	}
+	for _, robot := range robots {
+		files, err := os.ReadDir(filepath.Join(dir, robotsName, robot.Name()))
+		if err != nil {
+			return fmt.Errorf("survey: %w", err)
+		}
+		for _, f := range files {
+			switch strings.TrimSuffix(f.Name(), ".gz") {
+			case keyframesName, relativeName:
+			default:
+				return refuse(robotsName + "/" + robot.Name() + "/" + f.Name())
+			}
+		}
+	}
+	return nil
+}
+
+// writeAll writes every file of s into the new folder dir.
+func writeAll(dir string, s *Survey) error {
+	yaml, err := encodeMeta(&s.Meta)
+	if err != nil {
+		return err
+	}
+	put := func(name string, text []byte) {
+		if err == nil {
+			err = writeTable(filepath.Join(dir, name), text)
+		}
+	}
+	folder := func(name string) {
+		if err == nil {
+			err = os.MkdirAll(filepath.Join(dir, name), 0o755)
+		}
+	}
+	folder(".")
+	put(metaName, yaml)
+	for i := range s.Robots {
+		robot := &s.Robots[i]
+		at := filepath.Join(robotsName, robot.ID)
+		folder(at)
+		put(filepath.Join(at, keyframesName), encodeKeyframes(robot.Keyframes))
+		put(filepath.Join(at, relativeName), encodeRelatives(robot.Relatives))
+	}
+	put(tiesName, encodeTies(s.Ties))
+	if len(s.Truth) > 0 {
+		put(truthName, encodeTruth(s.Truth))
+	}
+	if err != nil {
+		return fmt.Errorf("survey: %w", err)
+	}
+	return nil
+}
