@@ -1,0 +1,147 @@
+package sparse
+
+// inverter is the memory of the selected inverse, for the widest front.
+type inverter struct {
+	ld             int       // leading dimension of all four
+	a, own         []float64 // k x k
+	coupling, next []float64 // k x r
+}
+
+// SelectedInverse sets out to the blocks of the inverse of H on the pattern of H:
+// the covariances of poses and of pairs of poses that share a factor. out must
+// belong to the same Symbolic. The first call allocates memory.
+//
+// Takahashi, Fagan, Chen (1973), front by front from the root. With D, R the
+// factor of a front, Y = R D^-1 and Z the inverse, which is known for the rows r
+// when a front is reached,
+//
+//	Z_sr = -Y' Z_rr,   Z_ss = D^-T D^-1 - Z_sr Y.
+func (f *Factor) SelectedInverse(out *Matrix) {
+	if out.s != f.s {
+		panic("sparse: matrix and factor belong to different patterns")
+	}
+	if f.inv == nil {
+		ld := up4(f.s.widest.k + 3)
+		square, tall := make([]float64, 2*(ld*f.s.widest.k+8)), make([]float64, 2*(ld*f.s.widest.r+8))
+		f.inv = &inverter{
+			ld: ld,
+			a:  square[:len(square)/2], own: square[len(square)/2:],
+			coupling: tall[:len(tall)/2], next: tall[len(tall)/2:],
+		}
+	}
+	for i := len(f.s.fronts) - 1; i >= 0; i-- {
+		t := &f.s.fronts[i]
+		f.invertFront(t)
+		f.writeInverse(t, out)
+		for _, c := range f.s.children[t.child[0]:t.child[1]] {
+			f.handDown(t, &f.s.fronts[c])
+		}
+	}
+}
+
+// invertFront computes Z_ss (own) and Z_sr (next). Z_rr, both triangles, lies
+// where the update of the front was.
+func (f *Factor) invertFront(t *front) {
+	v := f.inv
+	ld := up4(t.k + 3)
+	v.ld = ld
+	d := f.val[t.d:]
+	clear(v.a[:ld*t.k+8])
+	for c := range t.k {
+		v.a[c*(ld+1)] = 1
+	}
+	// a = D^-T, from I D^-T column group by column group; upper triangle.
+	for j := 0; j < t.k; j += 6 {
+		n := min(6, t.k-j)
+		var l triangle
+		packTriangle(d[j+j*t.ldd:], t.ldd, n, &l)
+		solvePanel(v.a, ld, d[j:], t.ldd, &l, j+n, j, n)
+	}
+	product(v.own, ld, v.a, ld, v.a, ld, t.k, t.k, t.k, true, true) // -D^-T D^-1
+	if t.r > 0 {
+		product(v.coupling, ld, v.a, ld, f.val[t.b:], t.ldr, t.k, t.r, t.k, true, false) // -Y'
+		product(v.next, ld, v.coupling, ld, f.stack[t.u:], t.ldr, t.k, t.r, t.r, true, false)
+		for c := range t.r {
+			col := v.next[c*ld : c*ld+t.k]
+			for i := range col {
+				col[i] = -col[i]
+			}
+		}
+		product(v.own, ld, v.next, ld, v.coupling, ld, t.k, t.k, t.r, false, true)
+	}
+	for c := range t.k {
+		v.own[c*(ld+1)] = -v.own[c*(ld+1)]
+		for i := c + 1; i < t.k; i++ {
+			x := -v.own[i+c*ld]
+			v.own[i+c*ld], v.own[c+i*ld] = x, x
+		}
+	}
+}
+
+func packTriangle(d []float64, ldd, n int, l *triangle) {
+	t := 0
+	for c := range n {
+		t += copy(l[t:], d[c*ldd+c:c*ldd+n])
+	}
+}
+
+// writeInverse copies the blocks of the pattern that the factor keeps in front t.
+func (f *Factor) writeInverse(t *front, out *Matrix) {
+	v := f.inv
+	for _, p := range f.s.blocks[t.block[0]:t.block[1]] {
+		dst := out.data[p.src:]
+		rows, cols := int(p.rows), int(p.cols)
+		// Entry (i, j) of the block is entry at(i, j) of z.
+		z, first, byRow, byCol := v.own, 0, 1, v.ld
+		if p.dst < t.b {
+			first = (p.dst-t.d)%t.ldd + (p.dst-t.d)/t.ldd*v.ld
+		} else {
+			z, byRow, byCol = v.next, v.ld, 1
+			first = (p.dst-t.b)%t.ldr*v.ld + (p.dst-t.b)/t.ldr
+		}
+		if p.transposed {
+			byRow, byCol = byCol, byRow
+		}
+		for i := range rows {
+			for j := range cols {
+				dst[i*cols+j] = z[first+i*byRow+j*byCol]
+			}
+		}
+	}
+}
+
+// handDown gives child w of front t the inverse on its rows, both triangles. It
+// lands where the update of w was; all children are served before any of them is
+// worked on, because their own children reuse the memory of t's.
+func (f *Factor) handDown(t, w *front) {
+	v := f.inv
+	z := f.stack[t.u:]
+	to := f.stack[w.u:]
+	up := f.s.toParent[w.up[0]:w.up[1]]
+	pivots, rows := up[:w.upPivots], up[w.upPivots:]
+	for _, q := range pivots {
+		for c := range int(q.length) {
+			col := to[(int(q.src)+c)*w.ldr:]
+			for _, r := range pivots {
+				copy(col[r.src:r.src+r.length], v.own[int(r.dst)+(int(q.dst)+c)*v.ld:])
+			}
+			for _, r := range rows {
+				from := v.next[int(q.dst)+c+int(r.dst)*v.ld:]
+				for i := range int(r.length) {
+					col[int(r.src)+i] = from[i*v.ld]
+				}
+			}
+		}
+	}
+	for _, q := range rows {
+		for c := range int(q.length) {
+			col := to[(int(q.src)+c)*w.ldr:]
+			for _, r := range pivots {
+				copy(col[r.src:r.src+r.length], v.next[int(r.dst)+(int(q.dst)+c)*v.ld:])
+			}
+			for _, r := range rows {
+				copy(col[r.src:r.src+r.length], z[int(r.dst)+(int(q.dst)+c)*t.ldr:])
+			}
+		}
+	}
+}
