@@ -1,0 +1,260 @@
+package partition
+
+import (
+	"fmt"
+	"slices"
+
+	"selvage/internal/lie"
+)
+
+// Quadratic is the second-order model 1/2 d'Hd + b'd of some measurements at the present poses; d stacks the tangents (right
+// perturbations) of Nodes in order.
+type Quadratic struct {
+	Nodes []int32   // distinct, any order
+	H     []float64 // row-major, (D len(Nodes))^2, symmetric
+	B     []float64 // D len(Nodes)
+}
+
+// Clique is a condensed term over a few junctions, free of the frame: the reference, Nodes[0], has no rows.
+type Clique struct {
+	Nodes []int32   // ascending, at least two
+	H     []float64 // row-major, d x d, d = D (len(Nodes)-1)
+	B     []float64 // d
+}
+
+// Condensed is a pose graph condensed onto its junctions. Together the cliques have exactly the gradient and the Gauss-Newton
+// matrix that the whole graph has after the interior poses are minimised out.
+type Condensed struct {
+	Junctions []int32  // ascending: the separators and the poses that keep the cliques small
+	Cliques   []Clique // ordered by Nodes; none lies inside another
+	Bytes     int      // size of the summary by the model that chose the junctions, see [CliqueBytes] and [PoseBytes]
+
+	width int           // D
+	n     int           // poses of the graph
+	terms []term        // the cliques with the rows of their references, for NullResidual
+	steps []elimination // in order
+}
+
+// Sizes of a summary in bytes, the model by which junctions are chosen.
+const (
+	PoseBytes   = 58 // a junction: its id, its pose in float64
+	numberBytes = 4  // a number of a clique, float32
+	idBytes     = 2  // a junction named in a clique
+)
+
+// CliqueBytes is the modelled size of a clique of k poses with tangents of width numbers: the upper triangle of H, b and ids.
+// A clique of one pose says nothing and takes nothing.
+func CliqueBytes(width, k int) int {
+	if k < 2 {
+		return 0
+	}
+	d := width * (k - 1)
+	return numberBytes*(d*(d+1)/2+d) + idBytes*k
+}
+
+// Condense condenses the graph of n poses and the given terms onto junctions that include all separators. dim is the dimension of
+// the survey: 3 (six numbers a pose) or 2 (three).
+//
+// Always the pose whose elimination adds least to the size of the summary is eliminated next (the lower number first when
+// two are equal), to the end; then the shortest summary on that way is taken. Parts of the graph that are not connected are
+// condensed independently, and each keeps at least one pose. A term over one pose is dropped: for relative measurements it
+// is zero. The input is only read.
+//
+// An error names the term or pose at fault: wrong sizes, numbers that are not finite, a pose that its measurements leave
+// undetermined.
+func Condense(dim, n int, factors []Quadratic, separators []int32) (*Condensed, error) {
+	width, err := tangentWidth(dim)
+	if err != nil {
+		return nil, err
+	}
+	if err := validate(width, n, factors, separators); err != nil {
+		return nil, err
+	}
+	o := newOrdering(width, n, factors, separators)
+	o.run()
+	e := newEliminator(o, width, factors)
+	if err := e.run(); err != nil {
+		return nil, err
+	}
+	return e.result(), nil
+}
+
+func tangentWidth(dim int) (int, error) {
+	switch dim {
+	case 2:
+		return 3, nil
+	case 3:
+		return 6, nil
+	}
+	return 0, fmt.Errorf("partition: dimension %d, expected 2 or 3", dim)
+}
+
+func validate(width, n int, factors []Quadratic, separators []int32) error {
+	if n < 1 {
+		return fmt.Errorf("partition: %d poses, expected at least one", n)
+	}
+	seen := make([]int, n)
+	for i := range factors {
+		f := &factors[i]
+		d := width * len(f.Nodes)
+		if d == 0 {
+			return fmt.Errorf("partition: factor %d names no pose", i)
+		}
+		if len(f.H) != d*d || len(f.B) != d {
+			return fmt.Errorf("partition: factor %d on %d poses has %d numbers in H and %d in B, expected %d and %d", i, len(f.Nodes), len(f.H), len(f.B), d*d, d)
+		}
+		for _, v := range f.Nodes {
+			if v < 0 || int(v) >= n {
+				return fmt.Errorf("partition: factor %d names pose %d, expected 0..%d", i, v, n-1)
+			}
+			if seen[v] == i+1 {
+				return fmt.Errorf("partition: factor %d names pose %d twice", i, v)
+			}
+			seen[v] = i + 1
+		}
+		if !finite(f.H) || !finite(f.B) {
+			return fmt.Errorf("partition: factor %d holds a number that is not finite", i)
+		}
+	}
+	for _, v := range separators {
+		if v < 0 || int(v) >= n {
+			return fmt.Errorf("partition: separator %d, expected 0..%d", v, n-1)
+		}
+	}
+	return nil
+}
+
+func finite(x []float64) bool {
+	sum := 0.0
+	for _, v := range x {
+		sum += v - v // NaN for NaN and infinities, else 0
+	}
+	return sum == 0
+}
+
+// Interior completes a step: steps holds D numbers for each pose, those of the junctions filled in, and receives for the interior
+// poses the steps that minimise the linearised graph given these.
+func (c *Condensed) Interior(steps []float64) {
+	if len(steps) != c.width*c.n {
+		panic("partition: length of steps")
+	}
+	d := c.width
+	for i := len(c.steps) - 1; i >= 0; i-- {
+		s := &c.steps[i]
+		var t [6]float64
+		copy(t[:d], s.z)
+		for k, u := range s.nodes {
+			du := steps[int(u)*d:][:d]
+			for r, x := range du {
+				row := s.y[(k*d+r)*d:][:d]
+				for j, y := range row {
+					t[j] += y * x
+				}
+			}
+		}
+		dv := steps[int(s.pose)*d:][:d]
+		for j := d - 1; j >= 0; j-- { // L' x = t
+			x := t[j]
+			for r := j + 1; r < d; r++ {
+				x += s.l[r*d+j] * dv[r] // dv = -x
+			}
+			dv[j] = -x * s.l[j*d+j] // the diagonal holds inverses
+		}
+	}
+}
+
+// NullResidual returns the largest |H N| / |H| (largest entries) over the cliques, N the tangents that a common motion of the
+// poses has; poses are those at which the graph was linearised, all n of them. It is zero but for rounding, below 1e-9, when
+// every term is relative and belongs to these poses: a check that costs next to nothing.
+func (c *Condensed) NullResidual(poses []lie.SE3) float64 {
+	if len(poses) != c.n {
+		panic("partition: number of poses")
+	}
+	worst := 0.0
+	for i := range c.terms {
+		worst = max(worst, c.terms[i].nullResidual(c.width, poses))
+	}
+	return worst
+}
+
+func (t *term) nullResidual(d int, poses []lie.SE3) float64 {
+	// N is taken relative to the first pose: the same space, without levers to a far origin.
+	m := d * len(t.nodes)
+	N := make([]float64, m*d)
+	for k, v := range t.nodes {
+		x := poses[v].Between(poses[t.nodes[0]])
+		if d == 6 {
+			a := x.Adjoint()
+			copy(N[k*d*d:], a[:])
+		} else {
+			a := lie.Planar(&x).Adjoint()
+			copy(N[k*d*d:], a[:])
+		}
+	}
+	product, largest := 0.0, 0.0
+	for i := 0; i < m; i++ {
+		var row [6]float64
+		for j := 0; j < m; j++ {
+			h := t.at(d, i, j)
+			largest = max(largest, abs(h))
+			for c := 0; c < d; c++ {
+				row[c] += h * N[j*d+c]
+			}
+		}
+		for _, x := range row[:d] {
+			product = max(product, abs(x))
+		}
+	}
+	if largest == 0 {
+		return 0
+	}
+	return product / largest
+}
+
+func abs(x float64) float64 {
+	if x < 0 {
+		return -x
+	}
+	return x
+}
+
+// result collects what remains after the elimination.
+func (e *eliminator) result() *Condensed {
+	c := &Condensed{width: e.d, n: len(e.pos), steps: e.steps}
+	gone := make([]bool, c.n)
+	for i := range e.steps {
+		gone[e.steps[i].pose] = true
+	}
+	for v := range gone {
+		if !gone[v] {
+			c.Junctions = append(c.Junctions, int32(v))
+		}
+	}
+	for i := range e.terms {
+		if e.terms[i].h != nil {
+			e.own(int32(i))
+			c.terms = append(c.terms, e.terms[i])
+		}
+	}
+	slices.SortFunc(c.terms, func(a, b term) int { return slices.Compare(a.nodes, b.nodes) })
+	c.Bytes = PoseBytes * len(c.Junctions)
+	for i := range c.terms {
+		t := &c.terms[i]
+		c.Cliques = append(c.Cliques, t.clique(e.d))
+		c.Bytes += CliqueBytes(e.d, len(t.nodes))
+	}
+	return c
+}
+
+// clique returns the term without the rows and columns of its first pose, both triangles filled.
+func (t *term) clique(width int) Clique {
+	d := width * (len(t.nodes) - 1)
+	c := Clique{Nodes: slices.Clone(t.nodes), H: make([]float64, d*d), B: slices.Clone(t.b[width:])}
+	for i := 0; i < d; i++ {
+		for j := 0; j <= i; j++ {
+			h := t.at(width, width+i, width+j)
+			c.H[i*d+j], c.H[j*d+i] = h, h
+		}
+	}
+	return c
+}

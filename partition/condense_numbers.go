@@ -1,0 +1,283 @@
+package partition
+
+import (
+	"fmt"
+	"math"
+)
+
+// term is one quadratic term during elimination. Of h only the lower triangle of D x D blocks in the order of nodes is used.
+type term struct {
+	nodes []int32
+	h, b  []float64
+}
+
+// at returns entry i, j of the symmetric matrix.
+func (t *term) at(d, i, j int) float64 {
+	if i < j {
+		i, j = j, i
+	}
+	return t.h[i*d*len(t.nodes)+j]
+}
+
+// elimination keeps what the step of an eliminated pose is computed from. With H_vv = L L' it is
+// d_v = -L^-T (z + sum_u Y_u' d_u).
+type elimination struct {
+	pose  int32
+	nodes []int32
+	l     []float64 // D x D, lower, the diagonal inverted
+	z     []float64 // L^-1 b_v
+	y     []float64 // rows of H_uv L^-T, D for each of nodes
+}
+
+// eliminator carries out the steps of an ordering on the numbers.
+type eliminator struct {
+	d     int
+	plan  *ordering
+	terms []term // h is nil when merged or not yet made
+	owned []bool // h and b are ours, not the caller's
+	pos   []int32
+	steps []elimination
+	kept  arena[float64]
+	pool  [][][]float64 // free buffers by number of poses: h, then b
+}
+
+// ofPivot is the position of the pose being eliminated.
+const ofPivot = -1
+
+func newEliminator(plan *ordering, width int, factors []Quadratic) *eliminator {
+	e := &eliminator{
+		d:     width,
+		plan:  plan,
+		terms: make([]term, len(plan.nodes)),
+		owned: make([]bool, len(plan.nodes)),
+		pos:   make([]int32, len(plan.of)),
+		steps: make([]elimination, 0, len(plan.steps)),
+	}
+	for i := range factors {
+		if len(factors[i].Nodes) > 1 {
+			e.terms[i] = term{factors[i].Nodes, factors[i].H, factors[i].B}
+		}
+	}
+	for _, a := range plan.absorbed {
+		e.own(a.into)
+		e.addInto(a.into, e.terms[a.from])
+		e.terms[a.from] = term{}
+	}
+	return e
+}
+
+func (e *eliminator) run() error {
+	for i := range e.plan.steps {
+		if err := e.eliminate(&e.plan.steps[i]); err != nil {
+			return err
+		}
+	}
+	return nil
+}
+
+// eliminate adds up the merged terms, H over pivot and neighbours, and forms H_nn - H_nv H_vv^-1 H_vn.
+func (e *eliminator) eliminate(s *step) error {
+	d, k := e.d, len(s.neighbours)
+	out := e.kept.take(d*d + d + k*d*d)
+	x := elimination{pose: s.pose, nodes: s.neighbours, l: out[:d*d], z: out[d*d:][:d], y: out[d*d+d:]}
+	sum := e.buffer(s.neighbours)
+	e.pos[s.pose] = ofPivot
+	e.place(&sum)
+	for _, t := range s.merged {
+		e.gather(&e.terms[t], &sum, &x)
+		e.release(t)
+	}
+	if !factorPivot(d, x.l) {
+		return fmt.Errorf("partition: pose %d is not determined by its measurements", s.pose)
+	}
+	solveRows(d, x.l, x.y)
+	solveRows(d, x.l, x.z)
+	subtractOuter(d, k, sum.h, x.y)
+	for i := range sum.b {
+		row := x.y[i*d:][:d]
+		for j, z := range x.z {
+			sum.b[i] -= row[j] * z
+		}
+	}
+	switch {
+	case s.into < 0:
+		e.recycle(sum)
+	case e.terms[s.into].h == nil:
+		e.terms[s.into], e.owned[s.into] = sum, true
+	default:
+		e.own(s.into)
+		e.addInto(s.into, sum)
+		e.recycle(sum)
+	}
+	e.steps = append(e.steps, x)
+	return nil
+}
+
+// gather adds term t to the sum over the neighbours, to H_vv (in x.l), H_nv (in x.y) and b_v (in x.z).
+func (e *eliminator) gather(t, sum *term, x *elimination) {
+	d := e.d
+	stride, wide := d*len(t.nodes), d*len(sum.nodes)
+	for a, u := range t.nodes {
+		pa := int(e.pos[u])
+		if pa == ofPivot {
+			add(x.z, t.b[a*d:][:d])
+		} else {
+			add(sum.b[pa*d:][:d], t.b[a*d:][:d])
+		}
+		for b := 0; b <= a; b++ {
+			pb := int(e.pos[t.nodes[b]])
+			block := t.h[a*d*stride+b*d:]
+			switch {
+			case pa == ofPivot && pb == ofPivot:
+				addBlock(d, x.l, d, block, stride)
+			case pa == ofPivot:
+				addTransposed(d, x.y[pb*d*d:], d, block, stride)
+			case pb == ofPivot:
+				addBlock(d, x.y[pa*d*d:], d, block, stride)
+			case pa >= pb:
+				addBlock(d, sum.h[pa*d*wide+pb*d:], wide, block, stride)
+			default:
+				addTransposed(d, sum.h[pb*d*wide+pa*d:], wide, block, stride)
+			}
+		}
+	}
+}
+
+// addInto adds a term to another that holds all its poses.
+func (e *eliminator) addInto(into int32, t term) {
+	dst := &e.terms[into]
+	e.place(dst)
+	e.gather(&t, dst, nil)
+}
+
+// place lets gather add to the poses of t.
+func (e *eliminator) place(t *term) {
+	for i, u := range t.nodes {
+		e.pos[u] = int32(i)
+	}
+}
+
+// own makes sure that a term has numbers of its own, with its poses ascending.
+func (e *eliminator) own(i int32) {
+	if e.owned[i] {
+		return
+	}
+	t := e.buffer(e.plan.nodes[i])
+	e.place(&t)
+	e.gather(&e.terms[i], &t, nil)
+	e.terms[i], e.owned[i] = t, true
+}
+
+// buffer returns a zero term over nodes.
+func (e *eliminator) buffer(nodes []int32) term {
+	k := len(nodes)
+	for len(e.pool) <= k {
+		e.pool = append(e.pool, nil)
+	}
+	m := e.d * k
+	var x []float64
+	if free := e.pool[k]; len(free) > 0 {
+		x = free[len(free)-1]
+		e.pool[k] = free[:len(free)-1]
+		clear(x)
+	} else {
+		x = make([]float64, m*m+m)
+	}
+	return term{nodes, x[:m*m], x[m*m:]}
+}
+
+func (e *eliminator) release(i int32) {
+	if e.owned[i] {
+		e.recycle(e.terms[i])
+	}
+	e.terms[i] = term{}
+}
+
+func (e *eliminator) recycle(t term) {
+	k := len(t.nodes)
+	e.pool[k] = append(e.pool[k], t.h[:cap(t.h)])
+}
+
+func add(dst, src []float64) {
+	for i, v := range src {
+		dst[i] += v
+	}
+}
+
+// addBlock adds a D x D block.
+func addBlock(d int, dst []float64, stride int, src []float64, srcStride int) {
+	for i := 0; i < d; i++ {
+		add(dst[i*stride:][:d], src[i*srcStride:][:d])
+	}
+}
+
+func addTransposed(d int, dst []float64, stride int, src []float64, srcStride int) {
+	for i := 0; i < d; i++ {
+		for j, v := range src[i*srcStride:][:d] {
+			dst[j*stride+i] += v
+		}
+	}
+}
+
+// factorPivot replaces the symmetric D x D matrix by its Cholesky factor (lower triangle, diagonal inverted). It reports false
+// when a pivot vanishes against its diagonal, that is, when the matrix is singular to working precision.
+func factorPivot(d int, a []float64) bool {
+	for j := 0; j < d; j++ {
+		row := a[j*d:][:d]
+		full := row[j]
+		p := full
+		for _, v := range row[:j] {
+			p -= v * v
+		}
+		if !(p > 1e-14*full) || math.IsInf(p, 0) {
+			return false
+		}
+		inv := 1 / math.Sqrt(p)
+		row[j] = inv
+		for i := j + 1; i < d; i++ {
+			below := a[i*d:][:d]
+			v := below[j]
+			for k, x := range row[:j] {
+				v -= x * below[k]
+			}
+			below[j] = v * inv
+		}
+	}
+	return true
+}
+
+// solveRows replaces each row y of rows by y L^-T, that is, by (L^-1 y')'.
+func solveRows(d int, l, rows []float64) {
+	for ; len(rows) > 0; rows = rows[d:] {
+		y := rows[:d]
+		for j := range y {
+			lj := l[j*d:][:d]
+			v := y[j]
+			for k, x := range y[:j] {
+				v -= x * lj[k]
+			}
+			y[j] = v * lj[j]
+		}
+	}
+}
+
+// subtractOuter subtracts Y Y' from the lower triangle of blocks of h, k poses wide; Y has D columns.
+func subtractOuter(d, k int, h, y []float64) {
+	m := d * k
+	for i := 0; i < m; i++ {
+		row := h[i*m:][:(i/d+1)*d]
+		if d == 6 {
+			a := (*[6]float64)(y[6*i:])
+			for j := range row {
+				b := (*[6]float64)(y[6*j:])
+				row[j] -= a[0]*b[0] + a[1]*b[1] + a[2]*b[2] + a[3]*b[3] + a[4]*b[4] + a[5]*b[5]
+			}
+			continue
+		}
+		a := (*[3]float64)(y[3*i:])
+		for j := range row {
+			b := (*[3]float64)(y[3*j:])
+			row[j] -= a[0]*b[0] + a[1]*b[1] + a[2]*b[2]
+		}
+	}
+}
