@@ -62,21 +62,21 @@ func (d *doc) charts(g ChartGroup) {
 	d.raw("<figure class=\"charts\" aria-labelledby=\"" + id + "\">\n<figcaption id=\"" + id + "\">")
 	d.text(g.Title)
 	d.raw("</figcaption>\n<div class=\"multiples\">\n")
-	for _, c := range g.Charts {
-		xs, ys := emptySpan(), emptySpan()
-		for _, o := range g.Charts {
+	xs, ys := make([]span, len(g.Charts)), make([]span, len(g.Charts))
+	for i, c := range g.Charts {
+		xs[i], ys[i] = c.extent()
+	}
+	for i, c := range g.Charts {
+		x, y := xs[i], ys[i]
+		for j, o := range g.Charts {
 			if o.XLabel == c.XLabel {
-				for _, s := range o.Series {
-					for _, x := range s.X {
-						xs.add(x)
-					}
-				}
+				x.join(xs[j])
 			}
 			if o.YLabel == c.YLabel && o.LogY == c.LogY {
-				o.addValues(&ys)
+				y.join(ys[j])
 			}
 		}
-		d.chart(c, xs, ys)
+		d.chart(c, x, y)
 	}
 	d.raw("</div>\n")
 	if g.Note != "" {
@@ -98,15 +98,19 @@ func (c Chart) value(y float64) float64 {
 	return math.Log10(y)
 }
 
-func (c Chart) addValues(ys *span) {
+// extent is the range of the chart's own data on both axes, as drawn.
+func (c Chart) extent() (xs, ys span) {
+	xs, ys = emptySpan(), emptySpan()
 	for _, s := range c.Series {
-		for _, y := range s.Y {
-			ys.add(c.value(y))
+		for i, x := range s.X {
+			xs.add(x)
+			ys.add(c.value(s.Y[i]))
 		}
 	}
 	if c.Threshold != nil {
 		ys.add(c.value(*c.Threshold))
 	}
+	return xs, ys
 }
 
 // axis is the vertical scale of a chart.

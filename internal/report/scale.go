@@ -20,6 +20,9 @@ func (s *span) add(v float64) {
 	}
 }
 
+// join widens the interval to hold another, empty or not.
+func (s *span) join(o span) { s.lo, s.hi = min(s.lo, o.lo), max(s.hi, o.hi) }
+
 // niceStep is the smallest of 1, 2 and 5 times a power of ten that is not
 // below v.
 func niceStep(v float64) float64 {
