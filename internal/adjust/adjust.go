@@ -1,0 +1,158 @@
+// Package adjust solves a whole survey in one piece: every keyframe of every session, all relative poses and the ties that
+// are held, in one least-squares adjustment. It is the reference that the fleet's own answer is compared with.
+//
+// A [Problem] is the survey as a pose graph, with the way back from variables to keyframes. Each island (what measurements and
+// held ties connect) keeps its first keyframe where the front end had it; covariances are relative to that keyframe.
+package adjust
+
+import (
+	"fmt"
+	"slices"
+
+	"selvage/internal/lie"
+	"selvage/internal/posegraph"
+	"selvage/internal/sparse"
+	"selvage/internal/survey"
+)
+
+// Key names a keyframe.
+type Key struct {
+	Robot   string
+	Session uint32
+	ID      int64
+}
+
+// Problem is a survey as a pose graph.
+type Problem struct {
+	Graph   *posegraph.Graph
+	Factors *posegraph.Between
+	Keys    []Key         // variable -> keyframe
+	Var     map[Key]int32 // keyframe -> variable
+	Tie     []int         // tie of the survey -> factor, -1 when it is not in the adjustment
+	Anchors []int32       // the fixed variable of each island
+	Island  []int32       // variable -> island
+
+	ordering sparse.Options
+	solver   *posegraph.Solver
+}
+
+// Start says where an adjustment begins.
+type Start string
+
+// The starts: from the measurements alone, rotations first; by chaining measurements; or at the poses of the survey. Auto is the
+// first, or the second where the first is not determined.
+const (
+	Auto    Start = "auto"
+	Chordal Start = "chordal"
+	Tree    Start = "tree"
+	Given   Start = "given"
+)
+
+// New builds the pose graph of s with the ties for which held is true; nil holds all. Ties by stamp go to the keyframe with
+// exactly that stamp.
+func New(s *survey.Survey, held func(tie int) bool) (*Problem, error) {
+	n := 0
+	for i := range s.Robots {
+		n += len(s.Robots[i].Keyframes)
+	}
+	p := &Problem{Keys: make([]Key, 0, n), Var: make(map[Key]int32, n), Tie: make([]int, len(s.Ties))}
+	type moment struct {
+		robot   string
+		session uint32
+		stamp   int64
+	}
+	byStamp := map[moment]int32{}
+	poses := make([]lie.SE3, 0, n)
+	for i := range s.Robots {
+		r := &s.Robots[i]
+		for _, k := range r.Keyframes {
+			key := Key{r.ID, k.Session, k.ID}
+			p.Var[key] = int32(len(poses))
+			if k.HasStamp {
+				byStamp[moment{r.ID, k.Session, k.StampNS}] = int32(len(poses))
+			}
+			p.Keys = append(p.Keys, key)
+			poses = append(poses, Pose(k.Pose))
+		}
+	}
+	dim := 3 * (s.Meta.Dimension - 1)
+	p.Graph = posegraph.New(dim, poses)
+	p.Factors = p.Graph.AddBetween()
+	for i := range s.Robots {
+		r := &s.Robots[i]
+		for k := range r.Relatives {
+			e := &r.Relatives[k]
+			info, err := e.Cov.Information(s.Meta.Dimension)
+			if err != nil {
+				return nil, fmt.Errorf("robot %s, session %d, %d to %d: %w", r.ID, e.Session, e.From, e.To, err)
+			}
+			from, to := p.Var[Key{r.ID, e.Session, e.From}], p.Var[Key{r.ID, e.Session, e.To}]
+			p.Factors.Add(from, to, Pose(e.Pose), &info)
+		}
+	}
+	for k := range s.Ties {
+		t := &s.Ties[k]
+		p.Tie[k] = -1
+		if held != nil && !held(k) {
+			continue
+		}
+		info, err := t.Cov.Information(s.Meta.Dimension)
+		if err != nil {
+			return nil, fmt.Errorf("tie %s: %w", t.ID, err)
+		}
+		from, ok := p.Var[Key{t.FromRobot, t.FromSession, t.FromKey}]
+		to, found := p.Var[Key{t.ToRobot, t.ToSession, t.ToKey}]
+		if t.ToByStamp {
+			to, found = byStamp[moment{t.ToRobot, t.ToSession, t.ToStampNS}]
+		}
+		if !ok || !found {
+			return nil, fmt.Errorf("tie %s: no keyframe of %s at its far end", t.ID, t.ToRobot)
+		}
+		p.Tie[k] = p.Factors.Len()
+		p.Factors.Add(from, to, Pose(t.Pose), &info)
+	}
+	p.Island, _ = p.Graph.Components()
+	p.Anchors = p.Graph.Anchors()
+	return p, nil
+}
+
+// Pose turns a pose of the folder into a rigid motion.
+func Pose(p survey.Pose) lie.SE3 { return lie.FromQuat(p.T, p.Q) }
+
+// Folder turns a rigid motion into a pose of the folder.
+func Folder(x *lie.SE3) survey.Pose { return survey.Pose{T: x.T, Q: x.Quat()} }
+
+// Begin sets starting values.
+func (p *Problem) Begin(start Start) error {
+	switch start {
+	case Auto:
+		given := slices.Clone(p.Graph.Values.Poses)
+		if posegraph.Chordal(p.Graph, p.Anchors) == nil {
+			return nil
+		}
+		copy(p.Graph.Values.Poses, given)
+		posegraph.SpanningTree(p.Graph, p.Anchors)
+	case Chordal:
+		return posegraph.Chordal(p.Graph, p.Anchors)
+	case Tree:
+		posegraph.SpanningTree(p.Graph, p.Anchors)
+	case Given:
+	default:
+		return fmt.Errorf("start %q: expected auto, chordal, tree or given", start)
+	}
+	return nil
+}
+
+// Analyse orders and analyses the problem for the given number of workers.
+func (p *Problem) Analyse(workers int) error {
+	p.ordering.Workers = workers
+	var err error
+	p.solver, err = posegraph.NewSolver(p.Graph, p.Anchors, p.ordering)
+	return err
+}
+
+// Solve adjusts; Analyse must have been called.
+func (p *Problem) Solve(o posegraph.Options) posegraph.Result { return p.solver.Optimise(o) }
+
+// Solver returns the solver that Analyse made.
+func (p *Problem) Solver() *posegraph.Solver { return p.solver }

@@ -1,0 +1,252 @@
+package posegraph
+
+import "selvage/internal/lie"
+
+// Cliques is a batch of condensed factors. A clique over the poses k0 (its reference) and k1..km has the residuals
+//
+//	e_k = Log((Xbar_k0^-1 Xbar_k)^-1 X_k0^-1 X_k)
+//
+// and the cost 1/2 e' H e + b' e, e stacked over k1..km: it sees poses only through X_k0^-1 X_k, so it does not care where the
+// frame of its robot stands in the datum. At Xbar it has the gradient and the Gauss-Newton matrix of what was condensed.
+type Cliques struct {
+	dim  int
+	list []clique
+	work cliqueWork
+}
+
+type clique struct {
+	nodes []int32
+	rel   []lie.SE3 // Xbar_k0^-1 Xbar_k for k1..km
+	h, b  []float64
+	slots []Slot // of all pairs, row by row of the upper triangle
+}
+
+// cliqueWork is scratch that the largest clique fits in.
+type cliqueWork struct {
+	e, v []float64     // residuals; H e + b
+	j    [][36]float64 // de_k/dX_k, dim x dim
+	k0   [][36]float64 // de_k/dX_k0
+	t    [36]float64
+}
+
+// AddCliques appends an empty batch of condensed factors to g and returns it.
+func (g *Graph) AddCliques() *Cliques {
+	c := &Cliques{dim: g.Dim}
+	g.Sets = append(g.Sets, c)
+	return c
+}
+
+// Add appends a condensed factor: nodes (the first is the reference), the poses of the nodes where it was linearised, and its
+// matrix H (d x d row-major) and vector b without the reference, d = Dim (len(nodes) - 1). The slices are kept.
+func (c *Cliques) Add(nodes []int32, at []lie.SE3, h, b []float64) {
+	d := c.dim * (len(nodes) - 1)
+	if len(nodes) < 2 || len(at) != len(nodes) || len(h) != d*d || len(b) != d {
+		panic("posegraph: clique of wrong shape")
+	}
+	rel := make([]lie.SE3, len(nodes)-1)
+	for k := range rel {
+		rel[k] = at[0].Between(at[k+1])
+	}
+	c.list = append(c.list, clique{nodes: nodes, rel: rel, h: h, b: b})
+	if d > len(c.work.e) {
+		c.work.e, c.work.v = make([]float64, d), make([]float64, d)
+		c.work.j = make([][36]float64, len(nodes)-1)
+		c.work.k0 = make([][36]float64, len(nodes)-1)
+	}
+}
+
+// Len returns the number of cliques.
+func (c *Cliques) Len() int { return len(c.list) }
+
+// Couplings implements [FactorSet].
+func (c *Cliques) Couplings(emit func(i, j int32)) {
+	for k := range c.list {
+		nodes := c.list[k].nodes
+		for a, i := range nodes {
+			for _, j := range nodes[a+1:] {
+				emit(i, j)
+			}
+		}
+	}
+}
+
+// Bind implements [FactorSet].
+func (c *Cliques) Bind(next func() Slot) {
+	for k := range c.list {
+		m := len(c.list[k].nodes)
+		c.list[k].slots = make([]Slot, m*(m-1)/2)
+		for s := range c.list[k].slots {
+			c.list[k].slots[s] = next()
+		}
+	}
+}
+
+// residual fills the stacked residuals e of q, and v = H e + b; it returns the cost.
+func (c *Cliques) residual(q *clique, v *Values) float64 {
+	d := c.dim
+	e := c.work.e[:len(q.b)]
+	x0 := &v.Poses[q.nodes[0]]
+	for k := range q.rel {
+		p := x0.Between(v.Poses[q.nodes[k+1]])
+		r := q.rel[k].Between(p)
+		t := r.Log()
+		if d == 3 {
+			e[3*k], e[3*k+1], e[3*k+2] = t[0], t[1], t[5]
+		} else {
+			copy(e[6*k:], t[:])
+		}
+	}
+	cost := 0.0
+	for i := range e {
+		row := q.h[i*len(e) : (i+1)*len(e)]
+		sum := 0.0
+		for j, x := range e {
+			sum += row[j] * x
+		}
+		cost += e[i] * (sum/2 + q.b[i])
+		c.work.v[i] = sum + q.b[i]
+	}
+	return cost
+}
+
+// Cost implements [FactorSet].
+func (c *Cliques) Cost(v *Values) float64 {
+	sum := 0.0
+	for k := range c.list {
+		sum += c.residual(&c.list[k], v)
+	}
+	return sum
+}
+
+// Linearise implements [FactorSet].
+func (c *Cliques) Linearise(v *Values, a *Assembly) float64 {
+	sum := 0.0
+	for k := range c.list {
+		sum += c.linearise(&c.list[k], v, a)
+	}
+	return sum
+}
+
+// linearise adds one clique. With J_k = Jr^-1(e_k) and K_k = -J_k Ad((X_k0^-1 X_k)^-1):
+//
+//	H_kl = J_k' H J_l,  H_0l = sum_k K_k' H_kl J_l,  H_00 = sum_kl K_k' H K_l,  g_k = J_k' v_k,  g_0 = sum_k K_k' v_k.
+func (c *Cliques) linearise(q *clique, v *Values, a *Assembly) float64 {
+	cost := c.residual(q, v)
+	d, m := c.dim, len(q.rel)
+	x0 := &v.Poses[q.nodes[0]]
+	for k := 0; k < m; k++ {
+		p := x0.Between(v.Poses[q.nodes[k+1]])
+		if d == 3 {
+			e := c.work.e[3*k:]
+			jr := lie.JrInv2([3]float64{e[0], e[1], e[2]})
+			copy(c.work.j[k][:], jr[:])
+			ad := lie.Planar(&p).Inv().Adjoint()
+			mulNeg(c.work.k0[k][:], jr[:], ad[:], 3)
+		} else {
+			jr := lie.JrInv(lie.Tangent(c.work.e[6*k : 6*k+6]))
+			c.work.j[k] = jr
+			inv := p.Inv()
+			ad := inv.Adjoint()
+			mulNeg(c.work.k0[k][:], jr[:], ad[:], 6)
+		}
+	}
+	n := d * m
+	h00 := a.Diag(q.nodes[0])
+	g0 := a.Grad(q.nodes[0])
+	for k := 0; k < m; k++ {
+		vk := c.work.v[d*k : d*k+d]
+		if g := a.Grad(q.nodes[k+1]); g != nil {
+			addTv(g, c.work.j[k][:], vk, d)
+		}
+		if g0 != nil {
+			addTv(g0, c.work.k0[k][:], vk, d)
+		}
+	}
+	t := c.work.t[:d*d]
+	for k := 0; k < m; k++ {
+		jk, kk := c.work.j[k][:], c.work.k0[k][:]
+		for l := 0; l < m; l++ {
+			block := q.h[d*k*n+d*l:] // H_kl with leading dimension n
+			mulStrided(t, block, n, c.work.j[l][:], d)
+			if l == k {
+				if dk := a.Diag(q.nodes[k+1]); dk != nil {
+					addTm(dk, jk, t, d)
+				}
+			} else if l > k {
+				addSlot(a, q.slots[pair(k+1, l+1, m+1)], jk, t, d)
+			}
+			addSlot(a, q.slots[pair(0, l+1, m+1)], kk, t, d) // rows 0, columns l
+			if h00 != nil {
+				mulStrided(t, block, n, c.work.k0[l][:], d)
+				addTm(h00, kk, t, d)
+			}
+		}
+	}
+	return cost
+}
+
+// pair numbers the pair a < b of m nodes row by row.
+func pair(a, b, m int) int { return a*(2*m-a-1)/2 + b - a - 1 }
+
+// mulNeg writes -a b to c, d x d.
+func mulNeg(c, a, b []float64, d int) {
+	for i := 0; i < d; i++ {
+		for j := 0; j < d; j++ {
+			sum := 0.0
+			for k := 0; k < d; k++ {
+				sum += a[i*d+k] * b[k*d+j]
+			}
+			c[i*d+j] = -sum
+		}
+	}
+}
+
+// mulStrided writes a b to c, d x d; rows of a are ld apart.
+func mulStrided(c, a []float64, ld int, b []float64, d int) {
+	for i := 0; i < d; i++ {
+		row := a[i*ld : i*ld+d]
+		out := c[i*d : i*d+d]
+		for j := range out {
+			sum := 0.0
+			for k, x := range row {
+				sum += x * b[k*d+j]
+			}
+			out[j] = sum
+		}
+	}
+}
+
+// addTv adds a' v to g.
+func addTv(g, a, v []float64, d int) {
+	for i := 0; i < d; i++ {
+		sum := 0.0
+		for k := 0; k < d; k++ {
+			sum += a[k*d+i] * v[k]
+		}
+		g[i] += sum
+	}
+}
+
+// addTm adds a' b to c, all d x d.
+func addTm(c, a, b []float64, d int) {
+	for i := 0; i < d; i++ {
+		for j := 0; j < d; j++ {
+			sum := 0.0
+			for k := 0; k < d; k++ {
+				sum += a[k*d+i] * b[k*d+j]
+			}
+			c[i*d+j] += sum
+		}
+	}
+}
+
+// addSlot adds a' b to the off-diagonal block of a slot.
+func addSlot(s *Assembly, slot Slot, a, b []float64, d int) {
+	if slot > 0 {
+		addTm(s.Matrix.Off(int(slot-1)), a, b, d)
+		return
+	}
+	if slot < 0 {
+		addTm(s.Matrix.Off(int(-slot-1)), b, a, d)
+	}
+}

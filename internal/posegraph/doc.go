@@ -1,0 +1,17 @@
+// Package posegraph holds pose graphs and adjusts them: the poses of one robot, of a fleet in one piece, or the junctions of
+// all summaries at the coordinator.
+//
+// A [Graph] is a list of variables and of factor sets. A factor set is a batch of factors of one kind, so that the inner loops
+// run over plain arrays: [Between] for relative-pose measurements, [Cliques] for condensed summaries. A new kind of factor is a new
+// type with the methods of [FactorSet]; graph and solver stay as they are.
+//
+// The cost is F = 1/2 sum w r' Omega r. The residual of a relative pose Z of j seen from i is r = Log(Z^-1 X_i^-1 X_j), the group
+// logarithm, in metres and radians; Omega is its information matrix.
+//
+// A [Solver] belongs to one structure: it orders and analyses once, then linearises, factorises and steps without allocating. The
+// method is Gauss-Newton, damped after Levenberg (1944) and Marquardt (1963) only when a step would raise the cost. [Chordal] and
+// [SpanningTree] give starting values from the measurements alone.
+//
+// A planar survey (Dim 3) keeps its poses as rigid motions of space with z = 0 and a rotation about z; its tangents have the three
+// components x, y, rz.
+package posegraph

@@ -1,0 +1,323 @@
+package posegraph
+
+import (
+	"errors"
+	"fmt"
+	"math"
+
+	"selvage/internal/lie"
+	"selvage/internal/sparse"
+)
+
+// Solver adjusts one graph; it is made for the graph's structure (variables, factors, fixed variables) and reused while only
+// values and weights change.
+type Solver struct {
+	g        *Graph
+	symbolic *sparse.Symbolic
+	factor   *sparse.Factor
+	now      *Assembly // at the accepted values
+	trial    *Assembly
+	block    []int32 // variable -> block row, -1 when fixed
+	variable []int32 // block row -> variable
+	offset   []int32
+	step     []float64
+	next     []lie.SE3
+	diagonal []float64
+}
+
+// Options steer [Solver.Optimise]. The zero value is not useful: start from [DefaultOptions].
+type Options struct {
+	Tolerance     float64 // converged when the predicted decrease of F is below Tolerance max(F, 1)
+	MaxIterations int
+	// Watch is told after each accepted or refused step; returning false stops the adjustment. May be nil.
+	Watch func(iteration int, cost, damping float64) bool
+}
+
+// DefaultOptions are those of the one-piece adjustment.
+func DefaultOptions() Options { return Options{Tolerance: 1e-12, MaxIterations: 500} }
+
+// Stop is the reason for which an adjustment ended.
+type Stop uint8
+
+// The reasons to stop.
+const (
+	Converged       Stop = iota + 1 // the predicted decrease is below the tolerance
+	NoDecrease                      // rounding leaves no step that lowers the cost
+	IterationLimit                  // MaxIterations steps were tried
+	Interrupted                     // Watch returned false
+	Undetermined                    // the measurements leave a variable free, whatever the damping
+	NothingToAdjust                 // every variable is fixed
+)
+
+func (s Stop) String() string {
+	switch s {
+	case Converged:
+		return "converged"
+	case NoDecrease:
+		return "no_decrease"
+	case IterationLimit:
+		return "iteration_limit"
+	case Interrupted:
+		return "interrupted"
+	case Undetermined:
+		return "undetermined"
+	case NothingToAdjust:
+		return "nothing_to_adjust"
+	}
+	return "unknown"
+}
+
+// Result tells how an adjustment went.
+type Result struct {
+	InitialCost float64
+	Cost        float64 // F at the final values
+	Iterations  int     // factorisations
+	Refused     int     // of these, steps that would have raised the cost
+	Stop        Stop
+	Decrease    float64 // of F that a full step still predicted at the end
+	Weakest     int32   // with Undetermined: a variable that the measurements leave free, else -1
+}
+
+// ErrNoFixed is returned for a graph none of whose variables is fixed.
+var ErrNoFixed = errors.New("posegraph: no variable is fixed, so relative measurements leave the datum free")
+
+// NewSolver orders and analyses the graph with the given variables held fixed. Variables in last are eliminated last.
+func NewSolver(g *Graph, fixed []int32, ordering sparse.Options) (*Solver, error) {
+	n := len(g.Values.Poses)
+	s := &Solver{g: g, block: make([]int32, n), offset: make([]int32, n)}
+	for _, f := range fixed {
+		if f < 0 || int(f) >= n {
+			panic(fmt.Sprintf("posegraph: fixed variable %d of %d", f, n))
+		}
+		s.block[f] = -1
+	}
+	if len(fixed) == 0 && n > 0 {
+		return nil, ErrNoFixed
+	}
+	scalars := int32(0)
+	for i := range s.block {
+		if s.block[i] < 0 {
+			s.offset[i] = -1
+			continue
+		}
+		s.block[i] = int32(len(s.variable))
+		s.offset[i] = scalars
+		s.variable = append(s.variable, int32(i))
+		scalars += int32(g.Dim)
+	}
+	dims := make([]int, len(s.variable))
+	for i := range dims {
+		dims[i] = g.Dim
+	}
+	pairs, slots := s.pairs()
+	var err error
+	ordering.Last = s.blocksOf(ordering.Last)
+	if s.symbolic, err = sparse.Analyse(sparse.Pattern{Dims: dims, Pairs: pairs}, ordering); err != nil {
+		return nil, err
+	}
+	k := 0
+	for _, set := range g.Sets {
+		set.Bind(func() Slot { k++; return slots[k-1] })
+	}
+	s.factor = sparse.NewFactor(s.symbolic)
+	s.now, s.trial = s.assembly(int(scalars)), s.assembly(int(scalars))
+	s.step = make([]float64, scalars)
+	s.diagonal = make([]float64, scalars)
+	s.next = make([]lie.SE3, n)
+	return s, nil
+}
+
+func (s *Solver) blocksOf(variables []int32) []int32 {
+	var blocks []int32
+	for _, v := range variables {
+		if s.block[v] >= 0 {
+			blocks = append(blocks, s.block[v])
+		}
+	}
+	return blocks
+}
+
+func (s *Solver) assembly(scalars int) *Assembly {
+	return &Assembly{Matrix: s.symbolic.NewMatrix(), Gradient: make([]float64, scalars), block: s.block, offset: s.offset}
+}
+
+// pairs collects the distinct off-diagonal blocks and the slot of each coupling, by counting sort on the lower block.
+func (s *Solver) pairs() (pairs [][2]int32, slots []Slot) {
+	var lo, hi []int32 // block rows of each coupling, lo < hi; -1 when one is fixed
+	var swapped []bool
+	start := make([]int32, len(s.variable)+2)
+	for _, set := range s.g.Sets {
+		set.Couplings(func(i, j int32) {
+			s.g.check(i, j)
+			a, b := s.block[i], s.block[j]
+			switch {
+			case a < 0 || b < 0:
+				a, b = -1, -1
+			case a > b:
+				a, b = b, a
+				swapped = append(swapped, true)
+			}
+			if len(swapped) == len(lo) {
+				swapped = append(swapped, false)
+			}
+			lo, hi = append(lo, a), append(hi, b)
+			start[a+2]++
+		})
+	}
+	for i := 1; i < len(start); i++ {
+		start[i] += start[i-1]
+	}
+	order := make([]int32, len(lo))
+	for k, a := range lo {
+		order[start[a+1]] = int32(k)
+		start[a+1]++
+	}
+	slots = make([]Slot, len(lo))
+	seen := make([]int32, len(s.variable)) // block -> pair number + 1 within the current row
+	stamp := make([]int32, len(s.variable))
+	for _, k := range order {
+		a, b := lo[k], hi[k]
+		if a < 0 {
+			continue
+		}
+		if stamp[b] != a+1 {
+			stamp[b] = a + 1
+			pairs = append(pairs, [2]int32{a, b})
+			seen[b] = int32(len(pairs))
+		}
+		slots[k] = Slot(seen[b])
+		if swapped[k] {
+			slots[k] = -slots[k]
+		}
+	}
+	return pairs, slots
+}
+
+// linearise fills a at v and returns the cost.
+func (s *Solver) linearise(v *Values, a *Assembly) float64 {
+	a.Matrix.Zero()
+	clear(a.Gradient)
+	cost := 0.0
+	for _, set := range s.g.Sets {
+		cost += set.Linearise(v, a)
+	}
+	return cost
+}
+
+// damping of Levenberg and Marquardt: lambda times the diagonal is added when a plain Gauss-Newton step would raise the cost.
+const (
+	firstDamping = 1e-4
+	leastDamping = 1e-7
+	mostDamping  = 1e10
+)
+
+// Optimise adjusts the graph's values.
+func (s *Solver) Optimise(o Options) Result {
+	r := Result{Weakest: -1}
+	if len(s.variable) == 0 {
+		r.InitialCost = s.g.Cost()
+		r.Cost, r.Stop = r.InitialCost, NothingToAdjust
+		return r
+	}
+	cost := s.linearise(&s.g.Values, s.now)
+	r.InitialCost, r.Cost = cost, cost
+	lambda := 0.0
+	for r.Iterations = 0; r.Iterations < o.MaxIterations; {
+		if o.Watch != nil && !o.Watch(r.Iterations, cost, lambda) {
+			r.Stop = Interrupted
+			return r
+		}
+		s.damp(lambda)
+		r.Iterations++
+		if err := s.factor.FactoriseSolve(s.now.Matrix, s.now.Gradient, s.step); err != nil {
+			var bad *sparse.NotPositiveError
+			if lambda >= mostDamping && errors.As(err, &bad) {
+				r.Weakest = s.variable[bad.Block]
+				r.Stop = Undetermined
+				return r
+			}
+			s.undamp(lambda)
+			lambda = math.Max(8*lambda, firstDamping)
+			continue
+		}
+		s.undamp(lambda)
+		slope := 0.0 // g.d: the step is minus this solution
+		for i, g := range s.now.Gradient {
+			slope += g * s.step[i]
+		}
+		r.Decrease = slope / 2
+		s.advance()
+		trial := s.linearise(&Values{Poses: s.next}, s.trial)
+		scale := math.Max(math.Abs(cost), 1)
+		if trial <= cost {
+			s.g.Values.Poses, s.next = s.next, s.g.Values.Poses
+			s.now, s.trial = s.trial, s.now
+			cost, r.Cost = trial, trial
+			if slope < 2*o.Tolerance*scale && lambda < firstDamping {
+				r.Stop = Converged
+				return r
+			}
+			if lambda /= 5; lambda < leastDamping {
+				lambda = 0
+			}
+			continue
+		}
+		if slope < 2*o.Tolerance*scale && lambda < firstDamping {
+			r.Stop = Converged // the step is below what rounding lets the cost show
+			return r
+		}
+		r.Refused++
+		if lambda >= mostDamping || trial-cost < 1e-14*scale {
+			r.Stop = NoDecrease
+			return r
+		}
+		lambda = math.Max(8*lambda, firstDamping)
+	}
+	r.Stop = IterationLimit
+	return r
+}
+
+// damp adds lambda times the diagonal; undamp restores it.
+func (s *Solver) damp(lambda float64) {
+	if lambda == 0 {
+		return
+	}
+	d := s.g.Dim
+	for b := range s.variable {
+		m := s.now.Matrix.Diag(b)
+		for i := 0; i < d; i++ {
+			s.diagonal[b*d+i] = m[i*(d+1)]
+			m[i*(d+1)] *= 1 + lambda
+		}
+	}
+}
+
+func (s *Solver) undamp(lambda float64) {
+	if lambda == 0 {
+		return
+	}
+	d := s.g.Dim
+	for b := range s.variable {
+		m := s.now.Matrix.Diag(b)
+		for i := 0; i < d; i++ {
+			m[i*(d+1)] = s.diagonal[b*d+i]
+		}
+	}
+}
+
+// advance writes the stepped values to next.
+func (s *Solver) advance() {
+	for i := range s.next {
+		o := s.offset[i]
+		if o < 0 {
+			s.next[i] = s.g.Values.Poses[i]
+			continue
+		}
+		d := s.step[o:]
+		if s.g.Dim == 3 {
+			s.next[i] = lie.Planar(&s.g.Values.Poses[i]).Plus([3]float64{-d[0], -d[1], -d[2]}).Spatial()
+		} else {
+			s.next[i] = s.g.Values.Poses[i].Plus(lie.Tangent{-d[0], -d[1], -d[2], -d[3], -d[4], -d[5]})
+		}
+	}
+}
