@@ -3,7 +3,8 @@ package msgs
 import "math"
 
 // A pose of a summary or a correction crosses as Dim float64 numbers: position, then the rotation vector (axis times
-// angle, at most pi), of which a planar one has only the third component. It comes back to rounding, 2e-16 in rotation.
+// angle, at most pi), of which a planar one has only the third component. It comes back within 5e-16 in each
+// component of the quaternion, with w at least 0.
 
 func appendPose(dst []float64, p *Pose, dim int) []float64 {
 	x, y, z, w := p.Q[0], p.Q[1], p.Q[2], p.Q[3]

@@ -21,6 +21,7 @@ const (
 	MaxGaps        = 1 << 14 // gaps in a want
 	MaxKeyframes   = 1 << 31 // keyframes counted in a part
 	MaxMetres      = 1e9     // any coordinate, and the length of a track
+	MaxMatrix      = 1e70    // any number of an information or covariance matrix
 
 	MaxSmall   = 1 << 14 // bytes of a heartbeat, tie, verdict, lease or head
 	MaxWant    = 1 << 21 // bytes of a want
@@ -110,6 +111,15 @@ func checkFinite(field string, xs ...float64) error {
 	return nil
 }
 
+func checkMatrix(field string, m []float64) error {
+	for _, x := range m {
+		if !(math.Abs(x) <= MaxMatrix) {
+			return wrong(field, x, "a number of at most %g", float64(MaxMatrix))
+		}
+	}
+	return nil
+}
+
 func (h *Header) check() error {
 	if err := checkNames(h.Fleet, h.Robot); err != nil {
 		return in(err, "header")
@@ -184,7 +194,7 @@ func (x *Tie) check() error {
 	if len(x.Info) != x.Dim*x.Dim {
 		return wrong("info", len(x.Info), "%d numbers", x.Dim*x.Dim)
 	}
-	if err := checkFinite("info", x.Info...); err != nil {
+	if err := checkMatrix("info", x.Info); err != nil {
 		return err
 	}
 	return checkText("source", x.Source, MaxID)

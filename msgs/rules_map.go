@@ -76,7 +76,7 @@ func (c *Clique) check(dim, mark int, seen []int) error {
 	if len(c.B) != d {
 		return wrong("b", len(c.B), "%d numbers", d)
 	}
-	if err := checkFinite("h", c.H...); err != nil {
+	if err := checkMatrix("h", c.H); err != nil {
 		return err
 	}
 	for _, x := range c.B {
@@ -163,7 +163,7 @@ func (p *CorrectedPart) check(dim int) error {
 		if len(p.Cov[i]) != d*d {
 			return at(wrong("size", len(p.Cov[i]), "%d numbers", d*d), "cov", i)
 		}
-		if err := checkFinite("value", p.Cov[i]...); err != nil {
+		if err := checkMatrix("value", p.Cov[i]); err != nil {
 			return at(err, "cov", i)
 		}
 	}
