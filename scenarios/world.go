@@ -1,0 +1,175 @@
+package scenarios
+
+import (
+	"cmp"
+	"fmt"
+	"slices"
+	"strconv"
+
+	"selvage/internal/survey"
+)
+
+// World is a simulated outing.
+type World struct {
+	// Survey is what the fleet recorded, with the truth.
+	Survey *survey.Survey
+
+	// TieTrue says for each tie of the survey whether it is true, Clustered whether it belongs to a cluster of false ties.
+	TieTrue   []bool
+	Clustered []bool
+
+	// Feed holds for each robot, in the order of Survey.Robots, what its front end delivers, in the order of time.
+	Feed [][]Event
+
+	// Base is where the base stands in the datum, m.
+	Base [3]float64
+
+	// EndNS is when the outing is over: nothing is delivered later.
+	EndNS int64
+
+	tracks []track
+}
+
+// EventKind says what a front end delivers.
+type EventKind uint8
+
+const (
+	// KeyframeEvent: Index is a row of Survey.Robots[robot].Keyframes.
+	KeyframeEvent EventKind = iota
+	// RelativeEvent: Index is a row of Survey.Robots[robot].Relatives. Both keyframes have been delivered before.
+	RelativeEvent
+	// TieEvent: Index is a row of Survey.Ties, delivered to the robot that made it, after its keyframe there.
+	TieEvent
+)
+
+// Event is one delivery.
+type Event struct {
+	AtNS  int64
+	Kind  EventKind
+	Index int
+}
+
+// Simulate draws the outing of a scenario. The seed of the scenario is not looked at: the caller hands one in.
+func Simulate(sc *Scenario, seed uint64) (*World, error) {
+	if err := sc.Validate(); err != nil {
+		return nil, fmt.Errorf("scenarios: %w", err)
+	}
+	s := newSite(sc, seed)
+	w := &World{Base: s.nodes[s.entrance], tracks: make([]track, sc.Fleet.Robots)}
+	if sc.Radio.Base != nil {
+		w.Base = *sc.Radio.Base
+	}
+	homes := s.homes(sc.Fleet.Robots)
+	tracks := make([]*track, len(w.tracks))
+	sv := &survey.Survey{Meta: survey.Meta{
+		Format: 1, Name: sc.Name, Dimension: sc.Dimension(),
+		Datum: survey.Datum{Name: "site", Level: true},
+		Notes: fmt.Sprintf("Simulated: %s, seed %d.", sc.Title, seed),
+	}}
+	for i := range w.tracks {
+		id := robotID(i)
+		w.tracks[i] = s.walk(sc, homes[i], stream(seed, "walk/"+id))
+		t := &w.tracks[i]
+		tracks[i] = t
+		sv.Meta.Robots = append(sv.Meta.Robots, survey.RobotMeta{ID: id, Sessions: []uint32{session}})
+		sv.Robots = append(sv.Robots, record(sc, id, t, seed))
+		for k := range t.pose {
+			sv.Truth = append(sv.Truth, survey.TruthPose{Robot: id, Session: session, Key: int64(k), Pose: poseOf(&t.pose[k])})
+		}
+	}
+	found := meet(sc, s, tracks, seed)
+	found = append(found, falsify(sc, s, tracks, len(found), seed)...)
+	w.Survey = sv
+	w.enterTies(sc, found)
+	w.feed(sc)
+	return w, nil
+}
+
+// enterTies writes the ties into the survey, in the order of their making; nothing in a row tells true from false.
+func (w *World) enterTies(sc *Scenario, found []sighting) {
+	made := func(t *sighting) int64 { return w.tracks[t.from].atNS[t.fromKey] }
+	slices.SortStableFunc(found, func(a, b sighting) int {
+		return cmp.Or(cmp.Compare(made(&a), made(&b)), cmp.Compare(a.from, b.from), cmp.Compare(a.to, b.to), cmp.Compare(a.toKey, b.toKey))
+	})
+	encounter, revisit := sc.Ties.Encounter.cov(sc.Dimension()), sc.Ties.Revisit.cov(sc.Dimension())
+	for i := range found {
+		t := &found[i]
+		row := survey.Tie{
+			ID:        fmt.Sprintf("t%04d", i+1),
+			FromRobot: robotID(t.from), FromSession: session, FromKey: int64(t.fromKey),
+			ToRobot: robotID(t.to), ToSession: session, ToKey: int64(t.toKey),
+			Pose: poseOf(&t.pose), Cov: revisit, Source: "recognition", StampNS: made(t), HasStamp: true,
+		}
+		if t.encounter {
+			row.Cov, row.Source = encounter, "encounter"
+		}
+		w.Survey.Ties = append(w.Survey.Ties, row)
+		w.TieTrue = append(w.TieTrue, t.true)
+		w.Clustered = append(w.Clustered, t.cluster)
+	}
+}
+
+// feed puts what each front end delivers into the order of time.
+func (w *World) feed(sc *Scenario) {
+	late := seconds(sc.FrontEnd.Latency)
+	w.Feed = make([][]Event, len(w.tracks))
+	for r := range w.Survey.Robots {
+		robot, at := &w.Survey.Robots[r], w.tracks[r].atNS
+		for k := range robot.Keyframes {
+			w.Feed[r] = append(w.Feed[r], Event{at[k], KeyframeEvent, k})
+		}
+		for i := range robot.Relatives {
+			ns := at[robot.Relatives[i].To]
+			if robot.Relatives[i].Kind == survey.Closure {
+				ns += late
+			}
+			w.Feed[r] = append(w.Feed[r], Event{ns, RelativeEvent, i})
+		}
+	}
+	for i := range w.Survey.Ties {
+		t := &w.Survey.Ties[i]
+		r, _ := robotNumber(t.FromRobot)
+		w.Feed[r] = append(w.Feed[r], Event{t.StampNS + late, TieEvent, i})
+	}
+	w.EndNS = seconds(sc.Duration)
+	for _, events := range w.Feed {
+		slices.SortFunc(events, func(a, b Event) int {
+			return cmp.Or(cmp.Compare(a.AtNS, b.AtNS), cmp.Compare(a.Kind, b.Kind), cmp.Compare(a.Index, b.Index))
+		})
+		if n := len(events); n > 0 {
+			w.EndNS = max(w.EndNS, events[n-1].AtNS)
+		}
+	}
+}
+
+// Position returns where a robot is at a time, in the datum, m. Before its start and after its end it stands still; a robot
+// that does not exist is a mistake of the caller.
+func (w *World) Position(robot string, ns int64) [3]float64 {
+	r, ok := robotNumber(robot)
+	if !ok || r >= len(w.tracks) {
+		panic("scenarios: no robot named " + robot)
+	}
+	return w.tracks[r].position(ns)
+}
+
+func seconds(s float64) int64 { return int64(s * 1e9) }
+
+// allRobots stands for every robot in a scenario file.
+const allRobots = "all"
+
+// robotID returns the id of robot i, from 0.
+func robotID(i int) string { return fmt.Sprintf("r%02d", i+1) }
+
+// robotNumber is the reverse of robotID.
+func robotNumber(id string) (i int, ok bool) {
+	if len(id) < 3 || id[0] != 'r' {
+		return 0, false
+	}
+	n, err := strconv.Atoi(id[1:])
+	return n - 1, err == nil && n > 0 && robotID(n-1) == id
+}
+
+func (sc *Scenario) hasRobot(id string) bool {
+	n, ok := robotNumber(id)
+	return ok && n < sc.Fleet.Robots
+}
