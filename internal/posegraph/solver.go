@@ -204,10 +204,12 @@ func (s *Solver) linearise(v *Values, a *Assembly) float64 {
 	return cost
 }
 
-// damping of Levenberg and Marquardt: lambda times the diagonal is added when a plain Gauss-Newton step would raise the cost.
+// Damping of Levenberg and Marquardt: lambda times the diagonal is added when a plain Gauss-Newton step would raise the cost.
+// Where the matrix is badly conditioned (mit-killian: 5e11) the useful values are small and the plain step is of no use until
+// late: lambda falls by what the last step was worth, and is dropped only when it no longer counts.
 const (
 	firstDamping = 1e-4
-	leastDamping = 1e-7
+	leastDamping = 1e-12
 	mostDamping  = 1e10
 )
 
@@ -245,19 +247,26 @@ func (s *Solver) Optimise(o Options) Result {
 		for i, g := range s.now.Gradient {
 			slope += g * s.step[i]
 		}
-		r.Decrease = slope / 2
+		r.Decrease = slope / 2 // what the linear model predicts, the damping term left out
 		s.advance()
 		trial := s.linearise(&Values{Poses: s.next}, s.trial)
 		scale := math.Max(math.Abs(cost), 1)
 		if trial <= cost {
 			s.g.Values.Poses, s.next = s.next, s.g.Values.Poses
 			s.now, s.trial = s.trial, s.now
+			gain := (cost - trial) / (slope / 2)
 			cost, r.Cost = trial, trial
 			if slope < 2*o.Tolerance*scale && lambda < firstDamping {
 				r.Stop = Converged
 				return r
 			}
-			if lambda /= 5; lambda < leastDamping {
+			switch {
+			case gain > 0.75:
+				lambda /= 10
+			case gain > 0.25:
+				lambda /= 3
+			}
+			if lambda < leastDamping {
 				lambda = 0
 			}
 			continue
