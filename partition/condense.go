@@ -29,7 +29,7 @@ type Condensed struct {
 	Cliques   []Clique // ordered by Nodes; none lies inside another
 	Bytes     int      // size of the summary by the model that chose the junctions, see [CliqueBytes] and [PoseBytes]
 
-	width int           // D
+	dim   int           // D
 	n     int           // poses of the graph
 	terms []term        // the cliques with the rows of their references, for NullResidual
 	steps []elimination // in order
@@ -42,18 +42,18 @@ const (
 	idBytes     = 2  // a junction named in a clique
 )
 
-// CliqueBytes is the modelled size of a clique of k poses with tangents of width numbers: the upper triangle of H, b and ids.
+// CliqueBytes is the modelled size of a clique of k poses with tangents of dim numbers: the upper triangle of H, b and ids.
 // A clique of one pose says nothing and takes nothing.
-func CliqueBytes(width, k int) int {
+func CliqueBytes(dim, k int) int {
 	if k < 2 {
 		return 0
 	}
-	d := width * (k - 1)
+	d := dim * (k - 1)
 	return numberBytes*(d*(d+1)/2+d) + idBytes*k
 }
 
-// Condense condenses the graph of n poses and the given terms onto junctions that include all separators. dim is the dimension of
-// the survey: 3 (six numbers a pose) or 2 (three).
+// Condense condenses the graph of n poses and the given terms onto junctions that include all separators. dim is D, the numbers
+// of a tangent: 6 in space, 3 in the plane.
 //
 // Always the pose whose elimination adds least to the size of the summary is eliminated next (the lower number first when
 // two are equal), to the end; then the shortest summary on that way is taken. Parts of the graph that are not connected are
@@ -63,40 +63,29 @@ func CliqueBytes(width, k int) int {
 // An error names the term or pose at fault: wrong sizes, numbers that are not finite, a pose that its measurements leave
 // undetermined.
 func Condense(dim, n int, factors []Quadratic, separators []int32) (*Condensed, error) {
-	width, err := tangentWidth(dim)
-	if err != nil {
+	if dim != 3 && dim != 6 {
+		return nil, fmt.Errorf("partition: tangents of %d numbers, expected 3 or 6", dim)
+	}
+	if err := validate(dim, n, factors, separators); err != nil {
 		return nil, err
 	}
-	if err := validate(width, n, factors, separators); err != nil {
-		return nil, err
-	}
-	o := newOrdering(width, n, factors, separators)
+	o := newOrdering(dim, n, factors, separators)
 	o.run()
-	e := newEliminator(o, width, factors)
+	e := newEliminator(o, dim, factors)
 	if err := e.run(); err != nil {
 		return nil, err
 	}
 	return e.result(), nil
 }
 
-func tangentWidth(dim int) (int, error) {
-	switch dim {
-	case 2:
-		return 3, nil
-	case 3:
-		return 6, nil
-	}
-	return 0, fmt.Errorf("partition: dimension %d, expected 2 or 3", dim)
-}
-
-func validate(width, n int, factors []Quadratic, separators []int32) error {
+func validate(dim, n int, factors []Quadratic, separators []int32) error {
 	if n < 1 {
 		return fmt.Errorf("partition: %d poses, expected at least one", n)
 	}
 	seen := make([]int, n)
 	for i := range factors {
 		f := &factors[i]
-		d := width * len(f.Nodes)
+		d := dim * len(f.Nodes)
 		if d == 0 {
 			return fmt.Errorf("partition: factor %d names no pose", i)
 		}
@@ -135,10 +124,10 @@ func finite(x []float64) bool {
 // Interior completes a step: steps holds D numbers for each pose, those of the junctions filled in, and receives for the interior
 // poses the steps that minimise the linearised graph given these.
 func (c *Condensed) Interior(steps []float64) {
-	if len(steps) != c.width*c.n {
+	if len(steps) != c.dim*c.n {
 		panic("partition: length of steps")
 	}
-	d := c.width
+	d := c.dim
 	for i := len(c.steps) - 1; i >= 0; i-- {
 		s := &c.steps[i]
 		var t [6]float64
@@ -172,7 +161,7 @@ func (c *Condensed) NullResidual(poses []lie.SE3) float64 {
 	}
 	worst := 0.0
 	for i := range c.terms {
-		worst = max(worst, c.terms[i].nullResidual(c.width, poses))
+		worst = max(worst, c.terms[i].nullResidual(c.dim, poses))
 	}
 	return worst
 }
@@ -220,7 +209,7 @@ func abs(x float64) float64 {
 
 // result collects what remains after the elimination.
 func (e *eliminator) result() *Condensed {
-	c := &Condensed{width: e.d, n: len(e.pos), steps: e.steps}
+	c := &Condensed{dim: e.d, n: len(e.pos), steps: e.steps}
 	gone := make([]bool, c.n)
 	for i := range e.steps {
 		gone[e.steps[i].pose] = true
@@ -247,12 +236,12 @@ func (e *eliminator) result() *Condensed {
 }
 
 // clique returns the term without the rows and columns of its first pose, both triangles filled.
-func (t *term) clique(width int) Clique {
-	d := width * (len(t.nodes) - 1)
-	c := Clique{Nodes: slices.Clone(t.nodes), H: make([]float64, d*d), B: slices.Clone(t.b[width:])}
+func (t *term) clique(dim int) Clique {
+	d := dim * (len(t.nodes) - 1)
+	c := Clique{Nodes: slices.Clone(t.nodes), H: make([]float64, d*d), B: slices.Clone(t.b[dim:])}
 	for i := 0; i < d; i++ {
 		for j := 0; j <= i; j++ {
-			h := t.at(width, width+i, width+j)
+			h := t.at(dim, dim+i, dim+j)
 			c.H[i*d+j], c.H[j*d+i] = h, h
 		}
 	}

@@ -7,7 +7,7 @@ import (
 	"selvage/internal/lie"
 )
 
-// link is a relative measurement of the test graphs: z is pose to seen from pose from, omega its information, width x width.
+// link is a relative measurement of the test graphs: z is pose to seen from pose from, omega its information, dim x dim.
 type link struct {
 	from, to int32
 	z        lie.SE3
@@ -21,8 +21,6 @@ type graph struct {
 	links []link
 }
 
-func (g *graph) width() int { return 3 * (g.dim - 1) }
-
 // embed returns a tangent of D numbers as one of six.
 func embed(xi []float64) (t lie.Tangent) {
 	if len(xi) == 6 {
@@ -35,7 +33,7 @@ func embed(xi []float64) (t lie.Tangent) {
 
 // residual returns the logarithm of x with D numbers, and the inverse right Jacobian there.
 func residual(dim int, x lie.SE3) (r, jrInv []float64) {
-	if dim == 2 {
+	if dim == 3 {
 		v := lie.Planar(&x).Log()
 		j := lie.JrInv2(v)
 		return v[:], j[:]
@@ -46,7 +44,7 @@ func residual(dim int, x lie.SE3) (r, jrInv []float64) {
 }
 
 func adjoint(dim int, x lie.SE3) []float64 {
-	if dim == 2 {
+	if dim == 3 {
 		a := lie.Planar(&x).Adjoint()
 		return a[:]
 	}
@@ -83,7 +81,7 @@ func transpose(m int, a []float64) []float64 {
 
 // linearise returns J'Omega J and J'Omega r of every link.
 func (g *graph) linearise() []Quadratic {
-	d := g.width()
+	d := g.dim
 	out := make([]Quadratic, len(g.links))
 	for i, l := range g.links {
 		x := g.poses[l.from].Between(g.poses[l.to])
@@ -103,12 +101,12 @@ func (g *graph) linearise() []Quadratic {
 }
 
 // dense returns the sum of the terms over all poses.
-func dense(width, n int, terms []Quadratic) (H, b []float64) {
-	m := width * n
+func dense(dim, n int, terms []Quadratic) (H, b []float64) {
+	m := dim * n
 	H, b = make([]float64, m*m), make([]float64, m)
 	for _, t := range terms {
-		k := width * len(t.Nodes)
-		at := func(i int) int { return int(t.Nodes[i/width])*width + i%width }
+		k := dim * len(t.Nodes)
+		at := func(i int) int { return int(t.Nodes[i/dim])*dim + i%dim }
 		for i := 0; i < k; i++ {
 			b[at(i)] += t.B[i]
 			for j := 0; j < k; j++ {
@@ -121,7 +119,7 @@ func dense(width, n int, terms []Quadratic) (H, b []float64) {
 
 // expand returns the cliques as terms with their references, by the Jacobian of e at e = 0.
 func (g *graph) expand(c *Condensed) []Quadratic {
-	d := g.width()
+	d := g.dim
 	var out []Quadratic
 	for _, q := range c.Cliques {
 		k := len(q.Nodes) - 1
@@ -144,16 +142,16 @@ func (g *graph) expand(c *Condensed) []Quadratic {
 }
 
 // schur eliminates all but the kept poses by Gauss-Jordan steps with the largest diagonal pivot: slow and plain.
-func schur(width, n int, H, b []float64, kept []int32) (S, c []float64) {
-	m := width * n
+func schur(dim, n int, H, b []float64, kept []int32) (S, c []float64) {
+	m := dim * n
 	H, b = append([]float64(nil), H...), append([]float64(nil), b...)
 	open := make([]bool, m)
 	for i := range open {
 		open[i] = true
 	}
 	for _, v := range kept {
-		for j := 0; j < width; j++ {
-			open[int(v)*width+j] = false
+		for j := 0; j < dim; j++ {
+			open[int(v)*dim+j] = false
 		}
 	}
 	for {
@@ -178,9 +176,9 @@ func schur(width, n int, H, b []float64, kept []int32) (S, c []float64) {
 			b[i] -= f * b[p]
 		}
 	}
-	k := width * len(kept)
+	k := dim * len(kept)
 	S, c = make([]float64, k*k), make([]float64, k)
-	at := func(i int) int { return int(kept[i/width])*width + i%width }
+	at := func(i int) int { return int(kept[i/dim])*dim + i%dim }
 	for i := 0; i < k; i++ {
 		c[i] = b[at(i)]
 		for j := 0; j < k; j++ {
@@ -217,7 +215,7 @@ func (g *graph) moved(t lie.SE3) *graph {
 
 func tangent(dim int, rng *rand.Rand, metres, radians float64) lie.Tangent {
 	u := func(s float64) float64 { return s * (2*rng.Float64() - 1) }
-	if dim == 2 {
+	if dim == 3 {
 		return lie.Tangent{u(metres), u(metres), 0, 0, 0, u(radians)}
 	}
 	return lie.Tangent{u(metres), u(metres), u(metres), u(radians), u(radians), u(radians)}
@@ -229,7 +227,7 @@ func walk(dim int, parts []int, closures int, rng *rand.Rand) *graph {
 	g := &graph{dim: dim}
 	measure := func(i, j int) {
 		z := g.poses[i].Between(g.poses[j]).Plus(tangent(dim, rng, .05, .02))
-		g.links = append(g.links, link{int32(i), int32(j), z, information(g.width(), rng)})
+		g.links = append(g.links, link{int32(i), int32(j), z, information(g.dim, rng)})
 	}
 	first := 0
 	for _, k := range parts {

@@ -44,9 +44,9 @@ type eliminator struct {
 // ofPivot is the position of the pose being eliminated.
 const ofPivot = -1
 
-func newEliminator(plan *ordering, width int, factors []Quadratic) *eliminator {
+func newEliminator(plan *ordering, dim int, factors []Quadratic) *eliminator {
 	e := &eliminator{
-		d:     width,
+		d:     dim,
 		plan:  plan,
 		terms: make([]term, len(plan.nodes)),
 		owned: make([]bool, len(plan.nodes)),

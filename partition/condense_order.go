@@ -44,7 +44,7 @@ type step struct {
 	into       int32   // the new term, or an older one that holds all neighbours, or -1: nothing remains
 }
 
-func newOrdering(width, n int, factors []Quadratic, separators []int32) *ordering {
+func newOrdering(dim, n int, factors []Quadratic, separators []int32) *ordering {
 	o := &ordering{
 		separator: make([]bool, n),
 		gone:      make([]bool, n),
@@ -59,7 +59,7 @@ func newOrdering(width, n int, factors []Quadratic, separators []int32) *orderin
 		count:     make([]int32, len(factors), len(factors)+n),
 	}
 	for k := range o.bytes {
-		o.bytes[k] = CliqueBytes(width, k)
+		o.bytes[k] = CliqueBytes(dim, k)
 	}
 	for _, v := range separators {
 		o.separator[v] = true
