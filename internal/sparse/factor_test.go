@@ -74,7 +74,9 @@ func randomVector(rng *rand.Rand, n int) []float64 {
 	return v
 }
 
-func TestAgainstDense(t *testing.T) {
+func TestAgainstDense(t *testing.T) { eachKernel(t, testAgainstDense) }
+
+func testAgainstDense(t *testing.T) {
 	for _, c := range testCases() {
 		t.Run(c.name, func(t *testing.T) {
 			rng := rand.New(rand.NewPCG(3, 4))
@@ -104,7 +106,7 @@ func TestAgainstDense(t *testing.T) {
 			if d := math.Abs(f.LogDet() - chol.LogDet()); d > 1e-11*float64(s.Size()) {
 				t.Errorf("LogDet differs by %g", d)
 			}
-			if d := relativeDifference(product2(f, want), b); d > 1e-14 {
+			if d := relativeDifference(applyFactor(f, want), b); d > 1e-14 {
 				t.Errorf("|LL'x-Hx| = %g |Hx|", d)
 			}
 			if err := f.Factorise(m); err != nil {
@@ -121,8 +123,8 @@ func TestAgainstDense(t *testing.T) {
 	}
 }
 
-// product2 returns L L' x.
-func product2(f *Factor, x []float64) []float64 {
+// applyFactor returns L L' x.
+func applyFactor(f *Factor, x []float64) []float64 {
 	f.enter(x)
 	s := f.s
 	y := make([]float64, s.Size()) // L'x
@@ -266,7 +268,9 @@ func checkSchur(t *testing.T, f *Factor, m *Matrix, h *mat.SymDense, b, x []floa
 	}
 }
 
-func TestIndefinite(t *testing.T) {
+func TestIndefinite(t *testing.T) { eachKernel(t, testIndefinite) }
+
+func testIndefinite(t *testing.T) {
 	for _, c := range testCases() {
 		t.Run(c.name, func(t *testing.T) {
 			rng := rand.New(rand.NewPCG(5, 6))

@@ -15,47 +15,11 @@ func product(c []float64, ldc int, a []float64, lda int, b []float64, ldb int, m
 	if m == 0 || n == 0 {
 		return
 	}
+	if accelerated {
+		productAVX2(&c[0], ldc, &a[0], lda, &b[0], ldb, m, n, k, set, lower)
+		return
+	}
 	productGo(c, ldc, a, lda, b, ldb, m, n, k, set, lower)
-}
-
-func productGo(c []float64, ldc int, a []float64, lda int, b []float64, ldb int, m, n, k int, set, lower bool) {
-	for j := 0; j < n; j += 3 {
-		first := 0
-		if lower {
-			first = j
-		}
-		for i := first; i < m; i += 3 {
-			tileGo(c[i+j*ldc:], ldc, a[i:], lda, b[j:], ldb, k, set)
-		}
-	}
-}
-
-// tileGo is a 3 x 3 tile of product.
-func tileGo(c []float64, ldc int, a []float64, lda int, b []float64, ldb int, k int, set bool) {
-	c0, c1, c2 := (*[3]float64)(c), (*[3]float64)(c[ldc:]), (*[3]float64)(c[2*ldc:])
-	var s00, s10, s20, s01, s11, s21, s02, s12, s22 float64
-	if !set {
-		s00, s10, s20 = c0[0], c0[1], c0[2]
-		s01, s11, s21 = c1[0], c1[1], c1[2]
-		s02, s12, s22 = c2[0], c2[1], c2[2]
-	}
-	for l := range k {
-		x, y := (*[3]float64)(a[l*lda:]), (*[3]float64)(b[l*ldb:])
-		x0, x1, x2 := x[0], x[1], x[2]
-		y0, y1, y2 := y[0], y[1], y[2]
-		s00 -= x0 * y0
-		s10 -= x1 * y0
-		s20 -= x2 * y0
-		s01 -= x0 * y1
-		s11 -= x1 * y1
-		s21 -= x2 * y1
-		s02 -= x0 * y2
-		s12 -= x1 * y2
-		s22 -= x2 * y2
-	}
-	c0[0], c0[1], c0[2] = s00, s10, s20
-	c1[0], c1[1], c1[2] = s01, s11, s21
-	c2[0], c2[1], c2[2] = s02, s12, s22
 }
 
 // triangle holds a pivot block of up to six columns for solvePanel: for each
@@ -63,34 +27,17 @@ func tileGo(c []float64, ldc int, a []float64, lda int, b []float64, ldb int, k 
 type triangle [21]float64
 
 // solvePanel sets X = (X - A B') L^-T for the m rows of X, which are columns
-// k..k+w-1 of x, where A is columns 0..k-1 of x, B is w x k and L is w x w.
+// k..k+w-1 of x, where A is columns 0..k-1 of x, B is w x k and L is w x w, w is 3
+// or 6.
 func solvePanel(x []float64, ldx int, b []float64, ldb int, l *triangle, m, k, w int) {
 	if m == 0 {
 		return
 	}
+	if accelerated {
+		solvePanelAVX2(&x[0], ldx, &b[0], ldb, &l[0], m, k, w)
+		return
+	}
 	solvePanelGo(x, ldx, b, ldb, l, m, k, w)
-}
-
-func solvePanelGo(x []float64, ldx int, b []float64, ldb int, l *triangle, m, k, w int) {
-	if k > 0 {
-		productGo(x[k*ldx:], ldx, x, ldx, b, ldb, m, w, k, false, false)
-	}
-	t := 0
-	for c := range w {
-		col := x[(k+c)*ldx:][:m]
-		inv := l[t]
-		for i := range col {
-			col[i] *= inv
-		}
-		for o := 1; c+o < w; o++ {
-			v := l[t+o]
-			target := x[(k+c+o)*ldx:][:m]
-			for i, y := range col {
-				target[i] -= v * y
-			}
-		}
-		t += w - c
-	}
 }
 
 // addRuns adds the entries of source columns 0..cols-1 to target columns, where
@@ -100,25 +47,11 @@ func addRuns(dst []float64, ldd int, src []float64, lds int, cols int, runs []ru
 	if len(runs) == 0 {
 		return
 	}
-	addRunsGo(dst, ldd, src, lds, cols, runs, lower)
-}
-
-func addRunsGo(dst []float64, ldd int, src []float64, lds int, cols int, runs []run, lower bool) {
-	for c := range cols {
-		skip := int32(0)
-		if lower {
-			skip = int32(c)
-		}
-		to, from := dst[c*ldd:], src[c*lds:]
-		for _, r := range runs {
-			f := from[r.src+skip : r.src+r.length]
-			t := to[r.dst+skip:][:len(f)]
-			for i, v := range f {
-				t[i] += v
-			}
-			skip = 0
-		}
+	if accelerated {
+		addRunsAVX2(&dst[0], ldd, &src[0], lds, cols, &runs[0].src, len(runs), lower)
+		return
 	}
+	addRunsGo(dst, ldd, src, lds, cols, runs, lower)
 }
 
 // subtractProduct sets y = y - A x, where A is m x n.
@@ -126,18 +59,11 @@ func subtractProduct(y, a []float64, lda int, x []float64, m, n int) {
 	if m == 0 || n == 0 {
 		return
 	}
-	subtractProductGo(y, a, lda, x, m, n)
-}
-
-func subtractProductGo(y, a []float64, lda int, x []float64, m, n int) {
-	y = y[:m]
-	for c := 0; c < n; c += 3 {
-		a0, a1, a2 := a[c*lda:][:m], a[(c+1)*lda:][:m], a[(c+2)*lda:][:m]
-		x0, x1, x2 := x[c], x[c+1], x[c+2]
-		for i := range y {
-			y[i] = y[i] - a0[i]*x0 - a1[i]*x1 - a2[i]*x2
-		}
+	if accelerated {
+		subtractProductAVX2(&y[0], &a[0], lda, &x[0], m, n)
+		return
 	}
+	subtractProductGo(y, a, lda, x, m, n)
 }
 
 // subtractTransposed sets y = y - A' x, where A is m x n.
@@ -145,21 +71,9 @@ func subtractTransposed(y, a []float64, lda int, x []float64, m, n int) {
 	if m == 0 || n == 0 {
 		return
 	}
-	subtractTransposedGo(y, a, lda, x, m, n)
-}
-
-func subtractTransposedGo(y, a []float64, lda int, x []float64, m, n int) {
-	x = x[:m]
-	for c := 0; c < n; c += 3 {
-		a0, a1, a2 := a[c*lda:][:m], a[(c+1)*lda:][:m], a[(c+2)*lda:][:m]
-		var s0, s1, s2 float64
-		for i, v := range x {
-			s0 += a0[i] * v
-			s1 += a1[i] * v
-			s2 += a2[i] * v
-		}
-		y[c] -= s0
-		y[c+1] -= s1
-		y[c+2] -= s2
+	if accelerated {
+		subtractTransposedAVX2(&y[0], &a[0], lda, &x[0], m, n)
+		return
 	}
+	subtractTransposedGo(y, a, lda, x, m, n)
 }

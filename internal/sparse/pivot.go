@@ -46,7 +46,7 @@ func factorColumns(d []float64, ldd int, r []float64, ldr, w, m, rows int) int {
 			return j + c
 		}
 		if below := m - j - n; below > 0 {
-			solvePanel(d[j+n+j*ldd:], ldd, nil, 0, &l, below, 0, n)
+			solvePanel(d[j+n+j*ldd:], ldd, d, ldd, &l, below, 0, n)
 		}
 		if rows > 0 {
 			solvePanel(r, ldr, d[j:], ldd, &l, rows, j, n)
