@@ -153,19 +153,15 @@ type Result struct {
 // covariances must be positive definite; anything else is a programming mistake and panics.
 func Decide(units []Unit, ties []Tie, o Options) Result {
 	check(units, ties, o)
-	r := Result{
-		Ties:          make([]Finding, len(ties)),
-		Island:        make([]int, len(units)),
-		DatumFromUnit: make([]lie.SE3, len(units)),
+	b := newBody(units, ties, o)
+	groups := b.pairs()
+	var hs []hypothesis
+	for _, g := range groups {
+		hs = append(hs, b.hypothesise(g)...)
 	}
-	for i := range units {
-		r.Island[i] = i
-		r.DatumFromUnit[i] = lie.Identity()
-	}
-	for i := range r.Ties {
-		r.Ties[i] = Finding{Hypothesis: -1, Reason: "not yet weighed"}
-	}
-	return r
+	f := newFleet(b, hs)
+	w := f.weigh(len(groups))
+	return b.conclude(f, w)
 }
 
 func check(units []Unit, ties []Tie, o Options) {

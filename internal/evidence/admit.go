@@ -1,0 +1,131 @@
+package evidence
+
+import (
+	"fmt"
+	"math"
+
+	"gonum.org/v1/gonum/mat"
+
+	"selvage/internal/lie"
+)
+
+// witnesses is how many independent ways around are combined into one prediction.
+const witnesses = 4
+
+// prediction is where the ties held put a tie.
+type prediction struct {
+	squared float64 // squared Mahalanobis distance of the tie from it
+	share   float64 // part of all possible poses that would have passed
+	ways    int
+}
+
+// predict combines the ways around tie t: through ties of its own pair at other places, the nearest first, and if these are
+// fewer than two, through other units.
+func (b *body) predict(t int, same []int, a *atlas) prediction {
+	l := &b.links[t]
+	var e [witnesses]lie.Tangent
+	var c [witnesses]cov
+	n := 0
+	var used [witnesses]int
+	for n < witnesses {
+		best, cost := -1, math.Inf(1)
+	next:
+		for _, x := range same {
+			if x == t || !b.apart(x, t) {
+				continue
+			}
+			m := &b.links[x]
+			d := math.Abs(b.tracks[l.a].TravelM[l.i]-b.tracks[l.a].TravelM[m.i]) + math.Abs(b.tracks[l.b].TravelM[l.j]-b.tracks[l.b].TravelM[m.j])
+			if d >= cost {
+				continue
+			}
+			for _, y := range used[:n] {
+				if !b.apart(x, y) {
+					continue next
+				}
+			}
+			best, cost = x, d
+		}
+		if best < 0 {
+			break
+		}
+		used[n] = best
+		e[n], c[n] = b.around(l, []int{best})
+		n++
+	}
+	if n < 2 {
+		ties, ok := a.walk(l, func(x int) bool { return b.links[x].a == l.a && b.links[x].b == l.b })
+		if ok {
+			e[n], c[n] = b.around(l, ties)
+			n++
+		}
+	}
+	if n == 0 {
+		return prediction{}
+	}
+	x, d := e[0], c[0]
+	if n > 1 {
+		x, d = fuse(e[:n], c[:n], b.o.Dim)
+	}
+	z := lie.Exp(x)
+	own := l.c.carry(&z)
+	d.add(&own)
+	return prediction{mahalanobis(&x, &d, b.o.Dim), b.share(&d, l.a, l.b), n}
+}
+
+// around returns the misclosure of l against a walk, with the covariance of the walk alone.
+func (b *body) around(l *link, ties []int) (lie.Tangent, cov) {
+	p := b.through(l, ties)
+	e := l.z.Between(p.x)
+	return e.Log(), p.c
+}
+
+// fuse returns the weighted mean of independent vectors and its covariance.
+func fuse(e []lie.Tangent, c []cov, dim int) (lie.Tangent, cov) {
+	n := 6
+	if dim == 2 {
+		n = 3
+	}
+	info, rhs := mat.NewSymDense(n, nil), mat.NewVecDense(n, nil)
+	var m [36]float64
+	var x [6]float64
+	for k := range e {
+		c[k].dense(dim, &m)
+		var ch mat.Cholesky
+		if !ch.Factorize(mat.NewSymDense(n, m[:n*n])) {
+			continue
+		}
+		var inv mat.SymDense
+		if ch.InverseTo(&inv) != nil {
+			continue
+		}
+		info.AddSym(info, &inv)
+		pick(&e[k], dim, &x)
+		var v mat.VecDense
+		v.MulVec(&inv, mat.NewVecDense(n, x[:n]))
+		rhs.AddVec(rhs, &v)
+	}
+	var ch mat.Cholesky
+	var mean mat.VecDense
+	var sum mat.SymDense
+	if !ch.Factorize(info) || ch.SolveVecTo(&mean, rhs) != nil || ch.InverseTo(&sum) != nil {
+		return e[0], c[0]
+	}
+	index := [6]int{0, 1, 2, 3, 4, 5}
+	if dim == 2 {
+		index = [6]int{0, 1, 5}
+	}
+	var full [36]float64
+	var out lie.Tangent
+	for i := 0; i < n; i++ {
+		out[index[i]] = mean.AtVec(i)
+		for j := 0; j < n; j++ {
+			full[6*index[i]+index[j]] = sum.At(i, j)
+		}
+	}
+	return out, covOf(&full, dim)
+}
+
+func (b *body) names(l *link) string {
+	return fmt.Sprintf("%s and %s", b.tracks[l.a].Name, b.tracks[l.b].Name)
+}

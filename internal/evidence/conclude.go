@@ -1,0 +1,153 @@
+package evidence
+
+import (
+	"cmp"
+	"fmt"
+	"slices"
+
+	"selvage/internal/lie"
+)
+
+// conclude turns what was weighed into findings: the ties of held hypotheses are tested against each other, all others against
+// the prediction from those.
+func (b *body) conclude(f *fleet, w weighed) Result {
+	n := len(b.tracks)
+	r := Result{
+		Ties:          make([]Finding, len(b.links)),
+		Hypotheses:    make([]Hypothesis, len(f.hs)),
+		Island:        make([]int, n),
+		DatumFromUnit: make([]lie.SE3, n),
+	}
+	for i := range r.Ties {
+		r.Ties[i] = Finding{Hypothesis: -1}
+	}
+	var core []int
+	at := map[[2]int]int{} // pair -> index in same, looked up only
+	var same [][]int
+	for k := range f.hs {
+		h := &f.hs[k]
+		r.Hypotheses[k] = Hypothesis{A: h.a, B: h.b, Ties: h.members, Places: len(h.spots), AFromB: h.ab, Margin: w.margin[k],
+			Cycle: w.cycle[k], Chance: w.expected[k], Held: w.held[k]}
+		for _, t := range h.members {
+			r.Ties[t].Hypothesis, r.Ties[t].Places, r.Ties[t].Margin = k, len(h.spots), w.margin[k]
+		}
+		if w.held[k] {
+			core = append(core, h.members...)
+			key := [2]int{h.a, h.b}
+			if _, ok := at[key]; !ok {
+				at[key] = len(same)
+				same = append(same, nil)
+			}
+			same[at[key]] = append(same[at[key]], h.members...)
+		}
+	}
+	slices.Sort(core)
+	b.islands(f, w.held, &r)
+	a := newAtlas(b, core)
+	// A tie outside the core may be held by accident; so many of them there are.
+	doubtful := len(b.links) - len(core) + 1
+	for t := range b.links {
+		l := &b.links[t]
+		if r.Island[l.a] != r.Island[l.b] {
+			b.undetermined(t, f, &w, &r)
+			continue
+		}
+		var mates []int
+		if i, ok := at[[2]int{l.a, l.b}]; ok {
+			mates = same[i]
+		}
+		p := b.predict(t, mates, a)
+		x := &r.Ties[t]
+		x.Statistic, x.DoF = p.squared, b.dof
+		switch {
+		case p.ways == 0:
+			x.DoF = 0
+			x.Reason = fmt.Sprintf("nothing but ties of the same place speaks about it; a tie between %s at another place would settle it", b.names(l))
+		case p.squared >= b.refuse:
+			x.Verdict = Refused
+			x.Reason = fmt.Sprintf("contradicted by the ties held: misclosure %.1f, bound %.1f, by %d ways around", p.squared, b.refuse, p.ways)
+		case p.squared >= b.gate:
+			x.Reason = fmt.Sprintf("fits the ties held badly: misclosure %.1f, bound %.1f", p.squared, b.gate)
+		case p.share*float64(doubtful) >= 0.1:
+			x.Reason = fmt.Sprintf("agrees with the ties held, but these are so far along the track that it might by chance; a tie between %s nearby would settle it", b.names(l))
+		default:
+			x.Verdict = Held
+			x.Reason = fmt.Sprintf("agrees with the ties held: misclosure %.1f, bound %.1f", p.squared, b.gate)
+		}
+	}
+	return r
+}
+
+// undetermined explains why a tie between two islands stays open.
+func (b *body) undetermined(t int, f *fleet, w *weighed, r *Result) {
+	x := &r.Ties[t]
+	l := &b.links[t]
+	best := -1
+	for k := range f.hs {
+		if f.hs[k].a == l.a && f.hs[k].b == l.b && (best < 0 || f.hs[k].weight > f.hs[best].weight) {
+			best = k
+		}
+	}
+	if best < 0 {
+		x.Reason = "its pair was not weighed"
+		return
+	}
+	h := &f.hs[best]
+	switch {
+	case h.blurred:
+		x.Reason = fmt.Sprintf("too many sets of ties between %s contradict each other to be told apart", b.names(l))
+	case w.margin[best] < 0:
+		x.Reason = fmt.Sprintf("%s are undetermined, and the rest of the fleet speaks against their best set", b.names(l))
+	default:
+		need := b.o.BridgeMargin - max(0, w.margin[best])
+		if w.cycle[best] {
+			need = b.o.CycleMargin - max(0, w.margin[best])
+		}
+		x.Reason = fmt.Sprintf("%s rest on %d places with a margin of %d; %d more, over %g m apart, or a third unit that meets both, would settle it",
+			b.names(l), len(h.spots), w.margin[best], max(1, need), b.o.PlaceM)
+	}
+}
+
+// islands joins the units over the held hypotheses, the strongest first, and gives each its place in the frame of the lowest.
+func (b *body) islands(f *fleet, held []bool, r *Result) {
+	var order []int
+	for k := range f.hs {
+		if held[k] {
+			order = append(order, k)
+		}
+	}
+	slices.SortFunc(order, func(x, y int) int {
+		return cmp.Or(cmp.Compare(f.hs[y].weight, f.hs[x].weight), cmp.Compare(x, y))
+	})
+	comp := make([]int, len(b.tracks))
+	at := r.DatumFromUnit
+	for u := range comp {
+		comp[u], at[u] = u, lie.Identity()
+	}
+	for _, k := range order {
+		h := &f.hs[k]
+		from, to := comp[h.b], comp[h.a]
+		if from == to {
+			continue
+		}
+		d := at[h.a].Mul(h.ab).Mul(at[h.b].Inv())
+		for u := range comp {
+			if comp[u] == from {
+				comp[u], at[u] = to, d.Mul(at[u])
+			}
+		}
+	}
+	number := 0
+	for u := range comp {
+		first := slices.Index(comp, comp[u])
+		if first == u {
+			r.Island[u] = number
+			number++
+			continue
+		}
+		r.Island[u] = r.Island[first]
+	}
+	for u := len(comp) - 1; u >= 0; u-- {
+		at[u] = at[slices.Index(comp, comp[u])].Between(at[u])
+	}
+}

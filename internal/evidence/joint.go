@@ -1,0 +1,378 @@
+package evidence
+
+import (
+	"cmp"
+	"slices"
+
+	"selvage/internal/lie"
+)
+
+// fleet weighs hypotheses against each other. A configuration gives every unit a place in its component; it satisfies a
+// hypothesis if both units are in one component and lie to each other as the hypothesis says. Its score is the weight it
+// satisfies.
+type fleet struct {
+	b  *body
+	n  int // units
+	hs []hypothesis
+
+	// scratch of the moves
+	capacity, flow []int // n x n
+	queue, from    []int
+	moved          []bool
+}
+
+type config struct {
+	at    []lie.SE3 // component_from_unit
+	comp  []int
+	holds []bool // per hypothesis
+	score int
+}
+
+func newFleet(b *body, hs []hypothesis) *fleet {
+	n := len(b.tracks)
+	return &fleet{b: b, n: n, hs: hs, capacity: make([]int, n*n), flow: make([]int, n*n),
+		queue: make([]int, n), from: make([]int, n), moved: make([]bool, n)}
+}
+
+func (c *config) clone() config {
+	return config{slices.Clone(c.at), slices.Clone(c.comp), slices.Clone(c.holds), c.score}
+}
+
+// judge sets which hypotheses c satisfies, and its score.
+func (f *fleet) judge(c *config) {
+	c.score = 0
+	for k := range f.hs {
+		h := &f.hs[k]
+		c.holds[k] = false
+		if c.comp[h.a] != c.comp[h.b] {
+			continue
+		}
+		ab := c.at[h.a].Between(c.at[h.b])
+		if f.b.agrees(h, &ab) {
+			c.holds[k] = true
+			c.score += h.weight
+		}
+	}
+}
+
+// grow joins the components with the most support, one pair at a time, until no hypothesis leads from one to another.
+func (f *fleet) grow(c *config, without int) {
+	for {
+		best, support := -1, 0
+		for k := range f.hs {
+			if k == without || c.comp[f.hs[k].a] == c.comp[f.hs[k].b] {
+				continue
+			}
+			if s := f.support(c, k, without); s > support {
+				best, support = k, s
+			}
+		}
+		if best < 0 {
+			break
+		}
+		h := &f.hs[best]
+		f.shift(c, c.comp[h.b], c.comp[h.a], c.at[h.a].Mul(h.ab).Mul(c.at[h.b].Inv()))
+	}
+	f.judge(c)
+}
+
+// support is the weight of all hypotheses between the components of k's units that agree with k.
+func (f *fleet) support(c *config, k, without int) int {
+	h := &f.hs[k]
+	p, q := c.comp[h.a], c.comp[h.b]
+	d := c.at[h.a].Mul(h.ab).Mul(c.at[h.b].Inv())
+	sum := 0
+	for m := range f.hs {
+		g := &f.hs[m]
+		var ab lie.SE3
+		switch {
+		case m == without:
+			continue
+		case c.comp[g.a] == p && c.comp[g.b] == q:
+			ab = c.at[g.a].Between(d.Mul(c.at[g.b]))
+		case c.comp[g.a] == q && c.comp[g.b] == p:
+			ab = d.Mul(c.at[g.a]).Between(c.at[g.b])
+		default:
+			continue
+		}
+		if f.b.agrees(g, &ab) {
+			sum += g.weight
+		}
+	}
+	return sum
+}
+
+// shift moves component from by d and makes it part of component to.
+func (f *fleet) shift(c *config, from, to int, d lie.SE3) {
+	for u := range c.comp {
+		if c.comp[u] == from {
+			c.at[u] = d.Mul(c.at[u])
+			c.comp[u] = to
+		}
+	}
+}
+
+// best returns the configuration that local search finds from nothing.
+func (f *fleet) best() config {
+	c := config{make([]lie.SE3, f.n), make([]int, f.n), make([]bool, len(f.hs)), 0}
+	for u := range c.at {
+		c.at[u], c.comp[u] = lie.Identity(), u
+	}
+	f.grow(&c, -1)
+	f.improve(&c, -1, nil)
+	return c
+}
+
+// improve moves parts of the fleet as long as the score rises. A hypothesis given as broken stays unsatisfied. If near is given,
+// only hypotheses of units it marks are tried.
+func (f *fleet) improve(c *config, broken int, near []bool) {
+	for f.improveOnce(c, broken, near) {
+	}
+}
+
+func (f *fleet) improveOnce(c *config, broken int, near []bool) bool {
+	f.load(c)
+	var apart [2]int
+	for k := range f.hs {
+		h := &f.hs[k]
+		if c.holds[k] || k == broken || near != nil && !near[h.a] && !near[h.b] {
+			continue
+		}
+		if c.comp[h.a] != c.comp[h.b] {
+			next := c.clone()
+			f.shift(&next, c.comp[h.b], c.comp[h.a], c.at[h.a].Mul(h.ab).Mul(c.at[h.b].Inv()))
+			f.judge(&next)
+			if next.score > c.score && (broken < 0 || !next.holds[broken]) {
+				*c = next
+				return true
+			}
+			continue
+		}
+		cluster, gain := f.cluster(c, k)
+		if gain <= f.capacity[h.a*f.n+h.b] {
+			continue
+		}
+		m := f.move(c, cluster, gain, gain, apart[:0])
+		if m.loss >= 0 {
+			continue
+		}
+		next := f.apply(c, k, m.moved)
+		if next.score > c.score && (broken < 0 || !next.holds[broken]) {
+			*c = next
+			return true
+		}
+	}
+	return false
+}
+
+// load fills the capacities with the weight that binds each pair of units in c.
+func (f *fleet) load(c *config) {
+	clear(f.capacity)
+	for k := range f.hs {
+		if c.holds[k] {
+			h := &f.hs[k]
+			f.capacity[h.a*f.n+h.b] += h.weight
+			f.capacity[h.b*f.n+h.a] += h.weight
+		}
+	}
+}
+
+// crossing is a hypothesis that a move satisfies if its unit stays stays and its unit goes moves.
+type crossing struct{ stays, goes, weight int }
+
+// cluster returns the unsatisfied hypotheses that agree with k on how a part of the fleet is to be moved against the rest; k
+// itself is the first. gain is their weight.
+func (f *fleet) cluster(c *config, k int) (cs []crossing, gain int) {
+	h := &f.hs[k]
+	d := c.at[h.a].Mul(h.ab).Mul(c.at[h.b].Inv())
+	cs = append(cs, crossing{h.a, h.b, h.weight})
+	gain = h.weight
+	for m := range f.hs {
+		g := &f.hs[m]
+		if m == k || c.holds[m] || c.comp[g.a] != c.comp[h.a] || c.comp[g.b] != c.comp[h.a] {
+			continue
+		}
+		forth := c.at[g.a].Between(d.Mul(c.at[g.b]))
+		if f.b.agrees(g, &forth) {
+			cs = append(cs, crossing{g.a, g.b, g.weight})
+			gain += g.weight
+			continue
+		}
+		back := d.Mul(c.at[g.a]).Between(c.at[g.b])
+		if f.b.agrees(g, &back) {
+			cs = append(cs, crossing{g.b, g.a, g.weight})
+			gain += g.weight
+		}
+	}
+	return cs, gain
+}
+
+// move is a part of the fleet to be moved, and what that costs in weight.
+type move struct {
+	loss  int
+	moved []bool
+}
+
+// move finds the part whose moving costs least: the minimum cut that parts the units of the first of the cluster, less what
+// the cluster gains. Others of the cluster are forced across one at a time while that pays. If apart names two units, they are
+// parted as well. Cuts above limit are not told apart.
+func (f *fleet) move(c *config, cluster []crossing, gain, limit int, apart []int) move {
+	best := move{loss: limit + 1}
+	for turn := 0; turn < 2; turn++ {
+		var stay, go_ unitSet
+		stay, go_ = newSet(f.n), newSet(f.n)
+		stay.add(cluster[0].stays)
+		go_.add(cluster[0].goes)
+		if len(apart) == 2 {
+			stay.add(apart[turn])
+			go_.add(apart[1-turn])
+		} else if turn == 1 {
+			break
+		}
+		if stay.meets(go_) {
+			continue
+		}
+		at, ok := f.part(stay, go_, cluster, limit+gain)
+		if !ok {
+			continue
+		}
+		for rising := true; rising; {
+			rising = false
+			for _, x := range cluster[1:] {
+				if go_.has(x.stays) || stay.has(x.goes) || stay.has(x.stays) && go_.has(x.goes) {
+					continue
+				}
+				s, g := stay.with(x.stays), go_.with(x.goes)
+				if t, ok := f.part(s, g, cluster, at.loss+gain); ok && t.loss < at.loss {
+					at, stay, go_, rising = t, s, g, true
+				}
+			}
+		}
+		if at.loss < best.loss {
+			best = at
+		}
+	}
+	return best
+}
+
+// part cuts the fleet between two sets of units.
+func (f *fleet) part(stay, goes unitSet, cluster []crossing, limit int) (move, bool) {
+	cut := f.cut(stay, goes, limit)
+	if cut > limit {
+		return move{}, false
+	}
+	m := move{loss: cut, moved: slices.Clone(f.moved)}
+	for _, x := range cluster {
+		if !m.moved[x.stays] && m.moved[x.goes] {
+			m.loss -= x.weight
+		}
+	}
+	return m, true
+}
+
+// apply returns c with the marked units moved as hypothesis k asks.
+func (f *fleet) apply(c *config, k int, moved []bool) config {
+	h := &f.hs[k]
+	next := c.clone()
+	d := c.at[h.a].Mul(h.ab).Mul(c.at[h.b].Inv())
+	for u, m := range moved {
+		if m && c.comp[u] == c.comp[h.a] {
+			next.at[u] = d.Mul(c.at[u])
+		}
+	}
+	f.judge(&next)
+	return next
+}
+
+// detach returns c with the marked units of one component made a component of their own.
+func (f *fleet) detach(c *config, comp int, moved []bool) config {
+	next := c.clone()
+	fresh := -1
+	for u, m := range moved {
+		if m && c.comp[u] == comp {
+			if fresh < 0 {
+				fresh = u + f.n*(1+comp) // no component is numbered so
+			}
+			next.comp[u] = fresh
+		}
+	}
+	f.judge(&next)
+	return next
+}
+
+// margin is by how much c beats the best configuration found in which hypothesis k, which c satisfies, does not hold. It is
+// exact up to limit, as far as the search goes; above, only known to be no less. alone is the cut without k's own pair.
+func (f *fleet) margin(c *config, k, limit int, rivals []rival) (margin int) {
+	h := &f.hs[k]
+	apart := [2]int{h.a, h.b}
+	stay, goes := newSet(f.n).with(h.a), newSet(f.n).with(h.b)
+	reach := limit
+	for _, r := range rivals {
+		reach = max(reach, limit+r.gain)
+	}
+	free := f.cut(stay, goes, reach)
+	margin = min(limit, free)
+	if free <= reach {
+		margin = min(margin, f.deepen(c, f.detach(c, c.comp[h.a], f.moved), k))
+	}
+	for _, r := range rivals {
+		if free-r.gain >= margin || c.comp[f.hs[r.k].a] != c.comp[h.a] {
+			continue
+		}
+		f.load(c)
+		m := f.move(c, r.cluster, r.gain, margin, apart[:])
+		if m.loss > margin {
+			continue
+		}
+		next := f.apply(c, r.k, m.moved)
+		if next.holds[k] {
+			continue
+		}
+		margin = min(margin, f.deepen(c, next, k))
+	}
+	f.load(c)
+	return margin
+}
+
+// deepen improves a configuration that breaks k, near to what was moved, and returns by how much c beats it.
+func (f *fleet) deepen(c *config, next config, k int) int {
+	near := make([]bool, f.n)
+	changed := 0
+	for u := range near {
+		near[u] = next.comp[u] != c.comp[u] || next.at[u] != c.at[u]
+		if near[u] {
+			changed++
+		}
+	}
+	if 2*changed > f.n {
+		for u := range near {
+			near[u] = !near[u]
+		}
+	}
+	near[f.hs[k].a], near[f.hs[k].b] = true, true
+	f.improve(&next, k, near)
+	return c.score - next.score
+}
+
+// rival is an unsatisfied hypothesis and those that go along with it.
+type rival struct {
+	k, gain int
+	cluster []crossing
+}
+
+// opposition lists the rivals of c, those with most to gain first.
+func (f *fleet) opposition(c *config) []rival {
+	var rs []rival
+	for k := range f.hs {
+		h := &f.hs[k]
+		if c.holds[k] || h.weight == 0 || c.comp[h.a] != c.comp[h.b] {
+			continue
+		}
+		cs, gain := f.cluster(c, k)
+		rs = append(rs, rival{k, gain, cs})
+	}
+	slices.SortFunc(rs, func(x, y rival) int {
+		return cmp.Or(cmp.Compare(y.gain, x.gain), cmp.Compare(x.k, y.k))
+	})
+	return rs
+}
