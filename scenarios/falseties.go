@@ -1,6 +1,7 @@
 package scenarios
 
 import (
+	"errors"
 	"math"
 	"math/rand/v2"
 
@@ -33,12 +34,15 @@ func anywhere(rng *rand.Rand, reach float64, dimension int) lie.SE3 {
 	return x
 }
 
+// errCramped is returned when false measurements are asked for and no two places are far enough apart.
+var errCramped = errors.New("the tracks leave no two places far enough apart for a false tie or closure: expected a larger site, a longer outing or no false ones")
+
 // falsify draws the false ties that make the shares asked for next to n true ones.
-func falsify(sc *Scenario, s *site, tracks []*track, n int, seed uint64) (found []sighting) {
+func falsify(sc *Scenario, s *site, tracks []*track, n int, seed uint64) (found []sighting, err error) {
 	f := &sc.FalseTies
 	share := f.Independent + f.Clustered
 	if share == 0 {
-		return nil
+		return nil, nil
 	}
 	wrong := falseCount(n, share)
 	grouped := int(math.Round(float64(wrong) * f.Clustered / share))
@@ -58,12 +62,12 @@ func falsify(sc *Scenario, s *site, tracks []*track, n int, seed uint64) (found 
 		if !ok {
 			a, b = b, a
 			if i, j, ok = apart(rng, tracks[a], tracks[b], minGap(sc)); !ok {
-				break // a site too small for false ties
+				return nil, errCramped
 			}
 		}
 		found = append(found, sighting{from: a, fromKey: i, to: b, toKey: j, pose: anywhere(rng, sc.Ties.RevisitRange, sc.Dimension())})
 	}
-	return found
+	return found, nil
 }
 
 // minGap is the least true distance of the two ends of a false tie.

@@ -33,7 +33,7 @@ const session = 1
 
 // record lets the front end of one robot measure along its track: keyframes dead reckoned from the odometry in the frame of
 // the first, one odometry step between neighbours, then the closures.
-func record(sc *Scenario, id string, t *track, seed uint64) survey.Robot {
+func record(sc *Scenario, id string, t *track, seed uint64) (survey.Robot, error) {
 	f := &sc.FrontEnd
 	dim := sc.Dimension()
 	rng := stream(seed, "odometry/"+id)
@@ -54,15 +54,16 @@ func record(sc *Scenario, id string, t *track, seed uint64) survey.Robot {
 		}
 		r.Keyframes[k] = survey.Keyframe{Session: session, ID: int64(k), StampNS: t.atNS[k], HasStamp: true, Pose: poseOf(&x)}
 	}
-	r.Relatives = append(r.Relatives, closures(sc, t, stream(seed, "closures/"+id))...)
-	return r
+	found, err := closures(sc, t, stream(seed, "closures/"+id))
+	r.Relatives = append(r.Relatives, found...)
+	return r, err
 }
 
 // closures finds where a robot comes back to its own track, and adds the false ones asked for.
-func closures(sc *Scenario, t *track, rng *rand.Rand) (found []survey.Relative) {
+func closures(sc *Scenario, t *track, rng *rand.Rand) (found []survey.Relative, err error) {
 	f := &sc.FrontEnd
 	if f.ClosureRange == 0 {
-		return nil
+		return nil, nil
 	}
 	c := f.Closure.cov(sc.Dimension())
 	s := newPlaces(f.ClosureRange, t)
@@ -88,16 +89,15 @@ func closures(sc *Scenario, t *track, rng *rand.Rand) (found []survey.Relative) 
 			last = t.travel[k]
 		}
 	}
-	wrong := falseCount(len(found), f.FalseClosures)
-	for range wrong {
+	for range falseCount(len(found), f.FalseClosures) {
 		j, k, ok := apart(rng, t, t, 20*f.ClosureRange)
 		if !ok {
-			break
+			return nil, errCramped
 		}
 		z := anywhere(rng, f.ClosureRange, sc.Dimension())
 		found = append(found, survey.Relative{Session: session, From: int64(min(j, k)), To: int64(max(j, k)), Kind: survey.Closure, Pose: poseOf(&z), Cov: c})
 	}
-	return found
+	return found, nil
 }
 
 // places finds keyframes by their place, as far as they have been entered.

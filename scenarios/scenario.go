@@ -1,6 +1,9 @@
 package scenarios
 
-import "math"
+import (
+	"fmt"
+	"math"
+)
 
 // Scenario describes a site, a fleet and what goes wrong. Default returns one that is complete; Load lays a file over it.
 type Scenario struct {
@@ -88,7 +91,7 @@ type WoodSpec struct {
 type FleetSpec struct {
 	// Number of robots, named r01, r02 and so on.
 	Robots int `yaml:"robots" range:"[1, 60]"`
-	// Robots start at random moments within this time.
+	// Robots start at random moments within this time, at most half of duration_s.
 	StartSpread float64 `yaml:"start_spread_s" unit:"s" range:"[0, 7200]"`
 	// Slowest walk.
 	SpeedMin float64 `yaml:"speed_min_mps" unit:"m/s" range:"[0.1, 5]"`
@@ -134,11 +137,12 @@ type TiesSpec struct {
 	Spacing float64 `yaml:"spacing_m" unit:"m" range:"[1, 1000]"`
 }
 
-// FalseTiesSpec says how many ties are wrong, as shares of ALL ties offered. Their sum must not exceed 0.9.
+// FalseTiesSpec says how many ties are wrong, as shares of ALL ties offered. The shares must not exceed 0.9 together.
 type FalseTiesSpec struct {
 	// Share that joins unrelated places, each tie for itself.
 	Independent float64 `yaml:"independent" range:"[0, 0.9]"`
-	// Share that comes in clusters which agree with each other, as places do that look alike.
+	// Share that comes in clusters which agree with each other, as places do that look alike. Where the site has no room for
+	// one more cluster, single ones take its place.
 	Clustered float64 `yaml:"clustered" range:"[0, 0.9]"`
 	// Ties in a cluster.
 	ClusterSize int `yaml:"cluster_size" range:"[2, 20]"`
@@ -148,7 +152,7 @@ type FalseTiesSpec struct {
 
 // RadioSpec describes the radio between the robots and the base, and among robots.
 type RadioSpec struct {
-	// Where the base stands in the datum, x, y, z; left out, at the entrance of the site.
+	// Where the base stands in the datum, x, y, z; left out, in the middle of the site.
 	Base *[3]float64 `yaml:"base_m" unit:"m" range:"[-100000, 100000]"`
 	// Reach of the radio, walls ignored; 0 means everywhere.
 	Range float64 `yaml:"range_m" unit:"m" range:"[0, 100000]"`
@@ -211,7 +215,7 @@ func Default() *Scenario {
 		Ties: TiesSpec{
 			EncounterRange: 10, Encounter: Sigmas{0.06, 0.008},
 			RevisitRange: 3, Revisit: Sigmas{0.08, 0.009},
-			Recall: 0.8, Spacing: 25,
+			Recall: 0.8, Spacing: 20,
 		},
 		FalseTies: FalseTiesSpec{Independent: 0.1, Clustered: 0.05, ClusterSize: 4, ClusterSpacing: 12},
 		Radio: RadioSpec{
@@ -237,14 +241,14 @@ func (sc *Scenario) rules(report func(path, message string)) {
 	if sc.Fleet.SpeedMin > sc.Fleet.SpeedMax {
 		report("fleet.speed_min_mps", "is above speed_max_mps, expected at most that")
 	}
-	if sc.Fleet.StartSpread >= sc.Duration {
-		report("fleet.start_spread_s", "is not below duration_s, expected robots to start before the end")
+	if sc.Fleet.StartSpread > sc.Duration/2 {
+		report("fleet.start_spread_s", "is more than half of duration_s, expected at most that")
+	}
+	if n := float64(sc.Fleet.Robots) * sc.Duration * sc.Fleet.SpeedMax / sc.Fleet.KeyframeSpacing; n > maxKeyframes {
+		report("fleet.keyframe_spacing_m", fmt.Sprintf("makes up to %.0f keyframes in all, expected at most %d", n, maxKeyframes))
 	}
 	if sc.FalseTies.Independent+sc.FalseTies.Clustered > 0.9 {
 		report("false_ties.clustered", "makes more than 0.9 together with independent, expected at most that")
-	}
-	if sc.FalseTies.Independent+sc.FalseTies.Clustered > 0 && sc.Fleet.Robots < 2 {
-		report("false_ties", "asks for ties of a single robot, expected at least two robots or no false ties")
 	}
 	if s := sc.Site.Store; sc.Site.Kind == "store" && s.Width > s.Pitch-0.4 {
 		report("site.store.width_m", "leaves less than 0.4 m for the racks, expected pitch_m - 0.4 or less")
@@ -258,6 +262,9 @@ func (sc *Scenario) rules(report func(path, message string)) {
 		}
 	}
 }
+
+// maxKeyframes bounds the size of a world.
+const maxKeyframes = 1000000
 
 // grow returns n, or where it is 0 the size for six robots scaled to the fleet so that each robot has as much site as there.
 func (sc *Scenario) grow(n, six int) int {

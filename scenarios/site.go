@@ -11,7 +11,7 @@ type site struct {
 	nodes    [][3]float64
 	edges    []corridor
 	at       [][]int // edges of each node
-	entrance int     // node at which the base stands
+	entrance int     // node at which the base stands and the first robot starts
 	open     bool    // no walls: whatever is near is in sight
 	shift    float64 // distance along x after which the site looks the same; 0 where it does not
 	index    grid    // of points
@@ -107,6 +107,22 @@ func (s *site) sees(p, q [3]float64) bool {
 		}
 	}
 	return true
+}
+
+// middle returns the node nearest to the middle of the first n nodes.
+func (s *site) middle(n int) (node int) {
+	var mean [3]float64
+	for _, p := range s.nodes[:n] {
+		for c := range mean {
+			mean[c] += p[c] / float64(n)
+		}
+	}
+	for i, p := range s.nodes[:n] {
+		if distance(p, mean) < distance(s.nodes[node], mean) {
+			node = i
+		}
+	}
+	return node
 }
 
 // straight returns a line from p to q with a point about each metre, pushed sideways by up to amp metres.

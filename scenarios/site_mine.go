@@ -74,10 +74,8 @@ func newMine(sc *Scenario, rng *rand.Rand) *site {
 			s.connect(above[e], ids[e], decline(s.nodes[above[e]], s.nodes[ids[e]], 1), half)
 		}
 		above = ids
-		if level == 0 {
-			s.entrance = ids[west*cuts]
-		}
 	}
+	s.entrance = s.middle(drifts * cuts) // the shaft station of the first level
 	return s
 }
 

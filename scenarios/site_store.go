@@ -23,6 +23,6 @@ func newStore(sc *Scenario, rng *rand.Rand) *site {
 			}
 		}
 	}
-	s.entrance = at(aisles/2, 0)
+	s.entrance = s.middle(len(s.nodes))
 	return s
 }

@@ -39,11 +39,7 @@ func newWood(sc *Scenario, rng *rand.Rand) *site {
 		}
 		s.connect(e[0], e[1], line, m.Width/2)
 	}
-	for i, p := range s.nodes { // the car park is at the southern edge
-		if p[1] < s.nodes[s.entrance][1] {
-			s.entrance = i
-		}
-	}
+	s.entrance = s.middle(n)
 	return s
 }
 

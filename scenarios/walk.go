@@ -64,8 +64,8 @@ func (s *site) lengthOf(edge int) float64 { return s.edges[edge].length }
 func (s *site) walk(sc *Scenario, home int, rng *rand.Rand) track {
 	f := &sc.Fleet
 	start := 1 + uniform(rng, 0, f.StartSpread)
-	length := (sc.Duration - start) * f.SpeedMax
-	line := s.lane(s.errands(home, f.Reach, max(length, f.KeyframeSpacing)+10, rng), rng)
+	length := 1.15*(sc.Duration-start)*f.SpeedMax + 10 // rounding corners shortens the way
+	line := s.lane(s.errands(home, f.Reach, length, rng), rng)
 	return s.drive(sc, line, start, rng)
 }
 

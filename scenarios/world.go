@@ -24,7 +24,7 @@ type World struct {
 	// Base is where the base stands in the datum, m.
 	Base [3]float64
 
-	// EndNS is when the outing is over: nothing is delivered later.
+	// EndNS is when the outing is over: nothing is delivered later, and the robots are back at the base.
 	EndNS int64
 
 	tracks []track
@@ -72,13 +72,21 @@ func Simulate(sc *Scenario, seed uint64) (*World, error) {
 		t := &w.tracks[i]
 		tracks[i] = t
 		sv.Meta.Robots = append(sv.Meta.Robots, survey.RobotMeta{ID: id, Sessions: []uint32{session}})
-		sv.Robots = append(sv.Robots, record(sc, id, t, seed))
+		robot, err := record(sc, id, t, seed)
+		if err != nil {
+			return nil, fmt.Errorf("scenarios: robot %s: %w", id, err)
+		}
+		sv.Robots = append(sv.Robots, robot)
 		for k := range t.pose {
 			sv.Truth = append(sv.Truth, survey.TruthPose{Robot: id, Session: session, Key: int64(k), Pose: poseOf(&t.pose[k])})
 		}
 	}
 	found := meet(sc, s, tracks, seed)
-	found = append(found, falsify(sc, s, tracks, len(found), seed)...)
+	wrong, err := falsify(sc, s, tracks, len(found), seed)
+	if err != nil {
+		return nil, fmt.Errorf("scenarios: %w", err)
+	}
+	found = append(found, wrong...)
 	w.Survey = sv
 	w.enterTies(sc, found)
 	w.feed(sc)
@@ -142,12 +150,15 @@ func (w *World) feed(sc *Scenario) {
 	}
 }
 
-// Position returns where a robot is at a time, in the datum, m. Before its start and after its end it stands still; a robot
-// that does not exist is a mistake of the caller.
+// Position returns where a robot is at a time, in the datum, m: before it starts at its home, after [World.EndNS] back at the
+// base. A robot that does not exist is a mistake of the caller.
 func (w *World) Position(robot string, ns int64) [3]float64 {
 	r, ok := robotNumber(robot)
 	if !ok || r >= len(w.tracks) {
 		panic("scenarios: no robot named " + robot)
+	}
+	if ns > w.EndNS {
+		return w.Base
 	}
 	return w.tracks[r].position(ns)
 }
