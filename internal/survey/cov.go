@@ -119,7 +119,7 @@ func CovFromInformation(m [36]float64, dim int) (Cov, error) {
 			a.use(i)
 			scale[i] = 1 / math.Sqrt(d)
 		default:
-			return Cov{}, fmt.Errorf("survey: information %s, %s is %g, expected a finite number from 0", componentNames[i], componentNames[i], d)
+			return Cov{}, fmt.Errorf("survey: information of %s, %s is %g, not a finite number from 0", componentNames[i], componentNames[i], d)
 		}
 	}
 	for i := range 6 {
@@ -129,20 +129,20 @@ func CovFromInformation(m [36]float64, dim int) (Cov, error) {
 				continue
 			}
 			if a.pos[i] == 0 || a.pos[j] == 0 {
-				return Cov{}, fmt.Errorf("survey: information %s, %s is %g beside a zero diagonal, expected 0", componentNames[i], componentNames[j], v)
+				return Cov{}, fmt.Errorf("survey: information of %s, %s is %g beside a zero on the diagonal", componentNames[i], componentNames[j], v)
 			}
 			a.set(i, j, v*scale[i]*scale[j])
 		}
 	}
 	inv, err := a.inverse()
 	if err != nil {
-		return Cov{}, fmt.Errorf("survey: information matrix: %w", err)
+		return Cov{}, fmt.Errorf("survey: %w", err)
 	}
 	for p := range a.n {
 		i := a.idx[p]
 		c.Sigma[i] = math.Sqrt(inv[p][p]) * scale[i]
 		if !(c.Sigma[i] >= minSigma && c.Sigma[i] <= maxSigma) {
-			return Cov{}, fmt.Errorf("survey: information gives %s the sigma %g, expected %g to %g", componentNames[i], c.Sigma[i], minSigma, maxSigma)
+			return Cov{}, fmt.Errorf("survey: sigma of %s is %g, not from %g to %g", componentNames[i], c.Sigma[i], minSigma, maxSigma)
 		}
 	}
 	k := 0
@@ -155,7 +155,35 @@ func CovFromInformation(m [36]float64, dim int) (Cov, error) {
 			k++
 		}
 	}
+	if err := c.checkCorrelation(); err != nil { // too close to singular to come back
+		return Cov{}, fmt.Errorf("survey: inverse: %w", err)
+	}
 	return c, nil
+}
+
+// checkCorrelation returns an error when the correlation matrix of the measured
+// components is not positive definite. Sigmas and correlations are within range.
+func (c *Cov) checkCorrelation() error {
+	var m block
+	for i, s := range c.Sigma {
+		if !math.IsInf(s, 1) {
+			m.use(i)
+		}
+	}
+	k := 0
+	for i := range 6 {
+		for j := i + 1; j < 6; j++ {
+			if c.Corr[k] != 0 {
+				m.set(i, j, c.Corr[k])
+			}
+			k++
+		}
+	}
+	var l [6][6]float64
+	if !m.cholesky(&l) {
+		return fmt.Errorf("a correlation matrix that is %w", m.diagnose())
+	}
+	return nil
 }
 
 // block is a symmetric matrix with unit diagonal over those of the six
@@ -180,8 +208,9 @@ func (m *block) set(i, j int, v float64) {
 }
 
 // minPivot is the smallest square of a Cholesky pivot of a unit-diagonal matrix
-// that is not yet rounding: some tens of units in the last place.
-const minPivot = 1e-14
+// that is taken for more than rounding, which reaches some 1e-15. An inverse
+// with a pivot of this size still has three true digits.
+const minPivot = 1e-13
 
 // cholesky computes the lower factor l of the block and reports whether the
 // block is positive definite.

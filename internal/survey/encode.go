@@ -75,7 +75,11 @@ func (w *csvWriter) float(v float64) {
 		w.b = append(w.b, "inf"...)
 		return
 	}
-	w.b = strconv.AppendFloat(w.b, v, 'g', -1, 64)
+	format := byte('g')
+	if a := math.Abs(v); 1e-5 <= a && a <= maxMetres {
+		format = 'f' // 4321000.5 rather than 4.3210005e+06
+	}
+	w.b = strconv.AppendFloat(w.b, v, format, -1, 64)
 }
 
 func (w *csvWriter) pose(p Pose) {

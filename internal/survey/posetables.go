@@ -1,8 +1,8 @@
 package survey
 
 import (
-	"errors"
 	"fmt"
+	"strings"
 
 	"gonum.org/v1/gonum/mat"
 )
@@ -159,10 +159,7 @@ func (t *table) covFromInformation(m *[36]float64) Cov {
 			fmt.Sprintf("positive semidefinite: smallest at least %g of the largest", -psdTol))
 		return c
 	}
-	if errors.Is(err, errSingular) || errors.Is(err, errNotPSD) {
-		t.fault(where, "a singular information matrix", "positive definite on the components that were measured, so that it can be written as sigmas")
-		return c
-	}
-	t.fault(where, err.Error(), "an information matrix that can be written as sigmas")
+	t.fault(where, "an information matrix that cannot be written as sigmas: "+strings.TrimPrefix(err.Error(), "survey: "),
+		"one that is positive definite on the components that were measured, with rows of zeros for the others")
 	return c
 }

@@ -84,6 +84,18 @@ func WriteResults(dir string, poses []ResultPose, verdicts []ResultVerdict, datu
 			return fmt.Errorf("survey: verdict on tie %s for the reason %s, expected a tie id and one line of printable text", quote(v.Tie), quote(v.Reason))
 		}
 	}
+	for i := range poses {
+		p := &poses[i]
+		if err := checkResult(p.Robot, p.Session, p.Pose, p.Cov[:]); err != nil {
+			return err
+		}
+	}
+	for i := range datum {
+		d := &datum[i]
+		if err := checkResult(d.Robot, d.Session, d.Pose, nil); err != nil {
+			return err
+		}
+	}
 	results := filepath.Join(dir, resultsName)
 	if err := os.MkdirAll(results, 0o755); err != nil {
 		return fmt.Errorf("survey: %w", err)
@@ -111,6 +123,22 @@ func WriteResults(dir string, poses []ResultPose, verdicts []ResultVerdict, datu
 	}
 	if err != nil {
 		return fmt.Errorf("survey: %w", err)
+	}
+	return nil
+}
+
+// checkResult returns an error unless the robot has a proper name and the
+// numbers are finite.
+func checkResult(robot string, session uint32, p Pose, cov []float64) error {
+	if !validRobot(robot) {
+		return fmt.Errorf("survey: robot %s, expected %s", quote(robot), robotRule)
+	}
+	for _, list := range [][]float64{p.T[:], p.Q[:], cov} {
+		for _, v := range list {
+			if math.IsNaN(v) || math.IsInf(v, 0) {
+				return fmt.Errorf("survey: pose of robot %s, session %d is not finite", robot, session)
+			}
+		}
 	}
 	return nil
 }
@@ -178,7 +206,7 @@ func encodeVerdicts(all []ResultVerdict, note string) []byte {
 
 func encodeDatum(all []ResultDatum, note string) []byte {
 	var w csvWriter
-	w.comment(note, "pose datum_from_session; that of its island where joined is false")
+	w.comment(note, "pose datum_from_session, of its island where joined is false")
 	w.header(datumColumns, nil)
 	for i := range all {
 		d := &all[i]

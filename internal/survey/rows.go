@@ -128,33 +128,8 @@ func (t *table) cov(c int) (v Cov) {
 	}
 	if sound && any {
 		if err := v.checkCorrelation(); err != nil {
-			t.fault("c_x_y..c_ry_rz", err.Error(), "a positive definite correlation matrix")
+			t.fault("c_x_y..c_ry_rz", err.Error(), "one that is positive definite")
 		}
 	}
 	return v
-}
-
-// checkCorrelation returns an error when the correlation matrix of the measured
-// components is not positive definite. Sigmas and correlations are within range.
-func (c *Cov) checkCorrelation() error {
-	var m block
-	for i, s := range c.Sigma {
-		if !math.IsInf(s, 1) {
-			m.use(i)
-		}
-	}
-	k := 0
-	for i := range 6 {
-		for j := i + 1; j < 6; j++ {
-			if c.Corr[k] != 0 {
-				m.set(i, j, c.Corr[k])
-			}
-			k++
-		}
-	}
-	var l [6][6]float64
-	if !m.cholesky(&l) {
-		return fmt.Errorf("a correlation matrix that is %w", m.diagnose())
-	}
-	return nil
 }

@@ -35,7 +35,6 @@ type table struct {
 	r    *bufio.Reader
 	left int64 // bytes that may still be read
 	line int
-	rows int
 
 	width  int // fields in the header
 	fields [][]byte
@@ -180,6 +179,10 @@ func (t *table) header() (bool, error) {
 		return false, nil
 	}
 	t.width = len(t.fields)
+	if t.width == 1 && bytes.ContainsAny(line, ";\t") {
+		t.fault("", "a line without commas: "+quote(string(line)), "columns divided by commas")
+		return false, nil
+	}
 	t.at = make([]int, len(t.columns))
 	number := make(map[string]int, len(t.columns))
 	for c, col := range t.columns {
@@ -227,13 +230,13 @@ func (t *table) next() (bool, error) {
 		if line == nil || err != nil {
 			return false, err
 		}
-		if len(line) == 0 {
-			continue
-		}
-		if t.rows++; t.rows > maxTableRows {
+		if t.line > maxTableRows+1 {
 			t.lost = true
 			t.fault("", fmt.Sprintf("more than %d rows", maxTableRows), "a smaller table")
 			return false, nil
+		}
+		if len(line) == 0 {
+			continue
 		}
 		if !t.split(line) {
 			t.lost = true

@@ -52,7 +52,7 @@ func (v *Violations) Error() string {
 		b.WriteString(x.String())
 	}
 	if v.Total > len(v.List) {
-		fmt.Fprintf(&b, "\n%d violations in all, the first %d shown", v.Total, len(v.List))
+		fmt.Fprintf(&b, "\n%d violations in all, %d shown", v.Total, len(v.List))
 	}
 	return b.String()
 }

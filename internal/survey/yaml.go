@@ -54,7 +54,7 @@ func decodeMeta(data []byte, s *sink) (m Meta) {
 		}
 	}()
 	tokens := lexer.Tokenize(string(data))
-	if line, found := plainYAML(data, tokens); found != "" {
+	if line, found := plainYAML(tokens); found != "" {
 		report(line, "", found, "plain YAML: block or flow mappings and sequences, no anchors, aliases, merges, tags or ? keys, nesting of at most "+fmt.Sprint(maxYAMLDepth))
 		return m
 	}
@@ -63,8 +63,8 @@ func decodeMeta(data []byte, s *sink) (m Meta) {
 		reportYAML(err, report)
 		return m
 	}
-	if len(file.Docs) != 1 {
-		report(0, "", fmt.Sprintf("%d documents", len(file.Docs)), "one")
+	if len(file.Docs) != 1 || file.Docs[0].Body == nil {
+		report(0, "", "no keys", "format, name, dimension, datum and robots")
 		return m
 	}
 	// The version first: a later one may have keys unknown here.
@@ -89,14 +89,18 @@ const maxYAMLDepth = 16
 // plainYAML returns the line and a description of the first thing that
 // survey.yaml has no use for and that could make decoding costly: aliases that
 // multiply, tags, and deep nesting.
-func plainYAML(data []byte, tokens token.Tokens) (line int, found string) {
-	depth := 0
+func plainYAML(tokens token.Tokens) (line int, found string) {
+	depth, documents := 0, 0
 	dashes, dashLine := 0, 0
 	for _, t := range tokens {
 		line = t.Position.Line
 		switch t.Type {
 		case token.AnchorType, token.AliasType, token.MergeKeyType, token.TagType, token.MappingKeyType, token.DirectiveType:
 			return line, quote(t.Value)
+		case token.DocumentHeaderType:
+			if documents++; documents > 1 {
+				return line, "a second document"
+			}
 		case token.SequenceStartType, token.MappingStartType:
 			depth++
 		case token.SequenceEndType, token.MappingEndType:
@@ -184,9 +188,17 @@ func nearestLine(file *ast.File, path string) int {
 
 // encodeMeta returns the content of survey.yaml.
 func encodeMeta(m *Meta) ([]byte, error) {
-	data, err := yaml.MarshalWithOptions(m, yaml.Indent(2), yaml.IndentSequence(true), yaml.UseLiteralStyleIfMultiline(true))
-	if err != nil {
-		return nil, fmt.Errorf("survey: %s: %w", metaName, err)
+	for _, style := range []yaml.EncodeOption{yaml.UseLiteralStyleIfMultiline(true), yaml.JSON()} {
+		data, err := yaml.MarshalWithOptions(m, yaml.IndentSequence(true), style)
+		if err != nil {
+			return nil, fmt.Errorf("survey: %s: %w", metaName, err)
+		}
+		// A few texts, such as notes that begin with blanks, do not come back
+		// from the style that is easiest to read.
+		var s sink
+		if back := decodeMeta(data, &s); s.Total == 0 && sameMeta(&back, m) {
+			return data, nil
+		}
 	}
-	return data, nil
+	return nil, fmt.Errorf("survey: %s: some text in it cannot be written as YAML", metaName)
 }
