@@ -109,7 +109,7 @@ const faint = `(() => {
 			const s = getComputedStyle(e), q = ratio(rgb(e.namespaceURI.endsWith('svg') ? s.fill : s.color), paper);
 			if (q < 4.5) bad.push(e.tagName + ' "' + e.textContent.slice(0, 30) + '" ' + q.toFixed(2));
 		}
-		if (e.matches('.track,.serie') && !e.classList.contains('edge')) {
+		if (e.matches('.line') && !e.classList.contains('edge')) {
 			const before = e.previousElementSibling, edged = before && before.classList.contains('edge');
 			const q = Math.max(ratio(rgb(getComputedStyle(e).stroke), paper), edged ? ratio(rgb(getComputedStyle(before).stroke), paper) : 0);
 			if (q < 3) bad.push('line ' + e.getAttribute('class') + ' ' + q.toFixed(2));
@@ -137,7 +137,7 @@ func TestPageAsAReaderSeesIt(t *testing.T) {
 			}); err != nil {
 				t.Fatal(err)
 			}
-			if err := chromedp.Do(ctx, chromedp.EmulateViewport(view.width, view.height)); err != nil {
+			if err := chromedp.Do(ctx, chromedp.EmulateViewport(view.width, view.height, chromedp.EmulateScale(2))); err != nil {
 				t.Fatal(err)
 			}
 			for _, s := range append(ask[[]string](t, ctx, outOfFrame), ask[[]string](t, ctx, faint)...) {
@@ -152,10 +152,17 @@ func TestPageAsAReaderSeesIt(t *testing.T) {
 	}
 }
 
-// TestPageOnPaper prints the page on A4 and sees to it that no drawing is cut:
-// none is larger than what a sheet has room for.
+// On A4 nothing is cut: no drawing is larger than a sheet has room for, and
+// every piece that must stay whole says so.
 func TestPageOnPaper(t *testing.T) {
-	ctx := browser(t, drift(6, 3000, 60, true))
+	p := drift(6, 3000, 60, true)
+	shaft := Plan{Title: "shaft", Tracks: []Track{{Robot: "mole"}}}
+	for i := range 200 {
+		s, c := math.Sincos(float64(i) / 9)
+		shaft.Tracks[0].Points = append(shaft.Tracks[0].Points, [3]float64{4 * c, 9 * s, -float64(i) / 2})
+	}
+	p.Plans = append(p.Plans, shaft)
+	ctx := browser(t, p)
 	const wide, high = (210 - 30) / 25.4 * 96, (297 - 28) / 25.4 * 96 // px within the margins
 	if _, err := chromedp.Call(ctx, emulation.SetEmulatedMedia, emulation.SetEmulatedMediaParams{Media: "print"}); err != nil {
 		t.Fatal(err)
@@ -166,14 +173,19 @@ func TestPageOnPaper(t *testing.T) {
 	sizes := ask[[]struct {
 		Name string
 		W, H float64
-	}](t, ctx, `[...document.querySelectorAll('figure.plan,figure.island,.multiples>svg,table,.titleblock')].map(e => ({
-		Name: e.tagName + ' ' + (e.getAttribute('class') || ''), W: e.scrollWidth || e.getBoundingClientRect().width, H: e.getBoundingClientRect().height}))`)
-	if len(sizes) < 6 {
-		t.Fatalf("%d pieces on paper, expected the plan, an island, charts and tables", len(sizes))
+		Keep string
+	}](t, ctx, `[...document.querySelectorAll('svg[role=img],table,.titleblock')].map(e => ({
+		Name: e.tagName + ' ' + (e.getAttribute('class') || ''), W: e.scrollWidth || e.getBoundingClientRect().width, H: e.getBoundingClientRect().height,
+		Keep: getComputedStyle(e).breakInside})).filter(e => e.H > 0)`)
+	if len(sizes) != 4+1+8+2+2 {
+		t.Fatalf("%d pieces on paper, expected two plans with profiles and title blocks, an island, 8 charts and 2 tables", len(sizes))
 	}
 	for _, s := range sizes {
-		if s.W > wide+0.5 || s.Name != "TABLE " && s.H > high {
-			t.Errorf("%s is %.0f by %.0f px, a sheet has %.0f by %.0f", s.Name, s.W, s.H, wide, high)
+		if s.W > wide+0.5 {
+			t.Errorf("%s is %.0f px wide, a sheet has %.0f", s.Name, s.W, wide)
+		}
+		if s.Name != "TABLE " && (s.H > high || s.Keep != "avoid") {
+			t.Errorf("%s is %.0f px high and breaks inside: %s; a sheet has %.0f", s.Name, s.H, s.Keep, high)
 		}
 	}
 	yes := true

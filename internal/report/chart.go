@@ -29,15 +29,16 @@ type Chart struct {
 
 // Series is one line of a chart.
 type Series struct {
-	Label string
+	Label string    // at the end of the line; empty where the title says it all
 	Hue   int       // as in Track; 0 is ink
 	X, Y  []float64 // of one length; X ascending and finite; a Y that is no finite number breaks the line
 }
 
 const (
 	chartWidth  = 410.0 // px
-	chartHeight = 210.0 // px
+	chartHeight = 210.0 // px, more where there are many lines to name
 	letter      = 12.0  // px, height of letters in drawings
+	labelApart  = 13.0  // px, between the names of two lines
 )
 
 func (c Chart) check() error {
@@ -167,20 +168,25 @@ func (d *doc) chart(c Chart, xs, ys span) {
 		xs.hi = xs.lo + 1
 	}
 	a := c.yAxis(ys)
-	left, rightEdge := 14.0, 12.0
+	left, rightEdge, named := 14.0, 12.0, 0.0
 	for _, t := range a.text {
 		left = max(left, textWidth(t, letter)+10)
 	}
 	for _, s := range c.Series {
+		if s.Label == "" {
+			continue
+		}
+		named++
 		rightEdge = max(rightEdge, min(110, textWidth(shorten(s.Label, 18), letter)+16))
 	}
-	f := box{left, 42, chartWidth - rightEdge, chartHeight - 36}
+	height := max(chartHeight, 78+labelApart*named)
+	f := box{left, 42, chartWidth - rightEdge, height - 36}
 	px := func(x, y float64) point {
 		return point{f.x0 + (x-xs.lo)/xs.size()*f.w(), f.y1 - (y-a.lo)/a.size()*f.h()}
 	}
 
 	id := d.id()
-	d.svg(id, chartWidth, chartHeight, "", c.Title, c.describe())
+	d.svg(id, chartWidth, height, "", c.Title, c.describe())
 	d.letters(0, 13, "b", "start", shorten(c.Title, 48))
 	d.letters(0, 30, "soft", "start", shorten(c.YLabel, 60))
 	for i, v := range a.at {
@@ -202,7 +208,7 @@ func (d *doc) chart(c Chart, xs, ys span) {
 			d.line(f.x0, y, f.x1, y, "limit")
 		}
 	}
-	pen := newPlacer(box{0, 0, chartWidth, chartHeight})
+	pen := newPlacer(box{0, 0, chartWidth, height})
 	var ends []endLabel
 	for _, s := range c.Series {
 		var pts []point
@@ -211,10 +217,10 @@ func (d *doc) chart(c Chart, xs, ys span) {
 		}
 		for _, run := range runs(pts) {
 			run = simplify(columns(run), d.tol)
-			d.polyline(run, s.Hue, "serie")
+			d.polyline(run, s.Hue, 1.5)
 			pen.ink(run)
 		}
-		if end, ok := lastFinite(pts); ok {
+		if end, ok := lastFinite(pts); ok && s.Label != "" {
 			ends = append(ends, endLabel{shorten(s.Label, 18), end, end[1]})
 		}
 	}
@@ -258,23 +264,19 @@ type endLabel struct {
 // endLabels sets the names of the lines to the right of the frame, moved apart
 // as far as they need and joined to their lines by a hair.
 func (d *doc) endLabels(ends []endLabel, f box) {
-	const apart = 13.0
 	sort.SliceStable(ends, func(i, j int) bool { return ends[i].at[1] < ends[j].at[1] })
 	// Down from the top, then up from the bottom where that ran out of the frame.
 	floor := f.y0 - 6
 	for i := range ends {
 		ends[i].y = max(ends[i].y, floor)
-		floor = ends[i].y + apart
+		floor = ends[i].y + labelApart
 	}
 	ceil := f.y1 + 6
 	for i := len(ends) - 1; i >= 0; i-- {
 		ends[i].y = min(ends[i].y, ceil)
-		ceil = ends[i].y - apart
+		ceil = ends[i].y - labelApart
 	}
 	for _, e := range ends {
-		if e.text == "" {
-			continue
-		}
 		d.line(e.at[0]+1, e.at[1], f.x1+7, e.y, "hair")
 		d.letters(f.x1+10, e.y+4, "", "start", e.text)
 	}
@@ -285,6 +287,9 @@ func (c Chart) describe() string {
 	var b strings.Builder
 	b.WriteString(c.YLabel + " against " + c.XLabel + ".")
 	for _, s := range c.Series {
+		if s.Label == "" {
+			s.Label = c.Title
+		}
 		r, last := emptySpan(), math.NaN()
 		for _, y := range s.Y {
 			r.add(y)

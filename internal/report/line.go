@@ -20,10 +20,10 @@ func dashAttr(hue int) string {
 	return ""
 }
 
-// polyline draws a line in its hue. Pale hues lie on an edge of ink, so that
+// polyline draws a line in its hue, width px wide. Pale hues lie on an edge of ink, so that
 // they stand out from the paper; the style sheet knows which. A single point is
 // drawn as a dot.
-func (d *doc) polyline(pts []point, hue int, class string) {
+func (d *doc) polyline(pts []point, hue int, width float64) {
 	switch len(pts) {
 	case 0:
 		return
@@ -35,15 +35,15 @@ func (d *doc) polyline(pts []point, hue int, class string) {
 		return
 	}
 	start := len(d.b)
-	d.raw("\"" + dashAttr(hue) + " d=\"")
+	d.raw("px\"" + dashAttr(hue) + " d=\"")
 	d.path(pts)
 	d.raw("\"/>")
 	rest := string(d.b[start:])
 	d.b = d.b[:start]
 	if pale(hue) {
-		d.raw("<path class=\"" + class + " edge" + rest)
+		d.raw("<path class=\"line edge\" style=\"stroke-width:" + num(width+1.2) + rest)
 	}
-	d.raw("<path class=\"" + class + " " + hueClass(hue) + rest)
+	d.raw("<path class=\"line " + hueClass(hue) + "\" style=\"stroke-width:" + num(width) + rest)
 }
 
 func pale(hue int) bool { return hue%hues >= 4 }

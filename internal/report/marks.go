@@ -9,7 +9,7 @@ import (
 const symbols = `<svg xmlns="http://www.w3.org/2000/svg" class="store" aria-hidden="true" width="0" height="0">
 <symbol id="start" overflow="visible"><circle class="mark" r="4"/></symbol>
 <symbol id="newest" overflow="visible"><path class="fill" d="M6 0L-4-4.5V4.5Z"/></symbol>
-<symbol id="end" overflow="visible"><circle class="fill" r="1.5"/></symbol>
+<symbol id="end" overflow="visible"><circle class="end" r="2.2"/></symbol>
 <symbol id="cross" overflow="visible"><path class="back" d="M-4.5-4.5L4.5 4.5M-4.5 4.5L4.5-4.5"/><path class="cross" d="M-4.5-4.5L4.5 4.5M-4.5 4.5L4.5-4.5"/></symbol>
 <symbol id="ring" overflow="visible"><circle class="mark" r="4.5"/></symbol>
 <symbol id="square" overflow="visible"><path class="mark" d="M-3.5-3.5h7v7h-7z"/></symbol>
@@ -33,19 +33,20 @@ func (d *doc) tie(v view, t TieMark, pen *placer) {
 	if !a.finite() || !b.finite() {
 		return
 	}
+	ends := " d=\"M" + num(a[0]) + " " + num(a[1]) + "L" + num(b[0]) + " " + num(b[1]) + "\"/>"
 	class := map[string]string{Held: "tie", Refused: "tie no", Open: "tie may"}[t.Verdict]
 	d.raw("<g><title>")
 	d.text("tie " + shorten(t.ID, 60) + ", " + t.Verdict)
 	if t.SmallestDetectableM > 0 {
 		d.text(", smallest detectable error " + strconv.FormatFloat(t.SmallestDetectableM, 'g', 2, 64) + " m")
 	}
-	d.raw("</title><path class=\"" + class + "\"")
-	if w := t.width(); w != 1 {
+	d.raw("</title><path class=\"under\"" + ends + "<path class=\"" + class + "\"")
+	if w := t.width() * v.zoom; w != 1 {
 		d.raw(" style=\"stroke-width:" + num(w) + "\"")
 	}
-	d.raw(" d=\"M" + num(a[0]) + " " + num(a[1]) + "L" + num(b[0]) + " " + num(b[1]) + "\"/>")
-	d.use("end", a[0], a[1])
-	d.use("end", b[0], b[1])
+	d.raw(ends)
+	d.use("end", a, v.zoom, 0)
+	d.use("end", b, v.zoom, 0)
 	pen.ink([]point{a, b})
 	m := point{(a[0] + b[0]) / 2, (a[1] + b[1]) / 2}
 	mark := map[bool]string{true: "square"}[t.Unchecked && t.Verdict == Held]
@@ -56,10 +57,11 @@ func (d *doc) tie(v view, t TieMark, pen *placer) {
 		mark = "ring"
 	}
 	if t.contradicted() {
-		d.use("diamond", m[0], m[1])
+		d.use("diamond", m, v.zoom, 0)
+		pen.blot(box{m[0] - 9, m[1] - 9, m[0] + 9, m[1] + 9})
 	}
 	if mark != "" {
-		d.use(mark, m[0], m[1])
+		d.use(mark, m, v.zoom, 0)
 		pen.blot(box{m[0] - 7, m[1] - 7, m[0] + 7, m[1] + 7})
 	}
 	d.raw("</g>\n")
@@ -98,6 +100,12 @@ func (d *doc) leader(from point, to box) {
 	}
 }
 
+// The lettering of the two sorts of label.
+const (
+	startClass  = "halo"
+	newestClass = "halo b"
+)
+
 // label is the set of robots named at one place.
 type label struct {
 	at     point
@@ -106,8 +114,9 @@ type label struct {
 }
 
 // names marks the start and the newest pose of every track and writes the
-// robots beside them. Tracks that start or end in one place share a label.
-func (d *doc) names(tracks []Track, line func([][3]float64) []point, pen *placer) {
+// robots beside the newest poses, and beside the starts if asked to. Tracks that
+// start or end in one place share a label.
+func (d *doc) names(tracks []Track, line func([][3]float64) []point, atStart bool, zoom float64, pen *placer) {
 	var newest, starts []label
 	gather := func(to *[]label, class string, at point, t Track) {
 		pen.blot(box{at[0] - 6, at[1] - 6, at[0] + 6, at[1] + 6})
@@ -122,12 +131,14 @@ func (d *doc) names(tracks []Track, line func([][3]float64) []point, pen *placer
 	for _, t := range tracks {
 		pts := line(t.Points)
 		if a, ok := firstFinite(pts); ok {
-			d.use("start", a[0], a[1])
-			gather(&starts, "halo", a, t)
+			d.use("start", a, zoom, 0)
+			if atStart {
+				gather(&starts, startClass, a, t)
+			}
 		}
 		if b, ok := lastFinite(pts); ok {
-			d.raw("<use href=\"#newest\" transform=\"translate(" + num(b[0]) + " " + num(b[1]) + ") rotate(" + num(heading(pts)) + ")\"/>")
-			gather(&newest, "halo b", b, t)
+			d.use("newest", b, zoom, heading(pts))
+			gather(&newest, newestClass, b, t)
 		}
 	}
 	d.raw("\n")
@@ -148,9 +159,18 @@ func heading(pts []point) float64 {
 }
 
 // label writes the robots of one place, each with a sample of its line, in
-// columns of eight.
+// columns of eight. Where more than eight start in one place only their number
+// is written: a long list would hide the plan, and each is named at its newest
+// pose.
 func (d *doc) label(l label, pen *placer) {
 	const rows, high, sample = 8, 14.0, 18.0
+	if n := len(l.tracks); n > rows && l.class == startClass {
+		s := strconv.Itoa(n) + " robots start here"
+		at := pen.place(l.at, textWidth(s, letter), high)
+		d.leader(l.at, at)
+		d.letters(at.x0, at.y1-3, l.class, "start", s)
+		return
+	}
 	name := func(t Track) string { return shorten(t.Robot, 18) }
 	wide := 0.0
 	for _, t := range l.tracks {
@@ -160,9 +180,10 @@ func (d *doc) label(l label, pen *placer) {
 	cols := (len(l.tracks) + rows - 1) / rows
 	at := pen.place(l.at, float64(cols)*(wide+6)-6, high*float64(min(rows, len(l.tracks))))
 	d.leader(l.at, at)
+	d.raw("<path class=\"plate\" d=\"M" + num(at.x0-3) + " " + num(at.y0) + "h" + num(at.w()+6) + "v" + num(at.h()) + "h" + num(-at.w()-6) + "z\"/>")
 	for i, t := range l.tracks {
 		x, y := at.x0+float64(i/rows)*(wide+6), at.y0+float64(i%rows)*high+high/2
-		d.polyline([]point{{x, y}, {x + sample - 4, y}}, t.Hue, "track")
+		d.polyline([]point{{x, y}, {x + sample - 4, y}}, t.Hue, 2)
 		d.letters(x+sample, y+4, l.class, "start", name(t))
 	}
 	d.raw("\n")

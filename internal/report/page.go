@@ -4,6 +4,7 @@ import (
 	"errors"
 	"fmt"
 	"io"
+	"strconv"
 )
 
 // MaxBytes is the largest file Write produces.
@@ -111,7 +112,7 @@ func (d *doc) page(p Page) {
 		d.raw("</section>\n")
 	}
 	if len(p.Charts) > 0 {
-		d.section("charts", "Over time")
+		d.section("charts", "Charts")
 		for _, g := range p.Charts {
 			d.charts(g)
 		}
@@ -158,7 +159,7 @@ func (d *doc) head(p Page) {
 	}{
 		{true, "attention", "Needs a person’s eye"},
 		{len(p.Plans) > 0, "plan", "Plan"},
-		{len(p.Charts) > 0, "charts", "Over time"},
+		{len(p.Charts) > 0, "charts", "Charts"},
 		{len(p.Tables) > 0, "tables", "Figures"},
 		{len(p.Method) > 0, "method", "How it was computed"},
 		{len(p.Files) > 0, "files", "Files"},
@@ -193,7 +194,7 @@ func (d *doc) method(p Page) {
 		d.text(m)
 		d.raw("</p>\n")
 	}
-	d.raw("<p>Lines are simplified to " + num(d.tol) + " pixel of the drawing.")
+	d.raw("<p>Lines are simplified to within " + strconv.FormatFloat(d.tol, 'g', -1, 64) + " pixel of the drawing.")
 	if p.Version != "" {
 		d.raw(" Made by ")
 		d.text(p.Version)

@@ -75,7 +75,7 @@ func TestPageHoldsWhatItWasGiven(t *testing.T) {
 	for _, want := range []string{
 		p.Finding, p.Cautions[0], Safety, p.Attention[2], "portal pillar 2", "212", p.Made, p.Version,
 		"hare: not joined to the datum", "times too large", "not computed: not joined to the datum",
-		"accepted up to 0.35 m", "verdicts.csv", "Profile: z (m) against x (m)",
+		"accepted up to 0.35 m", "verdicts.csv", "Profile: z against x, in m; heights",
 	} {
 		if !strings.Contains(words, want) {
 			t.Errorf("the page does not say %q", want)
@@ -158,7 +158,7 @@ func TestPageStaysUnderItsSize(t *testing.T) {
 	if len(page) > MaxBytes {
 		t.Errorf("%d bytes, expected at most %d", len(page), MaxBytes)
 	}
-	if !strings.Contains(words, "simplified to .5 pixel") {
+	if !strings.Contains(words, "within 0.5 pixel") {
 		t.Error("100 000 poses in drifts should not need coarser lines")
 	}
 
@@ -166,13 +166,13 @@ func TestPageStaysUnderItsSize(t *testing.T) {
 	limit := 1.0
 	for r := range 90 {
 		s := Series{Label: "n"}
-		for i := range 4_000 {
+		for i := range 1_600 {
 			s.X, s.Y = append(s.X, float64(i)), append(s.Y, math.Sin(float64(i*i+r)))
 		}
 		p.Charts[0].Charts = append(p.Charts[0].Charts, Chart{Title: "noise", Threshold: &limit, Series: []Series{s, s, s, s}})
 	}
 	page, words = set(t, p)
-	if len(page) > MaxBytes || strings.Contains(words, "simplified to .5 pixel") {
+	if len(page) > MaxBytes || strings.Contains(words, "within 0.5 pixel") {
 		t.Errorf("%d bytes, not drawn coarser", len(page))
 	}
 

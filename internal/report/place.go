@@ -30,7 +30,10 @@ type placer struct {
 	cells []float64 // ink in cells of cell x cell px, in px of line
 }
 
-const cell = 4.0 // px
+const (
+	cell  = 4.0    // px
+	clash = 1000.0 // cost of lying on another label
+)
 
 func newPlacer(frame box) *placer {
 	nx, ny := int(frame.w()/cell)+1, int(frame.h()/cell)+1
@@ -64,7 +67,7 @@ func (p *placer) cost(b box) float64 {
 	}
 	for _, t := range p.taken {
 		if b.meets(t) {
-			sum += 2000
+			sum += clash
 		}
 	}
 	return sum
@@ -89,12 +92,23 @@ func (p *placer) place(anchor point, w, h float64) box {
 				n := b.nearest(anchor)
 				for _, t := range p.taken {
 					if crosses(anchor, n, t) {
-						c += 300
+						c += clash / 4
 					}
 				}
 			}
 			if c < best-1e-9 {
 				best, at = c, b
+			}
+		}
+	}
+	if best >= clash { // crowded: the nearest free spot anywhere
+		for y := p.frame.y0; y+h <= p.frame.y1; y += 2 * cell {
+			for x := p.frame.x0; x+w <= p.frame.x1; x += 2 * cell {
+				b := box{x, y, x + w, y + h}
+				n := b.nearest(anchor)
+				if c := p.cost(b) + 0.7*math.Hypot(n[0]-anchor[0], n[1]-anchor[1]); c < best {
+					best, at = c, b
+				}
 			}
 		}
 	}

@@ -240,7 +240,7 @@ func (d *doc) key(p Plan, mag float64) {
 		item("<path class=\"truth\""+across, "truth, under the tracks")
 	}
 	count(held, "<path class=\"tie\""+across+"<use href=\"#end\" x=\"2\" y=\"8\"/><use href=\"#end\" x=\"34\" y=\"8\"/>", "tie, held")
-	count(unchecked, "<path class=\"tie\""+across+"<use href=\"#square\" x=\"18\" y=\"8\"/>", "held, but unchecked")
+	count(unchecked, "<path class=\"tie\""+across+"<use href=\"#square\" x=\"18\" y=\"8\"/>", "of these unchecked")
 	count(refused, "<path class=\"tie no\""+across+"<use href=\"#cross\" x=\"18\" y=\"8\"/>", "tie, refused")
 	count(open, "<path class=\"tie may\""+across+"<use href=\"#ring\" x=\"18\" y=\"8\"/>", "tie, open")
 	count(wrong, "<path class=\"tie\""+across+"<use href=\"#diamond\" x=\"18\" y=\"8\"/>", "verdict contradicts the simulated truth")

@@ -17,7 +17,7 @@ func (d *doc) profile(p Plan, width float64, class string) {
 		along, axis = "y", 1
 	}
 	plan, step := p.layout(width)
-	v := view{sx: plan.sx, x0: plan.x0}
+	v := view{sx: plan.sx, x0: plan.x0, zoom: plan.zoom}
 	f := box{plan.frame.x0, 26, plan.frame.x1, 0}
 	hs, zs := p.bounds(axis), p.bounds(2)
 	if axis == 1 { // no common axis with the plan: use the whole width
@@ -31,9 +31,9 @@ func (d *doc) profile(p Plan, width float64, class string) {
 		v.x0 = (hs.lo+hs.hi)/2 - f.w()/2/v.sx
 		step = niceStep(spacing(width) / v.sx)
 	}
-	// Exaggerated towards a seventh of the width, and it is said how much.
+	// Exaggerated towards a sixth of the width, and it is said how much.
 	times := 1.0
-	if want := width / 7 / (zs.size() * v.sx); want >= 2 {
+	if want := width / 6 / (zs.size() * v.sx); want >= 2 {
 		times = niceStep(want / 2)
 	}
 	v.sy = v.sx * times
@@ -42,9 +42,9 @@ func (d *doc) profile(p Plan, width float64, class string) {
 	v.frame = f
 	stepZ := niceStep(34 / v.sy)
 
-	title := "Profile: z (m) against " + along + " (m)"
+	title := "Profile: z against " + along + ", in m"
 	if times != 1 {
-		title += ", heights drawn " + strconv.FormatFloat(times, 'f', -1, 64) + " times too large"
+		title += "; heights " + strconv.FormatFloat(times, 'f', -1, 64) + " times too large"
 	}
 	line := func(pts [][3]float64) []point {
 		out := make([]point, len(pts))
@@ -59,22 +59,8 @@ func (d *doc) profile(p Plan, width float64, class string) {
 	d.letters(f.x0, 16, "i", "start", title)
 	d.grid(v, step, stepZ)
 	pen := newPlacer(box{f.x0 + 2, f.y0 + 2, f.x1 - 2, f.y1 - 2})
-	for _, t := range p.Tracks {
-		for _, run := range runs(line(t.Truth)) {
-			d.raw("<path class=\"truth\" d=\"")
-			d.path(simplify(run, d.tol))
-			d.raw("\"/>\n")
-		}
-	}
-	for _, t := range p.Tracks {
-		for _, run := range runs(line(t.Points)) {
-			run = simplify(run, d.tol)
-			d.polyline(run, t.Hue, "track")
-			pen.ink(run)
-		}
-		d.raw("\n")
-	}
-	d.names(p.Tracks, line, pen)
+	d.tracks(p.Tracks, line, v.zoom, pen)
+	d.names(p.Tracks, line, false, v.zoom, pen)
 	d.frame(f)
 	d.raw("</svg>\n")
 }

@@ -42,7 +42,7 @@ func drift(robots, perRobot, ties int, space bool) Page {
 				}
 				left = pitch
 			}
-			bias += rng.NormFloat64() * 0.012 * math.Sqrt(speed)
+			bias += rng.NormFloat64() * 0.012 * math.Sqrt(speed) * float64(1+9*(r%2))
 			z := 0.0
 			if space {
 				z = -0.04*x + 1.2*math.Sin(y/30)
@@ -93,7 +93,7 @@ func drift(robots, perRobot, ties int, space bool) Page {
 	var worst Series
 	for r, t := range plan.Tracks {
 		c := Chart{Title: t.Robot, XLabel: "time (s)", YLabel: "position error (m)", Threshold: &limit, ThresholdLabel: "accepted up to 0.35 m"}
-		s := Series{Label: "error", Hue: t.Hue}
+		s := Series{Hue: t.Hue}
 		sent := Series{Label: t.Robot, Hue: t.Hue}
 		e, sum := 0.02, 0.0
 		for k := range 300 {

@@ -3,6 +3,7 @@ package report
 import (
 	"math"
 	"strconv"
+	"strings"
 )
 
 // span is a closed interval of values, empty while lo > hi.
@@ -58,12 +59,14 @@ func tickText(v, step float64) string {
 	if step < 1 {
 		dec = min(12, int(math.Ceil(-math.Log10(step)-1e-9)))
 	}
-	if math.Abs(v) >= 1e9 {
-		return strconv.FormatFloat(v, 'g', 6, 64)
-	}
-	s := strconv.FormatFloat(v, 'f', dec, 64)
-	if math.Abs(v) < step/2 {
+	var s string
+	switch {
+	case math.Abs(v) >= 1e9:
+		s = strconv.FormatFloat(v, 'g', 6, 64)
+	case math.Abs(v) < step/2:
 		s = strconv.FormatFloat(0, 'f', dec, 64)
+	default:
+		s = strconv.FormatFloat(v, 'f', dec, 64)
 	}
-	return s
+	return strings.ReplaceAll(s, "-", "−")
 }

@@ -11,6 +11,7 @@ type view struct {
 	frame  box
 	x0, y0 float64 // m, at the lower left corner of the frame
 	sx, sy float64 // px per m
+	zoom   float64 // of symbols and line widths: less than 1 on a phone
 }
 
 func (v view) px(x, y float64) point {
@@ -60,9 +61,9 @@ func (p Plan) layout(width float64) (view, float64) {
 	if dx < 1 && dy < 1 { // a robot that stood still
 		dx = 1
 	}
-	tallest := width * 0.8
-	if width < 500 {
-		tallest = width * 1.15
+	tallest, zoom := width*0.8, 1.0
+	if width < 400 {
+		tallest, zoom = width*1.15, 0.75
 	}
 	left := 40.0
 	var scale, step float64
@@ -77,10 +78,14 @@ func (p Plan) layout(width float64) (view, float64) {
 	w := width - left - right
 	// A tall site leaves room at its sides; keep some of it for labels.
 	w = min(w, max(dx*scale+2*pad+width*0.2, width*0.62-left-right))
-	h := max(dy*scale+2*pad, min(width*0.3, tallest))
+	least := width * 0.3
+	if width < 400 {
+		least = width * 0.9 // labels do not shrink with the site: give them room
+	}
+	h := max(dy*scale+2*pad, least)
 	f := box{left, top, left + w, top + h}
 	return view{
-		frame: f, sx: scale, sy: scale,
+		frame: f, sx: scale, sy: scale, zoom: zoom,
 		x0: (xs.lo+xs.hi)/2 - w/2/scale,
 		y0: (ys.lo+ys.hi)/2 - h/2/scale,
 	}, step
@@ -93,10 +98,14 @@ func spacing(width float64) float64 { return max(56, width/9) }
 func (d *doc) sheet(p Plan, width float64, class string, mag float64) {
 	v, step := p.layout(width)
 	f := v.frame
-	height := f.y1 + 72
+	notes := []string{"Grid every " + tickText(step, step) + " m."}
 	if len(p.Ellipses) > 0 {
-		height += 18
+		notes = append(notes, p.ellipseNote(mag)+".")
 	}
+	if width > 500 {
+		notes = []string{strings.Join(notes, " ")}
+	}
+	height := f.y1 + 70 + 17*float64(len(notes))
 	id := d.id()
 	d.svg(id, f.x1+10, height, class, "Plan view of "+p.Title, p.describe())
 	d.grid(v, step, step)
@@ -107,35 +116,42 @@ func (d *doc) sheet(p Plan, width float64, class string, mag float64) {
 	d.attr("height", f.h())
 	d.raw(" viewBox=\"" + num(f.x0) + " " + num(f.y0) + " " + num(f.w()) + " " + num(f.h()) + "\">\n")
 	pen := newPlacer(box{f.x0 + 2, f.y0 + 2, f.x1 - 2, f.y1 - 2})
-	for _, t := range p.Tracks {
-		for _, run := range runs(v.line(t.Truth)) {
-			d.raw("<path class=\"truth\" d=\"")
-			d.path(simplify(run, d.tol))
-			d.raw("\"/>\n")
-		}
-	}
-	for _, t := range p.Tracks {
-		for _, run := range runs(v.line(t.Points)) {
-			run = simplify(run, d.tol)
-			d.polyline(run, t.Hue, "track")
-			pen.ink(run)
-		}
-		d.raw("\n")
-	}
+	d.tracks(p.Tracks, v.line, v.zoom, pen)
 	for _, e := range p.Ellipses {
 		d.ellipse(v, e, mag)
 	}
 	d.ties(v, p.Ties, pen)
-	d.names(p.Tracks, v.line, pen)
+	d.names(p.Tracks, v.line, true, v.zoom, pen)
 	d.tieNames(v, p.Ties, width, pen)
 	d.raw("</svg>\n")
 	d.frame(f)
 	d.scaleBar(v, width)
 	d.axes(p, v)
-	if len(p.Ellipses) > 0 {
-		d.letters(f.x0, height-8, "i", "start", p.ellipseNote(mag))
+	for i, n := range notes {
+		d.letters(f.x0, f.y1+78+17*float64(i), "i", "start", n)
 	}
 	d.raw("</svg>\n")
+}
+
+// tracks draws the tracks over the truth. Robots drive over each other's
+// tracks: the first are drawn widest, so that the later ones do not hide them.
+func (d *doc) tracks(tracks []Track, line func([][3]float64) []point, zoom float64, pen *placer) {
+	for _, t := range tracks {
+		for _, run := range runs(line(t.Truth)) {
+			d.raw("<path class=\"truth\" d=\"")
+			d.path(simplify(run, d.tol))
+			d.raw("\"/>\n")
+		}
+	}
+	for i, t := range tracks {
+		width := zoom * (1.4 + 2*(1-float64(i+1)/float64(len(tracks))))
+		for _, run := range runs(line(t.Points)) {
+			run = simplify(run, d.tol)
+			d.polyline(run, t.Hue, width)
+			pen.ink(run)
+		}
+		d.raw("\n")
+	}
 }
 
 func (d *doc) frame(f box) {

@@ -40,8 +40,8 @@ svg svg{overflow:hidden}
 .islands,.multiples{display:grid;grid-template-columns:repeat(auto-fill,minmax(min(100%,400px),1fr));gap:22px 28px}
 .key{list-style:none;display:flex;flex-wrap:wrap;gap:4px 22px;margin:10px 0 12px;padding:0;font-size:14px}
 .key li{display:flex;align-items:center;gap:8px}
-.key svg{flex:none}
-.titleblock{display:grid;grid-template-columns:repeat(4,1fr);margin:0;border:1px solid var(--ink);outline:1px solid var(--ink);outline-offset:2px}
+.key svg{flex:none;overflow:visible}
+.titleblock{display:grid;grid-template-columns:1.3fr .8fr 1.5fr 1.1fr;margin:14px 3px 3px;border:1px solid var(--ink);outline:1px solid var(--ink);outline-offset:2px}
 .titleblock div{padding:5px 10px 6px;border-left:1px solid var(--faint)}
 .titleblock .wide{grid-column:1/-1;border-left:0;border-bottom:1px solid var(--faint)}
 .titleblock .wide+div{border-left:0}
@@ -70,7 +70,7 @@ svg .small{font-size:11px}
 svg .b{font-weight:600}
 svg .i{font-style:italic}
 svg .halo{paint-order:stroke;stroke:var(--paper);stroke-width:3.2px;stroke-linejoin:round}
-.frame,.ink,.bar,.mark,.cross,.back,.diamond,.tie,.fine,.hair,.grid,.rule,.limit,.truth,.track,.serie,.ellipse{fill:none;stroke:var(--ink)}
+.frame,.ink,.bar,.mark,.cross,.back,.diamond,.tie,.fine,.hair,.grid,.rule,.limit,.truth,.line,.under,.ellipse{fill:none;stroke:var(--ink)}
 .frame{stroke-width:1.4px}
 .ink{stroke-width:1.2px}
 .bar{stroke-width:1px}
@@ -81,10 +81,11 @@ svg .halo{paint-order:stroke;stroke:var(--paper);stroke-width:3.2px;stroke-linej
 .rule{stroke:var(--rule);stroke-width:1px}
 .limit{stroke:var(--alarm);stroke-width:1.2px;stroke-dasharray:7 4}
 .truth{stroke:var(--truth);stroke-width:.8px}
-.track{stroke-width:2px;stroke-linejoin:round}
-.track.edge{stroke-width:3.4px;stroke:var(--edge)}
-.serie{stroke-width:1.6px;stroke-linejoin:round}
-.serie.edge{stroke-width:2.8px;stroke:var(--edge)}
+.line{stroke-linejoin:round}
+.edge{stroke:var(--edge)}
+.plate{fill:var(--paper);fill-opacity:.8}
+.under{stroke:var(--paper);stroke-width:3.6px}
+.end{fill:var(--ink);stroke:var(--paper);stroke-width:.9px}
 .tie{stroke-width:1}
 .no{stroke:var(--alarm);stroke-dasharray:5 3.5}
 .may{stroke-dasharray:.1 3.4;stroke-linecap:round;stroke-width:1.6}
@@ -102,16 +103,18 @@ h1{font-size:23px}
 .titleblock{grid-template-columns:1fr 1fr}
 .titleblock div:nth-child(even){border-left:0}
 .titleblock div:nth-child(n+4){border-top:1px solid var(--faint)}
-a{display:inline-block;padding:6px 0}
+nav a{display:inline-block;padding:6px 0}
+td:not(.r){min-width:9em}
 }
 @media print{
 @page{size:A4;margin:14mm 15mm}
+:root{--paper:#fff;color-scheme:light}
 main{padding:0;max-width:none}
 body{font-size:10.5pt}
 nav{display:none}
 h1{font-size:19pt}h2{font-size:14pt;break-after:avoid;margin-top:20pt}
 figcaption,caption{break-after:avoid}
-figure.plan,figure.island,.multiples>svg,tr,.cautions,.titleblock{break-inside:avoid}
+figure.plan,figure.island,svg,tr,.cautions,.titleblock{break-inside:avoid}
 .multiples{grid-template-columns:1fr 1fr;gap:12pt 16pt}
 .islands{grid-template-columns:1fr 1fr}
 .scroll{overflow:visible}

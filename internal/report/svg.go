@@ -141,12 +141,24 @@ func (d *doc) line(x0, y0, x1, y1 float64, class string) {
 	d.raw("<path class=\"" + class + "\" d=\"M" + num(x0) + " " + num(y0) + "L" + num(x1) + " " + num(y1) + "\"/>")
 }
 
-// use places one of the symbols at (x, y) px.
-func (d *doc) use(symbol string, x, y float64) {
-	d.raw("<use href=\"#" + symbol + "\"")
-	d.attr("x", x)
-	d.attr("y", y)
-	d.raw("/>")
+// use places one of the symbols at p px, zoom times its size, turned by deg
+// degrees clockwise.
+func (d *doc) use(symbol string, p point, zoom, deg float64) {
+	if zoom == 1 && deg == 0 {
+		d.raw("<use href=\"#" + symbol + "\"")
+		d.attr("x", p[0])
+		d.attr("y", p[1])
+		d.raw("/>")
+		return
+	}
+	d.raw("<use href=\"#" + symbol + "\" transform=\"translate(" + num(p[0]) + " " + num(p[1]) + ")")
+	if deg != 0 {
+		d.raw("rotate(" + num(deg) + ")")
+	}
+	if zoom != 1 {
+		d.raw("scale(" + strconv.FormatFloat(zoom, 'g', 3, 64) + ")")
+	}
+	d.raw("\"/>")
 }
 
 // textWidth estimates the width of s in px at the given letter height. The
