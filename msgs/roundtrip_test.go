@@ -18,13 +18,17 @@ var asSent = cmp.Options{
 	cmpopts.IgnoreFields(CorrectedPart{}, "Cov"), cmpopts.IgnoreFields(Tie{}, "Info"),
 }
 
-// sameMatrix reports whether got is m to the given error relative to sqrt(m_ii m_jj), below which tiny numbers do not count.
+// sameMatrix reports whether got is m to the given error relative to sqrt(m_ii m_jj). A row shorter than tiny may be lost.
 func sameMatrix(m, got []float64, limit float64) bool {
 	d := int(math.Sqrt(float64(len(m))))
 	for i := range d {
 		for j := range d {
-			s := max(math.Sqrt(m[i*d+i]), tiny) * max(math.Sqrt(m[j*d+j]), tiny)
-			if !(math.Abs(m[i*d+j]-got[i*d+j]) <= limit*s) {
+			si, sj := math.Sqrt(m[i*d+i]), math.Sqrt(m[j*d+j])
+			allowed := limit * si * sj
+			if min(si, sj) <= 1.001*tiny {
+				allowed = 1.001 * tiny * max(si, sj, tiny)
+			}
+			if !(math.Abs(m[i*d+j]-got[i*d+j]) <= allowed) {
 				return false
 			}
 		}

@@ -1,0 +1,121 @@
+package bus
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"strconv"
+	"sync"
+	"time"
+
+	"github.com/nats-io/nats.go"
+	"github.com/nats-io/nats.go/jetstream"
+)
+
+// ClientOptions say who a client is and whom it tells what happens to its connection.
+type ClientOptions struct {
+	Name      string               // of the robot, or of the base: a single token of a subject
+	Warn      func(error)          // told what goes wrong out of any call, such as a refused permission; may be nil
+	Connected func(connected bool) // told when the link goes and comes; may be nil
+}
+
+// Client is a connection to the bus. It is safe for use by several goroutines.
+type Client struct {
+	nc *nats.Conn
+	js jetstream.JetStream
+
+	mu        sync.Mutex
+	followers map[*follower]struct{}
+}
+
+// Dial makes a client of a server elsewhere. It returns at once, and tries for ever when the server cannot be reached.
+func Dial(url string, o ClientOptions) (*Client, error) { return connect(url, o) }
+
+func connect(url string, o ClientOptions, more ...nats.Option) (*Client, error) {
+	if o.Name == "" {
+		return nil, errors.New("bus: a client needs a name")
+	}
+	if o.Warn == nil {
+		o.Warn = func(error) {}
+	}
+	if o.Connected == nil {
+		o.Connected = func(bool) {}
+	}
+	c := &Client{followers: map[*follower]struct{}{}}
+	options := append([]nats.Option{
+		nats.Name(o.Name), nats.CustomInboxPrefix("_INBOX_" + o.Name),
+		nats.MaxReconnects(-1), nats.RetryOnFailedConnect(true), nats.ReconnectBufSize(-1),
+		nats.ReconnectWait(500 * time.Millisecond), nats.ReconnectJitter(100*time.Millisecond, 100*time.Millisecond),
+		nats.PingInterval(5 * time.Second), nats.MaxPingsOutstanding(2), nats.Timeout(3 * time.Second),
+		nats.ErrorHandler(func(_ *nats.Conn, _ *nats.Subscription, err error) { o.Warn(err) }),
+		nats.DisconnectErrHandler(func(*nats.Conn, error) { o.Connected(false) }),
+		nats.ConnectHandler(func(*nats.Conn) { o.Connected(true); c.resume() }),
+		nats.ReconnectHandler(func(*nats.Conn) { o.Connected(true); c.resume() }),
+	}, more...)
+	nc, err := nats.Connect(url, options...)
+	if err != nil {
+		return nil, fmt.Errorf("bus: %w", err)
+	}
+	js, err := jetstream.New(nc, jetstream.WithDefaultTimeout(4*time.Second))
+	if err != nil {
+		nc.Close()
+		return nil, fmt.Errorf("bus: %w", err)
+	}
+	c.nc, c.js = nc, js
+	return c, nil
+}
+
+// Close ends the connection. Handlers are not called once it has returned, save for those that run at that moment.
+func (c *Client) Close() { c.nc.Close() }
+
+// Publish stores a message in the stream of its subject. With an id, a repeat within two minutes is not stored again, and
+// duplicate is true: on a first attempt that means somebody else has used the id.
+func (c *Client) Publish(ctx context.Context, subject, id string, payload []byte) (duplicate bool, err error) {
+	ack, err := c.publish(ctx, subject, payload, jetstream.WithMsgID(id))
+	return err == nil && ack.Duplicate, err
+}
+
+// PublishNewest stores a message in place of the one before it on its subject.
+func (c *Client) PublishNewest(ctx context.Context, subject string, payload []byte) error {
+	_, err := c.publish(ctx, subject, payload)
+	return err
+}
+
+func (c *Client) publish(ctx context.Context, subject string, payload []byte, o ...jetstream.PublishOpt) (*jetstream.PubAck, error) {
+	if !c.nc.IsConnected() { // the library would wait for the acknowledgement first
+		return nil, fmt.Errorf("bus: publish %s: %w", subject, nats.ErrDisconnected)
+	}
+	ack, err := c.js.Publish(ctx, subject, payload, o...)
+	if err != nil {
+		return nil, fmt.Errorf("bus: publish %s: %w", subject, err)
+	}
+	return ack, nil
+}
+
+// PublishHeartbeat sends a message to whoever listens at this moment. It is not stored and not acknowledged.
+func (c *Client) PublishHeartbeat(subject string, payload []byte) error {
+	if err := c.nc.Publish(subject, payload); err != nil {
+		return fmt.Errorf("bus: publish %s: %w", subject, err)
+	}
+	return nil
+}
+
+// Newest returns the newest message of a subject in a stream and its sequence there; nil and 0 when there is none.
+func (c *Client) Newest(ctx context.Context, stream, subject string) (payload []byte, sequence uint64, err error) {
+	m, err := c.nc.RequestWithContext(ctx, "$JS.API.DIRECT.GET."+stream+"."+subject, nil)
+	if err != nil {
+		return nil, 0, fmt.Errorf("bus: newest %s: %w", subject, err)
+	}
+	switch status := m.Header.Get("Status"); status {
+	case "":
+	case "404":
+		return nil, 0, nil
+	default:
+		return nil, 0, fmt.Errorf("bus: newest %s: %s %s", subject, status, m.Header.Get("Description"))
+	}
+	sequence, err = strconv.ParseUint(m.Header.Get(jetstream.SequenceHeader), 10, 64)
+	if err != nil || m.Header.Get(jetstream.SubjectHeader) != subject {
+		return nil, 0, fmt.Errorf("bus: newest %s: an answer without its sequence or of another subject", subject)
+	}
+	return m.Data, sequence, nil
+}

@@ -1,0 +1,127 @@
+package bus
+
+import (
+	"errors"
+	"fmt"
+	"net"
+	"os"
+	"path/filepath"
+	"strconv"
+	"syscall"
+	"time"
+
+	"github.com/nats-io/nats-server/v2/server"
+	"github.com/nats-io/nats.go"
+)
+
+// maxPayload is the largest message: 8 MiB and room for headers.
+const maxPayload = 8<<20 + 64<<10
+
+// ErrStoreInUse means that another process runs a server on the same folder.
+var ErrStoreInUse = errors.New("another process uses this store of the bus")
+
+// Options say how to run the server.
+type Options struct {
+	Listen   string            // host:port to listen on, port 0 for any; "" lets only this process in
+	StoreDir string            // folder of the streams, made when missing; required
+	Warn     func(text string) // told what the server warns of; may be nil
+}
+
+// Server is a NATS server in this process.
+type Server struct {
+	nats *server.Server
+	lock *os.File
+}
+
+// Start runs a server until Close.
+func Start(o Options) (*Server, error) {
+	if o.StoreDir == "" {
+		return nil, errors.New("bus: no folder for the store was given")
+	}
+	so := &server.Options{
+		ServerName: "base", NoSigs: true, DisableJetStreamBanner: true, MaxPayload: maxPayload,
+		JetStream: true, StoreDir: o.StoreDir, JetStreamMaxStore: storeLimit, JetStreamMaxMemory: 64 << 20, SyncInterval: time.Second,
+		PingInterval: 5 * time.Second, MaxPingsOut: 2, DontListen: o.Listen == "", NoLog: true,
+	}
+	if o.Listen != "" {
+		host, port, err := net.SplitHostPort(o.Listen)
+		if err != nil {
+			return nil, fmt.Errorf("bus: listen: %w", err)
+		}
+		so.Host = host
+		if so.Port, err = strconv.Atoi(port); err != nil || so.Port < 0 || so.Port > 65535 {
+			return nil, fmt.Errorf("bus: listen: found port %q, expected 0 to 65535", port)
+		}
+		if so.Port == 0 {
+			so.Port = server.RANDOM_PORT
+		}
+	}
+	lock, err := lockStore(o.StoreDir)
+	if err != nil {
+		return nil, fmt.Errorf("bus: %w", err)
+	}
+	ns, err := server.NewServer(so)
+	if err != nil {
+		lock.Close()
+		return nil, fmt.Errorf("bus: %w", err)
+	}
+	if o.Warn != nil {
+		ns.SetLoggerV2(warner{o.Warn}, false, false, false)
+	}
+	s := &Server{nats: ns, lock: lock}
+	ns.Start()
+	if !ns.ReadyForConnections(10 * time.Second) {
+		s.Close()
+		return nil, errors.New("bus: the server did not come up within 10 s")
+	}
+	return s, nil
+}
+
+// lockStore keeps others off the folder while the file is open. The server itself would share it and lose data.
+func lockStore(dir string) (*os.File, error) {
+	if err := os.MkdirAll(dir, 0o750); err != nil {
+		return nil, err
+	}
+	f, err := os.OpenFile(filepath.Join(dir, "lock"), os.O_CREATE|os.O_RDWR, 0o640)
+	if err != nil {
+		return nil, err
+	}
+	if err := syscall.Flock(int(f.Fd()), syscall.LOCK_EX|syscall.LOCK_NB); err != nil {
+		f.Close()
+		if errors.Is(err, syscall.EWOULDBLOCK) {
+			err = ErrStoreInUse
+		}
+		return nil, fmt.Errorf("%s: %w", dir, err)
+	}
+	return f, nil
+}
+
+// URL is where a client outside this process connects, "" when none can.
+func (s *Server) URL() string {
+	if a, ok := s.nats.Addr().(*net.TCPAddr); ok && a != nil {
+		return "nats://" + a.String()
+	}
+	return ""
+}
+
+// Connect makes a client in the process of the server.
+func (s *Server) Connect(o ClientOptions) (*Client, error) {
+	return connect("", o, nats.InProcessServer(s.nats))
+}
+
+// Close stops the server and leaves the store to others.
+func (s *Server) Close() error {
+	s.nats.Shutdown()
+	s.nats.WaitForShutdown()
+	return s.lock.Close()
+}
+
+// warner hands on what the server warns of.
+type warner struct{ warn func(string) }
+
+func (w warner) Warnf(format string, v ...any)  { w.warn(fmt.Sprintf(format, v...)) }
+func (w warner) Errorf(format string, v ...any) { w.warn(fmt.Sprintf(format, v...)) }
+func (w warner) Fatalf(format string, v ...any) { w.warn(fmt.Sprintf(format, v...)) }
+func (w warner) Noticef(string, ...any)         {}
+func (w warner) Debugf(string, ...any)          {}
+func (w warner) Tracef(string, ...any)          {}
