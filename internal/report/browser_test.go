@@ -3,6 +3,7 @@ package report
 import (
 	"bytes"
 	"context"
+	"fmt"
 	"math"
 	"net/url"
 	"os"
@@ -91,6 +92,9 @@ const outOfFrame = `(() => {
 			}
 		});
 	}
+	for (const e of document.querySelectorAll('main *')) {
+		if (e.scrollWidth > e.clientWidth + 1 && getComputedStyle(e).overflowX === 'auto' && e.tabIndex < 0) bad.push('cannot be scrolled by keyboard: ' + e.className);
+	}
 	if (document.documentElement.scrollWidth > document.documentElement.clientWidth) bad.push('the page scrolls sideways: ' + document.documentElement.scrollWidth);
 	return bad;
 })()`
@@ -119,37 +123,49 @@ const faint = `(() => {
 })()`
 
 func TestPageAsAReaderSeesIt(t *testing.T) {
-	p := drift(6, 3000, 60, true)
-	p.Plans[0].Tracks[0].Hue = 7 // also the palest hue
-	ctx := browser(t, p)
-	for _, view := range []struct {
-		name, scheme  string
-		width, height int64
-	}{
-		{"light.png", "light", 1100, 900},
-		{"dark.png", "dark", 1100, 900},
-		{"phone.png", "light", 390, 844},
-		{"phone-dark.png", "dark", 390, 844},
-	} {
-		t.Run(view.name, func(t *testing.T) {
-			if _, err := chromedp.Call(ctx, emulation.SetEmulatedMedia, emulation.SetEmulatedMediaParams{
-				Features: []*emulation.MediaFeature{{Name: "prefers-color-scheme", Value: view.scheme}},
-			}); err != nil {
-				t.Fatal(err)
-			}
-			if err := chromedp.Do(ctx, chromedp.EmulateViewport(view.width, view.height, chromedp.EmulateScale(2))); err != nil {
-				t.Fatal(err)
-			}
-			for _, s := range append(ask[[]string](t, ctx, outOfFrame), ask[[]string](t, ctx, faint)...) {
-				t.Error(s)
-			}
-			picture, err := chromedp.Run(ctx, chromedp.FullScreenshot(100))
-			if err != nil {
-				t.Fatal(err)
-			}
-			keep(t, view.name, picture)
-		})
+	few := drift(6, 3000, 60, true)
+	few.Plans[0].Tracks[0].Hue = 7 // also the palest hue
+	many := drift(30, 1000, 200, false)
+	for i := range many.Plans[0].Tracks {
+		if i%9 == 8 {
+			many.Plans[0].Tracks[i].Island = i
+		}
 	}
+	for _, c := range []struct {
+		name string
+		page Page
+	}{{"few", few}, {"many", many}} {
+		ctx := browser(t, c.page)
+		for _, scheme := range []string{"light", "dark"} {
+			for _, width := range []int64{1100, 390} {
+				name := fmt.Sprintf("%s-%s-%d", c.name, scheme, width)
+				t.Run(name, func(t *testing.T) { look(t, ctx, scheme, width, name+".png") })
+			}
+		}
+	}
+}
+
+// look opens the page at one width and scheme, and has the browser measure it.
+func look(t *testing.T, ctx context.Context, scheme string, width int64, name string) {
+	if _, err := chromedp.Call(ctx, emulation.SetEmulatedMedia, emulation.SetEmulatedMediaParams{
+		Features: []*emulation.MediaFeature{{Name: "prefers-color-scheme", Value: scheme}},
+	}); err != nil {
+		t.Fatal(err)
+	}
+	if err := chromedp.Do(ctx, chromedp.EmulateViewport(width, 900, chromedp.EmulateScale(2))); err != nil {
+		t.Fatal(err)
+	}
+	for _, s := range append(ask[[]string](t, ctx, outOfFrame), ask[[]string](t, ctx, faint)...) {
+		t.Error(s)
+	}
+	if os.Getenv("REPORT_PICTURES") == "" {
+		return
+	}
+	picture, err := chromedp.Run(ctx, chromedp.FullScreenshot(100))
+	if err != nil {
+		t.Fatal(err)
+	}
+	keep(t, name, picture)
 }
 
 // On A4 nothing is cut: no drawing is larger than a sheet has room for, and

@@ -215,9 +215,13 @@ func (d *doc) chart(c Chart, xs, ys span) {
 		for i, x := range s.X {
 			pts = append(pts, px(x, c.value(s.Y[i])))
 		}
+		hue := s.Hue
+		if len(c.Series) == 1 {
+			hue %= hues // alone, it needs no dashes
+		}
 		for _, run := range runs(pts) {
 			run = simplify(columns(run), d.tol)
-			d.polyline(run, s.Hue, 1.5)
+			d.polyline(run, hue, 1.5)
 			pen.ink(run)
 		}
 		if end, ok := lastFinite(pts); ok && s.Label != "" {

@@ -100,6 +100,11 @@ func (d *doc) leader(from point, to box) {
 	}
 }
 
+// plate takes the colour out of what lies beneath a label.
+func (d *doc) plate(b box) {
+	d.raw("<path class=\"plate\" d=\"M" + num(b.x0-3) + " " + num(b.y0) + "h" + num(b.w()+6) + "v" + num(b.h()) + "h" + num(-b.w()-6) + "z\"/>")
+}
+
 // The lettering of the two sorts of label.
 const (
 	startClass  = "halo"
@@ -168,6 +173,7 @@ func (d *doc) label(l label, pen *placer) {
 		s := strconv.Itoa(n) + " robots start here"
 		at := pen.place(l.at, textWidth(s, letter), high)
 		d.leader(l.at, at)
+		d.plate(at)
 		d.letters(at.x0, at.y1-3, l.class, "start", s)
 		return
 	}
@@ -180,7 +186,7 @@ func (d *doc) label(l label, pen *placer) {
 	cols := (len(l.tracks) + rows - 1) / rows
 	at := pen.place(l.at, float64(cols)*(wide+6)-6, high*float64(min(rows, len(l.tracks))))
 	d.leader(l.at, at)
-	d.raw("<path class=\"plate\" d=\"M" + num(at.x0-3) + " " + num(at.y0) + "h" + num(at.w()+6) + "v" + num(at.h()) + "h" + num(-at.w()-6) + "z\"/>")
+	d.plate(at)
 	for i, t := range l.tracks {
 		x, y := at.x0+float64(i/rows)*(wide+6), at.y0+float64(i%rows)*high+high/2
 		d.polyline([]point{{x, y}, {x + sample - 4, y}}, t.Hue, 2)

@@ -247,7 +247,7 @@ func (d *doc) key(p Plan, mag float64) {
 	if !sizes.empty() {
 		thin, thick := TieMark{SmallestDetectableM: sizes.lo}, TieMark{SmallestDetectableM: sizes.hi}
 		item("<path class=\"tie\" style=\"stroke-width:"+num(thin.width())+"\" d=\"M2 5H34\"/><path class=\"tie\" style=\"stroke-width:"+num(thick.width())+"\" d=\"M2 11H34\"/>",
-			"width: smallest error a tie would show, "+strconv.FormatFloat(sizes.lo, 'g', 2, 64)+" to "+strconv.FormatFloat(sizes.hi, 'g', 2, 64)+" m")
+			"width: smallest error a tie would show, "+strconv.FormatFloat(sizes.lo, 'g', 2, 64)+" to "+strconv.FormatFloat(sizes.hi, 'g', 2, 64)+"\u00a0m")
 	}
 	if len(p.Ellipses) > 0 {
 		item("<ellipse class=\"ellipse\" cx=\"18\" cy=\"8\" rx=\"13\" ry=\"5\"/>", p.ellipseNote(mag))
