@@ -34,7 +34,15 @@ func (d *doc) tie(v view, t TieMark, pen *placer) {
 		return
 	}
 	ends := " d=\"M" + num(a[0]) + " " + num(a[1]) + "L" + num(b[0]) + " " + num(b[1]) + "\"/>"
-	class := map[string]string{Held: "tie", Refused: "tie no", Open: "tie may"}[t.Verdict]
+	class, mark := "tie", ""
+	switch {
+	case t.Verdict == Refused:
+		class, mark = "tie no", "cross"
+	case t.Verdict == Open:
+		class, mark = "tie may", "ring"
+	case t.Unchecked:
+		mark = "square"
+	}
 	d.raw("<g><title>")
 	d.text("tie " + shorten(t.ID, 60) + ", " + t.Verdict)
 	if t.SmallestDetectableM > 0 {
@@ -49,13 +57,6 @@ func (d *doc) tie(v view, t TieMark, pen *placer) {
 	d.use("end", b, v.zoom, 0)
 	pen.ink([]point{a, b})
 	m := point{(a[0] + b[0]) / 2, (a[1] + b[1]) / 2}
-	mark := map[bool]string{true: "square"}[t.Unchecked && t.Verdict == Held]
-	switch t.Verdict {
-	case Refused:
-		mark = "cross"
-	case Open:
-		mark = "ring"
-	}
 	if t.contradicted() {
 		d.use("diamond", m, v.zoom, 0)
 		pen.blot(box{m[0] - 9, m[1] - 9, m[0] + 9, m[1] + 9})

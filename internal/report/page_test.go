@@ -207,3 +207,13 @@ func TestInconsistentPagesAreRefused(t *testing.T) {
 		}
 	}
 }
+
+// A page of six robots with 100 000 poses, all its drawings in it.
+func BenchmarkWrite100kPoses(b *testing.B) {
+	p := drift(6, 100_000/6, 60, true)
+	for b.Loop() {
+		if err := Write(io.Discard, p); err != nil {
+			b.Fatal(err)
+		}
+	}
+}
