@@ -2,7 +2,7 @@ package sparse
 
 // inverter is the memory of the selected inverse, for the widest front.
 type inverter struct {
-	ld             int       // leading dimension of all four
+	ld             int       // leading dimension of all four, as the front at hand has it
 	a, own         []float64 // k x k
 	coupling, next []float64 // k x r
 }
@@ -17,32 +17,37 @@ type inverter struct {
 //
 //	Z_sr = -Y' Z_rr,   Z_ss = D^-T D^-1 - Z_sr Y.
 func (f *Factor) SelectedInverse(out *Matrix) {
-	if out.s != f.s {
-		panic("sparse: matrix and factor belong to different patterns")
-	}
-	if f.inv == nil {
-		ld := up4(f.s.widest.k + 3)
-		square, tall := make([]float64, 2*(ld*f.s.widest.k+8)), make([]float64, 2*(ld*f.s.widest.r+8))
-		f.inv = &inverter{
-			ld: ld,
-			a:  square[:len(square)/2], own: square[len(square)/2:],
-			coupling: tall[:len(tall)/2], next: tall[len(tall)/2:],
+	f.check(out)
+	for i := range f.s.workers {
+		if w := &f.team[i]; w.inv == nil {
+			w.inv = newInverter(f.s.widest.k, f.s.widest.r)
 		}
 	}
-	for i := len(f.s.fronts) - 1; i >= 0; i-- {
-		t := &f.s.fronts[i]
-		f.invertFront(t)
-		f.writeInverse(t, out)
+	f.run(job{inverse: out})
+}
+
+func newInverter(k, r int) *inverter {
+	ld := up4(k + 3)
+	return &inverter{
+		a: make([]float64, ld*k+8), own: make([]float64, ld*k+8),
+		coupling: make([]float64, ld*r+8), next: make([]float64, ld*r+8),
+	}
+}
+
+func (f *Factor) invert(fronts []int32, w *worker) {
+	for k := len(fronts) - 1; k >= 0; k-- {
+		t := &f.s.fronts[fronts[k]]
+		f.invertFront(t, w.inv)
+		f.writeInverse(t, w.inv)
 		for _, c := range f.s.children[t.child[0]:t.child[1]] {
-			f.handDown(t, &f.s.fronts[c])
+			f.handDown(t, &f.s.fronts[c], w.inv)
 		}
 	}
 }
 
 // invertFront computes Z_ss (own) and Z_sr (next). Z_rr, both triangles, lies
 // where the update of the front was.
-func (f *Factor) invertFront(t *front) {
-	v := f.inv
+func (f *Factor) invertFront(t *front, v *inverter) {
 	ld := up4(t.k + 3)
 	v.ld = ld
 	d := f.val[t.d:]
@@ -86,8 +91,8 @@ func packTriangle(d []float64, ldd, n int, l *triangle) {
 }
 
 // writeInverse copies the blocks of the pattern that the factor keeps in front t.
-func (f *Factor) writeInverse(t *front, out *Matrix) {
-	v := f.inv
+func (f *Factor) writeInverse(t *front, v *inverter) {
+	out := f.job.inverse
 	for _, p := range f.s.blocks[t.block[0]:t.block[1]] {
 		dst := out.data[p.src:]
 		rows, cols := int(p.rows), int(p.cols)
@@ -113,8 +118,7 @@ func (f *Factor) writeInverse(t *front, out *Matrix) {
 // handDown gives child w of front t the inverse on its rows, both triangles. It
 // lands where the update of w was; all children are served before any of them is
 // worked on, because their own children reuse the memory of t's.
-func (f *Factor) handDown(t, w *front) {
-	v := f.inv
+func (f *Factor) handDown(t, w *front, v *inverter) {
 	z := f.stack[t.u:]
 	to := f.stack[w.u:]
 	up := f.s.toParent[w.up[0]:w.up[1]]

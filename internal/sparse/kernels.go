@@ -42,16 +42,16 @@ func solvePanel(x []float64, ldx int, b []float64, ldb int, l *triangle, m, k, w
 
 // addRuns adds the entries of source columns 0..cols-1 to target columns, where
 // run r moves rows runs[r].src.. of the source to rows runs[r].dst.. of the target.
-// With lower, column c leaves out the first c rows of the first run.
-func addRuns(dst []float64, ldd int, src []float64, lds int, cols int, runs []run, lower bool) {
+// Column c leaves out the first skip+c*step rows of the first run; step is 0 or 1.
+func addRuns(dst []float64, ldd int, src []float64, lds, cols int, runs []run, skip, step int) {
 	if len(runs) == 0 {
 		return
 	}
 	if accelerated {
-		addRunsAVX2(&dst[0], ldd, &src[0], lds, cols, &runs[0].src, len(runs), lower)
+		addRunsAVX2(&dst[0], ldd, &src[0], lds, cols, &runs[0].src, len(runs), skip, step)
 		return
 	}
-	addRunsGo(dst, ldd, src, lds, cols, runs, lower)
+	addRunsGo(dst, ldd, src, lds, cols, runs, skip, step)
 }
 
 // subtractProduct sets y = y - A x, where A is m x n.

@@ -15,7 +15,7 @@ func solvePanelAVX2(x *float64, ldx int, b *float64, ldb int, l *float64, m int,
 // addRunsAVX2 adds source columns to target columns run by run; see addRuns.
 //
 //go:noescape
-func addRunsAVX2(dst *float64, ldd int, src *float64, lds int, cols int, runs *int32, count int, lower bool)
+func addRunsAVX2(dst *float64, ldd int, src *float64, lds int, cols int, runs *int32, count int, first int, step int)
 
 // subtractProductAVX2 sets y = y - A x; see subtractProduct.
 //

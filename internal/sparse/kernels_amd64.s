@@ -651,19 +651,18 @@ endAz:
 	VZEROUPPER
 	RET
 
-// func addRunsAVX2(dst *float64, ldd int, src *float64, lds int, cols int, runs *int32, count int, lower bool)
+// func addRunsAVX2(dst *float64, ldd int, src *float64, lds int, cols int, runs *int32, count int, first int, step int)
 // Requires: AVX
-TEXT ·addRunsAVX2(SB), NOSPLIT, $0-57
-	MOVQ    dst+0(FP), AX
-	MOVQ    src+16(FP), CX
-	MOVQ    ldd+8(FP), DX
-	SHLQ    $0x03, DX
-	MOVQ    lds+24(FP), BX
-	SHLQ    $0x03, BX
-	MOVQ    cols+32(FP), SI
-	MOVB    lower+56(FP), DI
-	MOVBQZX DI, DI
-	XORQ    R8, R8
+TEXT ·addRunsAVX2(SB), NOSPLIT, $0-72
+	MOVQ dst+0(FP), AX
+	MOVQ src+16(FP), CX
+	MOVQ ldd+8(FP), DX
+	SHLQ $0x03, DX
+	MOVQ lds+24(FP), BX
+	SHLQ $0x03, BX
+	MOVQ cols+32(FP), SI
+	MOVQ step+64(FP), DI
+	MOVQ first+56(FP), R8
 
 columnBo:
 	MOVQ runs+40(FP), R9

@@ -203,17 +203,18 @@ func TestAddRuns(t *testing.T) {
 				runs = append(runs, run{rows, target, length})
 				rows, target = rows+length, target+length
 			}
-			isLower := len(runs) > 0 && rng.IntN(2) == 0
+			skip, step := 0, 0
 			cols := 3 + 3*rng.IntN(4)
-			if isLower {
-				cols = int(runs[0].length)
+			if len(runs) > 0 && rng.IntN(2) == 0 {
+				skip, step = 3*rng.IntN(int(runs[0].length)/3), 1
+				cols = int(runs[0].length) - skip
 			}
 			src, dst := newPadded(rng, int(rows), cols), newPadded(rng, int(target), cols)
 			want := dst.copy()
 			for c := range cols {
 				for k, q := range runs {
 					for i := range int(q.length) {
-						if isLower && k == 0 && i < c {
+						if k == 0 && i < skip+c*step {
 							continue
 						}
 						r := int(q.dst) + i
@@ -221,10 +222,10 @@ func TestAddRuns(t *testing.T) {
 					}
 				}
 			}
-			addRuns(dst.x(), dst.ld, src.x(), src.ld, cols, runs, isLower)
+			addRuns(dst.x(), dst.ld, src.x(), src.ld, cols, runs, skip, step)
 			for i, v := range want.all {
 				if w := dst.all[i]; v != w && !(math.IsNaN(v) && math.IsNaN(w)) {
-					t.Fatalf("runs %v, %d columns, lower %v: entry %d is %g, want %g", runs, cols, isLower, i-guard, w, v)
+					t.Fatalf("runs %v, %d columns, skip %d + %d: entry %d is %g, want %g", runs, cols, skip, step, i-guard, w, v)
 				}
 			}
 		}

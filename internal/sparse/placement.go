@@ -41,6 +41,10 @@ func (s *Symbolic) placeBlocks(t *supernodes) {
 		end := t.columns[i][1]
 		for ; next < len(sorted) && t.columnOf(sorted[next], s) < end; next++ {
 			s.blocks[next] = s.placeBlock(f, t, sorted[next], at)
+			// Cut at the first block column past 2/5: the first ones are longer.
+			if c := int(s.inner[t.columnOf(sorted[next], s)]) - f.pivot; f.half == 0 && 5*c >= 2*f.k {
+				f.half, f.halfBlock = c, int32(next)-f.block[0]
+			}
 		}
 		f.block[1] = int32(next)
 	}

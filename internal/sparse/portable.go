@@ -64,20 +64,17 @@ func solvePanelGo(x []float64, ldx int, b []float64, ldb int, l *triangle, m, k,
 	}
 }
 
-func addRunsGo(dst []float64, ldd int, src []float64, lds int, cols int, runs []run, lower bool) {
+func addRunsGo(dst []float64, ldd int, src []float64, lds, cols int, runs []run, skip, step int) {
 	for c := range cols {
-		skip := int32(0)
-		if lower {
-			skip = int32(c)
-		}
 		to, from := dst[c*ldd:], src[c*lds:]
+		left := int32(skip + c*step)
 		for _, r := range runs {
-			f := from[r.src+skip : r.src+r.length]
-			t := to[r.dst+skip:][:len(f)]
+			f := from[r.src+left : r.src+r.length]
+			t := to[r.dst+left:][:len(f)]
 			for i, v := range f {
 				t[i] += v
 			}
-			skip = 0
+			left = 0
 		}
 	}
 }

@@ -27,6 +27,10 @@ type Symbolic struct {
 	stackLen  int
 	vectorLen int // all row vectors of a right-hand side
 	widest    struct{ k, r int }
+
+	workers int
+	tasks   [2][]int32 // fronts of each worker, ascending
+	top     []int32    // fronts above those, ascending
 }
 
 // front is one supernode: k pivot columns and r rows below, in scalars.
@@ -35,18 +39,20 @@ type Symbolic struct {
 // and R (r x k, leading dimension ldr); the update U (r x r lower triangle,
 // leading dimension ldr) that it passes to its parent lives on a stack.
 type front struct {
-	k, r       int
-	ldd, ldr   int
-	d, b, u    int // offsets of D and R in the factor, of U on the stack
-	vec        int // offset of its row vector
-	pivot      int // first pivot in a vector in elimination order
-	parent     int32
-	child      [2]int32 // range in children
-	up         [2]int32 // range in toParent
-	upPivots   int32    // that many of the runs end in the parent's pivots
-	gather     [2]int32 // range in toVector
-	block      [2]int32 // range in blocks
-	endOfBlock int      // end of D and R in the factor
+	k, r      int
+	ldd, ldr  int
+	d, b, u   int // offsets of D and R in the factor, of U on the stack
+	vec       int // offset of its row vector
+	pivot     int // first pivot in a vector in elimination order
+	parent    int32
+	child     [2]int32 // range in children
+	up        [2]int32 // range in toParent
+	upPivots  int32    // that many of the runs end in the parent's pivots
+	gather    [2]int32 // range in toVector
+	block     [2]int32 // range in blocks
+	half      int      // where two workers cut the pivot columns
+	halfBlock int32    // and the blocks
+	shared    bool     // worth two workers
 }
 
 // run maps length consecutive scalars.
@@ -87,6 +93,7 @@ func Analyse(p Pattern, o Options) (*Symbolic, error) {
 
 	s := &Symbolic{last: append([]int32(nil), o.Last...), pairs: append([][2]int32(nil), p.Pairs...)}
 	s.placeMatrix(p)
+	s.workers = max(1, o.Workers)
 	s.placeFronts(nodes)
 	s.placeBlocks(nodes)
 	return s, nil
@@ -106,6 +113,11 @@ func (s *Symbolic) Flops() float64 { return s.flops }
 
 // Entries returns the numbers stored for L.
 func (s *Symbolic) Entries() int { return s.entries }
+
+// isLast reports whether front i is that of the block rows forced last.
+func (s *Symbolic) isLast(i int32) bool {
+	return len(s.last) > 0 && int(i) == len(s.fronts)-1
+}
 
 func up4(n int) int { return (n + 3) &^ 3 }
 
@@ -171,8 +183,7 @@ func (s *Symbolic) placeFronts(t *supernodes) {
 		f.ldd, f.ldr = up4(f.k+3), up4(f.r)
 		f.d = s.factorLen
 		f.b = f.d + f.ldd*f.k
-		f.endOfBlock = f.b + f.ldr*f.k
-		s.factorLen = f.endOfBlock
+		s.factorLen = f.b + f.ldr*f.k
 		f.vec = s.vectorLen
 		s.vectorLen += f.ldr
 		s.flops += frontFlops(float64(f.k), float64(f.r))
@@ -180,6 +191,7 @@ func (s *Symbolic) placeFronts(t *supernodes) {
 		s.widest.k, s.widest.r = max(s.widest.k, f.k), max(s.widest.r, f.r)
 	}
 	s.linkChildren()
+	s.split()
 	s.stack()
 	s.mapToParents()
 }
@@ -218,35 +230,6 @@ func (s *Symbolic) linkChildren() {
 			f.child[1]++
 		}
 	}
-}
-
-// stack places the updates on two stacks by parity of the depth in the tree: a
-// front is written to one while its children are read from the other.
-func (s *Symbolic) stack() {
-	n := len(s.fronts)
-	odd := make([]int8, n)
-	for i := n - 1; i >= 0; i-- {
-		if p := int(s.fronts[i].parent); p < n {
-			odd[i] = 1 - odd[p]
-		}
-	}
-	var top, high [2]int
-	for i := range s.fronts {
-		f := &s.fronts[i]
-		for _, c := range s.children[f.child[0]:f.child[1]] {
-			w := &s.fronts[c]
-			top[1-odd[i]] -= w.ldr * w.r
-		}
-		f.u = top[odd[i]]
-		top[odd[i]] += f.ldr * f.r
-		high[odd[i]] = max(high[odd[i]], top[odd[i]])
-	}
-	for i := range s.fronts {
-		if odd[i] == 1 {
-			s.fronts[i].u += high[0]
-		}
-	}
-	s.stackLen = high[0] + high[1]
 }
 
 // mapToParents finds, for the rows of each front, their place in its parent:

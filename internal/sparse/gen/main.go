@@ -251,16 +251,13 @@ func solvePanel() {
 }
 
 func addRuns() {
-	TEXT("addRunsAVX2", NOSPLIT, "func(dst *float64, ldd int, src *float64, lds int, cols int, runs *int32, count int, lower bool)")
+	TEXT("addRunsAVX2", NOSPLIT, "func(dst *float64, ldd int, src *float64, lds int, cols int, runs *int32, count int, first int, step int)")
 	Doc("addRunsAVX2 adds source columns to target columns run by run; see addRuns.")
 	Pragma("noescape")
 	dst, src := Load(Param("dst"), GP64()), Load(Param("src"), GP64())
 	ldd, lds := stride("ldd"), stride("lds")
 	cols := Load(Param("cols"), GP64())
-	lower := Load(Param("lower"), GP8())
-	step, skip := GP64(), GP64()
-	MOVBQZX(lower, step)
-	XORQ(skip, skip)
+	step, skip := Load(Param("step"), GP64()), Load(Param("first"), GP64())
 	column := label("column")
 	Label(column)
 	{
