@@ -215,13 +215,13 @@ func (x *Correction) Marshal() ([]byte, error) {
 		}
 		m.Parts[i] = p
 	}
-	return seal(KindCorrection, m, x.Signature, MaxSummary)
+	return seal(KindCorrection, m, x.Signature, MaxCorrection)
 }
 
 // DecodeCorrection reads a correction.
 func DecodeCorrection(b []byte) (*Correction, error) {
 	var m pb.Correction
-	if err := open(KindCorrection, b, &m, MaxSummary, 9); err != nil {
+	if err := open(KindCorrection, b, &m, MaxCorrection, 9); err != nil {
 		return nil, err
 	}
 	x := &Correction{

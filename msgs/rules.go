@@ -23,9 +23,10 @@ const (
 	MaxMetres      = 1e9     // any coordinate, and the length of a track
 	MaxMatrix      = 1e70    // any number of an information or covariance matrix
 
-	MaxSmall   = 1 << 14 // bytes of a heartbeat, tie, verdict, lease or head
-	MaxWant    = 1 << 21 // bytes of a want
-	MaxSummary = 8 << 20 // bytes of a summary or correction
+	MaxSmall      = 1 << 14           // bytes of a heartbeat, tie, verdict, lease or head
+	MaxWant       = 1 << 21           // bytes of a want
+	MaxSummary    = 8 << 20           // bytes of a summary
+	MaxCorrection = 8<<20 - ChunkSize // bytes of a correction, which must pass through the bus in one piece
 )
 
 const signatureSize = 64

@@ -13,7 +13,7 @@ import (
 
 func TestMain(m *testing.M) { goleak.VerifyTestMain(m) }
 
-const patience = 20 * time.Second
+const longest = 20 * time.Second
 
 func start(t *testing.T, o Options) *Server {
 	t.Helper()
@@ -40,7 +40,7 @@ func join(t *testing.T, s *Server, name string) *Client {
 }
 
 func deadline(t *testing.T) context.Context {
-	ctx, cancel := context.WithTimeout(context.Background(), patience)
+	ctx, cancel := context.WithTimeout(context.Background(), longest)
 	t.Cleanup(cancel)
 	return ctx
 }
@@ -61,7 +61,7 @@ func expect(t *testing.T, from <-chan message, want ...message) {
 			if got != w {
 				t.Fatalf("got %v, want %v", got, w)
 			}
-		case <-time.After(patience):
+		case <-time.After(longest):
 			t.Fatalf("nothing came, want %v", w)
 		}
 	}
@@ -185,9 +185,9 @@ func TestOnlyTheNewestSummaryIsKept(t *testing.T) {
 	}
 	defer stop()
 	expect(t, got, message{subject, "4"}, message{subject + ".a.0", "chunk"})
-	large := make([]byte, 8<<20)
+	large := make([]byte, 127<<16)
 	if err := r1.PublishNewest(ctx, subject, large); err != nil {
-		t.Fatal("8 MiB:", err)
+		t.Fatal("nearly 8 MiB:", err)
 	}
 	expect(t, got, message{subject, string(large)})
 }
@@ -232,11 +232,14 @@ func TestHeartbeatsAreHeardAndNotKept(t *testing.T) {
 	if err != nil {
 		t.Fatal(err)
 	}
-	defer stop()
 	if err := r1.PublishHeartbeat("up.f.r1.hb", []byte("alive")); err != nil {
 		t.Fatal(err)
 	}
 	expect(t, got, message{"up.f.r1.hb", "alive"})
+	stop()
+	if err := base.flush(); err != nil {
+		t.Fatal(err)
+	}
 	if err := r1.PublishNewest(ctx, "up.f.r1.hb", []byte("alive")); err == nil {
 		t.Fatal("a heartbeat was stored")
 	}
@@ -297,6 +300,56 @@ func TestLinkGoesAndComes(t *testing.T) {
 	expect(t, ties, message{"up.f.r1.tie", "kept"})
 }
 
+// A robot that was switched on first finds the base when it comes, and a base that lost its store.
+func TestBaseComesLaterAndAnew(t *testing.T) {
+	ctx := deadline(t)
+	s := start(t, Options{Listen: "127.0.0.1:0"})
+	url := s.URL()
+	s.Close()
+
+	r1, err := Dial(url, ClientOptions{Name: "r1", Warn: func(err error) { t.Log("r1:", err) }})
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer r1.Close()
+	const corr, verdict = "down.f.r1.corr", "down.f.r1.verdict"
+	got, h := inbox()
+	stop, err := r1.Follow(CorrectionStream("f"), corr, h)
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer stop()
+	verdicts, h := inbox()
+	var stopVerdicts func()
+	for _, text := range []string{"first base", "second base"} {
+		s := start(t, Options{Listen: url[len("nats://"):]})
+		base := join(t, s, "base")
+		if err := base.Prepare(ctx, "f", "r1"); err != nil {
+			t.Fatal(err)
+		}
+		if err := base.PublishNewest(ctx, corr, []byte(text)); err != nil {
+			t.Fatal(err)
+		}
+		if _, err := base.Publish(ctx, verdict, text, []byte(text)); err != nil {
+			t.Fatal(err)
+		}
+		expect(t, got, message{corr, text})
+		if stopVerdicts == nil {
+			stopVerdicts, err = r1.Consume(ctx, VerdictStream("f"), "r1", func(subject string, payload []byte) error {
+				h(subject, payload)
+				return nil
+			})
+			if err != nil {
+				t.Fatal(err)
+			}
+			defer stopVerdicts()
+		}
+		expect(t, verdicts, message{verdict, text})
+		base.Close()
+		s.Close()
+	}
+}
+
 func awaitLink(t *testing.T, link <-chan bool, want bool) {
 	t.Helper()
 	select {
@@ -304,7 +357,7 @@ func awaitLink(t *testing.T, link <-chan bool, want bool) {
 		if got != want {
 			t.Fatalf("link %v, want %v", got, want)
 		}
-	case <-time.After(patience):
+	case <-time.After(longest):
 		t.Fatalf("no news of the link, want %v", want)
 	}
 }

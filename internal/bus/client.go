@@ -21,8 +21,9 @@ type ClientOptions struct {
 
 // Client is a connection to the bus. It is safe for use by several goroutines.
 type Client struct {
-	nc *nats.Conn
-	js jetstream.JetStream
+	nc   *nats.Conn
+	js   jetstream.JetStream
+	warn func(error)
 
 	mu        sync.Mutex
 	followers map[*follower]struct{}
@@ -41,7 +42,7 @@ func connect(url string, o ClientOptions, more ...nats.Option) (*Client, error) 
 	if o.Connected == nil {
 		o.Connected = func(bool) {}
 	}
-	c := &Client{followers: map[*follower]struct{}{}}
+	c := &Client{warn: o.Warn, followers: map[*follower]struct{}{}}
 	options := append([]nats.Option{
 		nats.Name(o.Name), nats.CustomInboxPrefix("_INBOX_" + o.Name),
 		nats.MaxReconnects(-1), nats.RetryOnFailedConnect(true), nats.ReconnectBufSize(-1),
@@ -56,7 +57,7 @@ func connect(url string, o ClientOptions, more ...nats.Option) (*Client, error) 
 	if err != nil {
 		return nil, fmt.Errorf("bus: %w", err)
 	}
-	js, err := jetstream.New(nc, jetstream.WithDefaultTimeout(4*time.Second))
+	js, err := jetstream.New(nc, jetstream.WithDefaultTimeout(patience(0)))
 	if err != nil {
 		nc.Close()
 		return nil, fmt.Errorf("bus: %w", err)
@@ -85,11 +86,18 @@ func (c *Client) publish(ctx context.Context, subject string, payload []byte, o 
 	if !c.nc.IsConnected() { // the library would wait for the acknowledgement first
 		return nil, fmt.Errorf("bus: publish %s: %w", subject, nats.ErrDisconnected)
 	}
+	ctx, cancel := context.WithTimeout(ctx, patience(len(payload)))
+	defer cancel()
 	ack, err := c.js.Publish(ctx, subject, payload, o...)
 	if err != nil {
 		return nil, fmt.Errorf("bus: publish %s: %w", subject, err)
 	}
 	return ack, nil
+}
+
+// patience is how long to wait for the acknowledgement of a message: a link of 0.5 Mbit/s delivers 64 kB in a second.
+func patience(size int) time.Duration {
+	return 4*time.Second + time.Duration(size>>16)*time.Second
 }
 
 // PublishHeartbeat sends a message to whoever listens at this moment. It is not stored and not acknowledged.
@@ -102,6 +110,8 @@ func (c *Client) PublishHeartbeat(subject string, payload []byte) error {
 
 // Newest returns the newest message of a subject in a stream and its sequence there; nil and 0 when there is none.
 func (c *Client) Newest(ctx context.Context, stream, subject string) (payload []byte, sequence uint64, err error) {
+	ctx, cancel := context.WithTimeout(ctx, patience(maxPayload))
+	defer cancel()
 	m, err := c.nc.RequestWithContext(ctx, "$JS.API.DIRECT.GET."+stream+"."+subject, nil)
 	if err != nil {
 		return nil, 0, fmt.Errorf("bus: newest %s: %w", subject, err)

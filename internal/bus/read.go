@@ -43,7 +43,7 @@ func (c *Client) Consume(ctx context.Context, stream, reader string, take func(s
 	if err != nil {
 		return nil, fmt.Errorf("bus: reader %s of %s: %w", reader, stream, err)
 	}
-	return consume(r, stream, func(m jetstream.Msg) {
+	return c.consume(r, stream, func(m jetstream.Msg) {
 		if take(m.Subject(), m.Data()) != nil {
 			m.NakWithDelay(time.Second)
 			return
@@ -58,16 +58,22 @@ func (c *Client) Replay(ctx context.Context, stream string, h Handler) (stop fun
 	if err != nil {
 		return nil, fmt.Errorf("bus: replay %s: %w", stream, err)
 	}
-	return consume(r, stream, func(m jetstream.Msg) { h(m.Subject(), m.Data()) })
+	return c.consume(r, stream, func(m jetstream.Msg) { h(m.Subject(), m.Data()) })
 }
 
-func consume(r jetstream.Consumer, stream string, h func(jetstream.Msg)) (stop func(), err error) {
-	run, err := r.Consume(h)
+func (c *Client) consume(r jetstream.Consumer, stream string, h func(jetstream.Msg)) (stop func(), err error) {
+	run, err := r.Consume(h, jetstream.PullExpiry(pullExpiry), jetstream.ConsumeErrHandler(func(_ jetstream.ConsumeContext, err error) {
+		c.warn(fmt.Errorf("bus: read %s: %w", stream, err))
+	}))
 	if err != nil {
 		return nil, fmt.Errorf("bus: read %s: %w", stream, err)
 	}
 	return func() { run.Stop(); <-run.Closed() }, nil
 }
+
+// pullExpiry is how long a request for messages stands. It bounds how long a reader takes to notice that its request was
+// lost, for instance with the store of the base.
+const pullExpiry = 5 * time.Second
 
 // follower keeps up with the newest message of one subject. Whoever sets a field signals wake.
 type follower struct {
@@ -145,9 +151,7 @@ func (c *Client) run(ctx context.Context, f *follower, stream, subject string, h
 		case <-f.wake:
 			latest, fetch := f.take()
 			if fetch {
-				get, cancel := context.WithTimeout(ctx, 4*time.Second)
-				payload, _, err := c.Newest(get, stream, subject)
-				cancel()
+				payload, _, err := c.Newest(ctx, stream, subject)
 				if err != nil {
 					again.Reset(time.Second)
 				} else if payload != nil {

@@ -14,8 +14,8 @@ import (
 	"github.com/nats-io/nats.go"
 )
 
-// maxPayload is the largest message: 8 MiB and room for headers.
-const maxPayload = 8<<20 + 64<<10
+// maxPayload is the largest message with its headers. The server advises against more.
+const maxPayload = 8 << 20
 
 // ErrStoreInUse means that another process runs a server on the same folder.
 var ErrStoreInUse = errors.New("another process uses this store of the bus")
