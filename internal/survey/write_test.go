@@ -138,7 +138,7 @@ func TestWriteRefusesABadSurvey(t *testing.T) {
 func TestLargeTablesAreGzippedAlike(t *testing.T) {
 	s := planarSurvey()
 	k := s.Robots[0].Keyframes[1]
-	for id := int64(100); id < 90000; id++ {
+	for id := int64(100); id < 120000; id++ {
 		k.ID, k.Pose.T[0] = id, float64(id)/7
 		s.Robots[0].Keyframes = append(s.Robots[0].Keyframes, k)
 	}
