@@ -4,6 +4,7 @@ import (
 	"errors"
 	"fmt"
 	"math"
+	"math/bits"
 	"math/rand/v2"
 	"slices"
 )
@@ -51,7 +52,11 @@ func Split(n int, edges [][2]int32, k int, seed uint64) (piece []int32, err erro
 		return make([]int32, n), nil
 	}
 	limit := int32(max((n+k-1)/k, int(int64(n)*103/(int64(k)*100))))
-	sp := &splitter{g: g, k: k, limit: limit, rng: rand.New(rand.NewPCG(seed, 0x73706c6974))}
+	sp := &splitter{
+		g: g, k: k, limit: limit,
+		rng:    rand.New(rand.NewPCG(seed, 0x73706c6974)),
+		effort: splitEffort * int64(n+len(g.adj)) * int64(bits.Len(uint(k))),
+	}
 	best := sp.search()
 	if best == nil {
 		return nil, fmt.Errorf("split: %d vertices, %d pieces of at most %d: %w", n, k, limit, ErrNoSplit)
@@ -61,10 +66,11 @@ func Split(n int, edges [][2]int32, k int, seed uint64) (piece []int32, err erro
 
 // splitter searches for splits of one graph.
 type splitter struct {
-	g     *splitGraph
-	k     int
-	limit int32
-	rng   *rand.Rand
+	g      *splitGraph
+	k      int
+	limit  int32
+	rng    *rand.Rand
+	effort int64 // entries of the graphs that may still be looked at
 }
 
 // splitCandidate is a split of the finest level within the limit.
@@ -75,7 +81,14 @@ type splitCandidate struct {
 
 const (
 	splitCandidates = 6  // splits made from scratch
+	splitTrees      = 50 // spanning trees tried when all of those fail
 	splitCombines   = 12 // combinations tried afterwards
+
+	// splitEffort bounds the search to this many looks at every vertex and
+	// edge, times the binary digits of k: several times what pose graphs need.
+	// It keeps graphs with hubs, where single steps are long, from taking
+	// hours. When it is used up the best split so far is taken.
+	splitEffort = 2000
 )
 
 // search returns the best split found, or nil.
@@ -87,13 +100,17 @@ func (sp *splitter) search() *splitCandidate {
 	}
 	var pool []*splitCandidate
 	for range splitCandidates {
-		if c := sp.fromScratch(); c != nil {
+		c := sp.fromScratch()
+		if c == nil {
+			c = sp.fromTree()
+		}
+		if c != nil {
 			pool = append(pool, c)
 		}
 	}
-	for try := 0; try < 2*splitCandidates && len(pool) == 0; try++ {
-		if piece, ok := cutTree(sp.g, sp.k, sp.limit, sp.rng); ok {
-			pool = append(pool, sp.polish(newSplitState(sp.g, piece, sp.limits(sp.g))))
+	for try := 0; try < splitTrees && len(pool) == 0; try++ {
+		if c := sp.fromTree(); c != nil {
+			pool = append(pool, c)
 		}
 	}
 	if len(pool) == 0 {
@@ -140,9 +157,22 @@ func (sp *splitter) limits(g *splitGraph) []int32 {
 func (sp *splitter) fromScratch() *splitCandidate {
 	h := coarsen(sp.g, sp.coarsest(), nil, sp.rng)
 	top := h.levels[len(h.levels)-1]
-	s := growPieces(top, sp.k, sp.limit, sp.rng)
+	s := growPieces(top, sp.k, sp.limit, &sp.effort, sp.rng)
+	if s == nil {
+		return nil
+	}
 	s.setLimits(sp.limits(top))
 	return sp.refineDown(h, s)
+}
+
+// fromTree splits a spanning tree, for graphs with so many branches that local
+// moves do not bring every piece within its limit.
+func (sp *splitter) fromTree() *splitCandidate {
+	piece, ok := cutTree(sp.g, sp.k, sp.limit, sp.rng)
+	if !ok {
+		return nil
+	}
+	return sp.polish(newSplitState(sp.g, piece, sp.limits(sp.g), &sp.effort))
 }
 
 // combine improves the better split on levels that contract nothing which
@@ -162,7 +192,7 @@ func (sp *splitter) combine(better, other *splitCandidate) *splitCandidate {
 		piece = coarse
 	}
 	top := h.levels[len(h.levels)-1]
-	return sp.refineDown(h, newSplitState(top, piece, sp.limits(top)))
+	return sp.refineDown(h, newSplitState(top, piece, sp.limits(top), &sp.effort))
 }
 
 // refineDown carries a split of the coarsest level down to the finest.
@@ -173,7 +203,7 @@ func (sp *splitter) refineDown(h *splitHierarchy, s *splitState) *splitCandidate
 		for v, up := range h.up[l] {
 			piece[v] = s.piece[up]
 		}
-		s = newSplitState(h.levels[l], piece, sp.limits(h.levels[l]))
+		s = newSplitState(h.levels[l], piece, sp.limits(h.levels[l]), &sp.effort)
 		c = sp.polish(s)
 	}
 	return c

@@ -4,11 +4,12 @@ import "math/rand/v2"
 
 // growPieces makes a first assignment of a coarse graph by recursive
 // bisection: a piece that stands for several is cut in two, over and over.
-// Each cut is the best of several tries, each grown from another vertex.
-func growPieces(g *splitGraph, k int, limit int32, rng *rand.Rand) *splitState {
+// Each cut is the best of several tries, each grown from another vertex. It
+// returns nil when a piece would stay empty.
+func growPieces(g *splitGraph, k int, limit int32, effort *int64, rng *rand.Rand) *splitState {
 	limits := make([]int32, k)
 	limits[0] = limit * int32(k)
-	s := newSplitState(g, make([]int32, g.n), limits)
+	s := newSplitState(g, make([]int32, g.n), limits, effort)
 	r := newSplitRefiner(s)
 	share := make([]int32, k) // final pieces that piece p still stands for
 	share[0] = int32(k)
@@ -23,6 +24,9 @@ func growPieces(g *splitGraph, k int, limit int32, rng *rand.Rand) *splitState {
 		share[next] = share[p] / 2
 		share[p] -= share[next]
 		r.bisect(p, next, share[p], share[next], limit, rng)
+		if s.size[next] == 0 {
+			return nil
+		}
 	}
 	for p := range limits {
 		limits[p] = limit
@@ -52,15 +56,17 @@ func (r *splitRefiner) bisect(p, q, shareP, shareQ, limit int32, rng *rand.Rand)
 	s.limit[p] = cutLimit(total, shareP, shareP+shareQ, limit)
 	s.limit[q] = cutLimit(total, shareQ, shareP+shareQ, limit)
 	s.setLimits(s.limit)
-	target := int32(int64(total) * int64(shareQ) / int64(shareP+shareQ))
+	target := max(1, int32(int64(total)*int64(shareQ)/int64(shareP+shareQ)))
 	best := make([]int32, len(members))
 	bestExcess, bestCost := int64(-1), int64(0)
 	for try := range splitTries {
 		seed := members[rng.IntN(len(members))]
 		if try%2 == 0 {
-			seed = s.farthest(seed)
+			s.stamp += 2
+			flood := s.flood(seed)
+			seed = flood[len(flood)-1] // far from where it began
 		}
-		r.grow(seed, p, q, target)
+		r.grow(seed, members, q, target)
 		s.rebalance()
 		r.refine(members, 4)
 		if bestExcess < 0 || s.excess < bestExcess || s.excess == bestExcess && s.cost() < bestCost {
@@ -92,33 +98,15 @@ func cutLimit(total, share, of, limit int32) int32 {
 	return max((even+most)/2, even)
 }
 
-// farthest returns a vertex of the piece of v that a breadth-first search from
-// v reaches last.
-func (s *splitState) farthest(v int32) int32 {
-	g, p := s.g, s.piece[v]
-	s.stamp += 2
-	q := append(s.queue[:0], v)
-	s.seen[v] = s.stamp
-	for i := 0; i < len(q); i++ {
-		for _, u := range g.adj[g.start[q[i]]:g.start[q[i]+1]] {
-			if s.piece[u] == p && s.seen[u] != s.stamp {
-				s.seen[u] = s.stamp
-				q = append(q, u)
-			}
-		}
-	}
-	s.queue = q
-	return q[len(q)-1]
-}
-
-// grow moves vertices of p to q, beginning with seed and always the one that
-// costs least next, until q has target poses; what it cut off from the largest
-// remainder of p follows, so that both are connected.
-func (r *splitRefiner) grow(seed, p, q, target int32) {
-	s, g := r.s, r.s.g
+// grow moves vertices of a piece, given as members, to piece q, beginning with
+// seed and always the one that costs least next, until q has target poses;
+// what it cut off from the largest remainder follows, so that both are
+// connected.
+func (r *splitRefiner) grow(seed int32, members []int32, q, target int32) {
+	s, g, p := r.s, r.s.g, r.s.piece[seed]
 	r.heap.reset()
 	r.heap.set(seed, 0)
-	for s.size[q] < target {
+	for s.size[q] < target && *s.effort > 0 {
 		v, _, ok := r.heap.pop()
 		if !ok || s.size[p] == g.weight[v] {
 			break
@@ -131,30 +119,17 @@ func (r *splitRefiner) grow(seed, p, q, target int32) {
 		}
 	}
 	s.stamp += 2
-	old := s.stamp
-	largestStart, largest := int32(-1), int32(0)
-	flood := func(v int32, visit func(u int32)) {
-		q := append(s.queue[:0], v)
-		s.seen[v] = s.stamp
-		for i := 0; i < len(q); i++ {
-			visit(q[i])
-			for _, u := range g.adj[g.start[q[i]]:g.start[q[i]+1]] {
-				if s.piece[u] == p && s.seen[u] != s.stamp {
-					s.seen[u] = s.stamp
-					q = append(q, u)
-				}
-			}
-		}
-		s.queue = q
-	}
+	most, largest := int32(-1), int32(0)
 	parts := 0
-	for v := range int32(g.n) {
-		if s.piece[v] == p && s.seen[v] != old {
-			size := int32(0)
-			flood(v, func(u int32) { size += g.weight[u] })
+	for _, v := range members {
+		if s.piece[v] == p && s.seen[v] != s.stamp {
 			parts++
+			size := int32(0)
+			for _, u := range s.flood(v) {
+				size += g.weight[u]
+			}
 			if size > largest {
-				largestStart, largest = v, size
+				most, largest = v, size
 			}
 		}
 	}
@@ -162,10 +137,28 @@ func (r *splitRefiner) grow(seed, p, q, target int32) {
 		return
 	}
 	s.stamp += 2
-	flood(largestStart, func(int32) {})
-	for v := range int32(g.n) {
+	s.flood(most)
+	for _, v := range members {
 		if s.piece[v] == p && s.seen[v] != s.stamp {
 			s.move(v, q)
 		}
 	}
+}
+
+// flood marks with stamp what hangs together with v within its piece, and
+// lists it breadth first. The list is scratch.
+func (s *splitState) flood(v int32) []int32 {
+	g, p := s.g, s.piece[v]
+	q := append(s.queue[:0], v)
+	s.seen[v] = s.stamp
+	for i := 0; i < len(q); i++ {
+		for _, u := range g.adj[g.start[q[i]]:g.start[q[i]+1]] {
+			if s.piece[u] == p && s.seen[u] != s.stamp {
+				s.seen[u] = s.stamp
+				q = append(q, u)
+			}
+		}
+	}
+	s.queue = q
+	return q
 }

@@ -23,7 +23,7 @@ var splitSets = []string{
 	"sphere2500", "sphere-dense", "parking-garage", "cubicle-block", "generated-cube-1728",
 }
 
-// lacking skips the test, or fails it where everything must be present.
+// splitLacking skips the test, or fails it where everything must be present.
 func splitLacking(tb testing.TB, what string, err error) {
 	tb.Helper()
 	if os.Getenv("SELVAGE_CI") == "1" {
@@ -110,8 +110,9 @@ func gpmetis(tb testing.TB, n int, edges [][2]int32, k int, args ...string) []in
 	return piece
 }
 
-// TestSplitAgainstMETIS compares boundary poses with those of gpmetis on
-// published pose graphs.
+// TestSplitAgainstMETIS compares boundary poses with those of gpmetis -contig
+// on published pose graphs, and logs the other figures beside them. Without
+// -contig the parts are often broken, and then not what a robot could map.
 func TestSplitAgainstMETIS(t *testing.T) {
 	if _, err := exec.LookPath("gpmetis"); err != nil {
 		splitLacking(t, "gpmetis", err)
@@ -136,14 +137,11 @@ func TestSplitAgainstMETIS(t *testing.T) {
 				t.Errorf("%s k=%d: %v", set, k, err)
 				continue
 			}
-			ours := MeasureSplit(n, edges, piece)
+			ours := checkSplit(t, n, edges, k, piece)
 			contig := MeasureSplit(n, edges, gpmetis(t, n, edges, k, "-contig"))
 			plain := MeasureSplit(n, edges, gpmetis(t, n, edges, k))
 			vol := MeasureSplit(n, edges, gpmetis(t, n, edges, k, "-contig", "-objtype=vol"))
 			fmt.Fprintf(w, "%s\t%d\t%s\t%s\t%s\t%s\t%.0f\n", set, k, cell(ours), cell(contig), cell(plain), cell(vol), took.Seconds()*1e3)
-			if !ours.Connected || ours.Pieces != k {
-				t.Errorf("%s k=%d: %d pieces, connected %v", set, k, ours.Pieces, ours.Connected)
-			}
 			if float64(ours.Boundary) > 1.10*float64(contig.Boundary) {
 				t.Errorf("%s k=%d: %d boundary poses, gpmetis -contig %d", set, k, ours.Boundary, contig.Boundary)
 			}

@@ -47,8 +47,8 @@ func (r *splitRefiner) pass(members []int32) bool {
 	}
 	startExcess, startCost := s.excess, s.cost()
 	bestExcess, bestCost, bestLen := startExcess, startCost, 0
-	patience := 50 + s.g.n/40
-	for len(r.moved)-bestLen < patience {
+	patience := 25 + len(members)/20
+	for len(r.moved)-bestLen < patience && *s.effort > 0 {
 		v, key, ok := r.heap.pop()
 		if !ok {
 			break

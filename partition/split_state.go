@@ -15,6 +15,7 @@ type splitState struct {
 	cut      int64   // measurements between pieces
 	excess   int64   // poses above limit, over all pieces
 	scale    int64   // value of one boundary pose in units of one cut measurement
+	effort   *int64  // entries of g that may still be looked at; search ends at zero
 
 	// Scratch of bestMove, indexed by piece, and of detachable, by vertex.
 	conn    []int64
@@ -26,10 +27,10 @@ type splitState struct {
 }
 
 // newSplitState takes over piece and limit.
-func newSplitState(g *splitGraph, piece, limit []int32) *splitState {
+func newSplitState(g *splitGraph, piece, limit []int32, effort *int64) *splitState {
 	k := len(limit)
 	s := &splitState{
-		g: g, piece: piece, limit: limit,
+		g: g, piece: piece, limit: limit, effort: effort,
 		size:    make([]int32, k),
 		open:    make([]bool, k),
 		outside: make([]int32, len(g.owner)),
@@ -65,6 +66,7 @@ func newSplitState(g *splitGraph, piece, limit []int32) *splitState {
 	return s
 }
 
+// setLimits takes over limit.
 func (s *splitState) setLimits(limit []int32) {
 	s.limit = limit
 	s.excess = 0
@@ -160,6 +162,7 @@ func (s *splitState) gainTo(v, to int32) int64 {
 // lists those pieces in touched. The caller clears with clearGains.
 func (s *splitState) gatherGains(v int32) {
 	g, from := s.g, s.piece[v]
+	*s.effort -= int64(g.start[v+1] - g.start[v] + g.incStart[v+1] - g.incStart[v])
 	for i := g.start[v]; i < g.start[v+1]; i++ {
 		p := s.piece[g.adj[i]]
 		if s.conn[p] == 0 && p != from {
@@ -225,6 +228,7 @@ func (s *splitState) detachable(v int32) bool {
 	g, p := s.g, s.piece[v]
 	s.stamp += 2
 	wanted, reached := s.stamp, s.stamp+1
+	*s.effort -= int64(g.start[v+1] - g.start[v])
 	near := 0 // neighbours of v in its piece not reached yet
 	first := int32(-1)
 	for _, u := range g.adj[g.start[v]:g.start[v+1]] {
@@ -241,6 +245,7 @@ func (s *splitState) detachable(v int32) bool {
 	near--
 	q := append(s.queue[:0], first)
 	for i := 0; i < len(q) && len(q) < splitReach; i++ {
+		*s.effort -= int64(g.start[q[i]+1] - g.start[q[i]])
 		for _, u := range g.adj[g.start[q[i]]:g.start[q[i]+1]] {
 			if s.piece[u] != p || s.seen[u] == reached {
 				continue
