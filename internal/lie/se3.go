@@ -207,3 +207,24 @@ func mul6(a, b *[36]float64) (c [36]float64) {
 	}
 	return c
 }
+
+// Align returns the motion T with T from[k] close to to[k]: the chordal mean of the rotations, then the mean of the positions. It is
+// exact when one motion carries all of from into to. Both lists have the same length, at least one.
+func Align(from, to []SE3) SE3 {
+	var m Mat3
+	for k := range from {
+		d := to[k].R.Mul(from[k].R.T())
+		for i := range m {
+			m[i] += d[i]
+		}
+	}
+	r, _ := NearestRotation(&m)
+	var t [3]float64
+	for k := range from {
+		p := r.Apply(from[k].T)
+		for i := range t {
+			t[i] += (to[k].T[i] - p[i]) / float64(len(from))
+		}
+	}
+	return SE3{r, t}
+}
