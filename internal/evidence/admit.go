@@ -10,7 +10,7 @@ import (
 )
 
 // witnesses is how many independent ways around are combined into one prediction.
-const witnesses = 4
+const witnesses = 3
 
 // prediction is where the ties held put a tie.
 type prediction struct {
@@ -82,9 +82,9 @@ func (b *body) around(l *link, ties []int) (lie.Tangent, cov) {
 
 // fuse returns the weighted mean of independent vectors and its covariance.
 func fuse(e []lie.Tangent, c []cov, dim int) (lie.Tangent, cov) {
-	n := 6
+	n, index := 6, [6]int{0, 1, 2, 3, 4, 5}
 	if dim == 2 {
-		n = 3
+		n, index = 3, [6]int{0, 1, 5}
 	}
 	info, rhs := mat.NewSymDense(n, nil), mat.NewVecDense(n, nil)
 	var m [36]float64
@@ -111,16 +111,22 @@ func fuse(e []lie.Tangent, c []cov, dim int) (lie.Tangent, cov) {
 	if !ch.Factorize(info) || ch.SolveVecTo(&mean, rhs) != nil || ch.InverseTo(&sum) != nil {
 		return e[0], c[0]
 	}
-	index := [6]int{0, 1, 2, 3, 4, 5}
-	if dim == 2 {
-		index = [6]int{0, 1, 5}
+	// Ways that contradict each other show that the covariances promise too much: scale by the variance factor if above 1.
+	factor := 0.0
+	for k := range e {
+		d := e[k]
+		for i := range index[:n] {
+			d[index[i]] -= mean.AtVec(i)
+		}
+		factor += mahalanobis(&d, &c[k], dim)
 	}
+	factor = math.Max(1, factor/float64((len(e)-1)*n))
 	var full [36]float64
 	var out lie.Tangent
 	for i := 0; i < n; i++ {
 		out[index[i]] = mean.AtVec(i)
 		for j := 0; j < n; j++ {
-			full[6*index[i]+index[j]] = sum.At(i, j)
+			full[6*index[i]+index[j]] = factor * sum.At(i, j)
 		}
 	}
 	return out, covOf(&full, dim)

@@ -3,6 +3,7 @@ package evidence
 import (
 	"cmp"
 	"fmt"
+	"math"
 	"slices"
 
 	"selvage/internal/lie"
@@ -44,38 +45,76 @@ func (b *body) conclude(f *fleet, w weighed) Result {
 	slices.Sort(core)
 	b.islands(f, w.held, &r)
 	a := newAtlas(b, core)
-	// A tie outside the core may be held by accident; so many of them there are.
-	doubtful := len(b.links) - len(core) + 1
+	ps := make([]prediction, len(b.links))
+	inCore := make([]bool, len(b.links))
+	for _, t := range core {
+		inCore[t] = true
+	}
+	var shares []float64 // of the ties that nothing but the prediction speaks for
 	for t := range b.links {
 		l := &b.links[t]
 		if r.Island[l.a] != r.Island[l.b] {
-			b.undetermined(t, f, &w, &r)
 			continue
 		}
 		var mates []int
 		if i, ok := at[[2]int{l.a, l.b}]; ok {
 			mates = same[i]
 		}
-		p := b.predict(t, mates, a)
-		x := &r.Ties[t]
-		x.Statistic, x.DoF = p.squared, b.dof
-		switch {
-		case p.ways == 0:
-			x.DoF = 0
-			x.Reason = fmt.Sprintf("nothing but ties of the same place speaks about it; a tie between %s at another place would settle it", b.names(l))
-		case p.squared >= b.refuse:
-			x.Verdict = Refused
-			x.Reason = fmt.Sprintf("contradicted by the ties held: misclosure %.1f, bound %.1f, by %d ways around", p.squared, b.refuse, p.ways)
-		case p.squared >= b.gate:
-			x.Reason = fmt.Sprintf("fits the ties held badly: misclosure %.1f, bound %.1f", p.squared, b.gate)
-		case p.share*float64(doubtful) >= 0.1:
-			x.Reason = fmt.Sprintf("agrees with the ties held, but these are so far along the track that it might by chance; a tie between %s nearby would settle it", b.names(l))
-		default:
-			x.Verdict = Held
-			x.Reason = fmt.Sprintf("agrees with the ties held: misclosure %.1f, bound %.1f", p.squared, b.gate)
+		ps[t] = b.predict(t, mates, a)
+		if ps[t].ways > 0 && !inCore[t] {
+			shares = append(shares, ps[t].share)
 		}
 	}
+	tight := tightness(shares, b.o.Accidents)
+	for t := range b.links {
+		l := &b.links[t]
+		if r.Island[l.a] != r.Island[l.b] {
+			b.undetermined(t, f, &w, &r)
+			continue
+		}
+		b.find(&r.Ties[t], l, &ps[t], tight)
+	}
 	return r
+}
+
+// tightness returns the share below which predictions count: if all these ties were false, not more than the given number of
+// them would be expected to pass.
+func tightness(shares []float64, accidents float64) float64 {
+	slices.Sort(shares)
+	sum := 0.0
+	for _, p := range shares {
+		if sum += p; sum > accidents {
+			return p
+		}
+	}
+	return math.Inf(1)
+}
+
+// find writes the verdict on a tie within an island.
+func (b *body) find(x *Finding, l *link, p *prediction, tight float64) {
+	if p.ways == 0 {
+		x.Reason = fmt.Sprintf("nothing but ties of the same place speaks about it; a tie between %s at another place would settle it", b.names(l))
+		return
+	}
+	x.Statistic, x.DoF = p.squared, b.dof
+	// A prediction from afar leans on the model of the drift: it refuses only what is out of the question.
+	refuse := b.refuse
+	loose := p.share >= min(tight, b.o.Accidents)
+	if loose {
+		refuse *= 4
+	}
+	switch {
+	case p.squared >= refuse:
+		x.Verdict = Refused
+		x.Reason = fmt.Sprintf("contradicted by the ties held: misclosure %.1f, bound %.1f, by %d ways around", p.squared, refuse, p.ways)
+	case p.squared >= b.gate:
+		x.Reason = fmt.Sprintf("fits the ties held badly: misclosure %.1f, bound %.1f", p.squared, b.gate)
+	case loose:
+		x.Reason = fmt.Sprintf("agrees with the ties held, but these are so far along the tracks that it might by chance; a tie between %s nearby would settle it", b.names(l))
+	default:
+		x.Verdict = Held
+		x.Reason = fmt.Sprintf("agrees with the ties held: misclosure %.1f, bound %.1f", p.squared, b.gate)
+	}
 }
 
 // undetermined explains why a tie between two islands stays open.

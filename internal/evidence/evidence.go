@@ -57,6 +57,10 @@ type Options struct {
 	// stays open.
 	Chance float64
 
+	// Accidents is the expected number of false ties that may agree with a prediction by accident, in the whole fleet. Predictions
+	// too loose for that hold nothing.
+	Accidents float64
+
 	// CliqueEffort bounds the search for a largest consistent set of one pair, in steps. A pair whose search was cut short
 	// stays open unless what was found suffices.
 	CliqueEffort int
@@ -72,6 +76,7 @@ func DefaultOptions(dim int) Options {
 		CycleMargin:  3,
 		BridgeMargin: 5,
 		Chance:       0.01,
+		Accidents:    0.05,
 		CliqueEffort: 200_000,
 	}
 }

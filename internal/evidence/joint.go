@@ -26,6 +26,8 @@ type config struct {
 	comp  []int
 	holds []bool // per hypothesis
 	score int
+
+	pa, qb [][3]float64 // per hypothesis: its mean place as either unit has it, in the component
 }
 
 func newFleet(b *body, hs []hypothesis) *fleet {
@@ -35,7 +37,7 @@ func newFleet(b *body, hs []hypothesis) *fleet {
 }
 
 func (c *config) clone() config {
-	return config{slices.Clone(c.at), slices.Clone(c.comp), slices.Clone(c.holds), c.score}
+	return config{slices.Clone(c.at), slices.Clone(c.comp), slices.Clone(c.holds), c.score, slices.Clone(c.pa), slices.Clone(c.qb)}
 }
 
 // judge sets which hypotheses c satisfies, and its score.
@@ -43,63 +45,76 @@ func (f *fleet) judge(c *config) {
 	c.score = 0
 	for k := range f.hs {
 		h := &f.hs[k]
+		c.pa[k], c.qb[k] = c.at[h.a].Apply(h.pa), c.at[h.b].Apply(h.qb)
 		c.holds[k] = false
-		if c.comp[h.a] != c.comp[h.b] {
+		if c.comp[h.a] != c.comp[h.b] || distance(c.pa[k], c.qb[k]) > h.shift {
 			continue
 		}
-		ab := c.at[h.a].Between(c.at[h.b])
-		if f.b.agrees(h, &ab) {
+		if h.turned(c.at[h.a].R.T().Mul(c.at[h.b].R)) {
 			c.holds[k] = true
 			c.score += h.weight
 		}
 	}
 }
 
-// grow joins the components with the most support, one pair at a time, until no hypothesis leads from one to another.
-func (f *fleet) grow(c *config, without int) {
+// grow joins the components with the most support, two at a time, until no hypothesis leads from one to another.
+func (f *fleet) grow(c *config) {
+	between := make([][]int, f.n*f.n) // hypotheses per pair of components
 	for {
-		best, support := -1, 0
+		f.judge(c)
+		for i := range between {
+			between[i] = between[i][:0]
+		}
 		for k := range f.hs {
-			if k == without || c.comp[f.hs[k].a] == c.comp[f.hs[k].b] {
-				continue
+			if p, q := c.comp[f.hs[k].a], c.comp[f.hs[k].b]; p != q {
+				at := min(p, q)*f.n + max(p, q)
+				between[at] = append(between[at], k)
 			}
-			if s := f.support(c, k, without); s > support {
-				best, support = k, s
+		}
+		best, most := -1, 0
+		for _, ks := range between {
+			for _, k := range ks {
+				if s := f.support(c, k, ks); s > most {
+					best, most = k, s
+				}
 			}
 		}
 		if best < 0 {
-			break
+			return
 		}
 		h := &f.hs[best]
-		f.shift(c, c.comp[h.b], c.comp[h.a], c.at[h.a].Mul(h.ab).Mul(c.at[h.b].Inv()))
+		f.shift(c, c.comp[h.b], c.comp[h.a], f.displacement(c, best))
 	}
-	f.judge(c)
 }
 
-// support is the weight of all hypotheses between the components of k's units that agree with k.
-func (f *fleet) support(c *config, k, without int) int {
+// displacement is how the second unit of hypothesis k would have to be moved, in the component of the first, to satisfy it.
+func (f *fleet) displacement(c *config, k int) lie.SE3 {
 	h := &f.hs[k]
-	p, q := c.comp[h.a], c.comp[h.b]
-	d := c.at[h.a].Mul(h.ab).Mul(c.at[h.b].Inv())
+	return c.at[h.a].Mul(h.ab).Mul(c.at[h.b].Inv())
+}
+
+// support is the weight of those hypotheses that k agrees with, all of them between the same two components.
+func (f *fleet) support(c *config, k int, among []int) int {
+	d := f.displacement(c, k)
 	sum := 0
-	for m := range f.hs {
-		g := &f.hs[m]
-		var ab lie.SE3
-		switch {
-		case m == without:
-			continue
-		case c.comp[g.a] == p && c.comp[g.b] == q:
-			ab = c.at[g.a].Between(d.Mul(c.at[g.b]))
-		case c.comp[g.a] == q && c.comp[g.b] == p:
-			ab = d.Mul(c.at[g.a]).Between(c.at[g.b])
-		default:
-			continue
-		}
-		if f.b.agrees(g, &ab) {
-			sum += g.weight
+	for _, m := range among {
+		if c.comp[f.hs[m].b] == c.comp[f.hs[k].b] && f.forth(c, m, &d) || c.comp[f.hs[m].b] != c.comp[f.hs[k].b] && f.back(c, m, &d) {
+			sum += f.hs[m].weight
 		}
 	}
 	return sum
+}
+
+// forth tells whether m would be satisfied if its second unit were moved by d.
+func (f *fleet) forth(c *config, m int, d *lie.SE3) bool {
+	h := &f.hs[m]
+	return distance(d.Apply(c.qb[m]), c.pa[m]) <= h.shift && h.turned(c.at[h.a].R.T().Mul(d.R).Mul(c.at[h.b].R))
+}
+
+// back tells whether m would be satisfied if its first unit were moved by d.
+func (f *fleet) back(c *config, m int, d *lie.SE3) bool {
+	h := &f.hs[m]
+	return distance(d.Apply(c.pa[m]), c.qb[m]) <= h.shift && h.turned(d.R.Mul(c.at[h.a].R).T().Mul(c.at[h.b].R))
 }
 
 // shift moves component from by d and makes it part of component to.
@@ -114,11 +129,12 @@ func (f *fleet) shift(c *config, from, to int, d lie.SE3) {
 
 // best returns the configuration that local search finds from nothing.
 func (f *fleet) best() config {
-	c := config{make([]lie.SE3, f.n), make([]int, f.n), make([]bool, len(f.hs)), 0}
+	n := len(f.hs)
+	c := config{at: make([]lie.SE3, f.n), comp: make([]int, f.n), holds: make([]bool, n), pa: make([][3]float64, n), qb: make([][3]float64, n)}
 	for u := range c.at {
 		c.at[u], c.comp[u] = lie.Identity(), u
 	}
-	f.grow(&c, -1)
+	f.grow(&c)
 	f.improve(&c, -1, nil)
 	return c
 }
@@ -132,7 +148,6 @@ func (f *fleet) improve(c *config, broken int, near []bool) {
 
 func (f *fleet) improveOnce(c *config, broken int, near []bool) bool {
 	f.load(c)
-	var apart [2]int
 	for k := range f.hs {
 		h := &f.hs[k]
 		if c.holds[k] || k == broken || near != nil && !near[h.a] && !near[h.b] {
@@ -140,7 +155,7 @@ func (f *fleet) improveOnce(c *config, broken int, near []bool) bool {
 		}
 		if c.comp[h.a] != c.comp[h.b] {
 			next := c.clone()
-			f.shift(&next, c.comp[h.b], c.comp[h.a], c.at[h.a].Mul(h.ab).Mul(c.at[h.b].Inv()))
+			f.shift(&next, c.comp[h.b], c.comp[h.a], f.displacement(c, k))
 			f.judge(&next)
 			if next.score > c.score && (broken < 0 || !next.holds[broken]) {
 				*c = next
@@ -152,7 +167,7 @@ func (f *fleet) improveOnce(c *config, broken int, near []bool) bool {
 		if gain <= f.capacity[h.a*f.n+h.b] {
 			continue
 		}
-		m := f.move(c, cluster, gain, gain, apart[:0])
+		m := f.move(c, cluster, gain, gain, nil)
 		if m.loss >= 0 {
 			continue
 		}
@@ -184,7 +199,7 @@ type crossing struct{ stays, goes, weight int }
 // itself is the first. gain is their weight.
 func (f *fleet) cluster(c *config, k int) (cs []crossing, gain int) {
 	h := &f.hs[k]
-	d := c.at[h.a].Mul(h.ab).Mul(c.at[h.b].Inv())
+	d := f.displacement(c, k)
 	cs = append(cs, crossing{h.a, h.b, h.weight})
 	gain = h.weight
 	for m := range f.hs {
@@ -192,14 +207,12 @@ func (f *fleet) cluster(c *config, k int) (cs []crossing, gain int) {
 		if m == k || c.holds[m] || c.comp[g.a] != c.comp[h.a] || c.comp[g.b] != c.comp[h.a] {
 			continue
 		}
-		forth := c.at[g.a].Between(d.Mul(c.at[g.b]))
-		if f.b.agrees(g, &forth) {
+		if f.forth(c, m, &d) {
 			cs = append(cs, crossing{g.a, g.b, g.weight})
 			gain += g.weight
 			continue
 		}
-		back := d.Mul(c.at[g.a]).Between(c.at[g.b])
-		if f.b.agrees(g, &back) {
+		if f.back(c, m, &d) {
 			cs = append(cs, crossing{g.b, g.a, g.weight})
 			gain += g.weight
 		}
@@ -274,7 +287,7 @@ func (f *fleet) part(stay, goes unitSet, cluster []crossing, limit int) (move, b
 func (f *fleet) apply(c *config, k int, moved []bool) config {
 	h := &f.hs[k]
 	next := c.clone()
-	d := c.at[h.a].Mul(h.ab).Mul(c.at[h.b].Inv())
+	d := f.displacement(c, k)
 	for u, m := range moved {
 		if m && c.comp[u] == c.comp[h.a] {
 			next.at[u] = d.Mul(c.at[u])

@@ -88,6 +88,8 @@ type hypothesis struct {
 	pa, qb  [3]float64 // the mean place, in a and in b
 	chance  float64    // that two unrelated ties of this pair agree as well as its neighbouring places do
 	count   int        // places of all ties of the pair
+	shift   float64    // m, and
+	trace   float64    // of the rotation: how far off counts as agreement
 	blurred bool       // a search of its pair was cut short
 }
 
@@ -181,9 +183,10 @@ func (b *body) hypothesise(ties []int) []hypothesis {
 		h.spots = b.places(members)
 		h.weight = len(h.spots)
 		b.fit(&h)
+		b.grant(&h)
 		h.chance = b.accident(&h)
 		// A set that says the same as one before it would count the same places twice.
-		if !slices.ContainsFunc(hs, func(k hypothesis) bool { return b.agrees(&h, &k.ab) }) {
+		if !slices.ContainsFunc(hs, func(k hypothesis) bool { return h.agrees(&k.ab) }) {
 			hs = append(hs, h)
 		}
 	}
@@ -279,17 +282,21 @@ func (b *body) fit(h *hypothesis) {
 
 // agrees tells whether the motion a_from_b puts the units where h does, near the mean place of h, within what the units'
 // own deformation may take. It is coarse on purpose: rivals may not escape it, and what is believed is tested again by loops.
-func (b *body) agrees(h *hypothesis, ab *lie.SE3) bool {
-	p := ab.Apply(h.qb)
-	shift := math.Min(5, 1.5+0.5*(b.give[h.a]*b.reach[h.a]+b.give[h.b]*b.reach[h.b]))
-	if distance(p, h.pa) > shift {
-		return false
+func (h *hypothesis) agrees(ab *lie.SE3) bool {
+	return distance(ab.Apply(h.qb), h.pa) <= h.shift && h.turned(ab.R)
+}
+
+// turned tells whether the rotation r is that of h within what it grants.
+func (h *hypothesis) turned(r lie.Mat3) bool {
+	tr := 0.0 // of h.ab.R' r, which is 1 + 2 cos(angle)
+	for i := range r {
+		tr += r[i] * h.ab.R[i]
 	}
-	turn := 0.06 + b.give[h.a] + b.give[h.b]
-	// tr(R1' R2) = 1 + 2 cos(angle)
-	tr := 0.0
-	for i := range ab.R {
-		tr += ab.R[i] * h.ab.R[i]
-	}
-	return tr >= 1+2*math.Cos(turn)
+	return tr >= h.trace
+}
+
+// grant sets how far units may be from where h puts them and still satisfy it.
+func (b *body) grant(h *hypothesis) {
+	h.shift = math.Min(5, 1.5+0.5*(b.give[h.a]*b.reach[h.a]+b.give[h.b]*b.reach[h.b]))
+	h.trace = 1 + 2*math.Cos(0.06+b.give[h.a]+b.give[h.b])
 }

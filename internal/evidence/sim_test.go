@@ -228,30 +228,51 @@ func marginals(x []lie.SE3, inv *mat.SymDense, dim, d int) func(i, j int) [36]fl
 	if dim == 2 {
 		index = planar
 	}
-	block := func(i, j int) *mat.Dense {
-		m := mat.NewDense(6, 6, nil)
-		if i > 0 && j > 0 {
-			for a := 0; a < d; a++ {
-				for b := 0; b < d; b++ {
-					m.Set(index[a], index[b], inv.At((i-1)*d+a, (j-1)*d+b))
+	block := func(i, j int, m *[36]float64) {
+		if i == 0 || j == 0 {
+			return
+		}
+		raw := inv.RawSymmetric()
+		for a := 0; a < d; a++ {
+			for b := 0; b < d; b++ {
+				p, q := (i-1)*d+a, (j-1)*d+b
+				m[6*index[a]+index[b]] = raw.Data[min(p, q)*raw.Stride+max(p, q)]
+			}
+		}
+	}
+	mul := func(x, y *[36]float64, transposed bool) (z [36]float64) {
+		for a := 0; a < 6; a++ {
+			for k := 0; k < 6; k++ {
+				v := x[6*a+k]
+				if v == 0 {
+					continue
+				}
+				for b := 0; b < 6; b++ {
+					if transposed {
+						z[6*a+b] += v * y[6*b+k]
+					} else {
+						z[6*a+b] += v * y[6*k+b]
+					}
 				}
 			}
 		}
-		return m
+		return z
 	}
 	return func(i, j int) (out [36]float64) {
 		p := x[j].Between(x[i]) // P^-1
 		ad := p.Adjoint()
-		a := mat.NewDense(6, 6, ad[:])
-		c := block(j, j)
-		var t, u mat.Dense
-		t.Mul(a, block(i, j))
-		c.Sub(c, &t)
-		c.Sub(c, t.T())
-		u.Mul(a, block(i, i))
-		t.Mul(&u, a.T())
-		c.Add(c, &t)
-		copy(out[:], c.RawMatrix().Data)
+		var ii, ij [36]float64
+		block(i, i, &ii)
+		block(i, j, &ij)
+		block(j, j, &out)
+		t := mul(&ad, &ij, false)
+		u := mul(&ad, &ii, false)
+		u = mul(&u, &ad, true)
+		for a := 0; a < 6; a++ {
+			for b := 0; b < 6; b++ {
+				out[6*a+b] += u[6*a+b] - t[6*a+b] - t[6*b+a]
+			}
+		}
 		return out
 	}
 }
