@@ -9,20 +9,13 @@ type splitHierarchy struct {
 	up     [][]int32
 }
 
-// coarsen contracts heavy-edge matchings (Karypis and Kumar, A Fast and High
+// coarsen begins with g, whose vertices are single poses, and contracts heavy-edge matchings (Karypis and Kumar, A Fast and High
 // Quality Multilevel Scheme for Partitioning Irregular Graphs, SIAM J. Sci.
 // Comput. 20(1), 1998) until at most target vertices remain or matching stops
 // to pay. Vertices of different label are never merged; nil labels allow all.
 func coarsen(g *splitGraph, target int, label []int64, rng *rand.Rand) *splitHierarchy {
 	h := &splitHierarchy{levels: []*splitGraph{g}}
-	total := g.n
-	if g.maxWeight != 1 {
-		total = 0
-		for _, w := range g.weight {
-			total += int(w)
-		}
-	}
-	heaviest := int32(max(2, 3*total/(2*target)))
+	heaviest := int32(max(2, 3*g.n/(2*target)))
 	for g.n > target {
 		cluster, nc := matchHeavy(g, heaviest, label, rng)
 		if 20*nc > 19*g.n {
