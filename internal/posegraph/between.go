@@ -112,3 +112,52 @@ func (b *Between) Linearise(v *Values, a *Assembly) float64 {
 	}
 	return b.lineariseSpace(v, a)
 }
+
+// Quadratic writes the second-order model of factor k at v to h (2 dim x 2 dim, row-major) and b (2 dim), over the tangents of
+// pose I, then of pose J; what stood there is overwritten.
+func (b *Between) Quadratic(k int, v *Values, h, g []float64) {
+	d := b.dim
+	xi, xj := &v.Poses[b.I[k]], &v.Poses[b.J[k]]
+	if d == 3 {
+		var p planeFactor
+		p.evaluate(xi, xj, &b.Z[k], (*[9]float64)(b.Info(k)), b.W[k])
+		for r := 0; r < 3; r++ {
+			for c := 0; c < 3; c++ {
+				h[6*r+c] = p.hii[3*r+c]
+				h[6*r+3+c] = p.hji[3*c+r]
+				h[6*(3+r)+c] = p.hji[3*r+c]
+				h[6*(3+r)+3+c] = p.hjj[3*r+c]
+			}
+		}
+		copy(g, p.gi[:])
+		copy(g[3:], p.gj[:])
+		return
+	}
+	var p spaceFactor
+	p.evaluate(xi, xj, &b.Z[k], (*[36]float64)(b.Info(k)), b.W[k])
+	put := func(row, col int, m *lie.Mat3, transposed bool) {
+		for r := 0; r < 3; r++ {
+			for c := 0; c < 3; c++ {
+				if transposed {
+					h[12*(row+r)+col+c] = m[3*c+r]
+				} else {
+					h[12*(row+r)+col+c] = m[3*r+c]
+				}
+			}
+		}
+	}
+	for i, m := range [2]*[3]lie.Mat3{&p.hii, &p.hjj} {
+		o := 6 * i
+		put(o, o, &m[0], false)
+		put(o, o+3, &m[1], false)
+		put(o+3, o, &m[1], true)
+		put(o+3, o+3, &m[2], false)
+	}
+	for q := range p.hji {
+		r, c := 3*(q/2), 3*(q%2)
+		put(6+r, c, &p.hji[q], false)
+		put(c, 6+r, &p.hji[q], true)
+	}
+	copy(g, p.gi[:])
+	copy(g[6:], p.gj[:])
+}

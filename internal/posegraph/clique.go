@@ -250,3 +250,35 @@ func addSlot(s *Assembly, slot Slot, a, b []float64, d int) {
 		addTm(s.Matrix.Off(int(-slot-1)), b, a, d)
 	}
 }
+
+// Joint returns the joint covariance of the nodes of clique k, (dim len(nodes))^2 row-major.
+func (c *Cliques) Joint(k int, sigma Covariance) []float64 {
+	q, d := &c.list[k], c.dim
+	m := len(q.nodes)
+	n := d * m
+	out := make([]float64, n*n)
+	var block [36]float64
+	for a := 0; a < m; a++ {
+		copy(block[:], sigma.Of(q.nodes[a]))
+		if sigma.Of(q.nodes[a]) == nil {
+			block = [36]float64{}
+		}
+		put(out, n, d*a, d*a, block[:], d)
+		for b := a + 1; b < m; b++ {
+			sigma.Across(q.slots[pair(a, b, m)], block[:])
+			put(out, n, d*a, d*b, block[:], d)
+			for i := 0; i < d; i++ {
+				for j := 0; j < d; j++ {
+					out[(d*b+j)*n+d*a+i] = block[i*d+j]
+				}
+			}
+		}
+	}
+	return out
+}
+
+func put(m []float64, n, row, col int, block []float64, d int) {
+	for i := 0; i < d; i++ {
+		copy(m[(row+i)*n+col:], block[i*d:i*d+d])
+	}
+}

@@ -286,6 +286,70 @@ func (s *Solver) Optimise(o Options) Result {
 	return r
 }
 
+// Linearise linearises the graph at its values and returns F and its gradient, in block order; the slice is the solver's.
+func (s *Solver) Linearise() (cost float64, gradient []float64) {
+	cost = s.linearise(&s.g.Values, s.now)
+	return cost, s.now.Gradient
+}
+
+// Decrease returns 1/2 v' H^-1 v, H the matrix of the last [Solver.Linearise]: what F would fall by to second order if its
+// gradient were v (in block order).
+func (s *Solver) Decrease(v []float64) (float64, error) {
+	if err := s.factor.FactoriseSolve(s.now.Matrix, v, s.step); err != nil {
+		return 0, err
+	}
+	sum := 0.0
+	for i, x := range v {
+		sum += x * s.step[i]
+	}
+	return sum / 2, nil
+}
+
+// Covariance is the inverse of the Gauss-Newton matrix on the pattern of the graph: the covariance of each variable and of
+// each pair that shares a factor, in the tangents at the values, relative to the fixed variables.
+type Covariance struct {
+	s *Solver
+	m *sparse.Matrix
+}
+
+// Covariance linearises at the graph's values and computes the covariance blocks. The Covariance is overwritten by the next
+// call and stays valid until then.
+func (s *Solver) Covariance() (Covariance, error) {
+	s.Linearise()
+	if err := s.factor.Factorise(s.now.Matrix); err != nil {
+		return Covariance{}, err
+	}
+	s.factor.SelectedInverse(s.trial.Matrix)
+	return Covariance{s, s.trial.Matrix}, nil
+}
+
+// Of returns the covariance of a variable, Dim x Dim row-major; nil when it is fixed, that is zero.
+func (c Covariance) Of(variable int32) []float64 {
+	if b := c.s.block[variable]; b >= 0 {
+		return c.m.Diag(int(b))
+	}
+	return nil
+}
+
+// Across writes the cross covariance of the pair that owns a slot, rows i and columns j as the factor set coupled them, to dst
+// (Dim x Dim).
+func (c Covariance) Across(slot Slot, dst []float64) {
+	d := c.s.g.Dim
+	switch {
+	case slot == 0:
+		clear(dst[:d*d])
+	case slot > 0:
+		copy(dst, c.m.Off(int(slot-1))[:d*d])
+	default:
+		m := c.m.Off(int(-slot - 1))
+		for i := 0; i < d; i++ {
+			for j := 0; j < d; j++ {
+				dst[i*d+j] = m[j*d+i]
+			}
+		}
+	}
+}
+
 // damp adds lambda times the diagonal; undamp restores it.
 func (s *Solver) damp(lambda float64) {
 	if lambda == 0 {
@@ -329,4 +393,41 @@ func (s *Solver) advance() {
 			s.next[i] = s.g.Values.Poses[i].Plus(lie.Tangent{-d[0], -d[1], -d[2], -d[3], -d[4], -d[5]})
 		}
 	}
+}
+
+// Joint returns the joint covariance of some variables, (Dim len)^2 row-major, in the tangents at the values and relative to the
+// fixed variables (whose rows are zero). Every pair of variables is covered, whatever the pattern; the cost is one solution
+// for each scalar.
+func (s *Solver) Joint(variables []int32) ([]float64, error) {
+	s.Linearise()
+	if err := s.factor.Factorise(s.now.Matrix); err != nil {
+		return nil, err
+	}
+	d, n := s.g.Dim, len(s.step)
+	m := d * len(variables)
+	out := make([]float64, m*m)
+	columns := make([]float64, d*n)
+	for k, v := range variables {
+		o := int(s.offset[v])
+		if o < 0 {
+			continue
+		}
+		clear(columns)
+		for c := 0; c < d; c++ {
+			columns[c*n+o+c] = 1
+		}
+		s.factor.SolveMany(columns, d)
+		for l, w := range variables {
+			p := int(s.offset[w])
+			if p < 0 {
+				continue
+			}
+			for c := 0; c < d; c++ {
+				for r := 0; r < d; r++ {
+					out[(l*d+r)*m+k*d+c] = columns[c*n+p+r]
+				}
+			}
+		}
+	}
+	return out, nil
 }

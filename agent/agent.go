@@ -1,0 +1,253 @@
+package agent
+
+import (
+	"fmt"
+	"slices"
+
+	"selvage/internal/lie"
+	"selvage/msgs"
+)
+
+// Config is fixed for the life of an agent.
+type Config struct {
+	Fleet, Robot string
+	Dim          int            // of the survey: 2 or 3
+	Journal      msgs.JournalID // names the numbering of this robot's records
+
+	// PublishNS is the least time between two summaries, nanoseconds.
+	PublishNS int64
+	// SettleNS: without new measurements for this long the robot counts as settled, and what is due is sent at once.
+	SettleNS int64
+	// TrafficShare bounds summaries while the survey grows: a new one waits until its size is below this share of the raw
+	// measurements taken since the last one.
+	TrafficShare float64
+	// HeartbeatNS is the period of heartbeats.
+	HeartbeatNS int64
+	// RetryNS is the first waiting time before something unanswered is sent again; it doubles up to sixteen times.
+	RetryNS int64
+}
+
+const second = int64(1e9)
+
+// DefaultConfig returns the settings for a survey at walking pace on a thin radio link.
+func DefaultConfig(fleet, robot string, dim int) Config {
+	return Config{
+		Fleet: fleet, Robot: robot, Dim: dim,
+		PublishNS: 10 * second, SettleNS: 20 * second, TrafficShare: 0.4, HeartbeatNS: 15 * second, RetryNS: 10 * second,
+	}
+}
+
+// RawPoseBytes and RawMeasurementBytes are what a pose and a measurement would take if they crossed the link themselves.
+const (
+	RawPoseBytes        = 58
+	RawMeasurementBytes = 144
+)
+
+// Event is something that happens to an agent: [Keyframe], [Relative], [Tie], [Message] or [Tick].
+type Event interface{ event() }
+
+// Keyframe is a new keyframe of the front end: its pose in the session's frame as the front end has it.
+type Keyframe struct {
+	Session uint32
+	ID      int64
+	StampNS int64
+	Pose    lie.SE3
+}
+
+// Relative is a relative pose within one session, from odometry or from a loop closure: Z is the pose of To in From.
+type Relative struct {
+	Session  uint32
+	From, To int64
+	Z        lie.SE3
+	Info     [36]float64 // order x, y, z, rx, ry, rz; zero rows and columns for what was not measured
+}
+
+// Tie is a measurement of another robot, or of another session, by this one: Z is the pose of To in From.
+type Tie struct {
+	ID       string // empty: named after the record
+	From, To msgs.KeyRef
+	Z        lie.SE3
+	Info     [36]float64
+	Source   string
+	StampNS  int64
+}
+
+// Message is a message from the base.
+type Message struct {
+	Kind    string // as in package msgs
+	Payload []byte
+}
+
+// Tick lets time pass.
+type Tick struct{}
+
+func (Keyframe) event() {}
+func (Relative) event() {}
+func (Tie) event()      {}
+func (Message) event()  {}
+func (Tick) event()     {}
+
+// Publish is an effect: a message for the base.
+type Publish struct {
+	Kind    string
+	Payload []byte
+	Number  uint64 // record number of a tie, version of a summary, else 0
+}
+
+// Agent is the core. Its methods must not be called concurrently.
+type Agent struct {
+	cfg      Config
+	sessions []*session // ascending
+
+	records []record // ties not yet safe, ascending
+	newest  uint64   // record number
+	safe    uint64
+
+	version   uint64 // of the newest summary made
+	payload   []byte // that summary
+	answered  bool   // a correction that used it arrived
+	sentNS    int64
+	tries     int
+	rawNow    int   // bytes of the raw graph
+	rawAtSend int   // when the newest summary was made
+	lastNS    int64 // of the newest measurement
+	wanted    bool  // separators were asked for that the newest summary lacks
+	relinear  bool  // the newest correction makes it worth condensing again
+
+	applied     msgs.Epoch
+	term        uint64
+	incarnation uint64
+	beatNS      int64
+	beatDue     bool
+	begun       bool
+}
+
+// record is a tie that the base has not declared safe.
+type record struct {
+	number  uint64
+	payload []byte
+	sentNS  int64
+	tries   int
+}
+
+// New returns an agent without measurements.
+func New(cfg Config) *Agent {
+	if cfg.Dim != 2 && cfg.Dim != 3 {
+		panic("agent: dimension 2 or 3")
+	}
+	return &Agent{cfg: cfg}
+}
+
+// Handle takes one event at the time nowNS (nanoseconds of the agent's clock, never decreasing) and returns what is to be
+// published. An error says why an event was refused; the agent is then as it was before it.
+func (a *Agent) Handle(nowNS int64, e Event) ([]Publish, error) {
+	if !a.begun {
+		a.begun = true
+		a.beatNS, a.lastNS = nowNS-a.cfg.HeartbeatNS, nowNS
+	}
+	switch e := e.(type) {
+	case Keyframe:
+		a.lastNS = nowNS
+		return nil, a.keyframe(e)
+	case Relative:
+		a.lastNS = nowNS
+		return nil, a.relative(e)
+	case Tie:
+		a.lastNS = nowNS
+		return a.tie(nowNS, e)
+	case Message:
+		return a.message(nowNS, e)
+	case Tick:
+		return a.tick(nowNS)
+	}
+	panic(fmt.Sprintf("agent: event of type %T", e))
+}
+
+// session returns the session with that number, made when it is new.
+func (a *Agent) session(id uint32) *session {
+	i, found := slices.BinarySearchFunc(a.sessions, id, func(s *session, id uint32) int { return int(int64(s.id) - int64(id)) })
+	if !found {
+		a.sessions = slices.Insert(a.sessions, i, newSession(id, a.cfg.Dim))
+	}
+	return a.sessions[i]
+}
+
+func (a *Agent) keyframe(k Keyframe) error {
+	if err := a.session(k.Session).addKeyframe(k); err != nil {
+		return err
+	}
+	a.rawNow += RawPoseBytes
+	return nil
+}
+
+func (a *Agent) relative(r Relative) error {
+	if err := a.session(r.Session).addRelative(r); err != nil {
+		return err
+	}
+	a.rawNow += RawMeasurementBytes
+	return nil
+}
+
+// tie numbers a tie and sends it; it stays in records until the base says it is safe.
+func (a *Agent) tie(nowNS int64, t Tie) ([]Publish, error) {
+	own := t.From
+	if own.Robot != a.cfg.Robot {
+		own = t.To
+	}
+	if own.Robot != a.cfg.Robot {
+		return nil, fmt.Errorf("tie %q between %s and %s: neither is %s", t.ID, t.From.Robot, t.To.Robot, a.cfg.Robot)
+	}
+	s := a.session(own.Session)
+	if _, known := s.index[own.ID]; own.ByStamp || !known {
+		return nil, fmt.Errorf("tie %q: keyframe %d of session %d is not known to %s", t.ID, own.ID, own.Session, a.cfg.Robot)
+	}
+	number := a.newest + 1
+	id := t.ID
+	if id == "" {
+		id = fmt.Sprintf("%s.%x.%d", a.cfg.Robot, a.cfg.Journal[:4], number)
+	}
+	m := msgs.Tie{
+		Header: a.header(number, own.Session), ID: id, From: t.From, To: t.To, Pose: wirePose(&t.Z, a.cfg.Dim),
+		Info: compact(&t.Info, a.cfg.Dim), Dim: a.width(), Source: t.Source, StampNS: t.StampNS,
+	}
+	payload, err := m.Marshal()
+	if err != nil {
+		return nil, fmt.Errorf("tie %q: %w", id, err)
+	}
+	a.newest = number
+	a.rawNow += RawMeasurementBytes
+	a.separate(s, own.ID)
+	if t.From.Robot == t.To.Robot { // both ends are this robot's
+		other := t.To
+		if other == own {
+			other = t.From
+		}
+		a.separate(a.session(other.Session), other.ID)
+	}
+	a.records = append(a.records, record{number: number, payload: payload, sentNS: nowNS})
+	return []Publish{{msgs.KindTie, payload, number}}, nil
+}
+
+// separate makes a keyframe a separator, if it is known and not one yet.
+func (a *Agent) separate(s *session, id int64) {
+	if i, ok := s.index[id]; ok && !s.separator[i] {
+		s.separator[i] = true
+		s.separators++
+		a.wanted = true
+	}
+}
+
+func (a *Agent) header(number uint64, session uint32) msgs.Header {
+	return msgs.Header{Fleet: a.cfg.Fleet, Robot: a.cfg.Robot, Journal: a.cfg.Journal, Number: number, Session: session}
+}
+
+// width is the number of scalars of a pose's tangent.
+func (a *Agent) width() int { return 3 * (a.cfg.Dim - 1) }
+
+// latestSession is the number of the newest session, 0 before the first.
+func (a *Agent) latestSession() uint32 {
+	if len(a.sessions) == 0 {
+		return 0
+	}
+	return a.sessions[len(a.sessions)-1].id
+}

@@ -1,0 +1,182 @@
+package agent
+
+import (
+	"slices"
+
+	"selvage/internal/lie"
+	"selvage/internal/posegraph"
+	"selvage/internal/sparse"
+	"selvage/msgs"
+)
+
+// relinearise is the share of F (or of 1, when F is smaller) that condensing again must be worth.
+const relinearise = 1e-12
+
+// correct applies a correction: junctions go where the base found them, interior poses follow. A correction that is not newer than
+// the last one applied is dropped; keyframes it names that this robot does not know are left out.
+func (a *Agent) correct(c *msgs.Correction) error {
+	if err := a.addressed(c.Fleet, c.Robot, c.Term); err != nil {
+		return err
+	}
+	a.incarnation = max(a.incarnation, c.Epoch.Incarnation)
+	if c.SummaryVersion >= a.version {
+		a.answered = true
+	}
+	if c.Epoch.Compare(a.applied) <= 0 || c.Dim != a.width() {
+		return nil
+	}
+	a.applied = c.Epoch
+	a.beatDue = true
+	for i := range c.Parts {
+		p := &c.Parts[i]
+		k, found := slices.BinarySearchFunc(a.sessions, p.Session, func(s *session, id uint32) int { return int(int64(s.id) - int64(id)) })
+		if !found {
+			continue
+		}
+		s := a.sessions[k]
+		s.joined, s.island = p.Joined, p.Island
+		if len(p.IDs) == 0 {
+			continue
+		}
+		if err := s.follow(p); err != nil {
+			return err
+		}
+		if s.dirty || s.told == nil {
+			continue // new measurements are waiting: the next summary says it all
+		}
+		next, err := s.model()
+		if err != nil {
+			return err
+		}
+		if fall, ok := s.change(next); !ok || fall > relinearise*max(next.cost, 1) {
+			a.relinear = true
+		}
+	}
+	return nil
+}
+
+// follow moves the session's poses after its corrected junctions: these exactly, the others first by the correction interpolated
+// along the track and then by a solve of their own with the junctions fixed.
+func (s *session) follow(p *msgs.CorrectedPart) error {
+	s.datum = lie.FromQuat(p.DatumFromSession.T, p.DatumFromSession.Q)
+	inverse := s.datum.Inv()
+	poses := s.graph.Values.Poses
+	moved := make([]int32, 0, len(p.IDs))
+	target := make(map[int32]lie.SE3, len(p.IDs))
+	for i, id := range p.IDs {
+		if v, ok := s.index[id]; ok {
+			moved = append(moved, v)
+			target[v] = inverse.Mul(lie.FromQuat(p.Poses[i].T, p.Poses[i].Q))
+		}
+	}
+	if len(moved) == 0 {
+		return nil
+	}
+	slices.Sort(moved)
+	shift := make([]lie.SE3, len(moved)) // session_from_session, junction by junction
+	for i, v := range moved {
+		shift[i] = target[v].Mul(poses[v].Inv())
+	}
+	next := 0
+	for v := range poses {
+		for next < len(moved) && int(moved[next]) < v {
+			next++
+		}
+		switch {
+		case next == len(moved):
+			poses[v] = shift[next-1].Mul(poses[v])
+		case next == 0 || int(moved[next]) == v:
+			poses[v] = shift[next].Mul(poses[v])
+		default:
+			a, b := moved[next-1], moved[next]
+			share := float64(int32(v)-a) / float64(b-a)
+			step := shift[next-1].Between(shift[next])
+			twist := step.Log()
+			for k := range twist {
+				twist[k] *= share
+			}
+			poses[v] = shift[next-1].Mul(lie.Exp(twist)).Mul(poses[v])
+		}
+	}
+	for _, v := range moved {
+		poses[v] = target[v]
+	}
+	if s.dim == 2 {
+		for v := range poses {
+			poses[v] = lie.Planar(&poses[v]).Spatial()
+		}
+	}
+	return s.settle(moved)
+}
+
+// settle solves for the interior with the given variables fixed.
+func (s *session) settle(fixed []int32) error {
+	component, count := s.graph.Components()
+	held := make([]bool, count)
+	for _, v := range fixed {
+		held[component[v]] = true
+	}
+	for v, c := range component { // a part without a corrected junction keeps its first pose
+		if !held[c] {
+			held[c] = true
+			fixed = append(fixed, int32(v))
+		}
+	}
+	if len(fixed) == len(s.keys) {
+		return nil
+	}
+	if cost := s.graph.Cost(); cost > 2*float64(s.graph.Dim*s.factors.Len()) {
+		s.tryChordal(fixed, cost)
+	}
+	solver, err := posegraph.NewSolver(s.graph, fixed, sparse.Options{})
+	if err != nil {
+		return err
+	}
+	o := posegraph.DefaultOptions()
+	o.Tolerance = 1e-14
+	solver.Optimise(o)
+	return nil
+}
+
+// Track is one session's map as the agent has it.
+type Track struct {
+	Session          uint32
+	Joined           bool
+	Island           string
+	DatumFromSession lie.SE3
+	IDs              []int64
+	StampsNS         []int64
+	Poses            []lie.SE3 // session_from_keyframe; DatumFromSession times these is the map in the datum
+}
+
+// Tracks returns a copy of the agent's map, sessions ascending.
+func (a *Agent) Tracks() []Track {
+	var out []Track
+	for _, s := range a.sessions {
+		out = append(out, Track{
+			Session: s.id, Joined: s.joined, Island: s.island, DatumFromSession: s.datum, IDs: slices.Clone(s.keys),
+			StampsNS: slices.Clone(s.stamps), Poses: slices.Clone(s.graph.Values.Poses),
+		})
+	}
+	return out
+}
+
+// Applied returns the epoch of the newest correction applied.
+func (a *Agent) Applied() msgs.Epoch { return a.applied }
+
+// Raw returns what the robot's graph would take if it crossed the link itself, in bytes.
+func (a *Agent) Raw() int { return a.rawNow }
+
+// Settled tells whether the agent has nothing left to send or to hear: every tie is safe, the newest summary is answered and
+// says all there is to say.
+func (a *Agent) Settled() bool {
+	if len(a.records) > 0 || a.payload != nil && !a.answered || a.wanted || a.relinear || a.beatDue {
+		return false
+	}
+	for _, s := range a.sessions {
+		if s.dirty && s.separators > 0 {
+			return false
+		}
+	}
+	return true
+}

@@ -1,0 +1,23 @@
+// Package agent is the core of what runs on a robot: it keeps the robot's pose graph, publishes a condensed summary of it and
+// the robot's ties, and carries the base's corrections into every pose of the robot's own map.
+//
+// The core is a state machine. [Agent.Handle] takes one event at a moment (a keyframe, a measurement, a message from the base, the
+// tick of a clock) and returns effects: messages to publish. It starts nothing, reads no clock and draws no random number, so
+// the same events give the same effects, byte for byte, on a robot, in a container and in a simulation.
+//
+// What it does with an event:
+//
+//	keyframe, relative pose     into the pose graph of their session
+//	tie                         numbered, kept until the base says it is safe, published; its keyframe becomes a separator
+//	want                        names separators the base needs, records it misses, and the number below which all is safe
+//	correction                  junctions go where the base found them, interior poses follow by a solve of their own; the
+//	                            robot's frame keeps its place, where it stands in the datum is kept beside it
+//	tick                        what is due: ties again that are not safe yet, a new summary, the old one again, a heartbeat
+//
+// A summary is due when the graph changed and the traffic allows it (see [Config]), or when a correction moved the robot so far
+// that its linearisation matters: when condensing again would change the cost by more than one part in 1e12. Otherwise the
+// correction is answered by a heartbeat.
+//
+// The robot's own poses never jump: they stay in the session's frame, and [Agent.Poses] gives them there together with the
+// transform into the datum.
+package agent

@@ -1,0 +1,147 @@
+package agent
+
+import (
+	"fmt"
+	"math"
+
+	"selvage/internal/lie"
+	"selvage/internal/posegraph"
+	"selvage/internal/sparse"
+	"selvage/partition"
+)
+
+// session is one run of the front end: a pose graph in a frame of its own.
+type session struct {
+	id         uint32
+	dim        int             // of the survey, 2 or 3
+	keys       []int64         // in the order they came
+	index      map[int64]int32 // key -> variable
+	stamps     []int64
+	front      []lie.SE3 // as the front end had them
+	travel     []float64 // metres along the track
+	graph      *posegraph.Graph
+	factors    *posegraph.Between
+	separator  []bool
+	separators int
+	resolved   map[int32][]int64 // variable -> stamps asked for that it answers
+	unresolved []int64           // stamps asked for that no keyframe has yet
+
+	dirty  bool // measurements came since the newest summary
+	joined bool
+	datum  lie.SE3 // datum_from_session of the newest correction
+	island string
+	told   *model // what the newest summary says
+}
+
+func newSession(id uint32, dim int) *session {
+	g := posegraph.New(3*(dim-1), nil)
+	return &session{
+		id: id, dim: dim, index: map[int64]int32{}, graph: g, factors: g.AddBetween(), resolved: map[int32][]int64{},
+		datum: lie.Identity(),
+	}
+}
+
+func (s *session) addKeyframe(k Keyframe) error {
+	if _, known := s.index[k.ID]; known {
+		return fmt.Errorf("keyframe %d of session %d came twice", k.ID, s.id)
+	}
+	n := len(s.keys)
+	pose, travel := k.Pose, 0.0
+	if n > 0 {
+		step := s.front[n-1].Between(k.Pose)
+		pose = s.graph.Values.Poses[n-1].Mul(step)
+		travel = s.travel[n-1] + math.Sqrt(step.T[0]*step.T[0]+step.T[1]*step.T[1]+step.T[2]*step.T[2])
+	}
+	s.index[k.ID] = int32(n)
+	s.keys = append(s.keys, k.ID)
+	s.stamps = append(s.stamps, k.StampNS)
+	s.front = append(s.front, k.Pose)
+	s.travel = append(s.travel, travel)
+	s.separator = append(s.separator, false)
+	s.graph.Values.Poses = append(s.graph.Values.Poses, pose)
+	s.dirty = true
+	return nil
+}
+
+func (s *session) addRelative(r Relative) error {
+	i, ok := s.index[r.From]
+	j, found := s.index[r.To]
+	if !ok || !found || i == j {
+		return fmt.Errorf("relative pose from %d to %d of session %d: two known keyframes expected", r.From, r.To, s.id)
+	}
+	s.factors.Add(i, j, r.Z, &r.Info)
+	s.dirty = true
+	return nil
+}
+
+// resolve looks for the keyframe with a stamp and hands its id over.
+func (s *session) resolve(stamp int64, use func(id int64)) {
+	for i, t := range s.stamps {
+		if t != stamp {
+			continue
+		}
+		v := int32(i)
+		for _, known := range s.resolved[v] {
+			if known == stamp {
+				return
+			}
+		}
+		s.resolved[v] = append(s.resolved[v], stamp)
+		use(s.keys[i])
+		return
+	}
+}
+
+// optimise brings the session to its own optimum, starting from its present poses. When these explain the measurements badly,
+// as a front end's first guess may, it also tries the chordal start and keeps the better of the two.
+func (s *session) optimise() error {
+	anchors := s.graph.Anchors()
+	if len(anchors) == len(s.keys) || s.factors.Len() == 0 {
+		return nil
+	}
+	cost := s.graph.Cost()
+	freedom := float64(s.graph.Dim * s.factors.Len())
+	if cost > 2*freedom {
+		s.tryChordal(anchors, cost)
+	}
+	solver, err := posegraph.NewSolver(s.graph, anchors, sparse.Options{})
+	if err != nil {
+		return err
+	}
+	r := solver.Optimise(posegraph.DefaultOptions())
+	if r.Stop == posegraph.Undetermined {
+		return fmt.Errorf("session %d: the measurements leave keyframe %d free", s.id, s.keys[r.Weakest])
+	}
+	return nil
+}
+
+// tryChordal replaces the values by the chordal start with the given variables fixed, if that lowers the cost.
+func (s *session) tryChordal(fixed []int32, cost float64) {
+	before := append([]lie.SE3(nil), s.graph.Values.Poses...)
+	if posegraph.Chordal(s.graph, fixed) != nil || !(s.graph.Cost() < cost) {
+		copy(s.graph.Values.Poses, before)
+	}
+}
+
+// condense condenses the session at its present poses.
+func (s *session) condense() (*partition.Condensed, error) {
+	d := s.graph.Dim
+	terms := make([]partition.Quadratic, s.factors.Len())
+	h := make([]float64, len(terms)*4*d*d)
+	b := make([]float64, len(terms)*2*d)
+	nodes := make([]int32, 2*len(terms))
+	for k := range terms {
+		q := &terms[k]
+		q.Nodes = nodes[2*k : 2*k+2 : 2*k+2]
+		q.Nodes[0], q.Nodes[1] = s.factors.I[k], s.factors.J[k]
+		q.H, q.B = h[k*4*d*d:(k+1)*4*d*d], b[k*2*d:(k+1)*2*d]
+		s.factors.Quadratic(k, &s.graph.Values, q.H, q.B)
+	}
+	var separators []int32
+	for i, is := range s.separator {
+		if is {
+			separators = append(separators, int32(i))
+		}
+	}
+	return partition.Condense(s.graph.Dim, len(s.keys), terms, separators)
+}

@@ -1,0 +1,346 @@
+package coordinator
+
+import (
+	"fmt"
+	"maps"
+	"slices"
+
+	"selvage/internal/evidence"
+	"selvage/internal/lie"
+	"selvage/msgs"
+)
+
+// Config is fixed for the life of a coordinator.
+type Config struct {
+	Fleet       string
+	Dim         int    // of the survey: 2 or 3
+	Incarnation uint64 // of the base's store
+	Term        uint64 // of the lease under which it speaks
+	SolveNS     int64  // least time between two solutions, nanoseconds
+	RetryNS     int64  // first waiting time before something unanswered is sent again; it doubles up to sixteen times
+	HoldAll     bool   // take every tie as true
+	Evidence    evidence.Options
+}
+
+const second = int64(1e9)
+
+// DefaultConfig returns the settings for a survey at walking pace on a thin radio link.
+func DefaultConfig(fleet string, dim int) Config {
+	return Config{
+		Fleet: fleet, Dim: dim, Incarnation: 1, Term: 1, SolveNS: 20 * second, RetryNS: 10 * second,
+		Evidence: evidence.DefaultOptions(dim),
+	}
+}
+
+// Message is a message from a robot, with the kind and robot of its subject.
+type Message struct {
+	Robot   string
+	Kind    string
+	Payload []byte
+}
+
+// Publish is an effect: a message for a robot.
+type Publish struct {
+	Robot   string
+	Kind    string
+	Payload []byte
+}
+
+// Coordinator is the core. Its methods must not be called concurrently.
+type Coordinator struct {
+	cfg      Config
+	robots   map[string]*robot
+	ties     map[string]*tie
+	order    []*tie // as they came
+	epoch    uint64
+	now      int64
+	solved   int64  // time of the newest solution
+	dirty    bool   // summaries or ties came that it does not contain
+	revision uint64 // counts them
+	begun    bool
+	places   map[unitID]placement // of the newest epoch
+	datums   uint64               // counts the datums ever made
+}
+
+// unitID names a session of a robot.
+type unitID struct {
+	robot   string
+	session uint32
+}
+
+func (u unitID) compare(v unitID) int {
+	if u.robot != v.robot {
+		if u.robot < v.robot {
+			return -1
+		}
+		return 1
+	}
+	return int(int64(u.session) - int64(v.session))
+}
+
+// placement is where one unit stands in the newest epoch.
+type placement struct {
+	island island
+	joined bool
+	datum  lie.SE3 // datum_from_session
+	ids    []int64
+	poses  []lie.SE3 // of the junctions, in the datum
+}
+
+// island is a datum: its birth number and the junction that carries it.
+type island struct {
+	born   uint64
+	anchor unitID
+	key    int64
+	pose   lie.SE3 // of that junction, for as long as the datum lives
+}
+
+func (i *island) name() string {
+	return fmt.Sprintf("%s.%d.%d", i.anchor.robot, i.anchor.session, i.key)
+}
+
+// robot is what the base knows of one robot.
+type robot struct {
+	name    string
+	summary *msgs.Summary
+	index   []map[int64]int // part -> junction id -> junction
+	units   []*unitModel    // cached, part by part
+
+	journal msgs.JournalID
+	safe    uint64 // every record up to this one has come
+	beyond  map[uint64]bool
+	newest  uint64 // record number by the heartbeat
+
+	applied msgs.Epoch
+	version uint64 // of the newest summary by the heartbeat
+
+	missing   []msgs.KeyRef // keyframes wanted, as of revision missingAt
+	missingAt uint64
+
+	used     uint64 // version in the newest epoch
+	corr     []byte
+	corrNS   int64
+	tries    int
+	want     []byte
+	wantNS   int64
+	wantBusy bool // separators or records are missing
+	wantTry  int
+}
+
+// tie is one tie with its verdict.
+type tie struct {
+	msg     *msgs.Tie
+	z       lie.SE3
+	info    [36]float64
+	cov     [36]float64
+	regular bool // the information has full rank
+	finding Finding
+	told    msgs.VerdictKind
+}
+
+// Finding is the present verdict on a tie.
+type Finding struct {
+	Tie     string
+	From    msgs.KeyRef
+	To      msgs.KeyRef
+	Verdict msgs.VerdictKind
+	Reason  string
+	msgs.Evidence
+	SinceNS int64 // when the verdict last changed
+}
+
+// New returns a coordinator that has heard nothing yet.
+func New(cfg Config) *Coordinator {
+	if cfg.Dim != 2 && cfg.Dim != 3 {
+		panic("coordinator: dimension 2 or 3")
+	}
+	return &Coordinator{cfg: cfg, robots: map[string]*robot{}, ties: map[string]*tie{}, places: map[unitID]placement{}}
+}
+
+// Message takes a message from a robot at the time nowNS. An error says why it was refused; nothing has changed then. Old and
+// repeated messages are no error and change nothing.
+func (c *Coordinator) Message(nowNS int64, m Message) error {
+	c.now = max(c.now, nowNS)
+	switch m.Kind {
+	case msgs.KindTie:
+		t, err := msgs.DecodeTie(m.Payload)
+		if err != nil {
+			return err
+		}
+		if err := c.from(&t.Header, m.Robot); err != nil {
+			return err
+		}
+		return c.takeTie(t)
+	case msgs.KindSummary:
+		s, err := msgs.DecodeSummary(m.Payload)
+		if err != nil {
+			return err
+		}
+		if err := c.from(&s.Header, m.Robot); err != nil {
+			return err
+		}
+		return c.takeSummary(s)
+	case msgs.KindHeartbeat:
+		h, err := msgs.DecodeHeartbeat(m.Payload)
+		if err != nil {
+			return err
+		}
+		if err := c.from(&h.Header, m.Robot); err != nil {
+			return err
+		}
+		r := c.robot(m.Robot)
+		r.applied, r.version = h.Applied, max(r.version, h.SummaryVersion)
+		if h.Header.Journal == r.journal {
+			r.newest = max(r.newest, h.NewestNumber)
+		}
+		return nil
+	}
+	return fmt.Errorf("message of kind %q from %s: expected tie, summary or hb", m.Kind, m.Robot)
+}
+
+func (c *Coordinator) from(h *msgs.Header, robot string) error {
+	if h.Fleet != c.cfg.Fleet || h.Robot != robot {
+		return fmt.Errorf("message of %s of fleet %s came as %s of fleet %s", h.Robot, h.Fleet, robot, c.cfg.Fleet)
+	}
+	return nil
+}
+
+func (c *Coordinator) robot(name string) *robot {
+	r := c.robots[name]
+	if r == nil {
+		r = &robot{name: name, beyond: map[uint64]bool{}}
+		c.robots[name] = r
+	}
+	return r
+}
+
+// sorted returns the robots by name.
+func (c *Coordinator) sorted() []*robot {
+	names := slices.Sorted(maps.Keys(c.robots))
+	out := make([]*robot, len(names))
+	for i, n := range names {
+		out[i] = c.robots[n]
+	}
+	return out
+}
+
+func (c *Coordinator) takeTie(m *msgs.Tie) error {
+	if m.Dim != c.width() {
+		return fmt.Errorf("tie %s: %d components, this survey has %d", m.ID, m.Dim, c.width())
+	}
+	r := c.robot(m.Header.Robot)
+	if m.Header.Journal != r.journal { // a new journal starts to count again
+		r.journal, r.safe, r.newest = m.Header.Journal, 0, 0
+		clear(r.beyond)
+	}
+	n := m.Header.Number
+	if n <= r.safe || r.beyond[n] {
+		r.wantBusy = true // it sends again because it has not heard that the record is safe
+		return nil
+	}
+	if c.ties[m.ID] == nil {
+		t := &tie{msg: m, z: lie.FromQuat(m.Pose.T, m.Pose.Q), info: widen(m.Info, c.cfg.Dim)}
+		t.cov, t.regular = invert(&t.info, c.cfg.Dim)
+		t.finding = Finding{Tie: m.ID, From: m.From, To: m.To, Verdict: msgs.Open, Reason: "not yet weighed", SinceNS: c.now}
+		c.ties[m.ID] = t
+		c.order = append(c.order, t)
+		c.dirty = true
+		c.revision++
+	}
+	r.beyond[n] = true
+	r.newest = max(r.newest, n)
+	for r.beyond[r.safe+1] {
+		r.safe++
+		delete(r.beyond, r.safe)
+	}
+	return nil
+}
+
+func (c *Coordinator) takeSummary(s *msgs.Summary) error {
+	if s.Dim != c.width() {
+		return fmt.Errorf("summary of %s: %d components, this survey has %d", s.Header.Robot, s.Dim, c.width())
+	}
+	r := c.robot(s.Header.Robot)
+	if s.Unchanged || r.summary != nil && s.Version <= r.summary.Version {
+		if r.corr != nil {
+			r.corrNS = min(r.corrNS, c.now-c.cfg.RetryNS) // it sends again because it has no answer
+		}
+		return nil
+	}
+	r.summary, r.version = s, max(r.version, s.Version)
+	r.index = make([]map[int64]int, len(s.Parts))
+	r.units = make([]*unitModel, len(s.Parts))
+	for i := range s.Parts {
+		r.index[i] = make(map[int64]int, len(s.Parts[i].Junctions))
+		for k := range s.Parts[i].Junctions {
+			r.index[i][s.Parts[i].Junctions[k].ID] = k
+		}
+	}
+	c.dirty = true
+	c.revision++
+	return nil
+}
+
+// width is the number of scalars of a pose's tangent.
+func (c *Coordinator) width() int { return 3 * (c.cfg.Dim - 1) }
+
+// Tick lets time pass and returns what is to be published.
+func (c *Coordinator) Tick(nowNS int64) ([]Publish, error) {
+	c.now = max(c.now, nowNS)
+	var out []Publish
+	if c.dirty && (!c.begun || c.now-c.solved >= c.cfg.SolveNS) {
+		c.begun, c.dirty, c.solved = true, false, c.now
+		var err error
+		if out, err = c.solve(); err != nil {
+			return out, err
+		}
+	}
+	for _, r := range c.sorted() {
+		if r.corr != nil && r.applied.Compare(c.Epoch()) < 0 && c.now-r.corrNS >= c.cfg.RetryNS<<min(r.tries, 4) {
+			r.corrNS = c.now
+			r.tries++
+			out = append(out, Publish{r.name, msgs.KindCorrection, r.corr})
+		}
+		want, err := c.want(r)
+		if err != nil {
+			return out, err
+		}
+		if want != nil {
+			out = append(out, Publish{r.name, msgs.KindWant, want})
+		}
+	}
+	return out, nil
+}
+
+// Epoch is that of the newest solution; its number is zero before the first.
+func (c *Coordinator) Epoch() msgs.Epoch {
+	return msgs.Epoch{Incarnation: c.cfg.Incarnation, Number: c.epoch}
+}
+
+// Settled tells whether the newest solution contains everything that came and every robot has answered it.
+func (c *Coordinator) Settled() bool {
+	if c.dirty {
+		return false
+	}
+	for _, r := range c.robots {
+		if len(r.beyond) > 0 || r.newest > r.safe || r.wantBusy {
+			return false
+		}
+		if r.summary == nil {
+			continue
+		}
+		if r.used != r.summary.Version || r.version != r.summary.Version || r.applied != c.Epoch() {
+			return false
+		}
+	}
+	return true
+}
+
+// Findings returns the verdict on every tie, in the order the ties came.
+func (c *Coordinator) Findings() []Finding {
+	out := make([]Finding, len(c.order))
+	for i, t := range c.order {
+		out[i] = t.finding
+	}
+	return out
+}

@@ -1,0 +1,254 @@
+package coordinator
+
+import (
+	"math"
+
+	"selvage/internal/lie"
+	"selvage/internal/posegraph"
+	"selvage/internal/sparse"
+	"selvage/msgs"
+)
+
+// network is the present state of the survey laid out for a solution: units, their junctions as variables, and the ties whose
+// two ends are junctions.
+type network struct {
+	units []unit
+	ties  []usable
+}
+
+// unit is one session with a summary. Its junctions are the variables base, base+1, ...
+type unit struct {
+	id    unitID
+	robot *robot
+	part  *msgs.Part
+	model *unitModel
+	base  int32
+}
+
+// usable is a tie with both ends in the network: units and junctions of its ends.
+type usable struct {
+	*tie
+	from, to         int // units
+	fromNode, toNode int // junctions within them
+}
+
+// unitModel is what a part of a summary says, decoded once for each summary.
+type unitModel struct {
+	poses []lie.SE3 // session_from_junction
+	joint []float64 // joint covariance of the nodes in jointOf, on demand
+	at    map[int]int
+	err   error // the part does not determine its own shape
+}
+
+// layout collects the network. Ties with a missing end are left open with that said.
+func (c *Coordinator) layout() *network {
+	n := &network{}
+	number := map[unitID]int{}
+	base := int32(0)
+	for _, r := range c.sorted() {
+		if r.summary == nil {
+			continue
+		}
+		for p := range r.summary.Parts {
+			part := &r.summary.Parts[p]
+			if len(part.Junctions) == 0 {
+				continue
+			}
+			if r.units[p] == nil {
+				r.units[p] = newUnitModel(part)
+			}
+			id := unitID{r.name, part.Session}
+			number[id] = len(n.units)
+			n.units = append(n.units, unit{id, r, part, r.units[p], base})
+			base += int32(len(part.Junctions))
+		}
+	}
+	for _, t := range c.order {
+		u := usable{tie: t}
+		missing := ""
+		for k, ref := range [2]*msgs.KeyRef{&t.msg.From, &t.msg.To} {
+			r := c.robots[ref.Robot]
+			if r == nil {
+				missing = ref.Robot
+				continue
+			}
+			_, j, ok := r.junction(ref)
+			if !ok {
+				missing = ref.Robot
+				continue
+			}
+			if k == 0 {
+				u.from, u.fromNode = number[unitID{ref.Robot, ref.Session}], j
+			} else {
+				u.to, u.toNode = number[unitID{ref.Robot, ref.Session}], j
+			}
+		}
+		switch {
+		case missing != "":
+			t.judge(c.now, msgs.Open, "waiting for the separator of "+missing, msgs.Evidence{})
+		case u.from == u.to:
+			t.judge(c.now, msgs.Open, "both ends lie in one session: a loop closure belongs to its robot", msgs.Evidence{})
+		default:
+			n.ties = append(n.ties, u)
+		}
+	}
+	return n
+}
+
+// judge sets the verdict and keeps the time when it changed.
+func (t *tie) judge(now int64, v msgs.VerdictKind, reason string, e msgs.Evidence) {
+	if t.finding.Verdict != v {
+		t.finding.SinceNS = now
+	}
+	t.finding.Verdict, t.finding.Reason, t.finding.Evidence = v, reason, e
+}
+
+func newUnitModel(p *msgs.Part) *unitModel {
+	m := &unitModel{poses: make([]lie.SE3, len(p.Junctions))}
+	for i := range p.Junctions {
+		m.poses[i] = lie.FromQuat(p.Junctions[i].Pose.T, p.Junctions[i].Pose.Q)
+	}
+	return m
+}
+
+// cliques adds the factors of u to a batch, its junctions being variables from base on.
+func (u *unit) cliques(to *posegraph.Cliques, base int32) {
+	for i := range u.part.Cliques {
+		c := &u.part.Cliques[i]
+		nodes, at := make([]int32, len(c.Nodes)), make([]lie.SE3, len(c.Nodes))
+		for k, v := range c.Nodes {
+			nodes[k], at[k] = base+int32(v), u.model.poses[v]
+		}
+		to.Add(nodes, at, c.H, c.B)
+	}
+}
+
+// prepare makes the joint covariance of the given junctions, which the evidence asks for pair by pair.
+func (u *unit) prepare(dim int, nodes []int) {
+	m := u.model
+	if m.err != nil {
+		return
+	}
+	fresh := false
+	for _, v := range nodes {
+		if _, ok := m.at[v]; !ok {
+			fresh = true
+		}
+	}
+	if !fresh {
+		return
+	}
+	g := posegraph.New(dim, append([]lie.SE3(nil), m.poses...))
+	u.cliques(g.AddCliques(), 0)
+	anchors := g.Anchors()
+	solver, err := posegraph.NewSolver(g, anchors, sparse.Options{})
+	if err != nil {
+		m.err = err
+		return
+	}
+	m.at = make(map[int]int, len(nodes))
+	variables := make([]int32, len(nodes))
+	for i, v := range nodes {
+		m.at[v], variables[i] = i, int32(v)
+	}
+	m.joint, m.err = solver.Joint(variables)
+}
+
+// relative returns the covariance of X_i^-1 X_j in its own tangent by the unit's summary alone, 6 x 6: with A = Ad((X_i^-1
+// X_j)^-1), C = S_jj - A S_ij - S_ji A' + A S_ii A'.
+func (m *unitModel) relative(dim, i, j int) (out [36]float64) {
+	p := m.poses[j].Between(m.poses[i])
+	full := p.Adjoint()
+	active := []int{0, 1, 2, 3, 4, 5}
+	if dim == 3 {
+		active = []int{0, 1, 5}
+	}
+	d, n := dim, dim*len(m.at)
+	a := make([]float64, d*d)
+	for r, x := range active {
+		for c, y := range active {
+			a[r*d+c] = full[6*x+y]
+		}
+	}
+	s := func(u, v, r, c int) float64 { return m.joint[(m.at[u]*d+r)*n+m.at[v]*d+c] }
+	as := make([]float64, d*d) // A S_ij
+	ai := make([]float64, d*d) // A S_ii
+	for r := 0; r < d; r++ {
+		for c := 0; c < d; c++ {
+			for k := 0; k < d; k++ {
+				as[r*d+c] += a[r*d+k] * s(i, j, k, c)
+				ai[r*d+c] += a[r*d+k] * s(i, i, k, c)
+			}
+		}
+	}
+	for r, x := range active {
+		for c, y := range active {
+			v := s(j, j, r, c) - as[r*d+c] - as[c*d+r]
+			for k := 0; k < d; k++ {
+				v += ai[r*d+k] * a[c*d+k]
+			}
+			out[6*x+y] = v
+		}
+	}
+	return out
+}
+
+// widen embeds a Dim x Dim matrix of a tie into 6 x 6.
+func widen(m []float64, dim int) (out [36]float64) {
+	if dim == 3 {
+		copy(out[:], m)
+		return out
+	}
+	for r, x := range [3]int{0, 1, 5} {
+		for c, y := range [3]int{0, 1, 5} {
+			out[6*x+y] = m[3*r+c]
+		}
+	}
+	return out
+}
+
+// invert inverts the active part of a 6 x 6 information matrix by Cholesky; ok is false when it has no full rank.
+func invert(m *[36]float64, dim int) (out [36]float64, ok bool) {
+	active := []int{0, 1, 2, 3, 4, 5}
+	if dim == 2 {
+		active = []int{0, 1, 5}
+	}
+	d := len(active)
+	var l, x [6][6]float64
+	for i := 0; i < d; i++ {
+		for j := 0; j <= i; j++ {
+			v := m[6*active[i]+active[j]]
+			for k := 0; k < j; k++ {
+				v -= l[i][k] * l[j][k]
+			}
+			if i == j {
+				if !(v > 1e-14*m[7*active[i]]) {
+					return out, false
+				}
+				l[i][i] = math.Sqrt(v)
+			} else {
+				l[i][j] = v / l[j][j]
+			}
+		}
+	}
+	for c := 0; c < d; c++ { // L x = e_c
+		for i := c; i < d; i++ {
+			v := 0.0
+			if i == c {
+				v = 1
+			}
+			for k := c; k < i; k++ {
+				v -= l[i][k] * x[k][c]
+			}
+			x[i][c] = v / l[i][i]
+		}
+	}
+	for r := 0; r < d; r++ {
+		for c := 0; c < d; c++ {
+			for k := max(r, c); k < d; k++ {
+				out[6*active[r]+active[c]] += x[k][r] * x[k][c]
+			}
+		}
+	}
+	return out, true
+}

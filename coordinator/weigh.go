@@ -1,0 +1,134 @@
+package coordinator
+
+import (
+	"fmt"
+
+	"selvage/internal/evidence"
+	"selvage/internal/lie"
+	"selvage/msgs"
+)
+
+// weighed is what is believed before the joint solution: which ties are held, which units share a datum, and where their frames
+// lie roughly in it (in the frame of the island's lowest unit).
+type weighed struct {
+	held   []bool    // per usable tie
+	island []int     // per unit
+	start  []lie.SE3 // per unit; nil with HoldAll
+}
+
+// weigh decides which ties to believe.
+func (c *Coordinator) weigh(n *network) weighed {
+	if c.cfg.HoldAll {
+		w := weighed{held: make([]bool, len(n.ties))}
+		for i := range n.ties {
+			w.held[i] = true
+			n.ties[i].judge(c.now, msgs.Held, "taken as true on request", msgs.Evidence{})
+		}
+		w.island = n.islands(w.held)
+		return w
+	}
+	// The evidence sees only junctions that ties touch, in the order of the track.
+	touched := make([]map[int]int, len(n.units)) // junction -> node
+	for u := range touched {
+		touched[u] = map[int]int{}
+	}
+	for i := range n.ties {
+		if t := &n.ties[i]; t.regular {
+			touched[t.from][t.fromNode], touched[t.to][t.toNode] = 0, 0
+		}
+	}
+	units := make([]evidence.Unit, len(n.units))
+	for u := range units {
+		units[u] = n.units[u].evidence(c.width(), touched[u])
+	}
+	var judged []int
+	for i := range n.ties {
+		t := &n.ties[i]
+		switch {
+		case !t.regular:
+			t.judge(c.now, msgs.Open, "measures too little of a pose to be weighed", msgs.Evidence{})
+		case n.units[t.from].model.err != nil || n.units[t.to].model.err != nil:
+			t.judge(c.now, msgs.Open, "the map of one of its robots does not hold together", msgs.Evidence{})
+		default:
+			judged = append(judged, i)
+		}
+	}
+	ties := make([]evidence.Tie, len(judged))
+	for k, i := range judged {
+		t := &n.ties[i]
+		ties[k] = evidence.Tie{
+			From: evidence.End{Unit: t.from, Node: touched[t.from][t.fromNode]},
+			To:   evidence.End{Unit: t.to, Node: touched[t.to][t.toNode]}, Z: t.z, Cov: t.cov,
+		}
+	}
+	r := evidence.Decide(units, ties, c.cfg.Evidence)
+	w := weighed{held: make([]bool, len(n.ties)), island: r.Island, start: r.DatumFromUnit}
+	for k, i := range judged {
+		f := &r.Ties[k]
+		e := msgs.Evidence{Statistic: f.Statistic, DoF: f.DoF, Places: f.Places, Margin: float64(f.Margin)}
+		verdict := msgs.Open
+		switch f.Verdict {
+		case evidence.Held:
+			verdict = msgs.Held
+			w.held[i] = true
+		case evidence.Refused:
+			verdict = msgs.Refused
+		}
+		n.ties[i].judge(c.now, verdict, f.Reason, e)
+	}
+	return w
+}
+
+// evidence describes a unit by the junctions that ties touch; it numbers them in node.
+func (u *unit) evidence(width int, node map[int]int) evidence.Unit {
+	var nodes []int
+	for j := range u.part.Junctions {
+		if _, ok := node[j]; ok {
+			node[j] = len(nodes)
+			nodes = append(nodes, j)
+		}
+	}
+	u.prepare(width, nodes)
+	e := evidence.Unit{Name: u.id.robot}
+	if len(u.robot.summary.Parts) > 1 {
+		e.Name = fmt.Sprintf("%s session %d", u.id.robot, u.id.session)
+	}
+	for _, j := range nodes {
+		e.Poses = append(e.Poses, u.model.poses[j])
+		e.TravelM = append(e.TravelM, u.part.Junctions[j].TravelM)
+	}
+	e.Covariance = func(i, j int) [36]float64 { return u.model.relative(width, nodes[i], nodes[j]) }
+	return e
+}
+
+// islands numbers the sets of units that held ties connect, in the order of their lowest unit.
+func (n *network) islands(held []bool) []int {
+	parent := make([]int, len(n.units))
+	for i := range parent {
+		parent[i] = i
+	}
+	find := func(i int) int {
+		for parent[i] != i {
+			i = parent[i]
+		}
+		return i
+	}
+	for i := range n.ties {
+		if !held[i] {
+			continue
+		}
+		a, b := find(n.ties[i].from), find(n.ties[i].to)
+		parent[max(a, b)] = min(a, b)
+	}
+	count := 0
+	island := make([]int, len(n.units))
+	for i := range island {
+		if r := find(i); r == i {
+			island[i] = count
+			count++
+		} else {
+			island[i] = island[r]
+		}
+	}
+	return island
+}
