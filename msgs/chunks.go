@@ -62,7 +62,8 @@ func Split(payload []byte, version uint64, slot Slot) (chunks [][]byte, head []b
 // Assembler puts the summaries of one robot together again. It takes the messages of the summary subjects in any order, as
 // often as they come, and follows the newest head only.
 //
-// It holds at most the chunks of both slots, 2 MaxSummary bytes.
+// It holds at most the chunks of both slots, 2 MaxSummary bytes. Versions only rise within a journal; a robot that comes
+// with a new one needs a new assembler.
 type Assembler struct {
 	slots map[Slot]map[int]chunk
 	head  *pb.SummaryHead // the newest, until its summary is complete

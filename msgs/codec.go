@@ -220,6 +220,9 @@ func (x *Want) takeLists(m *pb.Want) error {
 	if len(m.KeySessions) != n || len(m.KeyByStamp) != n {
 		return wrong("keys", [3]int{len(m.KeySessions), len(m.KeyByStamp), n}, "as many sessions as flags as steps")
 	}
+	if n > 0 {
+		x.Keys = make([]KeyRef, n)
+	}
 	var id, stamp int64
 	for i, step := range m.KeySteps {
 		k := KeyRef{Robot: m.Robot, Session: m.KeySessions[i], ByStamp: m.KeyByStamp[i]}
@@ -230,7 +233,7 @@ func (x *Want) takeLists(m *pb.Want) error {
 			id += step
 			k.ID = id
 		}
-		x.Keys = append(x.Keys, k)
+		x.Keys[i] = k
 	}
 	if len(m.GapSteps)%2 != 0 {
 		return wrong("gaps", len(m.GapSteps), "an even number of steps")

@@ -104,6 +104,37 @@ func TestTiesAreKeptOncePerRobot(t *testing.T) {
 	expect(t, got, message{"up.f.r1.tie", "third"})
 }
 
+// A stream of ties that is full refuses the next one, and drops none.
+func TestFullStreamRefuses(t *testing.T) {
+	s, ctx := start(t, Options{}), deadline(t)
+	base := join(t, s, "base")
+	if err := base.Prepare(ctx, "f", "r1", "r2"); err != nil {
+		t.Fatal(err)
+	}
+	const subject, size = "up.f.r1.tie", 1 << 20
+	stored := 0
+	for ; stored <= tieQuota/size; stored++ {
+		if _, err := base.Publish(ctx, subject, fmt.Sprint(stored), make([]byte, size)); err != nil {
+			break
+		}
+	}
+	if stored < tieQuota/size-1 || stored > tieQuota/size {
+		t.Fatalf("%d ties of 1 MiB were stored in %d MiB", stored, tieQuota>>20)
+	}
+	if _, err := base.Publish(ctx, "up.f.r2.tie", "0", make([]byte, size)); err != nil {
+		t.Fatal("another robot is kept out:", err)
+	}
+	got, h := inbox()
+	stop, err := base.Replay(ctx, TieStream("f", "r1"), h)
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer stop()
+	for range stored {
+		expect(t, got, message{subject, string(make([]byte, size))})
+	}
+}
+
 func TestReaderComesBackToWhatItRefused(t *testing.T) {
 	dir := t.TempDir()
 	s, ctx := start(t, Options{StoreDir: dir}), deadline(t)
@@ -387,9 +418,11 @@ func TestStartRefuses(t *testing.T) {
 		}
 	}
 	s := start(t, Options{})
-	if c, err := s.Connect(ClientOptions{}); err == nil {
-		c.Close()
-		t.Error("a client without a name")
+	for _, name := range []string{"", "a.b", "*", "a b"} {
+		if c, err := s.Connect(ClientOptions{Name: name}); err == nil {
+			c.Close()
+			t.Errorf("a client called %q", name)
+		}
 	}
 }
 

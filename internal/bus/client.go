@@ -2,9 +2,9 @@ package bus
 
 import (
 	"context"
-	"errors"
 	"fmt"
 	"strconv"
+	"strings"
 	"sync"
 	"time"
 
@@ -33,8 +33,8 @@ type Client struct {
 func Dial(url string, o ClientOptions) (*Client, error) { return connect(url, o) }
 
 func connect(url string, o ClientOptions, more ...nats.Option) (*Client, error) {
-	if o.Name == "" {
-		return nil, errors.New("bus: a client needs a name")
+	if o.Name == "" || strings.ContainsAny(o.Name, ".*> \t\r\n") {
+		return nil, fmt.Errorf("bus: client: found name %q, expected a single token of a subject", o.Name)
 	}
 	if o.Warn == nil {
 		o.Warn = func(error) {}

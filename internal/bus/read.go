@@ -14,7 +14,7 @@ import (
 type Handler func(subject string, payload []byte)
 
 // Subscribe hands over what is published on a subject, or a pattern of subjects, from now on. What is published while the
-// link is down is missed. Calling stop ends it.
+// link is down is missed. Calling stop ends it, though a call under way may still finish.
 func (c *Client) Subscribe(pattern string, h Handler) (stop func(), err error) {
 	sub, err := c.nc.Subscribe(pattern, func(m *nats.Msg) { h(m.Subject, m.Data) })
 	if err != nil {
