@@ -96,12 +96,12 @@ func (m *Meta) check(report func(path, found, expected string)) {
 			report("datum.grid", "a grid for a datum that is not level", "level: true, or no grid")
 		}
 	}
+	if len(m.Notes) > maxNotes || !printable(m.Notes, true) {
+		report("notes", fmt.Sprintf("%d bytes", len(m.Notes)), fmt.Sprintf("printable text of at most %d bytes", maxNotes))
+	}
 	if n := len(m.Robots); n == 0 || n > maxRobots {
 		report("robots", fmt.Sprintf("%d robots", n), fmt.Sprintf("1 to %d", maxRobots))
 		return
-	}
-	if len(m.Notes) > maxNotes || !printable(m.Notes, true) {
-		report("notes", fmt.Sprintf("%d bytes", len(m.Notes)), fmt.Sprintf("printable text of at most %d bytes", maxNotes))
 	}
 	seen := make(map[string]string)
 	for i := range m.Robots {

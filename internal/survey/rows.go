@@ -104,12 +104,12 @@ func (t *table) cov(c int) (v Cov) {
 		}
 		v.Sigma[i] = s
 	}
-	any := false
+	correlated := false
 	k := 0
 	for i := range 6 {
 		for j := i + 1; j < 6; j, k = j+1, k+1 {
-			if !t.has(c + 6 + k) {
-				continue
+			if len(t.text(c+6+k)) == 0 {
+				continue // absent means none
 			}
 			r, ok := t.float(c + 6 + k)
 			switch {
@@ -123,10 +123,10 @@ func (t *table) cov(c int) (v Cov) {
 				sound = false
 			}
 			v.Corr[k] = r
-			any = any || r != 0
+			correlated = correlated || r != 0
 		}
 	}
-	if sound && any {
+	if sound && correlated {
 		if err := v.checkCorrelation(); err != nil {
 			t.fault("c_x_y..c_ry_rz", err.Error(), "one that is positive definite")
 		}

@@ -8,10 +8,8 @@ import (
 	"fmt"
 	"io"
 	"io/fs"
-	"math"
 	"os"
 	"path/filepath"
-	"strconv"
 	"strings"
 )
 
@@ -31,27 +29,26 @@ type table struct {
 	at      []int // of each column: its place in the line, -1 when absent
 
 	file *os.File
-	gz   *gzip.Reader
 	r    *bufio.Reader
 	left int64 // bytes that may still be read
-	line int
 
-	width  int // fields in the header
-	fields [][]byte
-	bad    bool // something is wrong with the current row
-	lost   bool // a row could not be told apart into fields, or the table not be read to its end
+	line   int      // number of the current line, from 1
+	width  int      // fields in the header
+	fields [][]byte // of the current row, valid until the next
+	bad    bool     // something is wrong with the current row
+	lost   bool     // a row could not be told apart into fields, or the table not be read to its end
 }
 
 // openTable opens root/name or root/name.gz and reads its header line. It
 // returns nil and no error when there is nothing to read rows from: the file
 // does not exist and is optional, or the sink has been told what is wrong.
 func openTable(root, name string, columns []column, optional bool, s *sink) (*table, error) {
-	plain := filepath.Join(root, filepath.FromSlash(name))
-	hasPlain, err := isFile(plain)
+	path := filepath.Join(root, filepath.FromSlash(name))
+	hasPlain, err := isFile(path)
 	if err != nil {
 		return nil, err
 	}
-	hasGz, err := isFile(plain + ".gz")
+	hasGz, err := isFile(path + ".gz")
 	if err != nil {
 		return nil, err
 	}
@@ -65,24 +62,23 @@ func openTable(root, name string, columns []column, optional bool, s *sink) (*ta
 		}
 		return nil, nil
 	case hasGz:
-		plain += ".gz"
+		path += ".gz"
 		name += ".gz"
 	}
-	f, err := os.Open(plain)
+	f, err := os.Open(path)
 	if err != nil {
 		return nil, fmt.Errorf("survey: %w", err)
 	}
 	t := &table{name: name, sink: s, columns: columns, file: f, left: maxTableBytes}
+	var source io.Reader = f
 	if hasGz {
-		t.gz, err = gzip.NewReader(bufio.NewReaderSize(f, 64<<10))
+		source, err = gzip.NewReader(bufio.NewReaderSize(f, 64<<10))
 		if err != nil {
 			t.close()
 			return nil, t.ioError(err)
 		}
-		t.r = bufio.NewReaderSize(t.gz, maxLineBytes)
-	} else {
-		t.r = bufio.NewReaderSize(f, maxLineBytes)
 	}
+	t.r = bufio.NewReaderSize(source, maxLineBytes)
 	if ok, err := t.header(); err != nil || !ok {
 		t.close()
 		return nil, err
@@ -156,9 +152,6 @@ func (t *table) readLine() ([]byte, error) {
 	if n := len(b); n > 0 && b[n-1] == '\r' {
 		b = b[:n-1]
 	}
-	if b == nil {
-		b = []byte{}
-	}
 	return b, nil
 }
 
@@ -217,9 +210,6 @@ func (t *table) header() (bool, error) {
 	}
 	return !t.bad, nil
 }
-
-// has reports whether the table has column c.
-func (t *table) has(c int) bool { return t.at[c] >= 0 }
 
 // next goes to the next row whose fields can be told apart. Empty lines are
 // passed over.
@@ -309,63 +299,4 @@ func trim(f []byte) []byte {
 		f = f[:len(f)-1]
 	}
 	return f
-}
-
-// text returns the field in column c, "" when the table has no such column. It
-// is valid until the next row.
-func (t *table) text(c int) []byte {
-	if i := t.at[c]; i >= 0 {
-		return t.fields[i]
-	}
-	return nil
-}
-
-// int64 returns the integer in column c and whether it is one.
-func (t *table) int64(c int) (int64, bool) {
-	v, err := strconv.ParseInt(string(t.text(c)), 10, 64)
-	if err != nil {
-		t.faultAt(c, quote(string(t.text(c))), "an integer of 64 bits")
-	}
-	return v, err == nil
-}
-
-// stamp returns the integer in column c, which may be empty or absent.
-func (t *table) stamp(c int) (ns int64, has bool) {
-	if len(t.text(c)) == 0 {
-		return 0, false
-	}
-	return t.int64(c)
-}
-
-// session returns the session number in column c and whether it is one.
-func (t *table) session(c int) (uint32, bool) {
-	v, err := strconv.ParseUint(string(t.text(c)), 10, 32)
-	if err != nil {
-		t.faultAt(c, quote(string(t.text(c))), "an integer from 0 to 4294967295")
-	}
-	return uint32(v), err == nil
-}
-
-// float returns the number in column c and whether it is one: decimal and
-// finite.
-func (t *table) float(c int) (float64, bool) {
-	f := t.text(c)
-	v, ok := parseFloat(f)
-	if !ok {
-		t.faultAt(c, quote(string(f)), "a finite decimal number")
-	}
-	return v, ok
-}
-
-func parseFloat(f []byte) (float64, bool) {
-	if len(f) == 1 && '0' <= f[0] && f[0] <= '9' { // most fields of most tables
-		return float64(f[0] - '0'), true
-	}
-	for _, b := range f {
-		if ('0' > b || b > '9') && b != '.' && b != '-' && b != '+' && b != 'e' && b != 'E' {
-			return 0, false
-		}
-	}
-	v, err := strconv.ParseFloat(string(f), 64)
-	return v, err == nil && !math.IsInf(v, 0)
 }
