@@ -47,9 +47,16 @@ func falsify(sc *Scenario, s *site, tracks []*track, n int, seed uint64) (found 
 	wrong := falseCount(n, share)
 	grouped := int(math.Round(float64(wrong) * f.Clustered / share))
 	rng := stream(seed, "false ties/clusters")
+	where := make([]*places, len(tracks))
+	for r, t := range tracks {
+		where[r] = newPlaces(sc.Ties.RevisitRange, t)
+		for k := range t.pose {
+			where[r].enter(t, r, k)
+		}
+	}
 	for len(found) < grouped {
 		size := min(f.ClusterSize, grouped-len(found))
-		group := lookAlike(sc, s, tracks, size, rng)
+		group := lookAlike(sc, s, tracks, where, size, rng)
 		if group == nil {
 			break
 		}
@@ -85,7 +92,7 @@ func twoOf(rng *rand.Rand, n int) (a, b int) {
 // the one track onto the other. In a site that repeats itself the motion is a shift by whole repeats, and any place that it
 // brings together may join; elsewhere the ties follow each other along the corridor. It gives up, with nil, when many draws
 // have found no cluster of that size.
-func lookAlike(sc *Scenario, s *site, tracks []*track, size int, rng *rand.Rand) []sighting {
+func lookAlike(sc *Scenario, s *site, tracks []*track, where []*places, size int, rng *rand.Rand) []sighting {
 	for range 400 {
 		a, b := twoOf(rng, len(tracks))
 		ta, tb := tracks[a], tracks[b]
@@ -110,7 +117,7 @@ func lookAlike(sc *Scenario, s *site, tracks []*track, size int, rng *rand.Rand)
 			}
 			g = ta.pose[i].Mul(z).Mul(tb.pose[j].Inv())
 		}
-		if group := along(sc, a, b, ta, tb, i, &g, size, s.shift > 0, rng); group != nil {
+		if group := along(sc, a, b, ta, tb, where[b], i, &g, size, s.shift > 0, rng); group != nil {
 			return group
 		}
 	}
@@ -119,17 +126,14 @@ func lookAlike(sc *Scenario, s *site, tracks []*track, size int, rng *rand.Rand)
 
 // along collects the ties of a cluster: from keyframe i of track a onwards, at each spacing, the keyframe of track b that the
 // wrong motion g puts nearest.
-func along(sc *Scenario, a, b int, ta, tb *track, i int, g *lie.SE3, size int, skip bool, rng *rand.Rand) (group []sighting) {
+func along(sc *Scenario, a, b int, ta, tb *track, onB *places, i int, g *lie.SE3, size int, skip bool, rng *rand.Rand) (group []sighting) {
 	f := &sc.FalseTies
 	c := sc.Ties.Revisit.cov(sc.Dimension())
 	gap := minGap(sc)
 	if skip {
 		gap = 0 // the shift is the error
 	}
-	moved := make([][3]float64, len(tb.pose))
-	for j := range tb.pose {
-		moved[j] = g.Apply(tb.pose[j].T)
-	}
+	back := g.Inv()
 	next, missed := ta.travel[i], 0.0
 	lastB := math.Inf(1)
 	for k := i; k < len(ta.pose) && len(group) < size; k++ {
@@ -137,11 +141,16 @@ func along(sc *Scenario, a, b int, ta, tb *track, i int, g *lie.SE3, size int, s
 			continue
 		}
 		j, best := -1, sc.Ties.RevisitRange
-		for q := range moved {
-			d := distance(ta.pose[k].T, moved[q])
-			away := math.Abs(tb.travel[q] - lastB)
-			if d < best && away >= 0.5*f.ClusterSpacing && (skip || len(group) == 0 || away < 4*f.ClusterSpacing) && distance(ta.pose[k].T, tb.pose[q].T) > gap {
-				j, best = q, d
+		for _, cell := range onB.index.around(back.Apply(ta.pose[k].T)) {
+			for _, id := range cell {
+				q := onB.key[id]
+				away := math.Abs(tb.travel[q] - lastB)
+				if away < 0.5*f.ClusterSpacing || !skip && len(group) > 0 && away > 4*f.ClusterSpacing {
+					continue
+				}
+				if d := distance(ta.pose[k].T, g.Apply(tb.pose[q].T)); d < best && distance(ta.pose[k].T, tb.pose[q].T) > gap {
+					j, best = q, d
+				}
 			}
 		}
 		if j < 0 {

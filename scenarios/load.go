@@ -134,7 +134,7 @@ func (d *loader) value(n ast.Node, v reflect.Value, path, most string) {
 	}
 	wrong := func(expected string) {
 		found := n.Type().String()
-		if t := strings.TrimSpace(n.GetToken().Value); ast.Node(n).Type() != ast.MappingType && n.Type() != ast.SequenceType && len(t) < 40 {
+		if t := strings.TrimSpace(n.GetToken().Value); n.Type() != ast.MappingType && n.Type() != ast.SequenceType && len(t) <= 40 {
 			found = strconv.Quote(t)
 		}
 		d.report(at, path, fmt.Sprintf("found %s, expected %s", found, expected))
@@ -194,6 +194,13 @@ func (d *loader) value(n ast.Node, v reflect.Value, path, most string) {
 			case uint64:
 				v.SetFloat(float64(i))
 			}
+		case *ast.StringNode: // 1e2, a number in YAML 1.2 but not to the parser
+			plain := x.Token.Type == token.StringType && strings.Trim(x.Value, "0123456789.eE+-") == ""
+			if f, err := strconv.ParseFloat(x.Value, 64); plain && err == nil {
+				v.SetFloat(f)
+				break
+			}
+			wrong("a number")
 		default:
 			wrong("a number")
 		}
@@ -238,7 +245,6 @@ func (d *loader) integer(n ast.Node, v reflect.Value, wrong func(string)) {
 }
 
 func (d *loader) mapping(values []*ast.MappingValueNode, v reflect.Value, path string) {
-	seen := map[string]bool{}
 	for _, kv := range values {
 		at := kv.Key.GetToken().Position
 		key, ok := kv.Key.(*ast.StringNode)
@@ -248,19 +254,15 @@ func (d *loader) mapping(values []*ast.MappingValueNode, v reflect.Value, path s
 		}
 		name := key.Value
 		f, ok := fieldNamed(v.Type(), name)
-		switch {
-		case !ok:
+		if !ok {
 			d.report(at, join(path, name), "unknown field, expected one of "+strings.Join(fieldNames(v.Type()), ", "))
-		case seen[name]:
-			d.report(at, join(path, name), "stands twice, expected once")
-		default:
-			if _, empty := kv.Value.(*ast.NullNode); empty {
-				d.report(at, join(path, name), "is empty, expected a value (or leave the field out)")
-				break
-			}
-			d.value(kv.Value, v.FieldByIndex(f.Index), join(path, name), f.Tag.Get("most"))
+			continue
 		}
-		seen[name] = true
+		if _, empty := kv.Value.(*ast.NullNode); empty {
+			d.report(at, join(path, name), "is empty, expected a value (or leave the field out)")
+			continue
+		}
+		d.value(kv.Value, v.FieldByIndex(f.Index), join(path, name), f.Tag.Get("most"))
 	}
 }
 

@@ -51,7 +51,7 @@ type MineSpec struct {
 	Drifts int `yaml:"drifts" range:"[0, 60]"`
 	// Distance of neighbouring drifts.
 	DriftSpacing float64 `yaml:"drift_spacing_m" unit:"m" range:"[15, 100]"`
-	// Cross-cuts that meet a drift; 0 lets them grow with the fleet (8 for 6 robots).
+	// Cross-cuts that meet a drift; 2 or more; 0 lets them grow with the fleet (8 for 6 robots).
 	CrossCuts int `yaml:"cross_cuts" range:"[0, 80]"`
 	// Distance of neighbouring cross-cuts.
 	CrossCutSpacing float64 `yaml:"cross_cut_spacing_m" unit:"m" range:"[15, 100]"`
@@ -77,7 +77,7 @@ type StoreSpec struct {
 
 // WoodSpec sizes a wood: tracks between random clearings over hills.
 type WoodSpec struct {
-	// Clearings in which tracks meet; 0 lets them grow with the fleet (60 for 6 robots).
+	// Clearings in which tracks meet; 4 or more; 0 lets them grow with the fleet (60 for 6 robots).
 	Clearings int `yaml:"clearings" range:"[0, 1200]"`
 	// Typical distance of neighbouring clearings.
 	Spacing float64 `yaml:"spacing_m" unit:"m" range:"[25, 150]"`
@@ -252,6 +252,12 @@ func (sc *Scenario) rules(report func(path, message string)) {
 	}
 	if s := sc.Site.Store; sc.Site.Kind == "store" && s.Width > s.Pitch-0.4 {
 		report("site.store.width_m", "leaves less than 0.4 m for the racks, expected pitch_m - 0.4 or less")
+	}
+	if sc.Site.Mine.CrossCuts == 1 {
+		report("site.mine.cross_cuts", "found 1, expected 0 or 2 and more")
+	}
+	if n := sc.Site.Wood.Clearings; n > 0 && n < 4 {
+		report("site.wood.clearings", fmt.Sprintf("found %d, expected 0 or 4 and more", n))
 	}
 	for i, o := range sc.Radio.Outages {
 		if _, ok := robotNumber(o.Robot); o.Robot != allRobots && (!ok || !sc.hasRobot(o.Robot)) {
