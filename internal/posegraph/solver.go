@@ -339,7 +339,7 @@ func (c Covariance) Across(slot Slot, dst []float64) {
 	case slot == 0:
 		clear(dst[:d*d])
 	case slot > 0:
-		copy(dst, c.m.Off(int(slot-1))[:d*d])
+		copy(dst, c.m.Off(int(slot - 1))[:d*d])
 	default:
 		m := c.m.Off(int(-slot - 1))
 		for i := 0; i < d; i++ {
@@ -348,6 +348,24 @@ func (c Covariance) Across(slot Slot, dst []float64) {
 			}
 		}
 	}
+}
+
+// Step takes one plain Gauss-Newton step, whatever it does to the cost, if it promises a decrease of F below limit; else it
+// leaves the values alone and reports false.
+func (s *Solver) Step(limit float64) (decrease float64, taken bool) {
+	s.Linearise()
+	if err := s.factor.FactoriseSolve(s.now.Matrix, s.now.Gradient, s.step); err != nil {
+		return 0, false
+	}
+	for i, g := range s.now.Gradient {
+		decrease += g * s.step[i] / 2
+	}
+	if !(decrease < limit) {
+		return decrease, false
+	}
+	s.advance()
+	s.g.Values.Poses, s.next = s.next, s.g.Values.Poses
+	return decrease, true
 }
 
 // damp adds lambda times the diagonal; undamp restores it.
