@@ -63,6 +63,17 @@ func CliqueBytes(dim, k int) int {
 // An error names the term or pose at fault: wrong sizes, numbers that are not finite, a pose that its measurements leave
 // undetermined.
 func Condense(dim, n int, factors []Quadratic, separators []int32) (*Condensed, error) {
+	return condenseAt(dim, n, nil, factors, separators)
+}
+
+// CondenseAt is [Condense] for the graph with the given poses, those at which its terms were linearised. Knowing them, it keeps all
+// digits where measurements of very different strength meet, such as the odometry of a standing robot beside a drive: a
+// block that elimination leaves small against what it was is taken from H N = 0 instead.
+func CondenseAt(dim int, poses []lie.SE3, factors []Quadratic, separators []int32) (*Condensed, error) {
+	return condenseAt(dim, len(poses), poses, factors, separators)
+}
+
+func condenseAt(dim, n int, poses []lie.SE3, factors []Quadratic, separators []int32) (*Condensed, error) {
 	if dim != 3 && dim != 6 {
 		return nil, fmt.Errorf("partition: tangents of %d numbers, expected 3 or 6", dim)
 	}
@@ -71,7 +82,7 @@ func Condense(dim, n int, factors []Quadratic, separators []int32) (*Condensed, 
 	}
 	o := newOrdering(dim, n, factors, separators)
 	o.run()
-	e := newEliminator(o, dim, factors)
+	e := newEliminator(o, dim, poses, factors)
 	if err := e.run(); err != nil {
 		return nil, err
 	}
@@ -153,8 +164,9 @@ func (c *Condensed) Interior(steps []float64) {
 }
 
 // NullResidual returns the largest |H N| / |H| (largest entries) over the cliques, N the tangents that a common motion of the
-// poses has; poses are those at which the graph was linearised, all n of them. It is zero but for rounding, below 1e-9, when
-// every term is relative and belongs to these poses: a check that costs next to nothing.
+// poses has, |H| that of the clique or of what was condensed into it; poses are those at which the graph was linearised, all n
+// of them. It is zero but for rounding, below 1e-9, when every term is relative and belongs to these poses: a check that
+// costs next to nothing.
 func (c *Condensed) NullResidual(poses []lie.SE3) float64 {
 	if len(poses) != c.n {
 		panic("partition: number of poses")
@@ -171,16 +183,9 @@ func (t *term) nullResidual(d int, poses []lie.SE3) float64 {
 	m := d * len(t.nodes)
 	N := make([]float64, m*d)
 	for k, v := range t.nodes {
-		x := poses[v].Between(poses[t.nodes[0]])
-		if d == 6 {
-			a := x.Adjoint()
-			copy(N[k*d*d:], a[:])
-		} else {
-			a := lie.Planar(&x).Adjoint()
-			copy(N[k*d*d:], a[:])
-		}
+		motion(d, poses[v], poses[t.nodes[0]], N[k*d*d:][:d*d])
 	}
-	product, largest := 0.0, 0.0
+	product, largest := 0.0, t.scale
 	for i := 0; i < m; i++ {
 		var row [6]float64
 		for j := 0; j < m; j++ {
@@ -198,6 +203,18 @@ func (t *term) nullResidual(d int, poses []lie.SE3) float64 {
 		return 0
 	}
 	return product / largest
+}
+
+// motion writes Ad(X^-1 Y), D x D: the tangent at X of a motion given by its tangent at Y.
+func motion(d int, x, y lie.SE3, out []float64) {
+	z := x.Between(y)
+	if d == 6 {
+		a := z.Adjoint()
+		copy(out, a[:])
+		return
+	}
+	a := lie.Planar(&z).Adjoint()
+	copy(out, a[:])
 }
 
 func abs(x float64) float64 {

@@ -3,12 +3,15 @@ package partition
 import (
 	"fmt"
 	"math"
+
+	"selvage/internal/lie"
 )
 
 // term is one quadratic term during elimination. Of h only the lower triangle of D x D blocks in the order of nodes is used.
 type term struct {
 	nodes []int32
 	h, b  []float64
+	scale float64 // the largest number that it came from by subtraction: its rounding is to be judged by that
 }
 
 // at returns entry i, j of the symmetric matrix.
@@ -32,6 +35,7 @@ type elimination struct {
 // eliminator carries out the steps of an ordering on the numbers.
 type eliminator struct {
 	d     int
+	poses []lie.SE3 // nil when not known
 	plan  *ordering
 	terms []term // h is nil when merged or not yet made
 	owned []bool // h and b are ours, not the caller's
@@ -39,14 +43,16 @@ type eliminator struct {
 	steps []elimination
 	kept  arena[float64]
 	pool  [][][]float64 // free buffers by number of poses: h, then b
+	full  []float64     // diagonal of a sum before elimination
 }
 
 // ofPivot is the position of the pose being eliminated.
 const ofPivot = -1
 
-func newEliminator(plan *ordering, dim int, factors []Quadratic) *eliminator {
+func newEliminator(plan *ordering, dim int, poses []lie.SE3, factors []Quadratic) *eliminator {
 	e := &eliminator{
 		d:     dim,
+		poses: poses,
 		plan:  plan,
 		terms: make([]term, len(plan.nodes)),
 		owned: make([]bool, len(plan.nodes)),
@@ -55,7 +61,7 @@ func newEliminator(plan *ordering, dim int, factors []Quadratic) *eliminator {
 	}
 	for i := range factors {
 		if len(factors[i].Nodes) > 1 {
-			e.terms[i] = term{factors[i].Nodes, factors[i].H, factors[i].B}
+			e.terms[i] = term{nodes: factors[i].Nodes, h: factors[i].H, b: factors[i].B}
 		}
 	}
 	for _, a := range plan.absorbed {
@@ -92,7 +98,16 @@ func (e *eliminator) eliminate(s *step) error {
 	}
 	solveRows(d, x.l, x.y)
 	solveRows(d, x.l, x.z)
+	e.full = e.full[:0]
+	for i := 0; i < d*k; i++ {
+		v := sum.h[i*(d*k+1)]
+		e.full = append(e.full, v)
+		sum.scale = max(sum.scale, v)
+	}
 	subtractOuter(d, k, sum.h, x.y)
+	if e.poses != nil {
+		e.mend(&sum)
+	}
 	for i := range sum.b {
 		row := x.y[i*d:][:d]
 		for j, z := range x.z {
@@ -113,10 +128,55 @@ func (e *eliminator) eliminate(s *step) error {
 	return nil
 }
 
+// lost is the share of a diagonal entry below which the rest of a subtraction is thought to have lost too many digits.
+const lost = 1e-3
+
+// mend restores the diagonal blocks of a sum that the subtraction has left small against what they were, and so full of rounding:
+// H N = 0 gives them from the other blocks of their rows, H_kk = -sum_j H_kj Ad(X_j^-1 X_k), which did not suffer. The idea is that
+// of Grassmann, Taksar and Heyman, "Regenerative analysis and steady state distributions for Markov chains", Operations
+// Research 33(5), 1985.
+func (e *eliminator) mend(sum *term) {
+	d := e.d
+	m := d * len(sum.nodes)
+	if m == d {
+		return // nothing remains of it
+	}
+	for k, u := range sum.nodes {
+		worn := false
+		for i := k * d; i < (k+1)*d; i++ {
+			worn = worn || sum.h[i*(m+1)] < lost*e.full[i]
+		}
+		if !worn {
+			continue
+		}
+		var block, ad [36]float64
+		for j, w := range sum.nodes {
+			if j == k {
+				continue
+			}
+			motion(d, e.poses[w], e.poses[u], ad[:d*d])
+			for r := 0; r < d; r++ {
+				for s := 0; s < d; s++ {
+					h := sum.at(d, k*d+r, j*d+s)
+					for c := 0; c < d; c++ {
+						block[r*d+c] -= h * ad[s*d+c]
+					}
+				}
+			}
+		}
+		for r := 0; r < d; r++ {
+			for c := 0; c < d; c++ {
+				sum.h[(k*d+r)*m+k*d+c] = (block[r*d+c] + block[c*d+r]) / 2
+			}
+		}
+	}
+}
+
 // gather adds term t to the sum over the neighbours, to H_vv (in x.l), H_nv (in x.y) and b_v (in x.z).
 func (e *eliminator) gather(t, sum *term, x *elimination) {
 	d := e.d
 	stride, wide := d*len(t.nodes), d*len(sum.nodes)
+	sum.scale = max(sum.scale, t.scale)
 	for a, u := range t.nodes {
 		pa := int(e.pos[u])
 		if pa == ofPivot {
@@ -183,7 +243,7 @@ func (e *eliminator) buffer(nodes []int32) term {
 	} else {
 		x = make([]float64, m*m+m)
 	}
-	return term{nodes, x[:m*m], x[m*m:]}
+	return term{nodes: nodes, h: x[:m*m], b: x[m*m:]}
 }
 
 func (e *eliminator) release(i int32) {

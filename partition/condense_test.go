@@ -8,6 +8,7 @@ import (
 	"testing"
 
 	"github.com/google/go-cmp/cmp"
+	"gonum.org/v1/gonum/mat"
 	"pgregory.net/rapid"
 
 	"selvage/internal/lie"
@@ -53,6 +54,12 @@ func TestCondensingIsExact(t *testing.T) {
 		d, n := g.dim, len(g.poses)
 		terms := g.linearise()
 		c := condense(t, g, terms, separators)
+		if rapid.Bool().Draw(t, "poses known") {
+			var err error
+			if c, err = CondenseAt(d, g.poses, terms, separators); err != nil {
+				t.Fatal(err)
+			}
+		}
 
 		H, b := dense(d, n, terms)
 		S, s := schur(d, n, H, b, c.Junctions)
@@ -165,6 +172,46 @@ func sameCliques(t *rapid.T, a, b *Condensed, tolerance float64) {
 		}
 		if e := largest(diff(p.B, q.B)) / gradient; !(e < tolerance) {
 			t.Fatalf("b of %v is off by %.2g", p.Nodes, e)
+		}
+	}
+}
+
+// A robot that stands still reports odometry of any strength. Along a chain, covariances add up without a subtraction:
+// C <- Ad C Ad' + Omega^-1 in the frame of the last pose. The pair over both ends must be the inverse of the sum, however
+// strong some links are.
+func TestStrongLinksBesideWeakOnes(t *testing.T) {
+	for _, strong := range []float64{1e2, 1e6, 1e10, 1e16} {
+		rng := rand.New(rand.NewPCG(1, 2))
+		g := walk(6, []int{41}, 0, rng)
+		C := mat.NewDense(6, 6, nil)
+		for i := range g.links {
+			l := &g.links[i]
+			l.z = g.poses[l.from].Between(g.poses[l.to])
+			clear(l.omega)
+			back := l.z.Inv()
+			ad := back.Adjoint()
+			var moved mat.Dense
+			moved.Mul(mat.NewDense(6, 6, ad[:]), C)
+			C.Mul(&moved, mat.NewDense(6, 6, ad[:]).T())
+			for k := 0; k < 6; k++ {
+				w := 100 * (1 + rng.Float64())
+				if i%3 == 0 || i > 30 {
+					w *= strong / 100
+				}
+				l.omega[7*k] = w
+				C.Set(k, k, C.At(k, k)+1/w)
+			}
+		}
+		var want mat.Dense
+		if err := want.Inverse(C); err != nil {
+			t.Fatal(err)
+		}
+		c, err := CondenseAt(6, g.poses, g.linearise(), []int32{0, 40})
+		if err != nil {
+			t.Fatal(err)
+		}
+		if e := apart(c.Cliques[0].H, want.RawMatrix().Data); !(e < 2e-13) {
+			t.Errorf("links of %.0g beside 100: off by %.2g", strong, e)
 		}
 	}
 }
