@@ -15,7 +15,7 @@ type atlas struct {
 	first []int // per unit: its first vertex; one more at the end
 	node  []int // per vertex
 	unit  []int
-	doors [][]int // per vertex: ties
+	doors [][]door // per vertex
 	dist  []float64
 	via   []int // tie crossed to reach the vertex, -1 along the track, -2 from the start
 	prev  []int
@@ -23,6 +23,9 @@ type atlas struct {
 	seen  []int // stamp of the search that reached a vertex
 	stamp int
 }
+
+// door is a tie and the vertex behind it.
+type door struct{ tie, to int }
 
 type entry struct {
 	cost float64
@@ -47,13 +50,13 @@ func newAtlas(b *body, ties []int) *atlas {
 		}
 	}
 	n := len(a.node)
-	a.doors = make([][]int, n)
+	a.doors = make([][]door, n)
 	a.dist, a.via, a.prev, a.seen = make([]float64, n), make([]int, n), make([]int, n), make([]int, n)
 	for _, t := range ties {
 		l := &b.links[t]
 		p, q := a.find(l.a, l.i), a.find(l.b, l.j)
-		a.doors[p] = append(a.doors[p], t)
-		a.doors[q] = append(a.doors[q], t)
+		a.doors[p] = append(a.doors[p], door{t, q})
+		a.doors[q] = append(a.doors[q], door{t, p})
 	}
 	return a
 }
@@ -98,16 +101,10 @@ func (a *atlas) walk(l *link, avoid func(t int) bool) ([]int, bool) {
 				a.reach(v, e.cost+math.Abs(x[a.node[v]]-x[a.node[e.v]]), -1, e.v)
 			}
 		}
-		for _, t := range a.doors[e.v] {
-			if avoid(t) {
-				continue
+		for _, d := range a.doors[e.v] {
+			if !avoid(d.tie) {
+				a.reach(d.to, e.cost+tieCost, d.tie, e.v)
 			}
-			m := &a.b.links[t]
-			v := a.find(m.a, m.i)
-			if v == e.v {
-				v = a.find(m.b, m.j)
-			}
-			a.reach(v, e.cost+tieCost, t, e.v)
 		}
 	}
 	if end < 0 {

@@ -47,7 +47,7 @@ func (f *fleet) judge(c *config) {
 		h := &f.hs[k]
 		c.pa[k], c.qb[k] = c.at[h.a].Apply(h.pa), c.at[h.b].Apply(h.qb)
 		c.holds[k] = false
-		if c.comp[h.a] != c.comp[h.b] || distance(c.pa[k], c.qb[k]) > h.shift {
+		if c.comp[h.a] != c.comp[h.b] || far(&c.pa[k], &c.qb[k], h.shift) {
 			continue
 		}
 		if h.turned(c.at[h.a].R.T().Mul(c.at[h.b].R)) {
@@ -108,13 +108,26 @@ func (f *fleet) support(c *config, k int, among []int) int {
 // forth tells whether m would be satisfied if its second unit were moved by d.
 func (f *fleet) forth(c *config, m int, d *lie.SE3) bool {
 	h := &f.hs[m]
-	return distance(d.Apply(c.qb[m]), c.pa[m]) <= h.shift && h.turned(c.at[h.a].R.T().Mul(d.R).Mul(c.at[h.b].R))
+	return !apartAfter(d, &c.qb[m], &c.pa[m], h.shift) && h.turned(c.at[h.a].R.T().Mul(d.R).Mul(c.at[h.b].R))
 }
 
 // back tells whether m would be satisfied if its first unit were moved by d.
 func (f *fleet) back(c *config, m int, d *lie.SE3) bool {
 	h := &f.hs[m]
-	return distance(d.Apply(c.pa[m]), c.qb[m]) <= h.shift && h.turned(d.R.Mul(c.at[h.a].R).T().Mul(c.at[h.b].R))
+	return !apartAfter(d, &c.pa[m], &c.qb[m], h.shift) && h.turned(d.R.Mul(c.at[h.a].R).T().Mul(c.at[h.b].R))
+}
+
+func far(p, q *[3]float64, limit float64) bool {
+	x, y, z := p[0]-q[0], p[1]-q[1], p[2]-q[2]
+	return x*x+y*y+z*z > limit*limit
+}
+
+// apartAfter tells whether p, moved by d, is more than limit away from q. It is what most of the search's time goes to.
+func apartAfter(d *lie.SE3, p, q *[3]float64, limit float64) bool {
+	x := d.R[0]*p[0] + d.R[1]*p[1] + d.R[2]*p[2] + d.T[0] - q[0]
+	y := d.R[3]*p[0] + d.R[4]*p[1] + d.R[5]*p[2] + d.T[1] - q[1]
+	z := d.R[6]*p[0] + d.R[7]*p[1] + d.R[8]*p[2] + d.T[2] - q[2]
+	return x*x+y*y+z*z > limit*limit
 }
 
 // shift moves component from by d and makes it part of component to.
@@ -135,8 +148,31 @@ func (f *fleet) best() config {
 		c.at[u], c.comp[u] = lie.Identity(), u
 	}
 	f.grow(&c)
-	f.improve(&c, -1, nil)
+	f.settle(&c)
 	return c
+}
+
+// slack is how much weight a first move may lose for the sake of those that follow it.
+const slack = 4
+
+// settle improves c by single moves, then by moves that first lose a little, until neither helps.
+func (f *fleet) settle(c *config) {
+	f.improve(c, -1, nil)
+again:
+	for _, r := range f.opposition(c) {
+		f.load(c)
+		m := f.move(c, r.cluster, r.gain, slack, nil)
+		if m.loss > slack {
+			continue
+		}
+		next := f.apply(c, r.k, m.moved)
+		f.deepen(c, &next, -1)
+		if next.score > c.score {
+			*c = next
+			f.improve(c, -1, nil)
+			goto again
+		}
+	}
 }
 
 // improve moves parts of the fleet as long as the score rises. A hypothesis given as broken stays unsatisfied. If near is given,
@@ -297,62 +333,102 @@ func (f *fleet) apply(c *config, k int, moved []bool) config {
 	return next
 }
 
-// detach returns c with the marked units of one component made a component of their own.
-func (f *fleet) detach(c *config, comp int, moved []bool) config {
-	next := c.clone()
-	fresh := -1
-	for u, m := range moved {
-		if m && c.comp[u] == comp {
-			if fresh < 0 {
-				fresh = u + f.n*(1+comp) // no component is numbered so
-			}
-			next.comp[u] = fresh
+// margins returns, for each hypothesis that c satisfies, by how much c beats the best configuration found in which it does not
+// hold. Above limit it is only known to be no less. The way there may lead over one other configuration that is nearly as good.
+func (f *fleet) margins(c *config, limit int) []int {
+	out := make([]int, len(f.hs))
+	for k := range out {
+		if c.holds[k] {
+			out[k] = limit
 		}
 	}
-	f.judge(&next)
-	return next
+	rs := f.opposition(c)
+	f.lower(out, c, c, rs)
+	for _, next := range f.neighbours(c, rs, limit-1) {
+		f.lower(out, c, &next, f.opposition(&next))
+	}
+	for k := range out {
+		if !c.holds[k] {
+			out[k] = -1
+		}
+	}
+	return out
 }
 
-// margin is by how much c beats the best configuration found in which hypothesis k, which c satisfies, does not hold. It is
-// exact up to limit, as far as the search goes; above, only known to be no less. alone is the cut without k's own pair.
-func (f *fleet) margin(c *config, k, limit int, rivals []rival) (margin int) {
-	h := &f.hs[k]
-	apart := [2]int{h.a, h.b}
-	stay, goes := newSet(f.n).with(h.a), newSet(f.n).with(h.b)
-	reach := limit
-	for _, r := range rivals {
-		reach = max(reach, limit+r.gain)
-	}
-	free := f.cut(stay, goes, reach)
-	margin = min(limit, free)
-	if free <= reach {
-		margin = min(margin, f.deepen(c, f.detach(c, c.comp[h.a], f.moved), k))
-	}
-	for _, r := range rivals {
-		if free-r.gain >= margin || c.comp[f.hs[r.k].a] != c.comp[h.a] {
-			continue
-		}
-		f.load(c)
-		m := f.move(c, r.cluster, r.gain, margin, apart[:])
-		if m.loss > margin {
+// bases bounds how many configurations besides the best one are searched around.
+const bases = 24
+
+// neighbours returns the configurations one move away from c that lose not more than given, the best ones first.
+func (f *fleet) neighbours(c *config, rs []rival, loss int) []config {
+	var ns []config
+	f.load(c)
+	for _, r := range rs {
+		m := f.move(c, r.cluster, r.gain, loss, nil)
+		if m.loss > loss {
 			continue
 		}
 		next := f.apply(c, r.k, m.moved)
-		if next.holds[k] {
-			continue
+		if !slices.ContainsFunc(ns, func(o config) bool { return slices.Equal(o.holds, next.holds) }) {
+			ns = append(ns, next)
 		}
-		margin = min(margin, f.deepen(c, next, k))
 	}
-	f.load(c)
-	return margin
+	slices.SortStableFunc(ns, func(x, y config) int { return cmp.Compare(y.score, x.score) })
+	return ns[:min(len(ns), bases)]
 }
 
-// deepen improves a configuration that breaks k, near to what was moved, and returns by how much c beats it.
-func (f *fleet) deepen(c *config, next config, k int) int {
+// lower brings the margins in out, which are against c, down to what is found around the configuration at.
+func (f *fleet) lower(out []int, c, at *config, rs []rival) {
+	note := func(x *config) {
+		for k := range out {
+			if c.holds[k] && !x.holds[k] {
+				out[k] = min(out[k], c.score-x.score)
+			}
+		}
+	}
+	note(at)
+	lost := c.score - at.score
+	most := 0
+	if len(rs) > 0 {
+		most = rs[0].gain
+	}
+	f.load(at)
+	for k := range f.hs {
+		h := &f.hs[k]
+		if !c.holds[k] || !at.holds[k] {
+			continue
+		}
+		apart := [2]int{h.a, h.b}
+		free := f.cut(newSet(f.n).with(h.a), newSet(f.n).with(h.b), out[k]-lost+slack+most)
+		out[k] = min(out[k], lost+free)
+		for _, r := range rs {
+			most := out[k] - lost + slack
+			if free-r.gain > most {
+				break
+			}
+			if at.comp[f.hs[r.k].a] != at.comp[h.a] {
+				continue
+			}
+			m := f.move(at, r.cluster, r.gain, most, apart[:])
+			if m.loss > most {
+				continue
+			}
+			next := f.apply(at, r.k, m.moved)
+			if next.holds[k] {
+				continue
+			}
+			f.deepen(at, &next, k)
+			f.load(at)
+			note(&next)
+		}
+	}
+}
+
+// deepen improves a configuration that breaks k, near to where it differs from c.
+func (f *fleet) deepen(c, next *config, k int) {
 	near := make([]bool, f.n)
 	changed := 0
 	for u := range near {
-		near[u] = next.comp[u] != c.comp[u] || next.at[u] != c.at[u]
+		near[u] = next.at[u] != c.at[u]
 		if near[u] {
 			changed++
 		}
@@ -362,9 +438,10 @@ func (f *fleet) deepen(c *config, next config, k int) int {
 			near[u] = !near[u]
 		}
 	}
-	near[f.hs[k].a], near[f.hs[k].b] = true, true
-	f.improve(&next, k, near)
-	return c.score - next.score
+	if k >= 0 {
+		near[f.hs[k].a], near[f.hs[k].b] = true, true
+	}
+	f.improve(next, k, near)
 }
 
 // rival is an unsatisfied hypothesis and those that go along with it.

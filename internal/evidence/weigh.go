@@ -18,21 +18,18 @@ func (f *fleet) weigh(pairs int) weighed {
 	c := f.best()
 	if f.demote(&c) {
 		f.judge(&c)
-		f.improve(&c, -1, nil)
+		f.settle(&c)
 	}
-	n := len(f.hs)
-	w := weighed{c, make([]int, n), make([]bool, n), make([]float64, n), make([]bool, n)}
 	limit := max(o.CycleMargin, o.BridgeMargin)
-	rs := f.opposition(&c)
+	n := len(f.hs)
+	w := weighed{c, f.margins(&c, limit), make([]bool, n), make([]float64, n), make([]bool, n)}
 	f.load(&c)
 	for k := range f.hs {
 		h := &f.hs[k]
 		w.expected[k] = expected(pairs, max(h.count, h.weight), h.weight, h.chance)
 		if !c.holds[k] {
-			w.margin[k] = -1
 			continue
 		}
-		w.margin[k] = f.margin(&c, k, limit, rs)
 		w.cycle[k] = f.confirmed(h)
 		need := o.BridgeMargin
 		if w.cycle[k] {
