@@ -203,7 +203,7 @@ func splitBuckets(label []int32, count int) (first, members []int32) {
 	return first, members
 }
 
-// components numbers the connected components and returns their sizes.
+// components returns the sizes of the connected components.
 func (g *splitGraph) components() (sizes []int) {
 	seen := make([]bool, g.n)
 	stack := make([]int32, 0, g.n)

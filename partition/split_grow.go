@@ -62,8 +62,7 @@ func (r *splitRefiner) bisect(p, q, shareP, shareQ, limit int32, rng *rand.Rand)
 	for try := range splitTries {
 		seed := members[rng.IntN(len(members))]
 		if try%2 == 0 {
-			s.stamp += 2
-			flood := s.flood(seed)
+			flood := s.flood(seed, s.nextStamp(1))
 			seed = flood[len(flood)-1] // far from where it began
 		}
 		r.grow(seed, members, q, target)
@@ -118,14 +117,14 @@ func (r *splitRefiner) grow(seed int32, members []int32, q, target int32) {
 			}
 		}
 	}
-	s.stamp += 2
+	stamp := s.nextStamp(1)
 	most, largest := int32(-1), int32(0)
 	parts := 0
 	for _, v := range members {
-		if s.piece[v] == p && s.seen[v] != s.stamp {
+		if s.piece[v] == p && s.seen[v] != stamp {
 			parts++
 			size := int32(0)
-			for _, u := range s.flood(v) {
+			for _, u := range s.flood(v, stamp) {
 				size += g.weight[u]
 			}
 			if size > largest {
@@ -136,10 +135,10 @@ func (r *splitRefiner) grow(seed int32, members []int32, q, target int32) {
 	if parts <= 1 {
 		return
 	}
-	s.stamp += 2
-	s.flood(most)
+	stamp = s.nextStamp(1)
+	s.flood(most, stamp)
 	for _, v := range members {
-		if s.piece[v] == p && s.seen[v] != s.stamp {
+		if s.piece[v] == p && s.seen[v] != stamp {
 			s.move(v, q)
 		}
 	}
@@ -147,14 +146,14 @@ func (r *splitRefiner) grow(seed int32, members []int32, q, target int32) {
 
 // flood marks with stamp what hangs together with v within its piece, and
 // lists it breadth first. The list is scratch.
-func (s *splitState) flood(v int32) []int32 {
+func (s *splitState) flood(v, stamp int32) []int32 {
 	g, p := s.g, s.piece[v]
 	q := append(s.queue[:0], v)
-	s.seen[v] = s.stamp
+	s.seen[v] = stamp
 	for i := 0; i < len(q); i++ {
 		for _, u := range g.adj[g.start[q[i]]:g.start[q[i]+1]] {
-			if s.piece[u] == p && s.seen[u] != s.stamp {
-				s.seen[u] = s.stamp
+			if s.piece[u] == p && s.seen[u] != stamp {
+				s.seen[u] = stamp
 				q = append(q, u)
 			}
 		}

@@ -1,5 +1,7 @@
 package partition
 
+import "math"
+
 // splitState is an assignment of the vertices of one level to pieces, with
 // everything a move needs kept up to date. Each piece is connected and stays
 // so: only vertices for which detachable holds are moved by the callers.
@@ -24,6 +26,8 @@ type splitState struct {
 	seen    []int32
 	stamp   int32
 	queue   []int32
+	unite   []int32 // what each search of detachable was united with
+	pending []int32 // vertices each search has yet to leave from
 }
 
 // newSplitState takes over piece and limit.
@@ -223,43 +227,68 @@ func (s *splitState) clearGains(from int32) {
 const splitReach = 8192
 
 // detachable reports whether the piece of v stays connected and non-empty
-// without v.
+// without v. Searches spread from all neighbours of v in the piece in turn and
+// unite where they meet; it is proved when one is left, and refuted when one
+// has nowhere to go.
 func (s *splitState) detachable(v int32) bool {
 	g, p := s.g, s.piece[v]
-	s.stamp += 2
-	wanted, reached := s.stamp, s.stamp+1
-	*s.effort -= int64(g.start[v+1] - g.start[v])
-	near := 0 // neighbours of v in its piece not reached yet
-	first := int32(-1)
-	for _, u := range g.adj[g.start[v]:g.start[v+1]] {
+	neighbours := g.adj[g.start[v]:g.start[v+1]]
+	*s.effort -= int64(len(neighbours))
+	base := s.nextStamp(int32(len(neighbours)) + 1)
+	q := s.queue[:0]
+	s.unite, s.pending = s.unite[:0], s.pending[:0]
+	for _, u := range neighbours {
 		if s.piece[u] == p {
-			s.seen[u] = wanted
-			near++
-			first = u
-		}
-	}
-	if near <= 1 {
-		return near == 1
-	}
-	s.seen[v], s.seen[first] = reached, reached
-	near--
-	q := append(s.queue[:0], first)
-	for i := 0; i < len(q) && len(q) < splitReach; i++ {
-		*s.effort -= int64(g.start[q[i]+1] - g.start[q[i]])
-		for _, u := range g.adj[g.start[q[i]]:g.start[q[i]+1]] {
-			if s.piece[u] != p || s.seen[u] == reached {
-				continue
-			}
-			if s.seen[u] == wanted {
-				if near--; near == 0 {
-					s.queue = q
-					return true
-				}
-			}
-			s.seen[u] = reached
+			x := int32(len(q))
+			s.seen[u] = base + x
+			s.unite = append(s.unite, x)
+			s.pending = append(s.pending, 1)
 			q = append(q, u)
 		}
 	}
+	left := len(q)
+	for i := 0; left > 1 && i < len(q) && len(q) < splitReach; i++ {
+		x := s.united(s.seen[q[i]] - base)
+		*s.effort -= int64(g.start[q[i]+1] - g.start[q[i]])
+		for _, u := range g.adj[g.start[q[i]]:g.start[q[i]+1]] {
+			if s.piece[u] != p || u == v {
+				continue
+			}
+			if s.seen[u] < base {
+				s.seen[u] = base + x
+				s.pending[x]++
+				q = append(q, u)
+			} else if y := s.united(s.seen[u] - base); y != x {
+				s.unite[y] = x
+				s.pending[x] += s.pending[y]
+				left--
+			}
+		}
+		s.pending[x]--
+		if s.pending[x] == 0 && left > 1 {
+			break
+		}
+	}
 	s.queue = q
-	return false
+	return left == 1
+}
+
+// united returns the search that x was united with.
+func (s *splitState) united(x int32) int32 {
+	for s.unite[x] != x {
+		s.unite[x] = s.unite[s.unite[x]]
+		x = s.unite[x]
+	}
+	return x
+}
+
+// nextStamp returns the first of count numbers above all in seen.
+func (s *splitState) nextStamp(count int32) int32 {
+	if s.stamp > math.MaxInt32-count {
+		clear(s.seen)
+		s.stamp = 0
+	}
+	first := s.stamp + 1
+	s.stamp += count
+	return first
 }
