@@ -57,11 +57,28 @@ func (e FieldErrors) orNil() error {
 	return e
 }
 
-// maxFile bounds a scenario file, maxErrors what is reported about one.
+// maxFile bounds a scenario file and maxOpen the brackets open at once in it, because the parser takes time that grows with the
+// square of either; maxErrors bounds what is reported.
 const (
-	maxFile   = 256 << 10
+	maxFile   = 32 << 10
+	maxOpen   = 32
 	maxErrors = 100
 )
+
+// deepest returns how many brackets are open at once, those in texts counted with the others.
+func deepest(data []byte) (most int) {
+	open := 0
+	for _, c := range data {
+		switch c {
+		case '[', '{':
+			open++
+			most = max(most, open)
+		case ']', '}':
+			open = max(0, open-1)
+		}
+	}
+	return most
+}
 
 // Load reads a scenario from YAML laid over [Default]; name stands in error messages. Unknown fields are errors; all errors
 // are reported at once, as [FieldErrors].
@@ -69,6 +86,10 @@ func Load(data []byte, name string) (*Scenario, error) {
 	d := loader{file: name, places: map[string]*token.Position{}}
 	if len(data) > maxFile {
 		d.report(nil, "", fmt.Sprintf("the file has %d bytes, expected at most %d", len(data), maxFile))
+		return nil, d.errors
+	}
+	if n := deepest(data); n > maxOpen {
+		d.report(nil, "", fmt.Sprintf("%d brackets are open at once, expected at most %d", n, maxOpen))
 		return nil, d.errors
 	}
 	file, err := parser.ParseBytes(data, 0)

@@ -106,6 +106,7 @@ func TestBadFiles(t *testing.T) {
 		{"duration_s: 100\n", "x.yaml: fleet.start_spread_s: is more than half of duration_s, expected at most that"},
 		{"duration_s: 28000\nfleet: {robots: 60, keyframe_spacing_m: 0.25}\n", "x.yaml:2:41: fleet.keyframe_spacing_m: makes up to 6720000 keyframes in all, expected at most 1000000"},
 		{"seed: 1\n---\nseed: 2\n", "x.yaml: the file holds 2 documents, expected one"},
+		{strings.Repeat("[", 33), "x.yaml: 33 brackets are open at once, expected at most 32"},
 		{"- 1\n", "x.yaml:1:1: found Sequence, expected fields: name, title, seed, duration_s, site, fleet, front_end, ties, false_ties, radio"},
 		{"radio: {loss: 0.1\n", "x.yaml:1:8: not YAML: could not find flow mapping end token '}'"},
 	} {
