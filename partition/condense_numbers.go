@@ -2,7 +2,6 @@ package partition
 
 import (
 	"fmt"
-	"math"
 
 	"selvage/internal/lie"
 )
@@ -86,12 +85,21 @@ func (e *eliminator) eliminate(s *step) error {
 	d, k := e.d, len(s.neighbours)
 	out := e.kept.take(d*d + d + k*d*d)
 	x := elimination{pose: s.pose, nodes: s.neighbours, l: out[:d*d], z: out[d*d:][:d], y: out[d*d+d:]}
-	sum := e.buffer(s.neighbours)
 	e.pos[s.pose] = ofPivot
+	var sum term
+	whole := e.wholeOf(s) // its sum begins as a copy: late in a large graph most steps only shrink one large term
+	if whole >= 0 {
+		sum = e.shrink(&e.terms[whole], &x)
+		e.release(whole)
+	} else {
+		sum = e.buffer(s.neighbours)
+	}
 	e.place(&sum)
 	for _, t := range s.merged {
-		e.gather(&e.terms[t], &sum, &x)
-		e.release(t)
+		if t != whole {
+			e.gather(&e.terms[t], &sum, &x)
+			e.release(t)
+		}
 	}
 	if !factorPivot(d, x.l) {
 		return fmt.Errorf("partition: pose %d is not determined by its measurements", s.pose)
@@ -172,6 +180,50 @@ func (e *eliminator) mend(sum *term) {
 	}
 }
 
+// wholeOf returns a merged term over the pivot and all its neighbours, in ascending order, or -1.
+func (e *eliminator) wholeOf(s *step) int32 {
+	for _, t := range s.merged {
+		if e.owned[t] && len(e.terms[t].nodes) == len(s.neighbours)+1 {
+			return t
+		}
+	}
+	return -1
+}
+
+// shrink returns a copy of t over x.nodes, all its poses but the pivot, and takes H_vv, H_nv and b_v from it.
+func (e *eliminator) shrink(t *term, x *elimination) term {
+	d := e.d
+	m := d * len(x.nodes)
+	wide := m + d
+	p := 0
+	for t.nodes[p] != x.pose {
+		p++
+	}
+	p *= d // the pivot's first row
+	sum := e.dirty(x.nodes)
+	sum.scale = t.scale
+	copy(sum.b, t.b[:p])
+	copy(sum.b[p:], t.b[p+d:])
+	copy(x.z, t.b[p:p+d])
+	for i := 0; i < p; i++ {
+		copy(sum.h[i*m:][:(i/d+1)*d], t.h[i*wide:])
+	}
+	for i := 0; i < d; i++ {
+		row := t.h[(p+i)*wide:][:p+d]
+		for j, v := range row[:p] { // H_nv is H_vn transposed
+			x.y[j*d+i] = v
+		}
+		copy(x.l[i*d:][:d], row[p:])
+	}
+	for i := p; i < m; i++ {
+		row := t.h[(i+d)*wide:][:(i/d+2)*d]
+		copy(sum.h[i*m:], row[:p])
+		copy(x.y[i*d:][:d], row[p:])
+		copy(sum.h[i*m+p:], row[p+d:])
+	}
+	return sum
+}
+
 // gather adds term t to the sum over the neighbours, to H_vv (in x.l), H_nv (in x.y) and b_v (in x.z).
 func (e *eliminator) gather(t, sum *term, x *elimination) {
 	d := e.d
@@ -230,6 +282,14 @@ func (e *eliminator) own(i int32) {
 
 // buffer returns a zero term over nodes.
 func (e *eliminator) buffer(nodes []int32) term {
+	t := e.dirty(nodes)
+	clear(t.h)
+	clear(t.b)
+	return t
+}
+
+// dirty returns a term over nodes with any numbers in it.
+func (e *eliminator) dirty(nodes []int32) term {
 	k := len(nodes)
 	for len(e.pool) <= k {
 		e.pool = append(e.pool, nil)
@@ -239,7 +299,6 @@ func (e *eliminator) buffer(nodes []int32) term {
 	if free := e.pool[k]; len(free) > 0 {
 		x = free[len(free)-1]
 		e.pool[k] = free[:len(free)-1]
-		clear(x)
 	} else {
 		x = make([]float64, m*m+m)
 	}
@@ -256,88 +315,4 @@ func (e *eliminator) release(i int32) {
 func (e *eliminator) recycle(t term) {
 	k := len(t.nodes)
 	e.pool[k] = append(e.pool[k], t.h[:cap(t.h)])
-}
-
-func add(dst, src []float64) {
-	for i, v := range src {
-		dst[i] += v
-	}
-}
-
-// addBlock adds a D x D block.
-func addBlock(d int, dst []float64, stride int, src []float64, srcStride int) {
-	for i := 0; i < d; i++ {
-		add(dst[i*stride:][:d], src[i*srcStride:][:d])
-	}
-}
-
-func addTransposed(d int, dst []float64, stride int, src []float64, srcStride int) {
-	for i := 0; i < d; i++ {
-		for j, v := range src[i*srcStride:][:d] {
-			dst[j*stride+i] += v
-		}
-	}
-}
-
-// factorPivot replaces the symmetric D x D matrix by its Cholesky factor (lower triangle, diagonal inverted). It reports false
-// when a pivot vanishes against its diagonal, that is, when the matrix is singular to working precision.
-func factorPivot(d int, a []float64) bool {
-	for j := 0; j < d; j++ {
-		row := a[j*d:][:d]
-		full := row[j]
-		p := full
-		for _, v := range row[:j] {
-			p -= v * v
-		}
-		if !(p > 1e-14*full) || math.IsInf(p, 0) {
-			return false
-		}
-		inv := 1 / math.Sqrt(p)
-		row[j] = inv
-		for i := j + 1; i < d; i++ {
-			below := a[i*d:][:d]
-			v := below[j]
-			for k, x := range row[:j] {
-				v -= x * below[k]
-			}
-			below[j] = v * inv
-		}
-	}
-	return true
-}
-
-// solveRows replaces each row y of rows by y L^-T, that is, by (L^-1 y')'.
-func solveRows(d int, l, rows []float64) {
-	for ; len(rows) > 0; rows = rows[d:] {
-		y := rows[:d]
-		for j := range y {
-			lj := l[j*d:][:d]
-			v := y[j]
-			for k, x := range y[:j] {
-				v -= x * lj[k]
-			}
-			y[j] = v * lj[j]
-		}
-	}
-}
-
-// subtractOuter subtracts Y Y' from the lower triangle of blocks of h, k poses wide; Y has D columns.
-func subtractOuter(d, k int, h, y []float64) {
-	m := d * k
-	for i := 0; i < m; i++ {
-		row := h[i*m:][:(i/d+1)*d]
-		if d == 6 {
-			a := (*[6]float64)(y[6*i:])
-			for j := range row {
-				b := (*[6]float64)(y[6*j:])
-				row[j] -= a[0]*b[0] + a[1]*b[1] + a[2]*b[2] + a[3]*b[3] + a[4]*b[4] + a[5]*b[5]
-			}
-			continue
-		}
-		a := (*[3]float64)(y[3*i:])
-		for j := range row {
-			b := (*[3]float64)(y[3*j:])
-			row[j] -= a[0]*b[0] + a[1]*b[1] + a[2]*b[2]
-		}
-	}
 }

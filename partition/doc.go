@@ -19,6 +19,10 @@
 // with k0 the reference and Xbar the poses at which the graph was linearised, a clique depends on poses relative to each
 // other only. The frame in which the robot works never enters.
 //
+// [Condense] needs no poses. Where they are at hand, [CondenseAt] is the better choice: with them it loses no digits between
+// measurements of very different strength. [Condensed.Interior] goes the other way, from a step of the junctions to the step of all
+// poses, and [Condensed.NullResidual] checks H N = 0.
+//
 // Elimination and the term for term assembly follow George, "Nested dissection of a regular finite element mesh", SIAM J.
 // Numerical Analysis 10(2), 1973, and Duff and Reid, "The multifrontal solution of indefinite sparse symmetric linear
 // equations", ACM Trans. Mathematical Software 9(3), 1983.
