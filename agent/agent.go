@@ -23,8 +23,10 @@ type Config struct {
 	TrafficShare float64
 	// HeartbeatNS is the period of heartbeats.
 	HeartbeatNS int64
-	// RetryNS is the first waiting time before something unanswered is sent again; it doubles up to sixteen times.
+	// RetryNS is the first waiting time before a tie that is not safe is sent again; it doubles up to sixteen times.
 	RetryNS int64
+	// AnswerNS is the same for a summary without a correction; it should exceed the time the base takes between solutions.
+	AnswerNS int64
 }
 
 const second = int64(1e9)
@@ -34,6 +36,7 @@ func DefaultConfig(fleet, robot string, dim int) Config {
 	return Config{
 		Fleet: fleet, Robot: robot, Dim: dim,
 		PublishNS: 10 * second, SettleNS: 20 * second, TrafficShare: 0.4, HeartbeatNS: 15 * second, RetryNS: 10 * second,
+		AnswerNS: 90 * second,
 	}
 }
 

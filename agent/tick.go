@@ -11,7 +11,7 @@ func (a *Agent) tick(nowNS int64) ([]Publish, error) {
 	var out []Publish
 	for i := range a.records {
 		r := &a.records[i]
-		if nowNS-r.sentNS >= a.wait(r.tries) {
+		if nowNS-r.sentNS >= a.cfg.RetryNS<<min(r.tries, 4) {
 			r.sentNS = nowNS
 			r.tries++
 			out = append(out, Publish{msgs.KindTie, r.payload, r.number})
@@ -26,7 +26,7 @@ func (a *Agent) tick(nowNS int64) ([]Publish, error) {
 		a.payload, a.answered, a.tries, a.sentNS = payload, false, 0, nowNS
 		a.rawAtSend, a.wanted, a.relinear = a.rawNow, false, false
 		out = append(out, Publish{msgs.KindSummary, payload, a.version})
-	case a.payload != nil && !a.answered && nowNS-a.sentNS >= a.wait(a.tries):
+	case a.payload != nil && !a.answered && nowNS-a.sentNS >= a.cfg.AnswerNS<<min(a.tries, 4):
 		a.tries++
 		a.sentNS = nowNS
 		out = append(out, Publish{msgs.KindSummary, a.payload, a.version})
@@ -41,9 +41,6 @@ func (a *Agent) tick(nowNS int64) ([]Publish, error) {
 	}
 	return out, nil
 }
-
-// wait is the time before the try after the given number of repeats.
-func (a *Agent) wait(tries int) int64 { return a.cfg.RetryNS << min(tries, 4) }
 
 // due tells whether a new summary is to be made now.
 func (a *Agent) due(nowNS int64) bool {

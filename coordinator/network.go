@@ -2,6 +2,7 @@ package coordinator
 
 import (
 	"math"
+	"slices"
 
 	"selvage/internal/lie"
 	"selvage/internal/posegraph"
@@ -34,10 +35,11 @@ type usable struct {
 
 // unitModel is what a part of a summary says, decoded once for each summary.
 type unitModel struct {
-	poses []lie.SE3 // session_from_junction
-	joint []float64 // joint covariance of the nodes in jointOf, on demand
-	at    map[int]int
-	err   error // the part does not determine its own shape
+	poses []lie.SE3               // session_from_junction
+	nodes []int                   // junctions that joint covers, ascending
+	joint []float64               // their joint covariance, on demand
+	pairs map[[2]int]*[36]float64 // covariances of relative poses already asked for
+	err   error                   // the part does not determine its own shape
 }
 
 // layout collects the network. Ties with a missing end are left open with that said.
@@ -129,13 +131,7 @@ func (u *unit) prepare(dim int, nodes []int) {
 	if m.err != nil {
 		return
 	}
-	fresh := false
-	for _, v := range nodes {
-		if _, ok := m.at[v]; !ok {
-			fresh = true
-		}
-	}
-	if !fresh {
+	if slices.Equal(m.nodes, nodes) {
 		return
 	}
 	g := posegraph.New(dim, append([]lie.SE3(nil), m.poses...))
@@ -146,50 +142,54 @@ func (u *unit) prepare(dim int, nodes []int) {
 		m.err = err
 		return
 	}
-	m.at = make(map[int]int, len(nodes))
 	variables := make([]int32, len(nodes))
 	for i, v := range nodes {
-		m.at[v], variables[i] = i, int32(v)
+		variables[i] = int32(v)
 	}
+	m.nodes, m.pairs = nodes, map[[2]int]*[36]float64{}
 	m.joint, m.err = solver.Joint(variables)
 }
 
-// relative returns the covariance of X_i^-1 X_j in its own tangent by the unit's summary alone, 6 x 6: with A = Ad((X_i^-1
-// X_j)^-1), C = S_jj - A S_ij - S_ji A' + A S_ii A'.
-func (m *unitModel) relative(dim, i, j int) (out [36]float64) {
-	p := m.poses[j].Between(m.poses[i])
+// relative returns the covariance of X_i^-1 X_j in its own tangent by the unit's summary alone, 6 x 6, i and j numbering the nodes
+// of prepare: with A = Ad((X_i^-1 X_j)^-1), C = S_jj - A S_ij - S_ji A' + A S_ii A'.
+func (m *unitModel) relative(dim, i, j int) [36]float64 {
+	if known := m.pairs[[2]int{i, j}]; known != nil {
+		return *known
+	}
+	var out [36]float64
+	p := m.poses[m.nodes[j]].Between(m.poses[m.nodes[i]])
 	full := p.Adjoint()
 	active := []int{0, 1, 2, 3, 4, 5}
 	if dim == 3 {
 		active = []int{0, 1, 5}
 	}
-	d, n := dim, dim*len(m.at)
-	a := make([]float64, d*d)
+	d, n := dim, dim*len(m.nodes)
+	sii, sij, sjj := m.joint[i*d*n+i*d:], m.joint[i*d*n+j*d:], m.joint[j*d*n+j*d:]
+	var a, as, ai [36]float64 // A, A S_ij, A S_ii
 	for r, x := range active {
 		for c, y := range active {
 			a[r*d+c] = full[6*x+y]
 		}
 	}
-	s := func(u, v, r, c int) float64 { return m.joint[(m.at[u]*d+r)*n+m.at[v]*d+c] }
-	as := make([]float64, d*d) // A S_ij
-	ai := make([]float64, d*d) // A S_ii
 	for r := 0; r < d; r++ {
-		for c := 0; c < d; c++ {
-			for k := 0; k < d; k++ {
-				as[r*d+c] += a[r*d+k] * s(i, j, k, c)
-				ai[r*d+c] += a[r*d+k] * s(i, i, k, c)
+		for k := 0; k < d; k++ {
+			v := a[r*d+k]
+			for c := 0; c < d; c++ {
+				as[r*d+c] += v * sij[k*n+c]
+				ai[r*d+c] += v * sii[k*n+c]
 			}
 		}
 	}
 	for r, x := range active {
 		for c, y := range active {
-			v := s(j, j, r, c) - as[r*d+c] - as[c*d+r]
+			v := sjj[r*n+c] - as[r*d+c] - as[c*d+r]
 			for k := 0; k < d; k++ {
 				v += ai[r*d+k] * a[c*d+k]
 			}
 			out[6*x+y] = v
 		}
 	}
+	m.pairs[[2]int{i, j}] = &out
 	return out
 }
 

@@ -97,7 +97,7 @@ func (u *unit) evidence(width int, node map[int]int) evidence.Unit {
 		e.Poses = append(e.Poses, u.model.poses[j])
 		e.TravelM = append(e.TravelM, u.part.Junctions[j].TravelM)
 	}
-	e.Covariance = func(i, j int) [36]float64 { return u.model.relative(width, nodes[i], nodes[j]) }
+	e.Covariance = func(i, j int) [36]float64 { return u.model.relative(width, i, j) }
 	return e
 }
 
