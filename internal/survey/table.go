@@ -168,6 +168,9 @@ func (t *table) header() (bool, error) {
 		return false, nil
 	}
 	line = bytes.TrimPrefix(line, []byte("\xef\xbb\xbf"))
+	if t.line == 1 && bytes.HasPrefix(line, []byte("# ")) { // the note of results
+		return t.header()
+	}
 	if !t.split(line) {
 		return false, nil
 	}
