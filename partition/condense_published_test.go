@@ -9,6 +9,7 @@ import (
 	"path/filepath"
 	"slices"
 	"strconv"
+	"strings"
 	"testing"
 
 	"gonum.org/v1/gonum/mat"
@@ -142,6 +143,15 @@ func TestPublishedGraphs(t *testing.T) {
 			}
 			t.Logf("%d poses: %d junctions, %d cliques of up to %d, %d bytes; H N %.1g, backward error %.1g", n, len(c.Junctions), len(c.Cliques), widest, c.Bytes, c.NullResidual(g.poses), backward)
 		})
+	}
+}
+
+// A third of the matrices of this set are not positive semidefinite as published: refused, with the pose at which it shows.
+func TestIndefiniteGraphIsRefused(t *testing.T) {
+	g := publishedGraph(t, "cubicle")
+	_, err := CondenseAt(g.dim, g.poses, g.linearise(), []int32{0, 5000})
+	if err == nil || !strings.Contains(err.Error(), "is not determined by its measurements") {
+		t.Errorf("error %v", err)
 	}
 }
 
