@@ -88,12 +88,16 @@ var publishedNames = []string{
 
 func BenchmarkAnalyse(b *testing.B) {
 	for _, name := range publishedNames {
-		b.Run(name, func(b *testing.B) {
-			p := published(b, name)
-			for b.Loop() {
-				mustAnalyse(b, p, Options{Ordering: MinimumDegree})
-			}
-		})
+		for k, ordering := range []string{"auto", "degree", "dissection"} {
+			b.Run(name+"/"+ordering, func(b *testing.B) {
+				p := published(b, name)
+				var s *Symbolic
+				for b.Loop() {
+					s = mustAnalyse(b, p, Options{Ordering: Ordering(k)})
+				}
+				b.ReportMetric(s.Flops()/1e6, "Mflop")
+			})
+		}
 	}
 }
 

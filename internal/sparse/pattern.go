@@ -47,6 +47,24 @@ func (g *graph) order() int { return len(g.weight) }
 
 func (g *graph) neighbours(i int32) []int32 { return g.adj[g.ptr[i]:g.ptr[i+1]] }
 
+// fill sets ptr and adj, which are zero and long enough, from a list of edges.
+func (g *graph) fill(edges [][2]int32) {
+	for _, q := range edges {
+		g.ptr[q[0]+1]++
+		g.ptr[q[1]+1]++
+	}
+	for i := range g.weight {
+		g.ptr[i+1] += g.ptr[i]
+	}
+	next := append([]int32(nil), g.ptr...)
+	for _, q := range edges {
+		g.adj[next[q[0]]] = q[1]
+		next[q[0]]++
+		g.adj[next[q[1]]] = q[0]
+		next[q[1]]++
+	}
+}
+
 // newGraph checks p and turns it into a graph.
 func newGraph(p Pattern) (*graph, error) {
 	n := len(p.Dims)
@@ -66,22 +84,9 @@ func newGraph(p Pattern) (*graph, error) {
 		if q[0] < 0 || q[1] < 0 || int(q[0]) >= n || int(q[1]) >= n || q[0] == q[1] {
 			return nil, fmt.Errorf("sparse: pair %d is (%d, %d), want two different block rows below %d", k, q[0], q[1], n)
 		}
-		g.ptr[q[0]+1]++
-		g.ptr[q[1]+1]++
 	}
-	for i := range n {
-		g.ptr[i+1] += g.ptr[i]
-	}
-	next := make([]int32, n)
-	copy(next, g.ptr)
-	for _, q := range p.Pairs {
-		g.adj[next[q[0]]] = q[1]
-		next[q[0]]++
-		g.adj[next[q[1]]] = q[0]
-		next[q[1]]++
-	}
-	seen := next // reused: seen[j] == i+1 once j was met in row i
-	clear(seen)
+	g.fill(p.Pairs)
+	seen := make([]int32, n) // seen[j] == i+1 once j was met in row i
 	for i := range int32(n) {
 		for _, j := range g.neighbours(i) {
 			if seen[j] == i+1 {

@@ -80,16 +80,10 @@ func Analyse(p Pattern, o Options) (*Symbolic, error) {
 	if err != nil {
 		return nil, err
 	}
-	var order []int32
-	switch o.Ordering {
-	case Auto, MinimumDegree, NestedDissection:
-		order = minimumDegree(g, isLast)
-	default:
+	if o.Ordering < Auto || o.Ordering > NestedDissection {
 		return nil, fmt.Errorf("sparse: unknown ordering %d", o.Ordering)
 	}
-	free := len(order)
-	order = append(order, o.Last...)
-	nodes := newSupernodes(newForest(g, order, free))
+	nodes := newSupernodes(chooseOrder(g, isLast, o))
 
 	s := &Symbolic{last: append([]int32(nil), o.Last...), pairs: append([][2]int32(nil), p.Pairs...)}
 	s.placeMatrix(p)
