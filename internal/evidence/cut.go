@@ -81,3 +81,20 @@ func (f *fleet) cut(stay, goes unitSet, limit int) int {
 	}
 	return total
 }
+
+// bound numbers the units so that those with the same number are bound to each other by more than limit: no cut worth looking
+// at parts them.
+func (f *fleet) bound(limit int) []int {
+	class := make([]int, f.n)
+	for u := range class {
+		class[u] = u
+		for v := 0; v < u; v++ {
+			// Being bound is transitive, so the lowest of each class stands for it.
+			if class[v] == v && f.cut(newSet(f.n).with(u), newSet(f.n).with(v), limit) > limit {
+				class[u] = v
+				break
+			}
+		}
+	}
+	return class
+}

@@ -2,6 +2,7 @@ package evidence
 
 import (
 	"fmt"
+	"math"
 	"math/rand/v2"
 	"os"
 	"strconv"
@@ -22,13 +23,17 @@ func TestFigures(t *testing.T) {
 	if v, err := strconv.Atoi(os.Getenv("DIM")); err == nil {
 		dim = v
 	}
-	kinds := []string{"none", "i10", "i30", "i60", "c10", "c30"}
+	spread := 1.0
+	if v, err := strconv.ParseFloat(os.Getenv("SPREAD"), 64); err == nil {
+		spread = v
+	}
+	kinds := []string{"none", "i10", "i30", "i60", "c10", "c30", "c60"}
 	sum := make([]score, len(kinds))
-	var took [6]time.Duration
+	var took [7]time.Duration
 	runsFalse := make([]int, len(kinds))
 	for seed := 1; seed <= seeds; seed++ {
 		rng := rand.New(rand.NewPCG(uint64(seed), 7))
-		s := simulate(rng, dim, robots, 133, .05)
+		s := simulate(rng, dim, robots, 133, spread*48*math.Sqrt(float64(robots)/6), .05)
 		base := s.trueTies(rng)
 		for k, kind := range kinds {
 			ties := append([]simTie(nil), base...)
@@ -41,6 +46,8 @@ func TestFigures(t *testing.T) {
 				ties = s.independent(rng, ties, .6)
 			case "c10":
 				ties = s.clustered(rng, ties, .1)
+			case "c60":
+				ties = s.clustered(rng, ties, .6)
 			case "c30":
 				ties = s.clustered(rng, ties, .3)
 			}

@@ -159,7 +159,13 @@ const slack = 4
 func (f *fleet) settle(c *config) {
 	f.improve(c, -1, nil)
 again:
-	for _, r := range f.opposition(c) {
+	rs := f.opposition(c, nil)
+	f.load(c)
+	class := f.bound(slack + gainOf(rs))
+	for _, r := range rs {
+		if class[f.hs[r.k].a] == class[f.hs[r.k].b] {
+			continue
+		}
 		f.load(c)
 		m := f.move(c, r.cluster, r.gain, slack, nil)
 		if m.loss > slack {
@@ -335,24 +341,40 @@ func (f *fleet) apply(c *config, k int, moved []bool) config {
 
 // margins returns, for each hypothesis that c satisfies, by how much c beats the best configuration found in which it does not
 // hold. Above limit it is only known to be no less. The way there may lead over one other configuration that is nearly as good.
+// If one better than c turns up, c becomes that and the search starts again.
 func (f *fleet) margins(c *config, limit int) []int {
-	out := make([]int, len(f.hs))
+	for {
+		out, better := f.marginsOf(c, limit)
+		if better == nil {
+			return out
+		}
+		*c = *better
+		f.settle(c)
+	}
+}
+
+func (f *fleet) marginsOf(c *config, limit int) (out []int, better *config) {
+	out = make([]int, len(f.hs))
 	for k := range out {
 		if c.holds[k] {
 			out[k] = limit
 		}
 	}
-	rs := f.opposition(c)
-	f.lower(out, c, c, rs)
+	rs := f.opposition(c, nil)
+	if better = f.lower(out, c, c, rs); better != nil {
+		return nil, better
+	}
 	for _, next := range f.neighbours(c, rs, limit-1) {
-		f.lower(out, c, &next, f.opposition(&next))
+		if better = f.lower(out, c, &next, f.opposition(&next, f.near(c, &next))); better != nil {
+			return nil, better
+		}
 	}
 	for k := range out {
 		if !c.holds[k] {
 			out[k] = -1
 		}
 	}
-	return out
+	return out, nil
 }
 
 // bases bounds how many configurations besides the best one are searched around.
@@ -362,7 +384,11 @@ const bases = 24
 func (f *fleet) neighbours(c *config, rs []rival, loss int) []config {
 	var ns []config
 	f.load(c)
+	class := f.bound(loss + gainOf(rs))
 	for _, r := range rs {
+		if class[f.hs[r.k].a] == class[f.hs[r.k].b] {
+			continue
+		}
 		m := f.move(c, r.cluster, r.gain, loss, nil)
 		if m.loss > loss {
 			continue
@@ -376,8 +402,9 @@ func (f *fleet) neighbours(c *config, rs []rival, loss int) []config {
 	return ns[:min(len(ns), bases)]
 }
 
-// lower brings the margins in out, which are against c, down to what is found around the configuration at.
-func (f *fleet) lower(out []int, c, at *config, rs []rival) {
+// lower brings the margins in out, which are against c, down to what is found around the configuration at. It returns a
+// configuration better than c as soon as it meets one.
+func (f *fleet) lower(out []int, c, at *config, rs []rival) (better *config) {
 	note := func(x *config) {
 		for k := range out {
 			if c.holds[k] && !x.holds[k] {
@@ -387,25 +414,30 @@ func (f *fleet) lower(out []int, c, at *config, rs []rival) {
 	}
 	note(at)
 	lost := c.score - at.score
-	most := 0
-	if len(rs) > 0 {
-		most = rs[0].gain
-	}
 	f.load(at)
+	top := slices.Max(append(out, 0)) - lost + slack
+	class := f.bound(top + gainOf(rs))
+	binds := make([]int, len(rs)) // what holds the units of each rival together
+	for i, r := range rs {
+		h := &f.hs[r.k]
+		if binds[i] = top + r.gain + 1; class[h.a] != class[h.b] {
+			binds[i] = f.cut(newSet(f.n).with(h.a), newSet(f.n).with(h.b), top+r.gain)
+		}
+	}
 	for k := range f.hs {
 		h := &f.hs[k]
-		if !c.holds[k] || !at.holds[k] {
+		if !c.holds[k] || !at.holds[k] || class[h.a] == class[h.b] {
 			continue
 		}
 		apart := [2]int{h.a, h.b}
-		free := f.cut(newSet(f.n).with(h.a), newSet(f.n).with(h.b), out[k]-lost+slack+most)
+		free := f.cut(newSet(f.n).with(h.a), newSet(f.n).with(h.b), top+gainOf(rs))
 		out[k] = min(out[k], lost+free)
-		for _, r := range rs {
+		for i, r := range rs {
 			most := out[k] - lost + slack
 			if free-r.gain > most {
 				break
 			}
-			if at.comp[f.hs[r.k].a] != at.comp[h.a] {
+			if binds[i]-r.gain > most || at.comp[f.hs[r.k].a] != at.comp[h.a] {
 				continue
 			}
 			m := f.move(at, r.cluster, r.gain, most, apart[:])
@@ -418,13 +450,17 @@ func (f *fleet) lower(out []int, c, at *config, rs []rival) {
 			}
 			f.deepen(at, &next, k)
 			f.load(at)
+			if next.score > c.score {
+				return &next
+			}
 			note(&next)
 		}
 	}
+	return nil
 }
 
-// deepen improves a configuration that breaks k, near to where it differs from c.
-func (f *fleet) deepen(c, next *config, k int) {
+// near marks the units that next has elsewhere than c, or the others if these are fewer.
+func (f *fleet) near(c, next *config) []bool {
 	near := make([]bool, f.n)
 	changed := 0
 	for u := range near {
@@ -438,6 +474,12 @@ func (f *fleet) deepen(c, next *config, k int) {
 			near[u] = !near[u]
 		}
 	}
+	return near
+}
+
+// deepen improves a configuration that breaks k, if that is not negative, near to where it differs from c.
+func (f *fleet) deepen(c, next *config, k int) {
+	near := f.near(c, next)
 	if k >= 0 {
 		near[f.hs[k].a], near[f.hs[k].b] = true, true
 	}
@@ -450,12 +492,20 @@ type rival struct {
 	cluster []crossing
 }
 
-// opposition lists the rivals of c, those with most to gain first.
-func (f *fleet) opposition(c *config) []rival {
+// gainOf is the most that a rival gains.
+func gainOf(rs []rival) int {
+	if len(rs) == 0 {
+		return 0
+	}
+	return rs[0].gain
+}
+
+// opposition lists the rivals of c, those with most to gain first; only those of units marked near, if that is given.
+func (f *fleet) opposition(c *config, near []bool) []rival {
 	var rs []rival
 	for k := range f.hs {
 		h := &f.hs[k]
-		if c.holds[k] || h.weight == 0 || c.comp[h.a] != c.comp[h.b] {
+		if c.holds[k] || h.weight == 0 || c.comp[h.a] != c.comp[h.b] || near != nil && !near[h.a] && !near[h.b] {
 			continue
 		}
 		cs, gain := f.cluster(c, k)

@@ -49,7 +49,7 @@ func newBody(units []Unit, ties []Tie, o Options) *body {
 		if n == 0 {
 			continue
 		}
-		b.give[i] = math.Min(0.15, o.BiasYaw*(t.TravelM[n-1]-t.TravelM[0])/math.Sqrt(12))
+		b.give[i] = math.Min(0.2, o.BiasYaw*(t.TravelM[n-1]-t.TravelM[0])/math.Sqrt(12))
 		var xx, yy, xy float64
 		b.scatter(i, &xx, &xy, &yy)
 		b.reach[i] = math.Sqrt(xx + yy)

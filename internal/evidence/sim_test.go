@@ -31,9 +31,8 @@ type simTie struct {
 	true bool
 }
 
-func simulate(rng *rand.Rand, dim, robots, nodes int, biasDeg float64) simFleet {
+func simulate(rng *rand.Rand, dim, robots, nodes int, side, biasDeg float64) simFleet {
 	s := simFleet{dim: dim}
-	side := 48 * math.Sqrt(float64(robots)/6)
 	cols := int(side/spacing) + 1
 	for r := 0; r < robots; r++ {
 		truth := roam(rng, dim, cols, nodes)

@@ -22,7 +22,8 @@ func (f *fleet) weigh(pairs int) weighed {
 	}
 	limit := max(o.CycleMargin, o.BridgeMargin)
 	n := len(f.hs)
-	w := weighed{c, f.margins(&c, limit), make([]bool, n), make([]float64, n), make([]bool, n)}
+	w := weighed{config{}, f.margins(&c, limit), make([]bool, n), make([]float64, n), make([]bool, n)}
+	w.c = c
 	f.load(&c)
 	for k := range f.hs {
 		h := &f.hs[k]
