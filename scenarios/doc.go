@@ -9,7 +9,8 @@
 //
 //	site       corridors as a graph of centre lines: drifts of a mine, aisles of a store, tracks in a wood
 //	walk       each robot goes from goal to goal around its home, keeps to its side of the corridor, turns smoothly
-//	front end  odometry with noise at each step and a heading bias, loop closures where the robot comes back
+//	front end  odometry with noise at each step and a heading bias, loop closures where the robot comes back;
+//	           a front end that restarts begins a new session
 //	ties       where robots meet and where one passes the track of another
 //	false ties single ones between unrelated places, and clusters that agree with each other as look-alike places do
 //

@@ -1,8 +1,10 @@
 package scenarios
 
 import (
+	"fmt"
 	"math"
 	"math/rand/v2"
+	"slices"
 
 	"selvage/internal/lie"
 	"selvage/internal/survey"
@@ -28,17 +30,51 @@ func measure(rng *rand.Rand, a, b *lie.SE3, c *survey.Cov) lie.SE3 {
 // poseOf writes a pose as the survey folder has it.
 func poseOf(x *lie.SE3) survey.Pose { return survey.Pose{T: x.T, Q: x.Quat()} }
 
-// session is the number of the one session of each robot.
-const session = 1
+// leg is what one session of a front end sees of a robot's track.
+type leg struct {
+	robot   int
+	session uint32
+	first   int // row of its first keyframe among those of the robot
+	track   track
+}
 
-// record lets the front end of one robot measure along its track: keyframes dead reckoned from the odometry in the frame of
-// the first, one odometry step between neighbours, then the closures.
-func record(sc *Scenario, id string, t *track, seed uint64) (survey.Robot, error) {
+// legs cuts the track of a robot where its front end restarts.
+func legs(sc *Scenario, robot int, t *track) (cut []leg) {
+	var at []int64
+	for _, r := range sc.FrontEnd.Restarts {
+		if r.Robot == allRobots || r.Robot == robotID(robot) {
+			at = append(at, seconds(r.At))
+		}
+	}
+	slices.Sort(at)
+	first := 0
+	for k := 1; k <= len(t.pose); k++ {
+		restart := false
+		for k < len(t.pose) && len(at) > 0 && at[0] <= t.atNS[k] {
+			restart = restart || at[0] > t.atNS[k-1]
+			at = at[1:]
+		}
+		if restart || k == len(t.pose) {
+			part := track{t.pose[first:k], t.atNS[first:k], t.travel[first:k]}
+			cut = append(cut, leg{robot, uint32(len(cut) + 1), first, part})
+			first = k
+		}
+	}
+	return cut
+}
+
+// record lets the front end measure along a leg and adds what it finds to the rows of the robot: keyframes dead reckoned from
+// the odometry in the frame of the first, one odometry step between neighbours, then the closures.
+func record(sc *Scenario, r *survey.Robot, l *leg, seed uint64) error {
 	f := &sc.FrontEnd
 	dim := sc.Dimension()
-	rng := stream(seed, "odometry/"+id)
+	t := &l.track
+	part := r.ID
+	if l.session > 1 {
+		part = fmt.Sprintf("%s/%d", r.ID, l.session)
+	}
+	rng := stream(seed, "odometry/"+part)
 	bias := f.HeadingBias * rng.NormFloat64()
-	r := survey.Robot{ID: id, Keyframes: make([]survey.Keyframe, len(t.pose))}
 	x := lie.Identity()
 	for k := range t.pose {
 		if k > 0 {
@@ -48,15 +84,18 @@ func record(sc *Scenario, id string, t *track, seed uint64) (survey.Robot, error
 			xi[5] += bias * length
 			z := t.pose[k-1].Between(t.pose[k]).Plus(xi)
 			r.Relatives = append(r.Relatives, survey.Relative{
-				Session: session, From: int64(k - 1), To: int64(k), Kind: survey.Odometry, Pose: poseOf(&z), Cov: c,
+				Session: l.session, From: int64(k - 1), To: int64(k), Kind: survey.Odometry, Pose: poseOf(&z), Cov: c,
 			})
 			x = x.Mul(z).Plus(lie.Tangent{}) // clean of rounding
 		}
-		r.Keyframes[k] = survey.Keyframe{Session: session, ID: int64(k), StampNS: t.atNS[k], HasStamp: true, Pose: poseOf(&x)}
+		r.Keyframes = append(r.Keyframes, survey.Keyframe{Session: l.session, ID: int64(k), StampNS: t.atNS[k], HasStamp: true, Pose: poseOf(&x)})
 	}
-	found, err := closures(sc, t, stream(seed, "closures/"+id))
+	found, err := closures(sc, t, stream(seed, "closures/"+part))
+	for i := range found {
+		found[i].Session = l.session
+	}
 	r.Relatives = append(r.Relatives, found...)
-	return r, err
+	return err
 }
 
 // closures finds where a robot comes back to its own track, and adds the false ones asked for.
@@ -85,7 +124,7 @@ func closures(sc *Scenario, t *track, rng *rand.Rand) (found []survey.Relative, 
 		}
 		if j >= 0 {
 			z := measure(rng, &t.pose[j], &t.pose[k], &c)
-			found = append(found, survey.Relative{Session: session, From: int64(j), To: int64(k), Kind: survey.Closure, Pose: poseOf(&z), Cov: c})
+			found = append(found, survey.Relative{From: int64(j), To: int64(k), Kind: survey.Closure, Pose: poseOf(&z), Cov: c})
 			last = t.travel[k]
 		}
 	}
@@ -95,7 +134,7 @@ func closures(sc *Scenario, t *track, rng *rand.Rand) (found []survey.Relative, 
 			return nil, errCramped
 		}
 		z := anywhere(rng, f.ClosureRange, sc.Dimension())
-		found = append(found, survey.Relative{Session: session, From: int64(min(j, k)), To: int64(max(j, k)), Kind: survey.Closure, Pose: poseOf(&z), Cov: c})
+		found = append(found, survey.Relative{From: int64(min(j, k)), To: int64(max(j, k)), Kind: survey.Closure, Pose: poseOf(&z), Cov: c})
 	}
 	return found, nil
 }

@@ -107,7 +107,7 @@ type FleetSpec struct {
 type FrontEndSpec struct {
 	// Error of one odometry step, sigmas; a longer or shorter step has them scaled by the root of its length.
 	Odometry Sigmas `yaml:"odometry"`
-	// Heading drift that the sigmas do not cover: each robot draws its own, once, with this sigma.
+	// Heading drift that the sigmas do not cover: each session of a robot draws its own, once, with this sigma.
 	HeadingBias float64 `yaml:"heading_bias_rad_per_m" unit:"rad/m" range:"[0, 0.01]"`
 	// Error of a loop closure.
 	Closure Sigmas `yaml:"closure"`
@@ -119,6 +119,16 @@ type FrontEndSpec struct {
 	FalseClosures float64 `yaml:"false_closures" range:"[0, 0.9]"`
 	// Time from a keyframe to the closures and recognitions found at it.
 	Latency float64 `yaml:"latency_s" unit:"s" range:"[0, 60]"`
+	// Moments at which a front end loses itself and begins a new session, with a frame of its own.
+	Restarts []RestartSpec `yaml:"restarts" most:"200"`
+}
+
+// RestartSpec is a restart of front ends.
+type RestartSpec struct {
+	// The robot concerned, or all.
+	Robot string `yaml:"robot" form:"id"`
+	// Moment of the restart. Before the start of the robot it has no effect.
+	At float64 `yaml:"at_s" unit:"s" range:"[0, 28800]"`
 }
 
 // TiesSpec says what robots measure of each other.
@@ -259,10 +269,16 @@ func (sc *Scenario) rules(report func(path, message string)) {
 	if n := sc.Site.Wood.Clearings; n > 0 && n < 4 {
 		report("site.wood.clearings", fmt.Sprintf("found %d, expected 0 or 4 and more", n))
 	}
-	for i, o := range sc.Radio.Outages {
-		if _, ok := robotNumber(o.Robot); o.Robot != allRobots && (!ok || !sc.hasRobot(o.Robot)) {
-			report(index("radio.outages", i)+".robot", "names no robot of the fleet, expected r01 to "+robotID(sc.Fleet.Robots-1)+", or all")
+	named := func(robot, path string) {
+		if robot != allRobots && !sc.hasRobot(robot) {
+			report(path, "names no robot of the fleet, expected r01 to "+robotID(sc.Fleet.Robots-1)+", or all")
 		}
+	}
+	for i, r := range sc.FrontEnd.Restarts {
+		named(r.Robot, index("front_end.restarts", i)+".robot")
+	}
+	for i, o := range sc.Radio.Outages {
+		named(o.Robot, index("radio.outages", i)+".robot")
 		if !(o.To > o.From) {
 			report(index("radio.outages", i)+".to_s", "is not after from_s, expected a later time")
 		}

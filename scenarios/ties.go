@@ -7,9 +7,10 @@ import (
 	"selvage/internal/lie"
 )
 
-// sighting is a tie in the making: the far keyframe seen from the near one. The near robot makes it, at its keyframe.
+// sighting is a tie in the making: the far keyframe seen from the near one. The near robot makes it, at its keyframe. Tracks here
+// are those of single sessions: what a robot recognises of its own earlier session is a tie too.
 type sighting struct {
-	from, to       int // robots
+	from, to       int // tracks
 	fromKey, toKey int
 	encounter      bool
 	pose           lie.SE3

@@ -60,52 +60,58 @@ func Simulate(sc *Scenario, seed uint64) (*World, error) {
 		w.Base = *sc.Radio.Base
 	}
 	homes := s.homes(sc.Fleet.Robots)
-	tracks := make([]*track, len(w.tracks))
 	sv := &survey.Survey{Meta: survey.Meta{
 		Format: 1, Name: sc.Name, Dimension: sc.Dimension(),
 		Datum: survey.Datum{Name: "site", Level: true},
 		Notes: fmt.Sprintf("Simulated: %s, seed %d.", sc.Title, seed),
 	}}
+	w.Survey = sv
+	var all []leg
 	for i := range w.tracks {
-		id := robotID(i)
-		w.tracks[i] = s.walk(sc, homes[i], stream(seed, "walk/"+id))
-		t := &w.tracks[i]
-		tracks[i] = t
-		sv.Meta.Robots = append(sv.Meta.Robots, survey.RobotMeta{ID: id, Sessions: []uint32{session}})
-		robot, err := record(sc, id, t, seed)
-		if err != nil {
-			return nil, fmt.Errorf("scenarios: robot %s: %w", id, err)
+		robot := survey.Robot{ID: robotID(i)}
+		meta := survey.RobotMeta{ID: robot.ID}
+		w.tracks[i] = s.walk(sc, homes[i], stream(seed, "walk/"+robot.ID))
+		for _, l := range legs(sc, i, &w.tracks[i]) {
+			if err := record(sc, &robot, &l, seed); err != nil {
+				return nil, fmt.Errorf("scenarios: robot %s: %w", robot.ID, err)
+			}
+			for k := range l.track.pose {
+				sv.Truth = append(sv.Truth, survey.TruthPose{Robot: robot.ID, Session: l.session, Key: int64(k), Pose: poseOf(&l.track.pose[k])})
+			}
+			meta.Sessions = append(meta.Sessions, l.session)
+			all = append(all, l)
 		}
+		sv.Meta.Robots = append(sv.Meta.Robots, meta)
 		sv.Robots = append(sv.Robots, robot)
-		for k := range t.pose {
-			sv.Truth = append(sv.Truth, survey.TruthPose{Robot: id, Session: session, Key: int64(k), Pose: poseOf(&t.pose[k])})
-		}
+	}
+	tracks := make([]*track, len(all))
+	for i := range all {
+		tracks[i] = &all[i].track
 	}
 	found := meet(sc, s, tracks, seed)
 	wrong, err := falsify(sc, s, tracks, len(found), seed)
 	if err != nil {
 		return nil, fmt.Errorf("scenarios: %w", err)
 	}
-	found = append(found, wrong...)
-	w.Survey = sv
-	w.enterTies(sc, found)
-	w.feed(sc)
+	w.enterTies(sc, all, append(found, wrong...))
+	w.feed(sc, all)
 	return w, nil
 }
 
 // enterTies writes the ties into the survey, in the order of their making; nothing in a row tells true from false.
-func (w *World) enterTies(sc *Scenario, found []sighting) {
-	made := func(t *sighting) int64 { return w.tracks[t.from].atNS[t.fromKey] }
+func (w *World) enterTies(sc *Scenario, all []leg, found []sighting) {
+	made := func(t *sighting) int64 { return all[t.from].track.atNS[t.fromKey] }
 	slices.SortStableFunc(found, func(a, b sighting) int {
 		return cmp.Or(cmp.Compare(made(&a), made(&b)), cmp.Compare(a.from, b.from), cmp.Compare(a.to, b.to), cmp.Compare(a.toKey, b.toKey))
 	})
 	encounter, revisit := sc.Ties.Encounter.cov(sc.Dimension()), sc.Ties.Revisit.cov(sc.Dimension())
 	for i := range found {
 		t := &found[i]
+		a, b := &all[t.from], &all[t.to]
 		row := survey.Tie{
 			ID:        fmt.Sprintf("t%04d", i+1),
-			FromRobot: robotID(t.from), FromSession: session, FromKey: int64(t.fromKey),
-			ToRobot: robotID(t.to), ToSession: session, ToKey: int64(t.toKey),
+			FromRobot: robotID(a.robot), FromSession: a.session, FromKey: int64(t.fromKey),
+			ToRobot: robotID(b.robot), ToSession: b.session, ToKey: int64(t.toKey),
 			Pose: poseOf(&t.pose), Cov: revisit, Source: "recognition", StampNS: made(t), HasStamp: true,
 		}
 		if t.encounter {
@@ -118,17 +124,22 @@ func (w *World) enterTies(sc *Scenario, found []sighting) {
 }
 
 // feed puts what each front end delivers into the order of time.
-func (w *World) feed(sc *Scenario) {
+func (w *World) feed(sc *Scenario, all []leg) {
 	late := seconds(sc.FrontEnd.Latency)
 	w.Feed = make([][]Event, len(w.tracks))
+	first := make([][]int, len(w.tracks)) // first keyframe of each session
+	for i := range all {
+		first[all[i].robot] = append(first[all[i].robot], all[i].first)
+	}
 	for r := range w.Survey.Robots {
 		robot, at := &w.Survey.Robots[r], w.tracks[r].atNS
 		for k := range robot.Keyframes {
 			w.Feed[r] = append(w.Feed[r], Event{at[k], KeyframeEvent, k})
 		}
 		for i := range robot.Relatives {
-			ns := at[robot.Relatives[i].To]
-			if robot.Relatives[i].Kind == survey.Closure {
+			m := &robot.Relatives[i]
+			ns := at[first[r][m.Session-1]+int(m.To)]
+			if m.Kind == survey.Closure {
 				ns += late
 			}
 			w.Feed[r] = append(w.Feed[r], Event{ns, RelativeEvent, i})

@@ -129,6 +129,13 @@ func soundFeed(w *World) error {
 	ties := make([]int, len(w.Survey.Ties))
 	for r, events := range w.Feed {
 		robot := &w.Survey.Robots[r]
+		row := func(session uint32, key int64) int { // sessions follow each other, their keys count from 0
+			n := 0
+			for n < len(robot.Keyframes) && robot.Keyframes[n].Session < session {
+				n++
+			}
+			return n + int(key)
+		}
 		keys, rels := make([]int, len(robot.Keyframes)), make([]int, len(robot.Relatives))
 		last := int64(math.MinInt64)
 		for _, e := range events {
@@ -144,18 +151,20 @@ func soundFeed(w *World) error {
 				}
 			case RelativeEvent:
 				rels[e.Index]++
-				if m := robot.Relatives[e.Index]; m.From >= m.To || keys[m.From] == 0 || keys[m.To] == 0 {
+				if m := robot.Relatives[e.Index]; m.From >= m.To || keys[row(m.Session, m.From)] == 0 || keys[row(m.Session, m.To)] == 0 {
 					return fmt.Errorf("%s: relative %d to %d comes before its keyframes", robot.ID, m.From, m.To)
 				}
 			case TieEvent:
 				ties[e.Index]++
 				tie := w.Survey.Ties[e.Index]
-				if tie.FromRobot != robot.ID || keys[tie.FromKey] == 0 {
+				if tie.FromRobot != robot.ID || keys[row(tie.FromSession, tie.FromKey)] == 0 {
 					return fmt.Errorf("%s: tie %s from %s comes before its keyframe", robot.ID, tie.ID, tie.FromRobot)
 				}
 				o, _ := robotNumber(tie.ToRobot)
-				if w.Survey.Robots[o].Keyframes[tie.ToKey].StampNS > e.AtNS {
-					return fmt.Errorf("tie %s sees a keyframe of the future", tie.ID)
+				for _, k := range w.Survey.Robots[o].Keyframes {
+					if k.Session == tie.ToSession && k.ID == tie.ToKey && k.StampNS > e.AtNS {
+						return fmt.Errorf("tie %s sees a keyframe of the future", tie.ID)
+					}
 				}
 			}
 		}
@@ -201,6 +210,10 @@ func TestAnyScenario(t *testing.T) {
 		sc.FrontEnd.FalseClosures = rapid.Float64Range(0, 0.5).Draw(t, "false closures")
 		sc.FalseTies.Independent = rapid.Float64Range(0, 0.4).Draw(t, "independent")
 		sc.FalseTies.Clustered = rapid.Float64Range(0, 0.4).Draw(t, "clustered")
+		for range rapid.IntRange(0, 3).Draw(t, "restarts") {
+			at := rapid.Float64Range(0, sc.Duration).Draw(t, "restart")
+			sc.FrontEnd.Restarts = append(sc.FrontEnd.Restarts, RestartSpec{rapid.SampledFrom([]string{allRobots, "r01"}).Draw(t, "robot"), at})
+		}
 		seed := rapid.Uint64().Draw(t, "seed")
 		w, err := Simulate(sc, seed)
 		if errors.Is(err, errCramped) {
