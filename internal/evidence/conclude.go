@@ -90,6 +90,10 @@ func tightness(shares []float64, accidents float64) float64 {
 	return math.Inf(1)
 }
 
+// nearby is the share up to which a prediction counts as one from nearby. From further off it leans on the model of the drift,
+// and refuses only what is out of the question: at twice the distance.
+const nearby = 1e-4
+
 // find writes the verdict on a tie within an island.
 func (b *body) find(x *Finding, l *link, p *prediction, tight float64) {
 	if p.ways == 0 {
@@ -97,12 +101,11 @@ func (b *body) find(x *Finding, l *link, p *prediction, tight float64) {
 		return
 	}
 	x.Statistic, x.DoF = p.squared, b.dof
-	// A prediction from afar leans on the model of the drift: it refuses only what is out of the question.
 	refuse := b.refuse
-	loose := p.share >= min(tight, b.o.Accidents)
-	if loose {
+	if p.share > nearby {
 		refuse *= 4
 	}
+	loose := p.share >= min(tight, b.o.Accidents)
 	switch {
 	case p.squared >= refuse:
 		x.Verdict = Refused
