@@ -35,7 +35,7 @@ const second = int64(1e9)
 func DefaultConfig(fleet, robot string, dim int) Config {
 	return Config{
 		Fleet: fleet, Robot: robot, Dim: dim,
-		PublishNS: 10 * second, SettleNS: 20 * second, TrafficShare: 0.4, HeartbeatNS: 15 * second, RetryNS: 10 * second,
+		PublishNS: 10 * second, SettleNS: 20 * second, TrafficShare: 0.25, HeartbeatNS: 15 * second, RetryNS: 10 * second,
 		AnswerNS: 90 * second,
 	}
 }

@@ -10,7 +10,7 @@ import (
 )
 
 // relinearise is the share of F (or of 1, when F is smaller) that condensing again must be worth.
-const relinearise = 1e-12
+const relinearise = 3e-12
 
 // correct applies a correction: junctions go where the base found them, interior poses follow. A correction that is not newer than
 // the last one applied is dropped; keyframes it names that this robot does not know are left out.

@@ -15,7 +15,7 @@
 //	tick                        what is due: ties again that are not safe yet, a new summary, the old one again, a heartbeat
 //
 // A summary is due when the graph changed and the traffic allows it (see [Config]), or when a correction moved the robot so far
-// that its linearisation matters: when condensing again would change the cost by more than one part in 1e12. Otherwise the
+// that its linearisation matters: when condensing again would change the cost by more than three parts in 1e12. Otherwise the
 // correction is answered by a heartbeat.
 //
 // The robot's own poses never jump: they stay in the session's frame, and [Agent.Poses] gives them there together with the

@@ -143,5 +143,5 @@ func (s *session) condense() (*partition.Condensed, error) {
 			separators = append(separators, int32(i))
 		}
 	}
-	return partition.Condense(s.graph.Dim, len(s.keys), terms, separators)
+	return partition.CondenseAt(s.graph.Dim, s.graph.Values.Poses, terms, separators)
 }
