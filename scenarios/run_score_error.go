@@ -1,0 +1,244 @@
+package scenarios
+
+import (
+	"fmt"
+	"math"
+
+	"selvage/agent"
+	"selvage/coordinator"
+	"selvage/internal/adjust"
+	"selvage/internal/lie"
+	"selvage/internal/survey"
+)
+
+// place is one session of one robot in the final map.
+type place struct {
+	agent.Track
+	robot  int
+	number int // of its island: 0 is the map's datum, from 1 on the others, sessions that share nothing each one of their own
+}
+
+// at returns the pose of keyframe k in the datum of its island.
+func (p *place) at(k int, dim int) lie.SE3 {
+	x := p.DatumFromSession.Mul(p.Poses[k])
+	if dim == 2 {
+		x = lie.Planar(&x).Spatial()
+	}
+	return x
+}
+
+// places returns every session, robot by robot. The map's datum is that of the island with the most robots, among these the one
+// with the most keyframes, the first of equal ones.
+func (r *Run) places() []place {
+	var out []place
+	type size struct{ sessions, robots, keyframes, lastRobot int }
+	sizes := map[string]*size{}
+	for i, tracks := range r.tracks() {
+		for _, t := range tracks {
+			out = append(out, place{Track: t, robot: i})
+			if !t.Joined {
+				continue
+			}
+			s := sizes[t.Island]
+			if s == nil {
+				s = &size{lastRobot: -1}
+				sizes[t.Island] = s
+			}
+			s.sessions++
+			s.keyframes += len(t.IDs)
+			if s.lastRobot != i {
+				s.robots++
+				s.lastRobot = i
+			}
+		}
+	}
+	shared := func(p *place) *size {
+		if s := sizes[p.Island]; p.Joined && s.sessions > 1 {
+			return s
+		}
+		return nil
+	}
+	var best *size
+	for i := range out {
+		if s := shared(&out[i]); s != nil && (best == nil || s.robots > best.robots || s.robots == best.robots && s.keyframes > best.keyframes) {
+			best = s
+		}
+	}
+	next := 1
+	numbers := map[string]int{}
+	for i := range out {
+		p := &out[i]
+		switch s := shared(p); {
+		case s == nil:
+			p.number = next
+			next++
+		case s != best:
+			if numbers[p.Island] == 0 {
+				numbers[p.Island] = next
+				next++
+			}
+			p.number = numbers[p.Island]
+		}
+	}
+	return out
+}
+
+// members counts the sessions of each island.
+func members(places []place) map[int]int {
+	out := map[int]int{}
+	for i := range places {
+		out[places[i].number]++
+	}
+	return out
+}
+
+// motions returns for each island the motion that carries its positions best onto the truth; islands without truth have none.
+func motions(places []place, t *truthIndex, robots []survey.Robot) map[int]lie.SE3 {
+	pairs := map[int][]pair{}
+	for i := range places {
+		p := &places[i]
+		pairs[p.number] = append(pairs[p.number], t.pairsOf(p, robots[p.robot].ID)...)
+	}
+	out := map[int]lie.SE3{}
+	for number, list := range pairs {
+		if len(list) > 0 {
+			out[number] = fitPositions(list)
+		}
+	}
+	return out
+}
+
+// pairsOf returns the estimated and true positions of a session, as far as the truth is known.
+func (t *truthIndex) pairsOf(p *place, robot string) []pair {
+	var out []pair
+	for k, id := range p.IDs {
+		if x, ok := t.pose[adjust.Key{Robot: robot, Session: p.Session, ID: id}]; ok {
+			out = append(out, pair{p.DatumFromSession.Apply(p.Poses[k].T), x.T})
+		}
+	}
+	return out
+}
+
+// errorsInTeam returns the RMSE of each robot's positions in the fleet's map, one motion for each island.
+func (r *Run) errorsInTeam(places []place, t *truthIndex) []*float64 {
+	robots := r.Outing.Survey.Robots
+	out := make([]*float64, len(robots))
+	move, size := motions(places, t, robots), members(places)
+	sum, count := make([]float64, len(robots)), make([]int, len(robots))
+	for i := range places {
+		p := &places[i]
+		m, ok := move[p.number]
+		if !ok || size[p.number] < 2 {
+			continue
+		}
+		for _, x := range t.pairsOf(p, robots[p.robot].ID) {
+			sum[p.robot] += squaredError(&m, &x)
+			count[p.robot]++
+		}
+	}
+	for i := range out {
+		if count[i] > 0 {
+			out[i] = figure(math.Sqrt(sum[i] / float64(count[i])))
+		}
+	}
+	return out
+}
+
+// errorsAlone returns the RMSE of each robot's positions when it adjusts its own measurements without any tie, each connected part
+// moved onto the truth by itself.
+func (r *Run) errorsAlone(t *truthIndex) ([]*float64, error) {
+	known := r.known()
+	out := make([]*float64, len(known.Robots))
+	if len(t.pose) == 0 {
+		return out, nil
+	}
+	for i := range known.Robots {
+		if len(known.Robots[i].Keyframes) == 0 {
+			continue
+		}
+		p, err := adjust.New(&survey.Survey{Meta: known.Meta, Robots: known.Robots[i : i+1]}, nil)
+		if err != nil {
+			return nil, err
+		}
+		if err := p.Begin(adjust.Auto); err != nil {
+			return nil, fmt.Errorf("robot %s alone: %w", known.Robots[i].ID, err)
+		}
+		if err := p.Analyse(1); err != nil {
+			return nil, fmt.Errorf("robot %s alone: %w", known.Robots[i].ID, err)
+		}
+		p.Solve(tight())
+		parts := make([][]pair, len(p.Anchors))
+		for v, key := range p.Keys {
+			if x, ok := t.pose[key]; ok {
+				parts[p.Island[v]] = append(parts[p.Island[v]], pair{p.Graph.Values.Poses[v].T, x.T})
+			}
+		}
+		sum, n := 0.0, 0
+		for _, part := range parts {
+			if len(part) > 0 {
+				e := rmse(part)
+				sum += e * e * float64(len(part))
+				n += len(part)
+			}
+		}
+		if n > 0 {
+			out[i] = figure(math.Sqrt(sum / float64(n)))
+		}
+	}
+	return out, nil
+}
+
+// known returns the survey as far as it had been delivered when the run ended: the keyframes that the agents have, and the
+// measurements among them.
+func (r *Run) known() *survey.Survey {
+	s := r.Outing.Survey
+	have := map[adjust.Key]bool{}
+	for i, tracks := range r.tracks() {
+		for _, t := range tracks {
+			for _, id := range t.IDs {
+				have[adjust.Key{Robot: s.Robots[i].ID, Session: t.Session, ID: id}] = true
+			}
+		}
+	}
+	out := &survey.Survey{Meta: s.Meta}
+	stamped := map[adjust.Key]bool{} // by stamp
+	for i := range s.Robots {
+		robot := survey.Robot{ID: s.Robots[i].ID}
+		for _, k := range s.Robots[i].Keyframes {
+			if have[adjust.Key{Robot: robot.ID, Session: k.Session, ID: k.ID}] {
+				robot.Keyframes = append(robot.Keyframes, k)
+				stamped[adjust.Key{Robot: robot.ID, Session: k.Session, ID: k.StampNS}] = k.HasStamp
+			}
+		}
+		for _, m := range s.Robots[i].Relatives {
+			if have[adjust.Key{Robot: robot.ID, Session: m.Session, ID: m.From}] && have[adjust.Key{Robot: robot.ID, Session: m.Session, ID: m.To}] {
+				robot.Relatives = append(robot.Relatives, m)
+			}
+		}
+		out.Robots = append(out.Robots, robot)
+	}
+	for _, t := range s.Ties {
+		to := have[adjust.Key{Robot: t.ToRobot, Session: t.ToSession, ID: t.ToKey}]
+		if t.ToByStamp {
+			to = stamped[adjust.Key{Robot: t.ToRobot, Session: t.ToSession, ID: t.ToStampNS}]
+		}
+		if to && have[adjust.Key{Robot: t.FromRobot, Session: t.FromSession, ID: t.FromKey}] {
+			out.Ties = append(out.Ties, t)
+		}
+	}
+	return out
+}
+
+// verdicts returns the coordinator's findings by tie.
+func (r *Run) verdicts() map[string]*coordinator.Finding {
+	found := r.Coordinator.Findings()
+	out := make(map[string]*coordinator.Finding, len(r.Outing.Survey.Ties))
+	none := &coordinator.Finding{}
+	for i := range r.Outing.Survey.Ties {
+		out[r.Outing.Survey.Ties[i].ID] = none
+	}
+	for i := range found {
+		out[found[i].Tie] = &found[i]
+	}
+	return out
+}
