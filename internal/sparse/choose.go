@@ -2,33 +2,38 @@ package sparse
 
 import "math"
 
-// dissectCost models the time to find a dissection: nanoseconds for each vertex and
-// edge on each depth. Where minimum degree leaves much to gain, a dissection saves a
-// tenth or more of each factorisation; Auto looks for one when ten times a tenth
-// exceeds the cost.
-const dissectCost = 500
+// Models of the time to find an order, in nanoseconds for each vertex and edge. The
+// fill of a minimum degree order varies by some tenths with the breaking of ties, and
+// a dissection saves a tenth or more where the separators are large; either is tried
+// when a tenth of ten factorisations, an adjustment's worth, exceeds the cost.
+const (
+	degreeCost  = 100 // once more
+	dissectCost = 500 // on each depth
+)
 
 // chooseOrder orders the graph and returns its elimination forest.
 func chooseOrder(g *graph, isLast []bool, o Options) *forest {
-	by := func(method func(*graph, []bool) []int32) *forest {
-		order := method(g, isLast)
+	plant := func(order []int32) *forest {
 		return newForest(g, append(order, o.Last...), len(order))
 	}
 	if o.Ordering == NestedDissection {
-		return by(nestedDissection)
+		return plant(nestedDissection(g, isLast))
 	}
-	f := by(minimumDegree)
-	if o.Ordering == MinimumDegree || g.order() <= 4*leafSize {
-		return f
+	best := plant(minimumDegree(g, isLast, false))
+	try := func(order []int32) {
+		if f := plant(order); f.flops() < best.flops() {
+			best = f
+		}
 	}
-	cuts := math.Log2(float64(g.order()) / leafSize)
-	if flopCost*f.flops() < dissectCost*cuts*float64(g.order()+len(g.adj)) {
-		return f
+	size := float64(g.order() + len(g.adj))
+	if flopCost*best.flops() > degreeCost*size {
+		try(minimumDegree(g, isLast, true))
 	}
-	if d := by(nestedDissection); d.flops() < f.flops() {
-		return d
+	depth := math.Log2(float64(g.order()) / leafSize)
+	if o.Ordering == Auto && depth > 2 && flopCost*best.flops() > dissectCost*depth*size {
+		try(nestedDissection(g, isLast))
 	}
-	return f
+	return best
 }
 
 // flops returns the operations of a factorisation without merged supernodes and

@@ -109,7 +109,7 @@ func (d *dissection) leaf(vertices []int32) {
 		d.local[v] = -1
 	}
 	g.fill(edges)
-	for _, i := range minimumDegree(g, halo) {
+	for _, i := range minimumDegree(g, halo, false) {
 		d.order = append(d.order, names[i])
 	}
 }

@@ -6,9 +6,10 @@ package sparse
 // It is the approximate minimum degree method of Amestoy, Davis and Duff (1996)
 // on the quotient graph: a pivot becomes an element that stands for the clique
 // of its neighbours; elements inside the new one are absorbed; neighbours with
-// equal lists are merged and eliminated together.
-func minimumDegree(g *graph, halo []bool) []int32 {
-	q := newQuotient(g, halo)
+// equal lists are merged and eliminated together. Of vertices that tie at the start
+// the first is taken, or the last.
+func minimumDegree(g *graph, halo []bool, lastFirst bool) []int32 {
+	q := newQuotient(g, halo, lastFirst)
 	for q.open > 0 {
 		me := q.pop()
 		q.eliminate(me)
@@ -55,7 +56,7 @@ type quotient struct {
 	order     []int32
 }
 
-func newQuotient(g *graph, halo []bool) *quotient {
+func newQuotient(g *graph, halo []bool, lastFirst bool) *quotient {
 	n := g.order()
 	ints := make([]int32, 14*n)
 	take := func() []int32 {
@@ -89,8 +90,11 @@ func newQuotient(g *graph, halo []bool) *quotient {
 			q.degree[i] += g.weight[j]
 		}
 	}
-	// Backwards, so that vertices of equal degree come out in their own order.
-	for i := int32(n) - 1; i >= 0; i-- {
+	for k := range int32(n) {
+		i := k // the latest pushed comes out first
+		if !lastFirst {
+			i = int32(n) - 1 - k
+		}
 		if !halo[i] {
 			q.open++
 			q.push(i)
