@@ -27,9 +27,9 @@ func TestFigures(t *testing.T) {
 	if v, err := strconv.ParseFloat(os.Getenv("SPREAD"), 64); err == nil {
 		spread = v
 	}
-	kinds := []string{"none", "i10", "i30", "i60", "c10", "c30", "c60"}
+	kinds := []string{"none", "i10", "i30", "i60", "c10", "c30", "c60", "s10", "s30"}
 	sum := make([]score, len(kinds))
-	var took [7]time.Duration
+	var took [9]time.Duration
 	runsFalse := make([]int, len(kinds))
 	for seed := 1; seed <= seeds; seed++ {
 		rng := rand.New(rand.NewPCG(uint64(seed), 7))
@@ -46,6 +46,10 @@ func TestFigures(t *testing.T) {
 				ties = s.independent(rng, ties, .6)
 			case "c10":
 				ties = s.clustered(rng, ties, .1)
+			case "s10":
+				ties = s.shared(rng, ties, .1)
+			case "s30":
+				ties = s.shared(rng, ties, .3)
 			case "c60":
 				ties = s.clustered(rng, ties, .6)
 			case "c30":

@@ -386,6 +386,40 @@ func (s *simFleet) clustered(rng *rand.Rand, ties []simTie, part float64) []simT
 	return ties
 }
 
+// shared adds false ties as many robots make them where a place looks like another one: whoever comes by either takes it for
+// the other, in the same way.
+func (s *simFleet) shared(rng *rand.Rand, ties []simTie, part float64) []simTie {
+	want := int(part / (1 - part) * float64(len(ties)))
+	end := len(ties) + want
+	for tries := 0; len(ties) < end && tries < 1000; tries++ {
+		a, b := s.randomPair(rng)
+		p, q := s.truth[a][rng.IntN(len(s.truth[a]))], s.truth[b][rng.IntN(len(s.truth[b]))]
+		if distance(p.T, q.T) < 10 {
+			continue
+		}
+		turn := lie.SE3{R: lie.ExpSO3([3]float64{0, 0, float64(rng.IntN(4)) * math.Pi / 2})}
+		wrong := p.Mul(turn).Mul(q.Inv())
+		var atP, atQ []End
+		for u := range s.truth {
+			for k := range s.truth[u] {
+				if distance(s.truth[u][k].T, p.T) < 3 {
+					atP = append(atP, End{u, k})
+				}
+				if distance(s.truth[u][k].T, q.T) < 3 {
+					atQ = append(atQ, End{u, k})
+				}
+			}
+		}
+		for k := 0; k < 20 && len(ties) < end; k++ {
+			i, j := atP[rng.IntN(len(atP))], atQ[rng.IntN(len(atQ))]
+			if i.Unit != j.Unit {
+				ties = append(ties, s.measure(rng, i, j, s.truth[i.Unit][i.Node].Between(wrong.Mul(s.truth[j.Unit][j.Node])), false))
+			}
+		}
+	}
+	return ties
+}
+
 // score is what came of one run.
 type score struct {
 	falseTies, trueTies, falseHeld, trueHeld, trueRefused, joined int
