@@ -21,7 +21,7 @@ func (r *Run) page(s *Score, places []place, poses [][]survey.ResultPose, made, 
 	meta := &r.Outing.Survey.Meta
 	return report.Page{
 		Title: meta.Name, Kind: "Rehearsal", Made: made, Version: version,
-		Finding:   s.finding(),
+		Finding:   s.Finding(),
 		Cautions:  r.cautions(s),
 		Attention: r.attention(s, places, truth),
 		Plans:     []report.Plan{r.plan(places, poses, t, truth)},
@@ -38,8 +38,8 @@ func (r *Run) page(s *Score, places []place, poses [][]survey.ResultPose, made, 
 	}, nil
 }
 
-// finding is the result in one sentence.
-func (s *Score) finding() string {
+// Finding is the result in one sentence.
+func (s *Score) Finding() string {
 	joined := 0
 	for i := range s.Robots {
 		if s.Robots[i].Joined {
