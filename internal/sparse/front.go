@@ -88,16 +88,39 @@ func (f *Factor) update(t *front, from, to int) {
 
 // scatter copies a block to its place in the factor.
 func scatter(dst []float64, ld int, src []float64, rows, cols int, transposed bool) {
-	if transposed {
-		for r := range rows {
-			copy(dst[r*ld:r*ld+cols], src[r*cols:])
+	if rows == 3 && cols == 3 {
+		s := (*[9]float64)(src)
+		d0, d1, d2 := (*[3]float64)(dst), (*[3]float64)(dst[ld:]), (*[3]float64)(dst[2*ld:])
+		if transposed {
+			d0[0], d0[1], d0[2] = s[0], s[1], s[2]
+			d1[0], d1[1], d1[2] = s[3], s[4], s[5]
+			d2[0], d2[1], d2[2] = s[6], s[7], s[8]
+		} else {
+			d0[0], d0[1], d0[2] = s[0], s[3], s[6]
+			d1[0], d1[1], d1[2] = s[1], s[4], s[7]
+			d2[0], d2[1], d2[2] = s[2], s[5], s[8]
 		}
 		return
 	}
-	for c := range cols {
-		to := dst[c*ld : c*ld+rows]
-		for r := range to {
-			to[r] = src[r*cols+c]
+	if rows == 6 && cols == 6 {
+		for c := range 6 {
+			d := (*[6]float64)(dst[c*ld:])
+			if transposed {
+				*d = *(*[6]float64)(src[6*c:])
+			} else {
+				s := (*[31]float64)(src[c:])
+				d[0], d[1], d[2], d[3], d[4], d[5] = s[0], s[6], s[12], s[18], s[24], s[30]
+			}
+		}
+		return
+	}
+	for r := range rows {
+		for c, v := range src[r*cols : (r+1)*cols] {
+			if transposed {
+				dst[c+r*ld] = v
+			} else {
+				dst[r+c*ld] = v
+			}
 		}
 	}
 }

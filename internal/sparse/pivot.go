@@ -55,31 +55,65 @@ func factorColumns(d []float64, ldd int, r []float64, ldr, w, m, rows int) int {
 	return -1
 }
 
-// factorPivot factors an n x n pivot block, n at most 6, and copies it to l.
+// factorPivot factors a pivot block of n = 3 or 6 columns and copies it to l. It
+// returns the first column whose pivot is not positive, or -1.
 func factorPivot(d []float64, ldd, n int, l *triangle) int {
-	t := 0
-	for j := range n {
-		col := d[j*ldd : j*ldd+n]
-		v := col[j]
-		if !(v > 0 && v <= math.MaxFloat64) {
-			return j
-		}
-		inv := 1 / math.Sqrt(v)
-		col[j] = inv
-		l[t] = inv
-		for i := j + 1; i < n; i++ {
-			col[i] *= inv
-			l[t+i-j] = col[i]
-		}
-		for c := j + 1; c < n; c++ {
-			x := col[c]
-			to := d[c*ldd : c*ldd+n]
-			for i := c; i < n; i++ {
-				to[i] -= col[i] * x
-			}
-		}
-		t += n - j
+	c0, c1, c2 := (*[3]float64)(d), (*[3]float64)(d[ldd:]), (*[3]float64)(d[2*ldd:])
+	if c := factorThree(c0, c1, c2); c >= 0 {
+		return c
 	}
+	if n == 3 {
+		l[0], l[1], l[2] = c0[0], c0[1], c0[2]
+		l[3], l[4], l[5] = c1[1], c1[2], c2[2]
+		return -1
+	}
+	// The rows below, and what they take from the second three columns.
+	b0, b1, b2 := (*[3]float64)(d[3:]), (*[3]float64)(d[ldd+3:]), (*[3]float64)(d[2*ldd+3:])
+	e0, e1, e2 := (*[3]float64)(d[3*ldd+3:]), (*[3]float64)(d[4*ldd+3:]), (*[3]float64)(d[5*ldd+3:])
+	for i := range 3 {
+		x := b0[i] * c0[0]
+		y := (b1[i] - c0[1]*x) * c1[1]
+		b0[i], b1[i] = x, y
+		b2[i] = (b2[i] - c0[2]*x - c1[2]*y) * c2[2]
+	}
+	for i := range 3 {
+		x, y, z := b0[i], b1[i], b2[i]
+		e0[i] = e0[i] - x*b0[0] - y*b1[0] - z*b2[0]
+		e1[i] = e1[i] - x*b0[1] - y*b1[1] - z*b2[1]
+		e2[i] = e2[i] - x*b0[2] - y*b1[2] - z*b2[2]
+	}
+	if c := factorThree(e0, e1, e2); c >= 0 {
+		return 3 + c
+	}
+	l[0], l[1], l[2], l[3], l[4], l[5] = c0[0], c0[1], c0[2], b0[0], b0[1], b0[2]
+	l[6], l[7], l[8], l[9], l[10] = c1[1], c1[2], b1[0], b1[1], b1[2]
+	l[11], l[12], l[13], l[14] = c2[2], b2[0], b2[1], b2[2]
+	l[15], l[16], l[17] = e0[0], e0[1], e0[2]
+	l[18], l[19], l[20] = e1[1], e1[2], e2[2]
+	return -1
+}
+
+// factorThree factors three columns, with the inverse on the diagonal. It uses and
+// changes the lower triangle only.
+func factorThree(c0, c1, c2 *[3]float64) int {
+	if !(c0[0] > 0 && c0[0] <= math.MaxFloat64) {
+		return 0
+	}
+	inv := 1 / math.Sqrt(c0[0])
+	x, y := c0[1]*inv, c0[2]*inv
+	c0[0], c0[1], c0[2] = inv, x, y
+	p := c1[1] - x*x
+	if !(p > 0 && p <= math.MaxFloat64) {
+		return 1
+	}
+	inv = 1 / math.Sqrt(p)
+	z := (c1[2] - x*y) * inv
+	c1[1], c1[2] = inv, z
+	p = c2[2] - y*y - z*z
+	if !(p > 0 && p <= math.MaxFloat64) {
+		return 2
+	}
+	c2[2] = 1 / math.Sqrt(p)
 	return -1
 }
 

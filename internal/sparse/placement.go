@@ -68,6 +68,7 @@ func (s *Symbolic) placeBlock(f *front, t *supernodes, b int32, at []int32) plac
 	p := placement{rows: int8(s.dims[row]), cols: int8(s.dims[col])}
 	if b < n {
 		p.src = int(s.diagAt[b])
+		p.transposed = true // it is symmetric, and this is the shorter way
 	} else {
 		p.src = int(s.offAt[b-n])
 	}
