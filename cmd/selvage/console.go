@@ -1,8 +1,10 @@
 package main
 
 import (
+	"errors"
 	"fmt"
 	"io"
+	"io/fs"
 	"os"
 	"strings"
 
@@ -54,9 +56,13 @@ func (c *console) fail(err error) int {
 	return code
 }
 
-// plain is the text of an error without the names of packages in front.
+// plain is the text of an error without the names of packages and system calls in front.
 func plain(err error) string {
 	text := err.Error()
+	var path *fs.PathError
+	if errors.As(err, &path) {
+		text = strings.ReplaceAll(text, path.Error(), path.Path+": "+path.Err.Error())
+	}
 	for _, room := range []string{"survey: ", "posegraph: ", "sparse: ", "split: "} {
 		text = strings.ReplaceAll(text, room, "")
 	}

@@ -41,7 +41,15 @@ func (c *convertCmd) Run(ctx context.Context, con *console) error {
 	s, err := interruptible(ctx, func() (*survey.Survey, error) { return survey.ReadPoseTables(c.Data) })
 	var bad *survey.Violations
 	if errors.As(err, &bad) {
-		return badInput("%s: %d places are wrong, nothing was written; the first of them:\n%w", c.Data, bad.Total, err)
+		const shown = 5
+		text := ""
+		for _, v := range bad.List[:min(len(bad.List), shown)] {
+			text += "\n  " + v.String()
+		}
+		if bad.Total > shown {
+			text += "\n  ..."
+		}
+		return badInput("%s: %d places are wrong, nothing was written%s", c.Data, bad.Total, text)
 	}
 	if err != nil {
 		return err
