@@ -4,6 +4,7 @@ import (
 	"cmp"
 	"fmt"
 	"slices"
+	"strings"
 
 	"selvage/internal/adjust"
 	"selvage/internal/posegraph"
@@ -143,28 +144,34 @@ func (a *adjustment) sentence() string {
 	case all == 1:
 		share = "The one session makes the datum"
 	case joined < all:
-		share = fmt.Sprintf("%d of %d sessions share the datum, the others lie in %d islands of their own", joined, all, r.Islands-1)
+		share = fmt.Sprintf("%d of %d sessions %s in the datum, the others in %s of their own", joined, all, oneOr(joined, "lies", "lie"), counted(r.Islands-1, "island"))
 	}
-	ties := fmt.Sprintf("%d ties hold it", r.TiesHeld)
 	if r.Ties == 0 {
 		return share + "."
 	}
-	if n := len(r.TiesLeftOut); n > 0 {
-		ties += fmt.Sprintf(", %d were left out by verdict (%s)", n, firstOf(r.TiesLeftOut))
+	held := counted(r.TiesHeld, "tie") + oneOr(r.TiesHeld, " holds it", " hold it")
+	if r.TiesHeld == 0 {
+		held = "no tie holds it"
 	}
-	return share + "; " + ties + "."
+	if n := len(r.TiesLeftOut); n > 0 {
+		held += fmt.Sprintf(", %d %s left out by verdict (%s)", n, oneOr(n, "was", "were"), firstOf(r.TiesLeftOut))
+	}
+	return share + "; " + held + "."
+}
+
+func counted(n int, what string) string { return fmt.Sprintf("%d %s%s", n, what, oneOr(n, "", "s")) }
+
+func oneOr(n int, one, many string) string {
+	if n == 1 {
+		return one
+	}
+	return many
 }
 
 // firstOf lists some names.
 func firstOf(names []string) string {
 	const most = 4
-	text := ""
-	for i, n := range names[:min(len(names), most)] {
-		if i > 0 {
-			text += ", "
-		}
-		text += n
-	}
+	text := strings.Join(names[:min(len(names), most)], ", ")
 	if len(names) > most {
 		text += " ..."
 	}

@@ -74,6 +74,7 @@ func (c *convertCmd) Run(ctx context.Context, con *console) error {
 	if s.Meta.Dimension == 2 {
 		where = "the plane"
 	}
-	con.finding("%s holds %d keyframes in %s, %d measurements of odometry and %d loop closures.", c.Out, len(r.Keyframes), where, len(r.Relatives)-closures, closures)
+	con.finding("%s holds %d keyframes in %s, %s of odometry and %s.", c.Out, len(r.Keyframes), where,
+		counted(len(r.Relatives)-closures, "measurement"), counted(closures, "loop closure"))
 	return nil
 }

@@ -30,7 +30,7 @@ func ReadVerdicts(dir string, s *Survey) ([]ResultVerdict, error) {
 			return nil, err
 		}
 		if !ok {
-			return all, bad.err()
+			break
 		}
 		v := ResultVerdict{Tie: string(t.text(0)), Verdict: string(t.text(1)), Reason: string(t.text(2))}
 		switch still, known := left[v.Tie]; {
@@ -57,6 +57,10 @@ func ReadVerdicts(dir string, s *Survey) ([]ResultVerdict, error) {
 			all = append(all, v)
 		}
 	}
+	if err := bad.err(); err != nil {
+		return nil, err
+	}
+	return all, nil
 }
 
 // ResultsReplaceable returns an error unless the results of the folder dir may be written anew: there are none, or their tables
