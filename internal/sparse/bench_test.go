@@ -101,20 +101,65 @@ func BenchmarkAnalyse(b *testing.B) {
 	}
 }
 
-func BenchmarkFactoriseSolve(b *testing.B) {
+// each runs a numeric benchmark on the published graphs.
+func each(b *testing.B, workers int, run func(b *testing.B, f *Factor, m *Matrix)) {
 	for _, name := range publishedNames {
 		b.Run(name, func(b *testing.B) {
-			s := mustAnalyse(b, published(b, name), Options{})
+			s := mustAnalyse(b, published(b, name), Options{Workers: workers})
 			m, f := s.NewMatrix(), NewFactor(s)
 			fill(rand.New(rand.NewPCG(1, 1)), m, 0.1)
-			rhs, x := make([]float64, s.Size()), make([]float64, s.Size())
-			for b.Loop() {
-				if err := f.FactoriseSolve(m, rhs, x); err != nil {
-					b.Fatal(err)
-				}
+			if err := f.Factorise(m); err != nil {
+				b.Fatal(err)
 			}
+			b.ResetTimer()
+			run(b, f, m)
 			b.ReportMetric(s.Flops()/1e6, "Mflop")
-			b.ReportMetric(s.Flops()*float64(b.N)/float64(b.Elapsed().Nanoseconds()), "Gflop/s")
 		})
 	}
+}
+
+func factoriseSolve(b *testing.B, f *Factor, m *Matrix) {
+	x := make([]float64, f.s.Size())
+	for b.Loop() {
+		if err := f.FactoriseSolve(m, x, x); err != nil {
+			b.Fatal(err)
+		}
+	}
+	b.ReportMetric(f.s.Flops()*float64(b.N)/float64(b.Elapsed().Nanoseconds()), "Gflop/s")
+}
+
+func BenchmarkFactoriseSolve(b *testing.B)    { each(b, 1, factoriseSolve) }
+func BenchmarkFactoriseSolveTwo(b *testing.B) { each(b, 2, factoriseSolve) }
+
+func BenchmarkFactorisePortable(b *testing.B) {
+	defer usePortable()()
+	each(b, 1, factoriseSolve)
+}
+
+func BenchmarkSolve(b *testing.B) {
+	each(b, 1, func(b *testing.B, f *Factor, _ *Matrix) {
+		x := make([]float64, f.s.Size())
+		for b.Loop() {
+			f.Solve(x, x)
+		}
+	})
+}
+
+// BenchmarkSolveMany is for 48 right-hand sides.
+func BenchmarkSolveMany(b *testing.B) {
+	each(b, 1, func(b *testing.B, f *Factor, _ *Matrix) {
+		x := make([]float64, 48*f.s.Size())
+		for b.Loop() {
+			f.SolveMany(x, 48)
+		}
+	})
+}
+
+func BenchmarkSelectedInverse(b *testing.B) {
+	each(b, 1, func(b *testing.B, f *Factor, _ *Matrix) {
+		out := f.s.NewMatrix()
+		for b.Loop() {
+			f.SelectedInverse(out)
+		}
+	})
 }

@@ -29,6 +29,7 @@ type Factor struct {
 	team    [2]worker
 	job     job
 	barrier barrier
+	many    *many // allocated by the first SolveMany
 }
 
 // NewFactor allocates a factor for matrices of s.
@@ -119,14 +120,6 @@ func (f *Factor) Solve(b, x []float64) {
 	f.enter(b)
 	f.run(job{forward: true, backward: true})
 	f.leave(x)
-}
-
-// SolveMany solves for nrhs right-hand sides in place, stored one after another.
-func (f *Factor) SolveMany(b []float64, nrhs int) {
-	n := f.s.Size()
-	for c := range nrhs {
-		f.Solve(b[c*n:(c+1)*n], b[c*n:(c+1)*n])
-	}
 }
 
 // LogDet returns the logarithm of the determinant of H.

@@ -7,6 +7,7 @@ import (
 	"math/rand/v2"
 	"testing"
 
+	"gonum.org/v1/gonum/floats"
 	"gonum.org/v1/gonum/mat"
 )
 
@@ -116,6 +117,19 @@ func testAgainstDense(t *testing.T) {
 			f.Solve(y, y)
 			if d := relativeDifference(y, x); d > 1e-12 {
 				t.Errorf("Solve differs from FactoriseSolve by %g", d)
+			}
+			const count = 50
+			many := make([]float64, count*s.Size())
+			for k := range count {
+				floats.ScaleTo(many[k*s.Size():(k+1)*s.Size()], float64(k), b)
+			}
+			f.SolveMany(many, count)
+			for k := range count {
+				for i, v := range many[k*s.Size() : (k+1)*s.Size()] {
+					if d := math.Abs(v - float64(k)*x[i]); !(d <= 1e-11*float64(k)*floats.Norm(x, 2)) {
+						t.Fatalf("SolveMany: scalar %d of vector %d is off by %g", i, k, d)
+					}
+				}
 			}
 			checkInverse(t, f, m, &chol)
 			checkSchur(t, f, m, h, b, x)
@@ -317,6 +331,7 @@ func TestNoAllocation(t *testing.T) {
 	b := make([]float64, s.Size())
 	many := make([]float64, 4*s.Size())
 	f.SelectedInverse(out)
+	f.SolveMany(many, 4)
 	if n := testing.AllocsPerRun(5, func() {
 		if f.Factorise(m) != nil || f.FactoriseSolve(m, b, b) != nil || f.Reduce(m, b) != nil {
 			t.Fatal("not positive")

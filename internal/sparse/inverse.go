@@ -19,16 +19,18 @@ type inverter struct {
 func (f *Factor) SelectedInverse(out *Matrix) {
 	f.check(out)
 	for i := range f.s.workers {
-		if w := &f.team[i]; w.inv == nil {
-			w.inv = newInverter(f.s.widest.k, f.s.widest.r)
-		}
+		f.team[i].needInverter(f.s)
 	}
 	f.run(job{inverse: out})
 }
 
-func newInverter(k, r int) *inverter {
+func (w *worker) needInverter(s *Symbolic) {
+	if w.inv != nil {
+		return
+	}
+	k, r := s.widest.k, s.widest.r
 	ld := up4(k + 3)
-	return &inverter{
+	w.inv = &inverter{
 		a: make([]float64, ld*k+8), own: make([]float64, ld*k+8),
 		coupling: make([]float64, ld*r+8), next: make([]float64, ld*r+8),
 	}
@@ -45,9 +47,8 @@ func (f *Factor) invert(fronts []int32, w *worker) {
 	}
 }
 
-// invertFront computes Z_ss (own) and Z_sr (next). Z_rr, both triangles, lies
-// where the update of the front was.
-func (f *Factor) invertFront(t *front, v *inverter) {
+// invertPivots computes a = D^-T, an upper triangle.
+func (f *Factor) invertPivots(t *front, v *inverter) {
 	ld := up4(t.k + 3)
 	v.ld = ld
 	d := f.val[t.d:]
@@ -55,13 +56,20 @@ func (f *Factor) invertFront(t *front, v *inverter) {
 	for c := range t.k {
 		v.a[c*(ld+1)] = 1
 	}
-	// a = D^-T, from I D^-T column group by column group; upper triangle.
+	// From I D^-T, column group by column group.
 	for j := 0; j < t.k; j += 6 {
 		n := min(6, t.k-j)
 		var l triangle
 		packTriangle(d[j+j*t.ldd:], t.ldd, n, &l)
 		solvePanel(v.a, ld, d[j:], t.ldd, &l, j+n, j, n)
 	}
+}
+
+// invertFront computes Z_ss (own) and Z_sr (next). Z_rr, both triangles, lies
+// where the update of the front was.
+func (f *Factor) invertFront(t *front, v *inverter) {
+	f.invertPivots(t, v)
+	ld := v.ld
 	product(v.own, ld, v.a, ld, v.a, ld, t.k, t.k, t.k, true, true) // -D^-T D^-1
 	if t.r > 0 {
 		product(v.coupling, ld, v.a, ld, f.val[t.b:], t.ldr, t.k, t.r, t.k, true, false) // -Y'
