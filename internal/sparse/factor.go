@@ -12,8 +12,13 @@ type NotPositiveError struct {
 	Block int
 }
 
+// A pivot below this share of the diagonal entry that it comes from consists of
+// rounding errors and counts as not positive: a singular matrix, such as that of a
+// network not tied to any datum, is then refused (unless it is ill-conditioned besides).
+const pivotFloor = 64 * 0x1p-52
+
 func (e *NotPositiveError) Error() string {
-	return fmt.Sprintf("sparse: matrix is not positive definite: pivot of block row %d is not positive", e.Block)
+	return fmt.Sprintf("sparse: matrix is not positive definite: pivot of block row %d is not positive or lost in rounding", e.Block)
 }
 
 // Factor holds L with H = L L', and the memory of the numeric phase.
@@ -24,6 +29,7 @@ type Factor struct {
 	vec     []float64 // per front, the part of a right-hand side it hands to its parent
 	x       []float64 // a vector in elimination order
 	kept    []float64 // x as Reduce left it
+	floor   []float64 // smallest pivots allowed, in elimination order
 	schur   []float64 // Schur complement of the last ones, both triangles
 	reduced []float64 // and its right-hand side
 	team    [2]worker
@@ -41,6 +47,7 @@ func NewFactor(s *Symbolic) *Factor {
 		vec:     make([]float64, s.vectorLen+8),
 		x:       make([]float64, s.Size()+8),
 		kept:    make([]float64, s.Size()),
+		floor:   make([]float64, s.Size()),
 		schur:   make([]float64, s.lastDim*s.lastDim),
 		reduced: make([]float64, s.lastDim),
 	}
@@ -57,7 +64,7 @@ func NewFactor(s *Symbolic) *Factor {
 // Factorise computes the factor of m. When it returns a *NotPositiveError the
 // factor holds nothing of use and may be used again with another matrix.
 func (f *Factor) Factorise(m *Matrix) error {
-	f.check(m)
+	f.begin(m)
 	f.run(job{matrix: m, eliminate: true, finish: true})
 	return f.failure()
 }
@@ -66,7 +73,7 @@ func (f *Factor) Factorise(m *Matrix) error {
 // right-hand side along with the elimination. b and x are in the caller's order
 // and may be the same slice.
 func (f *Factor) FactoriseSolve(m *Matrix, b, x []float64) error {
-	f.check(m)
+	f.begin(m)
 	f.s.checkVector(x)
 	f.enter(b)
 	f.run(job{matrix: m, eliminate: true, carry: true, finish: true, backward: true})
@@ -82,7 +89,7 @@ func (f *Factor) FactoriseSolve(m *Matrix, b, x []float64) error {
 // not be positive definite. b may be nil: the right-hand side is zero then. After
 // Reduce only SchurLast and Expand are defined.
 func (f *Factor) Reduce(m *Matrix, b []float64) error {
-	f.check(m)
+	f.begin(m)
 	if b == nil {
 		clear(f.x)
 	} else {
@@ -137,6 +144,18 @@ func (f *Factor) LogDet() float64 {
 func (f *Factor) check(m *Matrix) {
 	if m.s != f.s {
 		panic("sparse: matrix and factor belong to different patterns")
+	}
+}
+
+// begin prepares the factorisation of m.
+func (f *Factor) begin(m *Matrix) {
+	f.check(m)
+	s := f.s
+	for k, i := range s.order {
+		d, h := int(s.dims[i]), m.Diag(int(i))
+		for a := range d {
+			f.floor[int(s.inner[k])+a] = max(0, pivotFloor*h[a*(d+1)])
+		}
 	}
 }
 

@@ -324,6 +324,41 @@ func testIndefinite(t *testing.T) {
 	}
 }
 
+// A levelling network without datum is singular however the rounding falls; with a
+// weak datum it is not.
+func TestSingular(t *testing.T) { eachKernel(t, testSingular) }
+
+func testSingular(t *testing.T) {
+	rng := rand.New(rand.NewPCG(7, 8))
+	for trial := range 300 {
+		n, d := 2+rng.IntN(60), 3+3*(trial%2)
+		s := mustAnalyse(t, Pattern{uniform(n, d), tree(rng, n)}, Options{})
+		m, f := s.NewMatrix(), NewFactor(s)
+		for k, q := range s.pairs {
+			w := make([]float64, d*d) // weight of the difference of two block rows
+			for range 2 * d {
+				v := randomVector(rng, d)
+				for a := range w {
+					w[a] += v[a/d] * v[a%d]
+				}
+			}
+			floats.Add(m.Diag(int(q[0])), w)
+			floats.Add(m.Diag(int(q[1])), w)
+			floats.SubTo(m.Off(k), m.Off(k), w)
+		}
+		var e *NotPositiveError
+		if err := f.Factorise(m); !errors.As(err, &e) {
+			t.Fatalf("tree of %d without datum: got %v", n, err)
+		}
+		for a := range d {
+			m.Diag(0)[a*(d+1)] += 1e-6
+		}
+		if err := f.Factorise(m); err != nil {
+			t.Fatalf("tree of %d with weak datum: %v", n, err)
+		}
+	}
+}
+
 func TestNoAllocation(t *testing.T) {
 	s := mustAnalyse(t, Pattern{uniform(343, 6), cube(7)}, Options{Last: []int32{3, 1}})
 	m, f, out := s.NewMatrix(), NewFactor(s), s.NewMatrix()

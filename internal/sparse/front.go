@@ -14,7 +14,7 @@ func (f *Factor) eliminateFront(i int32, w *worker) bool {
 			return true
 		}
 	}
-	if c := factorPanel(f.val[t.d:], t.ldd, f.val[t.b:], t.ldr, t.k, t.r); c >= 0 {
+	if c := factorPanel(f.val[t.d:], t.ldd, f.val[t.b:], t.ldr, t.k, t.r, f.floor[t.pivot:]); c >= 0 {
 		w.failed = t.pivot + c
 		return false
 	}

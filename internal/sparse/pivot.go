@@ -10,17 +10,17 @@ const (
 )
 
 // factorPanel factors the pivots of a front in place: D = L L', R = R L^-T. The
-// diagonal of L is stored inverted. It returns the first column whose pivot is
-// not positive, or -1.
-func factorPanel(d []float64, ldd int, r []float64, ldr, k, rows int) int {
+// diagonal of L is stored inverted. It returns the first column whose pivot does
+// not exceed its floor, or -1.
+func factorPanel(d []float64, ldd int, r []float64, ldr, k, rows int, floor []float64) int {
 	if k <= leftLooking {
-		return factorColumns(d, ldd, r, ldr, k, k, rows)
+		return factorColumns(d, ldd, r, ldr, k, k, rows, floor)
 	}
 	for at := 0; at < k; at += panelBlock {
 		w := min(panelBlock, k-at)
 		below := k - at - w
 		corner := d[at+at*ldd:]
-		if c := factorColumns(corner, ldd, r[at*ldr:], ldr, w, k-at, rows); c >= 0 {
+		if c := factorColumns(corner, ldd, r[at*ldr:], ldr, w, k-at, rows, floor[at:]); c >= 0 {
 			return at + c
 		}
 		if below > 0 {
@@ -35,14 +35,14 @@ func factorPanel(d []float64, ldd int, r []float64, ldr, k, rows int) int {
 }
 
 // factorColumns factors w columns of a panel with m rows in d and rows rows in r.
-func factorColumns(d []float64, ldd int, r []float64, ldr, w, m, rows int) int {
+func factorColumns(d []float64, ldd int, r []float64, ldr, w, m, rows int, floor []float64) int {
 	var l triangle
 	for j := 0; j < w; j += 6 {
 		n := min(6, w-j)
 		if j > 0 {
 			product(d[j+j*ldd:], ldd, d[j:], ldd, d[j:], ldd, m-j, n, j, false, false)
 		}
-		if c := factorPivot(d[j+j*ldd:], ldd, n, &l); c >= 0 {
+		if c := factorPivot(d[j+j*ldd:], ldd, n, floor[j:], &l); c >= 0 {
 			return j + c
 		}
 		if below := m - j - n; below > 0 {
@@ -56,10 +56,10 @@ func factorColumns(d []float64, ldd int, r []float64, ldr, w, m, rows int) int {
 }
 
 // factorPivot factors a pivot block of n = 3 or 6 columns and copies it to l. It
-// returns the first column whose pivot is not positive, or -1.
-func factorPivot(d []float64, ldd, n int, l *triangle) int {
+// returns the first column whose pivot does not exceed its floor, or -1.
+func factorPivot(d []float64, ldd, n int, floor []float64, l *triangle) int {
 	c0, c1, c2 := (*[3]float64)(d), (*[3]float64)(d[ldd:]), (*[3]float64)(d[2*ldd:])
-	if c := factorThree(c0, c1, c2); c >= 0 {
+	if c := factorThree(c0, c1, c2, (*[3]float64)(floor)); c >= 0 {
 		return c
 	}
 	if n == 3 {
@@ -82,7 +82,7 @@ func factorPivot(d []float64, ldd, n int, l *triangle) int {
 		e1[i] = e1[i] - x*b0[1] - y*b1[1] - z*b2[1]
 		e2[i] = e2[i] - x*b0[2] - y*b1[2] - z*b2[2]
 	}
-	if c := factorThree(e0, e1, e2); c >= 0 {
+	if c := factorThree(e0, e1, e2, (*[3]float64)(floor[3:])); c >= 0 {
 		return 3 + c
 	}
 	l[0], l[1], l[2], l[3], l[4], l[5] = c0[0], c0[1], c0[2], b0[0], b0[1], b0[2]
@@ -95,22 +95,22 @@ func factorPivot(d []float64, ldd, n int, l *triangle) int {
 
 // factorThree factors three columns, with the inverse on the diagonal. It uses and
 // changes the lower triangle only.
-func factorThree(c0, c1, c2 *[3]float64) int {
-	if !(c0[0] > 0 && c0[0] <= math.MaxFloat64) {
+func factorThree(c0, c1, c2, floor *[3]float64) int {
+	if !(c0[0] > floor[0] && c0[0] <= math.MaxFloat64) {
 		return 0
 	}
 	inv := 1 / math.Sqrt(c0[0])
 	x, y := c0[1]*inv, c0[2]*inv
 	c0[0], c0[1], c0[2] = inv, x, y
 	p := c1[1] - x*x
-	if !(p > 0 && p <= math.MaxFloat64) {
+	if !(p > floor[1] && p <= math.MaxFloat64) {
 		return 1
 	}
 	inv = 1 / math.Sqrt(p)
 	z := (c1[2] - x*y) * inv
 	c1[1], c1[2] = inv, z
 	p = c2[2] - y*y - z*z
-	if !(p > 0 && p <= math.MaxFloat64) {
+	if !(p > floor[2] && p <= math.MaxFloat64) {
 		return 2
 	}
 	c2[2] = 1 / math.Sqrt(p)

@@ -66,7 +66,7 @@ func (f *Factor) factorShared(t *front, w *worker) int {
 		for c := range n {
 			copy(w.corner[c*ld+c:c*ld+n], corner[c*t.ldd+c:c*t.ldd+n])
 		}
-		if c := factorColumns(w.corner, ld, nil, 0, n, n, 0); c >= 0 {
+		if c := factorColumns(w.corner, ld, nil, 0, n, n, 0, f.floor[t.pivot+at:]); c >= 0 {
 			f.meet()
 			return at + c
 		}
