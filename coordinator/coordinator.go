@@ -58,6 +58,8 @@ type Coordinator struct {
 	dirty    bool   // summaries or ties came that it does not contain
 	revision uint64 // counts them
 	begun    bool
+	left     bool                 // the newest solution left something to gain
+	rest     bool                 // the present solution is to leave nothing
 	places   map[unitID]placement // of the newest epoch
 	datums   uint64               // counts the datums ever made
 }
@@ -288,7 +290,8 @@ func (c *Coordinator) width() int { return 3 * (c.cfg.Dim - 1) }
 func (c *Coordinator) Tick(nowNS int64) ([]Publish, error) {
 	c.now = max(c.now, nowNS)
 	var out []Publish
-	if c.dirty && (!c.begun || c.now-c.solved >= c.cfg.SolveNS) {
+	c.rest = !c.dirty && c.left && c.answered()
+	if (c.dirty || c.rest) && (!c.begun || c.now-c.solved >= c.cfg.SolveNS) {
 		c.begun, c.dirty, c.solved = true, false, c.now
 		var err error
 		if out, err = c.solve(); err != nil {
@@ -318,10 +321,10 @@ func (c *Coordinator) Epoch() msgs.Epoch {
 }
 
 // Settled tells whether the newest solution contains everything that came and every robot has answered it.
-func (c *Coordinator) Settled() bool {
-	if c.dirty {
-		return false
-	}
+func (c *Coordinator) Settled() bool { return !c.dirty && !c.left && c.answered() }
+
+// answered tells whether nothing is missing at the base and every robot has answered the newest solution.
+func (c *Coordinator) answered() bool {
 	for _, r := range c.robots {
 		if len(r.beyond) > 0 || r.newest > r.safe || r.wantBusy {
 			return false

@@ -284,14 +284,14 @@ func (c *Coordinator) startFromTies(j *joint, w *weighed) bool {
 // others within an island are tested against the prediction of those held, and those that pass are taken back.
 func (c *Coordinator) settle(j *joint, w *weighed) error {
 	if c.cfg.HoldAll || len(j.anchors) == len(j.graph.Values.Poses) {
-		return j.finish()
+		return c.finish(j)
 	}
 	limit := distuv.ChiSquared{K: float64(c.width())}.Quantile(acceptance)
 	for round := 0; round < 2; round++ {
 		if err := c.giveUp(j, w, limit); err != nil {
 			return err
 		}
-		if err := j.finish(); err != nil {
+		if err := c.finish(j); err != nil {
 			return err
 		}
 		readmitted, err := c.test(j, w, limit)
@@ -302,7 +302,7 @@ func (c *Coordinator) settle(j *joint, w *weighed) error {
 	if err := c.giveUp(j, w, limit); err != nil {
 		return err
 	}
-	return j.finish()
+	return c.finish(j)
 }
 
 // nearEnough is the share of F (or of 1, when F is smaller) below which a promised decrease means that the summaries were condensed
@@ -313,17 +313,29 @@ const nearEnough = 0.05
 // convergence. Close to it one Gauss-Newton step from where the robots are is better: it is the step of the adjustment in one
 // piece, while the cliques' own curvature, force times lever, is not that of the maps behind them (seen on a recorded set cut in
 // two: 171 epochs instead of 5).
-func (j *joint) finish() error {
-	at := slices.Clone(j.graph.Values.Poses)
-	copy(j.graph.Values.Poses, j.start)
-	if _, taken := j.solver.Step(nearEnough * max(j.graph.Cost(), 1)); taken {
-		return nil
+//
+// One step may leave a little to gain. If every robot then answers that its summary still stands, the cliques are good where the
+// fleet is, and the next solution follows them to the end (Coordinator.rest).
+func (c *Coordinator) finish(j *joint) error {
+	if !c.rest {
+		at := slices.Clone(j.graph.Values.Poses)
+		copy(j.graph.Values.Poses, j.start)
+		if _, taken := j.solver.Step(nearEnough * max(j.graph.Cost(), 1)); taken {
+			cost, gradient := j.solver.Linearise()
+			left, err := j.solver.Decrease(gradient)
+			c.left = left > converged*max(cost, 1)
+			return err
+		}
+		copy(j.graph.Values.Poses, at)
 	}
-	copy(j.graph.Values.Poses, at)
+	c.left = false
 	o := posegraph.DefaultOptions()
 	o.Tolerance = 1e-14
 	return j.optimise(o)
 }
+
+// converged is the share of F (or of 1, when F is smaller) that a solution may leave to gain.
+const converged = 1e-12
 
 func (j *joint) optimise(o posegraph.Options) error {
 	r := j.solver.Optimise(o)
