@@ -1,102 +1,150 @@
 package evidence
 
-// meetings is the net of units and the places where they meet. Ties of several pairs may rest on one and the same place: where
-// one place looks like another, every robot that comes by makes the same error. Between two parts of the fleet such a place
-// counts once, however many pairs of units it ties together, so what binds the parts is not a sum over pairs.
-//
-// Each place is a pair of vertices with one arc of capacity 1; the least number of places that part two units is a maximum
-// flow (Ford, Fulkerson, "Maximal flow through a network", Canadian J. Math. 8, 1956).
-type meetings struct {
-	units int
-	arcs  []arc
-	first [][]int // per vertex: its arcs; arc k^1 leads back along arc k
-	left  []int   // per arc, in a search
-	from  []int   // per vertex, in a search: the arc it was reached by
-	queue []int
-}
+// Ties of several pairs may rest on one and the same place: where one place looks like another, every robot that comes by makes
+// the same error, and the errors agree with each other. Between two parts of the fleet such a place counts once, however many
+// pairs it ties together, so what binds the parts is not the sum of the pairs' weights. What is held must therefore hang together
+// even if any two places are struck out.
 
-type arc struct{ to, capacity int }
+const strikes = 2
 
-const unbounded = 1 << 30
-
-// meet gathers the places that the satisfied hypotheses of c rest on. Two places within o.PlaceM of each other in c are one.
-func (f *fleet) meet(c *config) *meetings {
-	m := &meetings{units: f.n, first: make([][]int, f.n)}
-	type place struct {
-		at     [3]float64
-		comp   int
-		vertex int
-		units  []bool
+// firm numbers the units so that those with the same number still hang together in c, over any hypotheses it satisfies, when any
+// two places are struck out. A place struck out takes from each hypothesis the nearest of its own places, if that
+// lies within twice o.PlaceM: so much for the extent of a place and for what c misplaces it.
+func (f *fleet) firm(c *config) []int {
+	s := striker{f: f, class: make([]int, f.n), strong: make([]int, f.n)}
+	for u := range s.strong {
+		s.strong[u] = u
 	}
-	var ps []place
+	copy(s.class, c.comp)
+	type centre struct {
+		at   [3]float64
+		comp int
+	}
+	var centres []centre
 	for k := range f.hs {
 		h := &f.hs[k]
 		if !c.holds[k] || h.weight == 0 {
 			continue
 		}
-		for _, t := range h.spots {
-			l := &f.b.links[t]
-			p := c.at[h.a].Apply(f.b.tracks[h.a].Poses[l.i].T)
-			at := -1
-			for i := range ps {
-				if ps[i].comp == c.comp[h.a] && !far(&ps[i].at, &p, f.b.o.PlaceM) {
-					at = i
-					break
+		if len(h.spots) > strikes { // not to be struck out
+			merge(s.strong, h.a, h.b)
+			continue
+		}
+		s.weak = append(s.weak, k)
+	}
+	at := func(k, i int) [3]float64 {
+		h := &f.hs[k]
+		return c.at[h.a].Apply(f.b.tracks[h.a].Poses[f.b.links[h.spots[i]].i].T)
+	}
+	live := s.weak[:0]
+	for _, k := range s.weak {
+		if root(s.strong, f.hs[k].a) != root(s.strong, f.hs[k].b) {
+			live = append(live, k)
+		}
+	}
+	s.weak = live
+	reach := f.b.o.PlaceM
+	for _, k := range s.weak {
+	next:
+		for i := range f.hs[k].spots {
+			p := at(k, i)
+			for j := range centres {
+				if centres[j].comp == c.comp[f.hs[k].a] && !far(&centres[j].at, &p, reach/2) {
+					continue next
 				}
 			}
-			if at < 0 {
-				at = len(ps)
-				v := len(m.first)
-				m.first = append(m.first, nil, nil)
-				m.join(v, v+1, 1)
-				ps = append(ps, place{p, c.comp[h.a], v, make([]bool, f.n)})
+			centres = append(centres, centre{p, c.comp[f.hs[k].a]})
+		}
+	}
+	s.hits = make([][]hit, len(centres))
+	for j := range centres {
+		for w, k := range s.weak {
+			if centres[j].comp != c.comp[f.hs[k].a] {
+				continue
 			}
-			for _, u := range [2]int{h.a, h.b} {
-				if !ps[at].units[u] {
-					ps[at].units[u] = true
-					m.join(u, ps[at].vertex, unbounded)
-					m.join(ps[at].vertex+1, u, unbounded)
+			best, d := -1, 2*reach
+			for i := range f.hs[k].spots {
+				p := at(k, i)
+				if x := distance(p, centres[j].at); x <= d {
+					best, d = i, x
 				}
+			}
+			if best >= 0 {
+				s.hits[j] = append(s.hits[j], hit{w, best})
 			}
 		}
 	}
-	m.left, m.from = make([]int, len(m.arcs)), make([]int, len(m.first))
-	return m
+	s.struck = make([][]int, len(s.weak))
+	for w, k := range s.weak {
+		s.struck[w] = make([]int, len(f.hs[k].spots))
+	}
+	s.strike(0, strikes)
+	return s.class
 }
 
-func (m *meetings) join(u, v, capacity int) {
-	m.first[u] = append(m.first[u], len(m.arcs))
-	m.first[v] = append(m.first[v], len(m.arcs)+1)
-	m.arcs = append(m.arcs, arc{v, capacity}, arc{u, 0})
+// hit is a place of a weak hypothesis: indices into weak and into its spots.
+type hit struct{ weak, spot int }
+
+type striker struct {
+	f      *fleet
+	weak   []int   // hypotheses that few places can bring down
+	hits   [][]hit // per centre
+	struck [][]int // per weak hypothesis and spot: how often it is struck out
+	strong []int   // units joined by what cannot be brought down
+	class  []int
 }
 
-// between returns how many places bind units a and b to each other, not more than limit.
-func (m *meetings) between(a, b, limit int) int {
-	for k := range m.arcs {
-		m.left[k] = m.arcs[k].capacity
+// strike strikes out every choice of left places from centre on, and splits the classes by what still hangs together.
+func (s *striker) strike(centre, left int) {
+	if left == 0 || centre == len(s.hits) {
+		s.split()
+		return
 	}
-	for n := 0; n < limit; n++ {
-		for v := range m.from {
-			m.from[v] = -1
+	for j := centre; j < len(s.hits); j++ {
+		for _, h := range s.hits[j] {
+			s.struck[h.weak][h.spot]++
 		}
-		m.queue = append(m.queue[:0], a)
-		for k := 0; k < len(m.queue) && m.from[b] < 0; k++ {
-			for _, x := range m.first[m.queue[k]] {
-				if v := m.arcs[x].to; m.left[x] > 0 && m.from[v] < 0 && v != a {
-					m.from[v] = x
-					m.queue = append(m.queue, v)
-				}
+		s.strike(j+1, left-1)
+		for _, h := range s.hits[j] {
+			s.struck[h.weak][h.spot]--
+		}
+	}
+}
+
+func (s *striker) split() {
+	n := s.f.n
+	join := make([]int, n)
+	copy(join, s.strong)
+	for w, k := range s.weak {
+		for _, x := range s.struck[w] {
+			if x == 0 {
+				merge(join, s.f.hs[k].a, s.f.hs[k].b)
+				break
 			}
 		}
-		if m.from[b] < 0 {
-			return n
-		}
-		for v := b; v != a; { // every way leads through a place, so it carries 1
-			x := m.from[v]
-			m.left[x]--
-			m.left[x^1]++
-			v = m.arcs[x^1].to
+	}
+	// Same class and still joined: same class after; named by its lowest unit.
+	next := make([]int, n)
+	for u := range next {
+		next[u] = u
+		for v := 0; v < u; v++ {
+			if s.class[v] == s.class[u] && root(join, v) == root(join, u) {
+				next[u] = next[v]
+				break
+			}
 		}
 	}
-	return limit
+	s.class = next
+}
+
+func root(parent []int, u int) int {
+	for parent[u] != u {
+		u = parent[u]
+	}
+	return u
+}
+
+func merge(parent []int, u, v int) {
+	u, v = root(parent, u), root(parent, v)
+	parent[max(u, v)] = min(u, v)
 }

@@ -25,14 +25,16 @@ func (f *fleet) weigh(pairs int) weighed {
 	w := weighed{config{}, f.margins(&c, limit), make([]bool, n), make([]float64, n), make([]bool, n)}
 	w.c = c
 	f.load(&c)
-	m := f.meet(&c)
+	class := f.firm(&c)
 	for k := range f.hs {
 		h := &f.hs[k]
 		w.expected[k] = expected(pairs, max(h.count, h.weight), h.weight, h.chance)
 		if !c.holds[k] {
 			continue
 		}
-		w.margin[k] = min(w.margin[k], m.between(h.a, h.b, limit))
+		if class[h.a] != class[h.b] {
+			w.margin[k] = min(w.margin[k], strikes, o.CycleMargin-1)
+		}
 		w.cycle[k] = f.confirmed(h)
 		need := o.BridgeMargin
 		if w.cycle[k] {
