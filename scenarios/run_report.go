@@ -4,6 +4,7 @@ import (
 	"fmt"
 	"math"
 	"slices"
+	"strconv"
 	"strings"
 
 	"selvage/internal/report"
@@ -84,14 +85,14 @@ func (s *Score) failed() []string {
 			if c.Value == nil {
 				out = append(out, "there is no common map to compare with the adjustment in one piece")
 			} else {
-				out = append(out, fmt.Sprintf("the fleet's answer lies %.1g above that in one piece", *c.Value))
+				out = append(out, "the fleet's answer lies "+power(*c.Value, 2)+" of the cost above that in one piece")
 			}
 		case "false_ties_held":
 			out = append(out, countOf(int(*c.Value), "false tie")+" held")
 		case "largest_summary":
-			out = append(out, fmt.Sprintf("a summary took %.0f %% of its robot's raw graph", 100**c.Value))
+			out = append(out, fmt.Sprintf("a summary took %.3g %% of its robot's raw graph", 100**c.Value))
 		case "bytes_up":
-			out = append(out, fmt.Sprintf("a robot sent %.0f %% of its raw graph", 100**c.Value))
+			out = append(out, fmt.Sprintf("a robot sent %.3g %% of its raw graph", 100**c.Value))
 		}
 	}
 	return out
@@ -322,13 +323,31 @@ func metres(x *float64, reason string) string {
 // kilo writes bytes as kB.
 func kilo(bytes int) string { return fmt.Sprintf("%.1f", float64(bytes)/1000) }
 
-// small writes a figure that may be missing to two digits.
+// small writes a figure that may be missing: whole numbers as they are, others to three digits, tiny ones with a power of ten.
 func small(x *float64, reason string) string {
-	if x == nil {
+	switch {
+	case x == nil:
 		return report.Missing(reason)
-	}
-	if *x == math.Trunc(*x) && math.Abs(*x) < 1e6 {
+	case *x == math.Trunc(*x) && math.Abs(*x) < 1e6:
 		return fmt.Sprintf("%.0f", *x)
+	case math.Abs(*x) >= 1e-3 && math.Abs(*x) < 1e6:
+		return fmt.Sprintf("%.3g", *x)
 	}
-	return fmt.Sprintf("%.2g", *x)
+	return power(*x, 2)
+}
+
+// power writes a number with the given digits and a power of ten, as 1.5·10⁻¹¹.
+func power(x float64, digits int) string {
+	mantissa, exponent, _ := strings.Cut(fmt.Sprintf("%.*e", digits-1, x), "e")
+	n, _ := strconv.Atoi(exponent)
+	raised := strings.Map(func(r rune) rune {
+		if r == '-' {
+			return '⁻'
+		}
+		return []rune("⁰¹²³⁴⁵⁶⁷⁸⁹")[r-'0']
+	}, strconv.Itoa(n))
+	if mantissa == "1" {
+		return "10" + raised
+	}
+	return mantissa + "·10" + raised
 }

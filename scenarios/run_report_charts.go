@@ -11,6 +11,7 @@ import (
 // charts draws the error of the map and the bytes of each robot over time.
 func (r *Run) charts(s *Score) []report.ChartGroup {
 	const minutes = "time (min)"
+	whole := func(bytes int) string { return fmt.Sprintf("%.0f kB", float64(bytes)/1000) }
 	at := make([]float64, len(r.Samples))
 	var errors []float64
 	finite := 0
@@ -40,7 +41,7 @@ func (r *Run) charts(s *Score) []report.ChartGroup {
 	}
 	group := report.ChartGroup{
 		Title: "Bytes sent by each robot over time",
-		Note:  "Beside what its raw graph would have taken: 58 bytes for each keyframe, 144 for each measurement. All at one scale.",
+		Note:  "Beside it in ink what the raw graph would have taken: 58 bytes for each keyframe, 144 for each measurement. All at one scale.",
 	}
 	for i := range s.Robots {
 		x := &s.Robots[i]
@@ -51,8 +52,8 @@ func (r *Run) charts(s *Score) []report.ChartGroup {
 		group.Charts = append(group.Charts, report.Chart{
 			Title: x.ID, XLabel: minutes, YLabel: "so far (kB)",
 			Series: []report.Series{
-				{Label: "sent " + kilo(x.BytesUp) + " kB", Hue: i + 1, X: at, Y: sent},
-				{Label: "raw graph " + kilo(x.BytesRaw) + " kB", X: at, Y: raw},
+				{Label: "sent " + whole(x.BytesUp), Hue: i + 1, X: at, Y: sent},
+				{Label: "raw " + whole(x.BytesRaw), X: at, Y: raw},
 			},
 		})
 	}

@@ -33,7 +33,7 @@ func (s *Score) Text(w io.Writer, width int) error {
 	line("rounds", fmt.Sprintf("%d after the last measurement; epoch %d", s.Rounds, s.Epoch))
 	switch {
 	case s.GapRelative != nil:
-		line("gap", fmt.Sprintf("%.2g to the adjustment in one piece (accepted up to %g)", *s.GapRelative, gapLimit))
+		line("gap", fmt.Sprintf("%s to the adjustment in one piece (accepted up to %s)", power(*s.GapRelative, 2), power(gapLimit, 1)))
 	case s.Interrupted:
 		line("gap", "not computed: interrupted")
 	default:
@@ -109,7 +109,7 @@ func (s *Score) acceptanceTable() report.Table {
 	}
 	for i := range s.Acceptance {
 		c := &s.Acceptance[i]
-		holds, reached, limit := "no", small(c.Value, "no sessions share a datum"), fmt.Sprintf("%g", c.Limit)
+		holds, reached, limit := "no", small(c.Value, "no sessions share a datum"), small(&c.Limit, "")
 		if c.OK {
 			holds = "yes"
 		}

@@ -20,10 +20,11 @@ type cli struct {
 	LogLevel string           `enum:"debug,info,warn,error" default:"info" placeholder:"LEVEL" help:"Log from this level on: debug, info (the default), warn or error."`
 	Version  kong.VersionFlag `help:"Print the version and stop."`
 
-	Adjust  adjustCmd  `cmd:"" help:"Adjust a whole survey in one piece."`
-	Split   splitCmd   `cmd:"" help:"Cut the survey of one robot into connected pieces."`
-	Convert convertCmd `cmd:"" help:"Turn data in another format into a survey."`
-	Show    versionCmd `cmd:"" name:"version" help:"Print the version of the program."`
+	Rehearse rehearseCmd `cmd:"" help:"Run a whole fleet on a virtual clock and score it."`
+	Adjust   adjustCmd   `cmd:"" help:"Adjust a whole survey in one piece."`
+	Split    splitCmd    `cmd:"" help:"Cut the survey of one robot into connected pieces."`
+	Convert  convertCmd  `cmd:"" help:"Turn data in another format into a survey."`
+	Show     versionCmd  `cmd:"" name:"version" help:"Print the version of the program."`
 }
 
 func main() {

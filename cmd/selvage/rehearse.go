@@ -67,7 +67,9 @@ func (c *rehearseCmd) Run(ctx context.Context, con *console) error {
 		return err
 	}
 	watch.begin("writing " + c.Out)
-	if err := run.Write(c.Out, score, o.made, version()); err != nil {
+	minutes := run.EndNS / 60e9
+	made := fmt.Sprintf("%s, %d h %02d min of virtual time", o.made, minutes/60, minutes%60)
+	if err := run.Write(c.Out, score, made, version()); err != nil {
 		return err
 	}
 	watch.end()
@@ -106,7 +108,7 @@ func (c *rehearseCmd) plan() (func() (rehearsal, error), error) {
 			c.Out = "rehearsal-" + s.Meta.Name
 		}
 		return func() (rehearsal, error) {
-			return rehearsal{scenarios.Recorded(s), "recorded survey, virtual time"}, nil
+			return rehearsal{scenarios.Recorded(s), "recorded survey"}, nil
 		}, nil
 	}
 	sc, err := c.scenario()
@@ -121,7 +123,7 @@ func (c *rehearseCmd) plan() (func() (rehearsal, error), error) {
 		if err != nil {
 			return rehearsal{}, badInput("%w", err)
 		}
-		return rehearsal{w.Outing(sc, sc.Seed), fmt.Sprintf("seed %d, virtual time", sc.Seed)}, nil
+		return rehearsal{w.Outing(sc, sc.Seed), fmt.Sprintf("seed %d", sc.Seed)}, nil
 	}, nil
 }
 
