@@ -1,0 +1,148 @@
+// Package shell runs the core of an agent on a robot: it owns the bus, the clock and the goroutines that the core knows nothing
+// of.
+//
+//	front end --Measure--> owner goroutine --effects--> outbox --> bus
+//	bus --want, correction, verdict--^   ^--ticker
+//
+// One goroutine, the owner, touches the core. It never waits for the bus: what the core publishes goes into an outbox, where a
+// newer summary or heartbeat takes the place of an older one that is not sent yet, and ties wait side by side. What cannot be sent
+// is sent again when the link is back, and the core itself repeats what stays unanswered.
+//
+// A summary of more than 256 kB goes as chunks, one at a time, into two slots in turn, then the head that says which; heartbeats
+// and ties get between.
+package shell
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"sync"
+	"time"
+
+	"selvage/agent"
+	"selvage/internal/bus"
+	"selvage/internal/outbox"
+	"selvage/msgs"
+)
+
+// ErrStopped means that the shell does not run any more.
+var ErrStopped = errors.New("the agent has stopped")
+
+// Options say where an agent stands on the bus.
+type Options struct {
+	Fleet, Robot string        // as in the configuration of the core
+	Tick         time.Duration // how often the core is told the time
+	Warn         func(error)   // told of what was refused and of what could not be sent; called from several goroutines
+}
+
+// Traffic is what crossed the link so far: bytes of payloads and subjects, up what was sent and down what was heard.
+type Traffic struct {
+	Up, Down       int
+	Messages       int // sent
+	Summaries      int // sent
+	LargestSummary int // bytes, all chunks together
+}
+
+// Shell runs one agent.
+type Shell struct {
+	core    *agent.Agent
+	link    *bus.Client
+	options Options
+	begin   time.Time
+	calls   chan func()
+	stopped chan struct{}
+	out     *outbox.Outbox[lane, agent.Publish]
+	slot    msgs.Slot // for the next large summary; of the one worker that has it
+
+	mu      sync.Mutex
+	traffic Traffic
+}
+
+// New makes a shell around a core. Until Run has returned the core belongs to the shell.
+func New(core *agent.Agent, link *bus.Client, o Options) *Shell {
+	s := &Shell{
+		core: core, link: link, options: o, begin: time.Now(), calls: make(chan func()), stopped: make(chan struct{}), slot: msgs.SlotA,
+	}
+	s.out = outbox.New(s.send, o.Warn)
+	return s
+}
+
+// Run runs the agent until ctx ends. It waits for all that it started. It can be called once.
+func (s *Shell) Run(ctx context.Context) {
+	var wait sync.WaitGroup
+	defer wait.Wait()
+	defer close(s.stopped)
+	wait.Go(func() { s.out.Run(ctx, workers) })
+	wait.Go(func() { s.listen(ctx) })
+	tick := time.NewTicker(s.options.Tick)
+	defer tick.Stop()
+	for {
+		select {
+		case <-ctx.Done():
+			return
+		case call := <-s.calls:
+			call()
+		case <-tick.C:
+			if err := s.handle(agent.Tick{}); err != nil {
+				s.options.Warn(fmt.Errorf("tick: %w", err))
+			}
+		}
+	}
+}
+
+// now is the time of day when the shell was made plus what has passed since: it never goes back.
+func (s *Shell) now() int64 { return s.begin.UnixNano() + int64(time.Since(s.begin)) }
+
+// handle gives the core an event and puts what it publishes into the outbox. Only the owner calls it.
+func (s *Shell) handle(e agent.Event) error {
+	out, err := s.core.Handle(s.now(), e)
+	for _, p := range out {
+		s.out.Put(laneOf(&p), p)
+	}
+	return err
+}
+
+// Measure gives the agent what its front end delivers, in one go. It stops at the first event that is refused and says why.
+func (s *Shell) Measure(ctx context.Context, events ...agent.Event) error {
+	var refused error
+	err := s.call(ctx, func() {
+		for i := range events {
+			if refused = s.handle(events[i]); refused != nil {
+				return
+			}
+		}
+	})
+	if err != nil {
+		return err
+	}
+	return refused
+}
+
+// Do lets f look at the core while nobody else touches it. What f keeps of it must be a copy.
+func (s *Shell) Do(ctx context.Context, f func(*agent.Agent)) error {
+	return s.call(ctx, func() { f(s.core) })
+}
+
+// call lets the owner run f and waits for it.
+func (s *Shell) call(ctx context.Context, f func()) error {
+	done := make(chan struct{})
+	select {
+	case s.calls <- func() { defer close(done); f() }:
+		<-done
+		return nil
+	case <-s.stopped:
+		return ErrStopped
+	case <-ctx.Done():
+		return ctx.Err()
+	}
+}
+
+// Sent tells whether the outbox is empty.
+func (s *Shell) Sent() bool { return s.out.Empty() }
+
+// Traffic returns what crossed the link so far.
+func (s *Shell) Traffic() Traffic {
+	s.mu.Lock()
+	defer s.mu.Unlock()
+	return s.traffic
+}

@@ -1,0 +1,131 @@
+// Package shell runs the core of a coordinator at the base: it owns the bus, the clock and the goroutines that the core knows
+// nothing of.
+//
+//	bus --ties, summaries, heartbeats--> owner goroutine --effects--> outbox --> bus
+//	                                       ^--ticker
+//
+// One goroutine, the owner, touches the core. It never waits for the bus: what the core publishes goes into an outbox, where a
+// newer correction, want or verdict takes the place of an older one of the same robot or tie that is not sent yet.
+//
+// Ties are read from the beginning of their streams, and of summaries the newest that are kept, each time the shell starts: the
+// streams are the memory of the base, and a coordinator that was killed comes back to what it knew. The core drops what it has
+// seen.
+package shell
+
+import (
+	"context"
+	"errors"
+	"fmt"
+	"slices"
+	"sync"
+	"time"
+
+	"selvage/coordinator"
+	"selvage/internal/bus"
+	"selvage/internal/outbox"
+)
+
+// ErrStopped means that the shell does not run any more.
+var ErrStopped = errors.New("the coordinator has stopped")
+
+// Options say for whom a coordinator speaks.
+type Options struct {
+	Fleet  string        // as in the configuration of the core
+	Robots []string      // whose streams are made and read; others are not heard
+	Tick   time.Duration // how often the core is told the time
+	Warn   func(error)   // told of what was refused and of what could not be sent; called from several goroutines
+}
+
+// Shell runs one coordinator.
+type Shell struct {
+	core    *coordinator.Coordinator
+	link    *bus.Client
+	options Options
+	begin   time.Time
+	calls   chan func()
+	stopped chan struct{}
+	out     *outbox.Outbox[lane, coordinator.Publish]
+}
+
+// New makes a shell around a core. Until Run has returned the core belongs to the shell.
+func New(core *coordinator.Coordinator, link *bus.Client, o Options) *Shell {
+	o.Robots = slices.Clone(o.Robots)
+	s := &Shell{
+		core: core, link: link, options: o, begin: time.Now(), calls: make(chan func()), stopped: make(chan struct{}),
+	}
+	s.out = outbox.New(s.send, o.Warn)
+	return s
+}
+
+// Run makes the streams of the fleet and runs the coordinator until ctx ends. It returns an error when it could not begin, and
+// waits for all that it started. It can be called once.
+func (s *Shell) Run(ctx context.Context) error {
+	var wait sync.WaitGroup
+	defer wait.Wait()
+	defer close(s.stopped)
+	ctx, cancel := context.WithCancel(ctx)
+	defer cancel()
+	if err := s.link.Prepare(ctx, s.options.Fleet, s.options.Robots...); err != nil {
+		return err
+	}
+	began := make(chan error, 1)
+	wait.Go(func() { s.out.Run(ctx, workers) })
+	wait.Go(func() { s.listen(ctx, began) })
+	tick := time.NewTicker(s.options.Tick)
+	defer tick.Stop()
+	for {
+		select {
+		case <-ctx.Done():
+			return nil
+		case err := <-began:
+			if err != nil {
+				return err
+			}
+		case call := <-s.calls:
+			call()
+		case <-tick.C:
+			s.tick()
+		}
+	}
+}
+
+// tick tells the core the time and puts what it publishes into the outbox. Only the owner calls it.
+func (s *Shell) tick() {
+	out, err := s.core.Tick(s.now())
+	if err != nil {
+		s.options.Warn(fmt.Errorf("tick: %w", err))
+	}
+	for _, p := range out {
+		to, err := laneOf(&p)
+		if err != nil {
+			s.options.Warn(err)
+			continue
+		}
+		s.out.Put(to, p)
+	}
+}
+
+// now is the time of day when the shell was made plus what has passed since: it never goes back.
+func (s *Shell) now() int64 { return s.begin.UnixNano() + int64(time.Since(s.begin)) }
+
+// Do lets f look at the core while nobody else touches it. What f keeps of it must be a copy.
+func (s *Shell) Do(ctx context.Context, f func(*coordinator.Coordinator)) error {
+	return s.call(ctx, func() { f(s.core) })
+}
+
+// call lets the owner run f and waits for it.
+func (s *Shell) call(ctx context.Context, f func()) error {
+	done := make(chan struct{})
+	select {
+	case s.calls <- func() { defer close(done); f() }:
+		<-done
+		return nil
+	case <-s.stopped:
+		return ErrStopped
+	case <-ctx.Done():
+		return ctx.Err()
+	}
+}
+
+// Sent tells whether the outbox is empty.
+func (s *Shell) Sent() bool { return s.out.Empty() }
