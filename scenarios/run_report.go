@@ -63,7 +63,10 @@ func (s *Score) Finding() string {
 	} else {
 		fmt.Fprintf(&b, "%d of %d robots share the datum", joined, len(s.Robots))
 	}
-	fmt.Fprintf(&b, "; %s held, %d refused, %d open", countOf(s.Ties.All.Held, "tie"), s.Ties.All.Refused, s.Ties.All.Open+s.Ties.All.Unheard)
+	fmt.Fprintf(&b, "; %s held, %d refused, %d open", countOf(s.Ties.All.Held, "tie"), s.Ties.All.Refused, s.Ties.All.Open)
+	if n := s.Ties.All.Unheard; n > 0 {
+		fmt.Fprintf(&b, ", %d never reached the base", n)
+	}
 	if failed := s.failed(); len(failed) > 0 && !s.Interrupted {
 		fmt.Fprintf(&b, "; but %s", strings.Join(failed, " and "))
 	}
@@ -166,9 +169,9 @@ func (r *Run) whyApart(robot int, places []place) string {
 		return "it forms an island with " + list(with)
 	}
 	n, heard := 0, 0
-	verdict := r.verdicts()
+	verdict, measured := r.verdicts(), r.measured()
 	for i := range r.Outing.Survey.Ties {
-		if t := &r.Outing.Survey.Ties[i]; t.FromRobot == id || t.ToRobot == id {
+		if t := &r.Outing.Survey.Ties[i]; measured[i] && (t.FromRobot == id || t.ToRobot == id) {
 			n++
 			if verdict[t.ID].Verdict != 0 {
 				heard++
@@ -189,8 +192,11 @@ func (r *Run) doubts() []string {
 	type doubt struct{ pair, reason string }
 	var order []doubt
 	ids := map[doubt][]string{}
-	verdict := r.verdicts()
+	verdict, measured := r.verdicts(), r.measured()
 	for i := range r.Outing.Survey.Ties {
+		if !measured[i] {
+			continue
+		}
 		t := &r.Outing.Survey.Ties[i]
 		f := verdict[t.ID]
 		reason := f.Reason
@@ -338,6 +344,9 @@ func small(x *float64, reason string) string {
 
 // power writes a number with the given digits and a power of ten, as 1.5·10⁻¹¹.
 func power(x float64, digits int) string {
+	if x == 0 {
+		return "0"
+	}
 	mantissa, exponent, _ := strings.Cut(fmt.Sprintf("%.*e", digits-1, x), "e")
 	n, _ := strconv.Atoi(exponent)
 	raised := strings.Map(func(r rune) rune {

@@ -56,12 +56,12 @@ func (r *Run) plan(places []place, poses [][]survey.ResultPose, t *truthIndex, t
 	for _, x := range r.singles() {
 		unchecked[x.tie] = x.bridge
 	}
-	verdict := r.verdicts()
+	verdict, measured := r.verdicts(), r.measured()
 	for i := range s.Ties {
 		tie := &s.Ties[i]
 		a, ok := where[adjust.Key{Robot: tie.FromRobot, Session: tie.FromSession, ID: tie.FromKey}]
 		b, found := where[adjust.Key{Robot: tie.ToRobot, Session: tie.ToSession, ID: tie.ToKey}]
-		if !ok || !found || tie.ToByStamp || a.island != b.island {
+		if !ok || !found || !measured[i] || tie.ToByStamp || a.island != b.island {
 			continue
 		}
 		mark := report.TieMark{ID: tie.ID, From: a.at, To: b.at, Island: a.island, Verdict: report.Open, Unchecked: unchecked[tie.ID]}

@@ -154,8 +154,11 @@ func (r *Run) doubtTable(truth []bool) report.Table {
 	if truth != nil {
 		t.Columns = append(t.Columns, report.Column{Name: "truth"})
 	}
-	verdict := r.verdicts()
+	verdict, measured := r.verdicts(), r.measured()
 	for i := range r.Outing.Survey.Ties {
+		if !measured[i] {
+			continue
+		}
 		tie := &r.Outing.Survey.Ties[i]
 		f := verdict[tie.ID]
 		word, reason := f.Verdict.String(), f.Reason

@@ -230,7 +230,7 @@ func upper(c []float64) (out [21]float64) {
 
 // resultVerdicts returns the finding on every tie, in the order of the survey.
 func (r *Run) resultVerdicts() []survey.ResultVerdict {
-	verdict := r.verdicts()
+	verdict, measured := r.verdicts(), r.measured()
 	unknown := math.NaN()
 	var out []survey.ResultVerdict
 	for i := range r.Outing.Survey.Ties {
@@ -245,6 +245,9 @@ func (r *Run) resultVerdicts() []survey.ResultVerdict {
 		case msgs.Open:
 		default:
 			v.Reason = unheard
+			if !measured[i] {
+				v.Reason = "not yet measured when the run was stopped"
+			}
 		}
 		if f.DoF > 0 {
 			v.ChiSquare = f.Statistic

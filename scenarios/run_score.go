@@ -44,7 +44,7 @@ type Score struct {
 	Refusals int `json:"refusals"`
 	// The robots, in the order of the survey.
 	Robots []RobotScore `json:"robots"`
-	// The ties, counted by truth and verdict.
+	// The ties measured before the run ended, counted by truth and verdict.
 	Ties TieScore `json:"ties"`
 	// Sets of two and more sessions that share a datum; the first is the map's datum.
 	Islands []IslandScore `json:"islands"`
@@ -246,7 +246,7 @@ func (r *Run) accept(s *Score, sessions int) {
 	check("bytes_up", "no robot sends more bytes than its raw graph has", &up, bytesLimit, up <= bytesLimit)
 }
 
-// countTies counts the ties of the survey by truth and verdict.
+// countTies counts the ties that were measured before the run ended, by truth and verdict.
 func (r *Run) countTies(out *TieScore, t *truthIndex) error {
 	truth, err := r.tieTruth(t)
 	if err != nil {
@@ -255,8 +255,11 @@ func (r *Run) countTies(out *TieScore, t *truthIndex) error {
 	if truth != nil {
 		out.True, out.False = &Verdicts{}, &Verdicts{}
 	}
-	verdict := r.verdicts()
+	verdict, measured := r.verdicts(), r.measured()
 	for i := range r.Outing.Survey.Ties {
+		if !measured[i] {
+			continue
+		}
 		v := verdict[r.Outing.Survey.Ties[i].ID].Verdict
 		out.All.add(v)
 		if truth != nil && truth[i] {

@@ -242,3 +242,16 @@ func (r *Run) verdicts() map[string]*coordinator.Finding {
 	}
 	return out
 }
+
+// measured tells for each tie whether its robot had it before the run ended.
+func (r *Run) measured() []bool {
+	out := make([]bool, len(r.Outing.Survey.Ties))
+	for _, feed := range r.Outing.Feed {
+		for _, e := range feed {
+			if e.Kind == TieEvent && e.AtNS <= r.EndNS {
+				out[e.Index] = true
+			}
+		}
+	}
+	return out
+}

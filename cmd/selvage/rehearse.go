@@ -45,7 +45,7 @@ func (c *rehearseCmd) Run(ctx context.Context, con *console) error {
 	if err != nil {
 		return err
 	}
-	if err := scenarios.CheckFolder(c.Out); err != nil {
+	if err := c.reserve(); err != nil {
 		return err
 	}
 	watch := con.watch(c.NoProgress)
@@ -125,6 +125,22 @@ func (c *rehearseCmd) plan() (func() (rehearsal, error), error) {
 		}
 		return rehearsal{w.Outing(sc, sc.Seed), fmt.Sprintf("seed %d", sc.Seed)}, nil
 	}, nil
+}
+
+// reserve makes sure, before the work begins, that the folder can be written when it is done.
+func (c *rehearseCmd) reserve() error {
+	if err := scenarios.CheckFolder(c.Out); err != nil {
+		return err
+	}
+	parent := filepath.Dir(filepath.Clean(c.Out))
+	if err := os.MkdirAll(parent, 0o755); err != nil {
+		return err
+	}
+	probe, err := os.MkdirTemp(parent, ".rehearsal-")
+	if err != nil {
+		return err
+	}
+	return os.Remove(probe)
 }
 
 // scenario reads the scenario and lays the flags over it.
