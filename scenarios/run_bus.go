@@ -21,7 +21,7 @@ const (
 	busTick      = 10 * time.Millisecond
 	busSample    = time.Second
 	busPatience  = 10 * time.Minute
-	busPublishNS = int64(20e6)
+	busPublishNS = int64(1e6)
 	busSettleNS  = int64(100e6)
 	busBeatNS    = int64(200e6)
 	busRetryNS   = int64(500e6)

@@ -21,7 +21,6 @@ import (
 
 	"selvage/agent"
 	"selvage/internal/bus"
-	"selvage/internal/outbox"
 	"selvage/msgs"
 )
 
@@ -51,7 +50,7 @@ type Shell struct {
 	begin   time.Time
 	calls   chan func()
 	stopped chan struct{}
-	out     *outbox.Outbox[lane, agent.Publish]
+	out     *bus.Outbox[lane, agent.Publish]
 	slot    msgs.Slot // for the next large summary; of the one worker that has it
 
 	mu      sync.Mutex
@@ -63,7 +62,7 @@ func New(core *agent.Agent, link *bus.Client, o Options) *Shell {
 	s := &Shell{
 		core: core, link: link, options: o, begin: time.Now(), calls: make(chan func()), stopped: make(chan struct{}), slot: msgs.SlotA,
 	}
-	s.out = outbox.New(s.send, o.Warn)
+	s.out = bus.NewOutbox(s.send, o.Warn)
 	return s
 }
 

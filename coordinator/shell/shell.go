@@ -22,7 +22,6 @@ import (
 
 	"selvage/coordinator"
 	"selvage/internal/bus"
-	"selvage/internal/outbox"
 )
 
 // ErrStopped means that the shell does not run any more.
@@ -44,7 +43,7 @@ type Shell struct {
 	begin   time.Time
 	calls   chan func()
 	stopped chan struct{}
-	out     *outbox.Outbox[lane, coordinator.Publish]
+	out     *bus.Outbox[lane, coordinator.Publish]
 }
 
 // New makes a shell around a core. Until Run has returned the core belongs to the shell.
@@ -53,7 +52,7 @@ func New(core *coordinator.Coordinator, link *bus.Client, o Options) *Shell {
 	s := &Shell{
 		core: core, link: link, options: o, begin: time.Now(), calls: make(chan func()), stopped: make(chan struct{}),
 	}
-	s.out = outbox.New(s.send, o.Warn)
+	s.out = bus.NewOutbox(s.send, o.Warn)
 	return s
 }
 

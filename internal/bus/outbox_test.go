@@ -1,4 +1,4 @@
-package outbox
+package bus
 
 import (
 	"context"
@@ -11,8 +11,8 @@ import (
 	"time"
 )
 
-// link records what is sent; while down it refuses.
-type link struct {
+// flakyLink records what is sent; while down it refuses.
+type flakyLink struct {
 	mu   sync.Mutex
 	down bool
 	slow time.Duration
@@ -21,7 +21,7 @@ type link struct {
 	fail func(string)
 }
 
-func (l *link) send(_ context.Context, key, value string) error {
+func (l *flakyLink) send(_ context.Context, key, value string) error {
 	l.mu.Lock()
 	if l.busy[key] {
 		l.fail("two messages of key " + key + " on their way")
@@ -42,11 +42,11 @@ func (l *link) send(_ context.Context, key, value string) error {
 // pass lets time pass on the clock of the test, which costs none.
 func pass(d time.Duration) { <-time.After(d) }
 
-// run lets play an outbox with workers on a clock of its own, and returns what was sent and how often it warned.
-func run(t *testing.T, workers int, l *link, play func(o *Outbox[string, string])) (sent []string, warnings int) {
+// runOutbox lets play an outbox with workers on a clock of its own, and returns what was sent and how often it warned.
+func runOutbox(t *testing.T, workers int, l *flakyLink, play func(o *Outbox[string, string])) (sent []string, warnings int) {
 	synctest.Test(t, func(t *testing.T) {
 		l.busy, l.fail = map[string]bool{}, func(s string) { t.Error(s) }
-		o := New(l.send, func(error) { warnings++ })
+		o := NewOutbox(l.send, func(error) { warnings++ })
 		ctx, cancel := context.WithCancel(t.Context())
 		ended := make(chan struct{})
 		go func() { o.Run(ctx, workers); close(ended) }()
@@ -58,7 +58,7 @@ func run(t *testing.T, workers int, l *link, play func(o *Outbox[string, string]
 }
 
 func TestOneWorkerKeepsTheOrder(t *testing.T) {
-	sent, _ := run(t, 1, &link{}, func(o *Outbox[string, string]) {
+	sent, _ := runOutbox(t, 1, &flakyLink{}, func(o *Outbox[string, string]) {
 		for _, k := range []string{"a", "b", "c"} {
 			o.Put(k, "1")
 		}
@@ -73,7 +73,7 @@ func TestOneWorkerKeepsTheOrder(t *testing.T) {
 }
 
 func TestTheNewestOfAKeyIsSent(t *testing.T) {
-	sent, _ := run(t, 3, &link{slow: time.Second}, func(o *Outbox[string, string]) {
+	sent, _ := runOutbox(t, 3, &flakyLink{slow: time.Second}, func(o *Outbox[string, string]) {
 		o.Put("a", "1")
 		synctest.Wait() // on its way
 		for _, v := range []string{"2", "3", "4"} {
@@ -87,17 +87,17 @@ func TestTheNewestOfAKeyIsSent(t *testing.T) {
 }
 
 func TestNothingIsLostWhileTheLinkIsDown(t *testing.T) {
-	l := &link{down: true}
-	sent, warnings := run(t, 2, l, func(o *Outbox[string, string]) {
+	l := &flakyLink{down: true}
+	sent, warnings := runOutbox(t, 2, l, func(o *Outbox[string, string]) {
 		o.Put("a", "1")
 		o.Put("b", "1")
-		pass(10 * pause)
+		pass(10 * outboxRest)
 		o.Put("a", "2")
 		o.Put("c", "1")
 		l.mu.Lock()
 		l.down = false
 		l.mu.Unlock()
-		pass(3 * pause)
+		pass(3 * outboxRest)
 		if !o.Empty() {
 			t.Error("not empty after the link came back")
 		}
@@ -113,7 +113,7 @@ func TestNothingIsLostWhileTheLinkIsDown(t *testing.T) {
 
 func TestManyPutTheirLastValueArrives(t *testing.T) {
 	const keys, values = "abcdefgh", 200
-	sent, _ := run(t, 4, &link{slow: time.Millisecond}, func(o *Outbox[string, string]) {
+	sent, _ := runOutbox(t, 4, &flakyLink{slow: time.Millisecond}, func(o *Outbox[string, string]) {
 		var wait sync.WaitGroup
 		for _, k := range keys {
 			wait.Go(func() {

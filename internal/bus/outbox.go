@@ -1,7 +1,4 @@
-// Package outbox holds messages until they are sent. Whoever has a message puts it in and goes on; workers send what is there,
-// the oldest first, and again what failed. A message takes the place of an earlier one with the same key that is still waiting,
-// so that no queue grows while a link is down and nothing is sent that is outdated.
-package outbox
+package bus
 
 import (
 	"context"
@@ -9,32 +6,34 @@ import (
 	"time"
 )
 
-// pause is how long a worker rests after a failure.
-const pause = 500 * time.Millisecond
+// outboxRest is how long a worker rests after a failure.
+const outboxRest = 500 * time.Millisecond
 
-// Outbox holds messages of type V under keys of type K. Two messages of one key are never on their way at the same time; the
-// order of messages of different keys is not promised.
+// Outbox holds messages of type V under keys of type K until they are sent. Whoever has a message puts it in and goes on; workers
+// send what is there, the oldest first, and again what failed. A message takes the place of an earlier one with the same key that
+// is still waiting, so that no queue grows while a link is down and nothing is sent that is outdated. Two messages of one key are
+// never on their way at the same time; the order of messages of different keys is not promised.
 type Outbox[K comparable, V any] struct {
 	send func(ctx context.Context, key K, value V) error
 	warn func(error)
 
 	mu      sync.Mutex
 	queue   []K // waiting and not on their way, oldest first
-	entries map[K]*entry[V]
+	entries map[K]*outgoing[V]
 	failing bool
 	wake    chan struct{}
 }
 
-type entry[V any] struct {
+type outgoing[V any] struct {
 	value   V
 	waiting bool
 	flying  bool
 }
 
-// New returns an empty outbox. What send returned an error for is sent again after a while; warn is told of the first failure
+// NewOutbox returns an empty outbox. What send returned an error for is sent again after a while; warn is told of the first failure
 // after a success.
-func New[K comparable, V any](send func(ctx context.Context, key K, value V) error, warn func(error)) *Outbox[K, V] {
-	return &Outbox[K, V]{send: send, warn: warn, entries: map[K]*entry[V]{}, wake: make(chan struct{}, 1)}
+func NewOutbox[K comparable, V any](send func(ctx context.Context, key K, value V) error, warn func(error)) *Outbox[K, V] {
+	return &Outbox[K, V]{send: send, warn: warn, entries: map[K]*outgoing[V]{}, wake: make(chan struct{}, 1)}
 }
 
 // Put leaves a message to be sent. It never blocks.
@@ -43,7 +42,7 @@ func (o *Outbox[K, V]) Put(key K, value V) {
 	defer o.mu.Unlock()
 	e := o.entries[key]
 	if e == nil {
-		e = &entry[V]{}
+		e = &outgoing[V]{}
 		o.entries[key] = e
 	}
 	e.value = value
@@ -96,7 +95,7 @@ func (o *Outbox[K, V]) work(ctx context.Context) {
 		if news {
 			o.warn(err)
 		}
-		rest := time.NewTimer(pause)
+		rest := time.NewTimer(outboxRest)
 		select {
 		case <-ctx.Done():
 		case <-rest.C:
