@@ -78,7 +78,8 @@ type Run struct {
 	Samples     []Sample  // about once a minute
 	Settled     bool      // nothing was left to send or to answer
 	Interrupted bool
-	EndNS       int64 // virtual time at the end
+	OnBus       bool  // on the real bus: times count from its start
+	EndNS       int64 // time at the end
 	Rounds      int   // solutions after the last measurement had been delivered
 	Refusals    []string
 }

@@ -48,7 +48,7 @@ func OnBus(ctx context.Context, o *Outing, set Settings) (*Run, error) {
 	}
 	defer server.Close()
 	r := &busRun{
-		runner: &runner{Run: &Run{Outing: o, Traffic: make([]Traffic, len(o.Feed))}, track: newTruthIndex(o.Survey)},
+		runner: &runner{Run: &Run{Outing: o, OnBus: true, Traffic: make([]Traffic, len(o.Feed))}, track: newTruthIndex(o.Survey)},
 		begin:  time.Now(),
 	}
 	if err := r.run(ctx, server, set); err != nil {
