@@ -17,6 +17,7 @@ type Config struct {
 	Incarnation uint64 // of the base's store
 	Term        uint64 // of the lease under which it speaks
 	SolveNS     int64  // least time between two solutions, nanoseconds
+	PromptNS    int64  // the same once every robot has answered the last solution and nothing is missing
 	RetryNS     int64  // first waiting time before something unanswered is sent again; it doubles up to sixteen times
 	HoldAll     bool   // take every tie as true
 	Evidence    evidence.Options
@@ -291,7 +292,7 @@ func (c *Coordinator) Tick(nowNS int64) ([]Publish, error) {
 	c.now = max(c.now, nowNS)
 	var out []Publish
 	c.rest = !c.dirty && c.left && c.answered()
-	if (c.dirty || c.rest) && (!c.begun || c.now-c.solved >= c.cfg.SolveNS) {
+	if (c.dirty || c.rest) && c.due() {
 		c.begun, c.dirty, c.solved = true, false, c.now
 		var err error
 		if out, err = c.solve(); err != nil {
@@ -313,6 +314,25 @@ func (c *Coordinator) Tick(nowNS int64) ([]Publish, error) {
 		}
 	}
 	return out, nil
+}
+
+// due tells whether enough time has passed since the last solution.
+func (c *Coordinator) due() bool {
+	passed := c.now - c.solved
+	return !c.begun || passed >= c.cfg.SolveNS || passed >= c.cfg.PromptNS && c.complete()
+}
+
+// complete tells whether no robot is expected to send anything: a solution now would not be overtaken by what is on its way.
+func (c *Coordinator) complete() bool {
+	for _, r := range c.robots {
+		if len(r.beyond) > 0 || r.newest > r.safe || len(c.missing(r)) > 0 {
+			return false
+		}
+		if s := r.summary; s != nil && (r.version != s.Version || r.used != 0 && r.applied != c.Epoch()) {
+			return false
+		}
+	}
+	return true
 }
 
 // Epoch is that of the newest solution; its number is zero before the first.

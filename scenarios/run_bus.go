@@ -24,9 +24,10 @@ const (
 	busPublishNS = int64(1e6)
 	busSettleNS  = int64(100e6)
 	busBeatNS    = int64(200e6)
-	busRetryNS   = int64(500e6)
+	busRetryNS   = int64(200e6)
 	busAnswerNS  = int64(10e9)
-	busSolveNS   = int64(50e6)
+	busSolveNS   = int64(5e9)
+	busPromptNS  = int64(10e6)
 	busWarnings  = 100 // kept of each run
 )
 
@@ -48,7 +49,7 @@ func OnBus(ctx context.Context, o *Outing, set Settings) (*Run, error) {
 	}
 	defer server.Close()
 	r := &busRun{
-		runner: &runner{Run: &Run{Outing: o, OnBus: true, Traffic: make([]Traffic, len(o.Feed))}, track: newTruthIndex(o.Survey)},
+		runner: &runner{Run: &Run{Outing: o, Traffic: make([]Traffic, len(o.Feed))}, track: newTruthIndex(o.Survey)},
 		begin:  time.Now(),
 	}
 	if err := r.run(ctx, server, set); err != nil {
@@ -100,7 +101,8 @@ func (r *busRun) run(ctx context.Context, server *bus.Server, set Settings) (err
 
 	dim := r.Outing.Survey.Meta.Dimension
 	config := coordinator.DefaultConfig(fleetName, dim)
-	config.HoldAll, config.SolveNS, config.RetryNS = set.HoldAll, busSolveNS, busRetryNS
+	config.HoldAll = set.HoldAll
+	config.SolveNS, config.PromptNS, config.RetryNS = busSolveNS, busPromptNS, busRetryNS
 	r.Coordinator = coordinator.New(config)
 	var names []string
 	for i := range r.Outing.Survey.Robots {
