@@ -109,6 +109,9 @@ func (r *Run) cautions(s *Score) []string {
 	if r.Outing.Link != nil {
 		out = append(out, "Simulated: the figures hold for this scenario and this seed.")
 	}
+	if r.OnBus {
+		out = append(out, "On the real bus, everything measured delivered at once and without the scenario's radio: bytes and rounds differ a little from run to run, the map does not.")
+	}
 	if e := r.epochs(); strings.Contains(e, " ") {
 		out = append(out, "The robots hold corrections of epochs "+e+": their poses together are no map of one moment.")
 	}

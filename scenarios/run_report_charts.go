@@ -10,14 +10,17 @@ import (
 
 // charts draws the error of the map and the bytes of each robot over time.
 func (r *Run) charts(s *Score) []report.ChartGroup {
-	const minutes = "time (min)"
+	axis, unit := "time (min)", 60e9
+	if r.OnBus {
+		axis, unit = "time on the bus (s)", 1e9
+	}
 	whole := func(bytes int) string { return fmt.Sprintf("%.0f kB", float64(bytes)/1000) }
 	at := make([]float64, len(r.Samples))
 	var errors []float64
 	finite := 0
 	final := math.NaN()
 	for i := range r.Samples {
-		at[i] = float64(r.Samples[i].NowNS) / 60e9
+		at[i] = float64(r.Samples[i].NowNS) / unit
 		e := r.Samples[i].ErrorM
 		errors = append(errors, e)
 		if !math.IsNaN(e) {
@@ -31,7 +34,7 @@ func (r *Run) charts(s *Score) []report.ChartGroup {
 			Title: "Error of the map over time",
 			Note:  "Root mean square error of what the robots share, junctions of the newest epoch, each island moved onto the truth as one.",
 			Charts: []report.Chart{{
-				Title: "Position error against truth", XLabel: minutes, YLabel: "position error (m)",
+				Title: "Position error against truth", XLabel: axis, YLabel: "position error (m)",
 				Series: []report.Series{{Label: fmt.Sprintf("%.3f m", final), X: at, Y: errors}},
 			}},
 		})
@@ -45,17 +48,20 @@ func (r *Run) charts(s *Score) []report.ChartGroup {
 	}
 	for i := range s.Robots {
 		x := &s.Robots[i]
-		raw, sent := r.rawOverTime(i), make([]float64, len(at))
+		sent := make([]float64, len(at))
 		for k := range r.Samples {
 			sent[k] = float64(r.Samples[k].UpSum[i]) / 1000
 		}
-		group.Charts = append(group.Charts, report.Chart{
-			Title: x.ID, XLabel: minutes, YLabel: "so far (kB)",
-			Series: []report.Series{
-				{Label: "sent " + whole(x.BytesUp), Hue: i + 1, X: at, Y: sent},
-				{Label: "raw " + whole(x.BytesRaw), X: at, Y: raw},
-			},
-		})
+		chart := report.Chart{
+			Title: x.ID, XLabel: axis, YLabel: "so far (kB)",
+			Series: []report.Series{{Label: "sent " + whole(x.BytesUp), Hue: i + 1, X: at, Y: sent}},
+		}
+		if raw := float64(x.BytesRaw) / 1000; r.OnBus { // everything was there from the start
+			chart.Threshold, chart.ThresholdLabel = &raw, "raw "+whole(x.BytesRaw)
+		} else {
+			chart.Series = append(chart.Series, report.Series{Label: "raw " + whole(x.BytesRaw), X: at, Y: r.rawOverTime(i)})
+		}
+		group.Charts = append(group.Charts, chart)
 	}
 	return append(out, group)
 }

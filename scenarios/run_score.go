@@ -30,7 +30,7 @@ type Score struct {
 	Settled bool `json:"settled"`
 	// Whether the run was stopped before its end.
 	Interrupted bool `json:"interrupted"`
-	// Time at the end of the run, s from the start of the outing.
+	// Time at the end of the run, s from the start of the outing, on the real bus from the start of the run.
 	End float64 `json:"end_s"`
 	// Whether true poses are known.
 	Truth bool `json:"truth"`

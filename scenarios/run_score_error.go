@@ -188,18 +188,24 @@ func (r *Run) errorsAlone(t *truthIndex) ([]*float64, error) {
 	return out, nil
 }
 
-// known returns the survey as far as it had been delivered when the run ended: the keyframes that the agents have, and the
-// measurements among them.
-func (r *Run) known() *survey.Survey {
-	s := r.Outing.Survey
+// keyframes returns the keyframes that the agents have.
+func (r *Run) keyframes() map[adjust.Key]bool {
 	have := map[adjust.Key]bool{}
 	for i, tracks := range r.tracks() {
 		for _, t := range tracks {
 			for _, id := range t.IDs {
-				have[adjust.Key{Robot: s.Robots[i].ID, Session: t.Session, ID: id}] = true
+				have[adjust.Key{Robot: r.Outing.Survey.Robots[i].ID, Session: t.Session, ID: id}] = true
 			}
 		}
 	}
+	return have
+}
+
+// known returns the survey as far as it had been delivered when the run ended: the keyframes that the agents have, and the
+// measurements among them.
+func (r *Run) known() *survey.Survey {
+	s := r.Outing.Survey
+	have := r.keyframes()
 	out := &survey.Survey{Meta: s.Meta}
 	stamped := map[adjust.Key]bool{} // by stamp
 	for i := range s.Robots {
@@ -243,15 +249,14 @@ func (r *Run) verdicts() map[string]*coordinator.Finding {
 	return out
 }
 
-// measured tells for each tie whether its robot had it before the run ended.
+// measured tells for each tie whether its robot had come to its keyframe before the run ended.
 func (r *Run) measured() []bool {
-	out := make([]bool, len(r.Outing.Survey.Ties))
-	for _, feed := range r.Outing.Feed {
-		for _, e := range feed {
-			if e.Kind == TieEvent && e.AtNS <= r.EndNS {
-				out[e.Index] = true
-			}
-		}
+	s := r.Outing.Survey
+	have := r.keyframes()
+	out := make([]bool, len(s.Ties))
+	for i := range s.Ties {
+		t := &s.Ties[i]
+		out[i] = have[adjust.Key{Robot: t.FromRobot, Session: t.FromSession, ID: t.FromKey}]
 	}
 	return out
 }

@@ -9,6 +9,7 @@ import (
 	"path/filepath"
 	"slices"
 	"strings"
+	"time"
 
 	"selvage/internal/survey"
 	"selvage/scenarios"
@@ -20,6 +21,7 @@ type rehearseCmd struct {
 	Out        string   `short:"o" placeholder:"FOLDER" help:"Folder to write, new or of an earlier rehearsal, which is replaced (default rehearsal-NAME-SEED)."`
 	Survey     string   `placeholder:"FOLDER" help:"Rehearse with a recorded or split survey instead of a scenario."`
 	HoldAll    bool     `help:"Take every tie as true."`
+	RealBus    bool     `help:"Run on the embedded message bus and the clock on the wall, at full speed, instead of a virtual clock and radio."`
 	Robots     *int     `placeholder:"N" help:"Number of robots instead of the scenario's."`
 	False      *float64 `placeholder:"SHARE" help:"Share of single false ties, of all ties, instead of the scenario's."`
 	Clustered  *float64 `placeholder:"SHARE" help:"Share of false ties that agree with each other, of all ties, instead of the scenario's."`
@@ -32,10 +34,9 @@ func (rehearseCmd) Help() string {
 
 The exit code is 0 only if the acceptance figures hold. An interrupt ends the run where it is and keeps what was finished.
 
-Examples:
+Example:
 
-  selvage rehearse
-  selvage rehearse store --seed 7 --clustered 0.3 --out look-alikes
+  selvage rehearse store --seed 3 --out look-alikes
 `
 }
 
@@ -48,7 +49,7 @@ func (c *rehearseCmd) Run(ctx context.Context, con *console) error {
 	if err := c.reserve(); err != nil {
 		return err
 	}
-	watch := con.watch(c.NoProgress)
+	watch := con.watch(c.NoProgress, c.RealBus)
 	defer watch.end()
 	watch.begin("preparing")
 	o, err := interruptible(ctx, prepare)
@@ -57,7 +58,7 @@ func (c *rehearseCmd) Run(ctx context.Context, con *console) error {
 	}
 	con.warn(o.outing.Survey.Warnings)
 	watch.begin("rehearsing " + o.outing.Survey.Meta.Name)
-	run, err := scenarios.Virtual(ctx, o.outing, scenarios.Settings{HoldAll: c.HoldAll, Progress: watch.at})
+	run, made, err := c.run(ctx, o, watch)
 	if err != nil {
 		return err
 	}
@@ -67,8 +68,6 @@ func (c *rehearseCmd) Run(ctx context.Context, con *console) error {
 		return err
 	}
 	watch.begin("writing " + c.Out)
-	minutes := run.EndNS / 60e9
-	made := fmt.Sprintf("%s, %d h %02d min of virtual time", o.made, minutes/60, minutes%60)
 	if err := run.Write(c.Out, score, made, version()); err != nil {
 		return err
 	}
@@ -88,7 +87,23 @@ func (c *rehearseCmd) Run(ctx context.Context, con *console) error {
 // rehearsal is what goes into the run.
 type rehearsal struct {
 	outing *scenarios.Outing
-	made   string // as the report is to say it
+	origin string // as the report is to say it
+}
+
+// run runs it, and says when that was: a virtual run says nothing of the clock on the wall, so that it gives the same bytes.
+func (c *rehearseCmd) run(ctx context.Context, o rehearsal, w *watch) (*scenarios.Run, string, error) {
+	set := scenarios.Settings{HoldAll: c.HoldAll, Progress: w.at}
+	if c.RealBus {
+		made := time.Now().Format("2006-01-02 15:04:05 UTC-07:00")
+		run, err := scenarios.OnBus(ctx, o.outing, set)
+		return run, made + ", " + o.origin + ", on the real bus", err
+	}
+	run, err := scenarios.Virtual(ctx, o.outing, set)
+	if err != nil {
+		return nil, "", err
+	}
+	minutes := run.EndNS / 60e9
+	return run, fmt.Sprintf("%s, %d h %02d min of virtual time", o.origin, minutes/60, minutes%60), nil
 }
 
 // plan checks the command line, settles where to write, and returns what makes the outing.
@@ -133,8 +148,11 @@ func (c *rehearseCmd) reserve() error {
 		return err
 	}
 	parent := filepath.Dir(filepath.Clean(c.Out))
-	if err := os.MkdirAll(parent, 0o755); err != nil {
-		return err
+	for parent != filepath.Dir(parent) {
+		if _, err := os.Stat(parent); !errors.Is(err, os.ErrNotExist) {
+			break
+		}
+		parent = filepath.Dir(parent) // it will be made
 	}
 	probe, err := os.MkdirTemp(parent, ".rehearsal-")
 	if err != nil {
