@@ -1,5 +1,11 @@
 package evidence
 
+import (
+	"math"
+
+	"selvage/internal/lie"
+)
+
 // Ties of several pairs may rest on one and the same place: where one place looks like another, every robot that comes by makes
 // the same error, and the errors agree with each other. Between two parts of the fleet such a place counts once, however many
 // pairs it ties together, so what binds the parts is not the sum of the pairs' weights. What is held must therefore hang together
@@ -16,11 +22,6 @@ func (f *fleet) firm(c *config) []int {
 		s.strong[u] = u
 	}
 	copy(s.class, c.comp)
-	type centre struct {
-		at   [3]float64
-		comp int
-	}
-	var centres []centre
 	for k := range f.hs {
 		h := &f.hs[k]
 		if !c.holds[k] || h.weight == 0 {
@@ -32,10 +33,6 @@ func (f *fleet) firm(c *config) []int {
 		}
 		s.weak = append(s.weak, k)
 	}
-	at := func(k, i int) [3]float64 {
-		h := &f.hs[k]
-		return c.at[h.a].Apply(f.b.tracks[h.a].Poses[f.b.links[h.spots[i]].i].T)
-	}
 	live := s.weak[:0]
 	for _, k := range s.weak {
 		if root(s.strong, f.hs[k].a) != root(s.strong, f.hs[k].b) {
@@ -43,30 +40,17 @@ func (f *fleet) firm(c *config) []int {
 		}
 	}
 	s.weak = live
-	reach := f.b.o.PlaceM
+	var centres []int // ties
 	for _, k := range s.weak {
-	next:
-		for i := range f.hs[k].spots {
-			p := at(k, i)
-			for j := range centres {
-				if centres[j].comp == c.comp[f.hs[k].a] && !far(&centres[j].at, &p, reach/2) {
-					continue next
-				}
-			}
-			centres = append(centres, centre{p, c.comp[f.hs[k].a]})
-		}
+		centres = append(centres, f.hs[k].spots...)
 	}
 	s.hits = make([][]hit, len(centres))
-	for j := range centres {
+	for j, x := range centres {
 		for w, k := range s.weak {
-			if centres[j].comp != c.comp[f.hs[k].a] {
-				continue
-			}
-			best, d := -1, 2*reach
-			for i := range f.hs[k].spots {
-				p := at(k, i)
-				if x := distance(p, centres[j].at); x <= d {
-					best, d = i, x
+			best, d := -1, 2*f.b.o.PlaceM
+			for i, t := range f.hs[k].spots {
+				if g := f.gap(c, x, t); g <= d {
+					best, d = i, g
 				}
 			}
 			if best >= 0 {
@@ -80,6 +64,31 @@ func (f *fleet) firm(c *config) []int {
 	}
 	s.strike(0, strikes)
 	return s.class
+}
+
+// gap is the distance between the places of two ties, as seen from either end or by a unit that both have in common: c may
+// misplace units against each other, but a unit knows its own track. Infinite between components.
+func (f *fleet) gap(c *config, x, y int) float64 {
+	l, m := &f.b.links[x], &f.b.links[y]
+	if c.comp[l.a] != c.comp[m.a] {
+		return math.Inf(1)
+	}
+	p := [2]lie.SE3{f.b.tracks[l.a].Poses[l.i], f.b.tracks[l.b].Poses[l.j]}
+	q := [2]lie.SE3{f.b.tracks[m.a].Poses[m.i], f.b.tracks[m.b].Poses[m.j]}
+	u, v := [2]int{l.a, l.b}, [2]int{m.a, m.b}
+	least := math.Inf(1)
+	for i := range p {
+		for j := range q {
+			d := 0.0
+			if u[i] == v[j] {
+				d = distance(p[i].T, q[j].T)
+			} else {
+				d = distance(c.at[u[i]].Apply(p[i].T), c.at[v[j]].Apply(q[j].T))
+			}
+			least = min(least, d)
+		}
+	}
+	return least
 }
 
 // hit is a place of a weak hypothesis: indices into weak and into its spots.
