@@ -51,6 +51,7 @@ func NewFactor(s *Symbolic) *Factor {
 		schur:   make([]float64, s.lastDim*s.lastDim),
 		reduced: make([]float64, s.lastDim),
 	}
+	f.barrier.both.L = &f.barrier.lock
 	for i := range s.workers {
 		w := &f.team[i]
 		w.id = i

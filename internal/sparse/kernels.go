@@ -1,5 +1,7 @@
 package sparse
 
+//go:generate sh -c "cd gen && go run . -out ../kernels_amd64.s -stubs ../kernels_amd64.go -pkg sparse"
+
 // The kernels work on column-major matrices: entry (r, c) of x lies at
 // x[r+c*ld]. All sizes are multiples of three. Rows are padded in memory to a
 // multiple of four behind the last row used, and kernels may write there; nothing

@@ -2,7 +2,7 @@ package sparse
 
 import (
 	"math"
-	"runtime"
+	"sync"
 	"sync/atomic"
 )
 
@@ -157,15 +157,30 @@ func (f *Factor) meet() {
 	}
 }
 
-// barrier lets two goroutines wait for each other, for microseconds: they spin and
-// give way only if that lasts.
-type barrier struct{ arrived atomic.Uint64 }
+// barrier lets two goroutines wait for each other. The wait is microseconds when
+// each has a processor, so they spin first, and sleep when it lasts.
+type barrier struct {
+	arrived atomic.Uint64
+	lock    sync.Mutex
+	both    sync.Cond
+}
 
 func (b *barrier) wait() {
-	target := (b.arrived.Add(1) + 1) &^ 1
-	for turns := 0; b.arrived.Load() < target; turns++ {
-		if turns > 4000 {
-			runtime.Gosched()
+	n := b.arrived.Add(1)
+	if n%2 == 0 {
+		b.lock.Lock()
+		b.both.Broadcast()
+		b.lock.Unlock()
+		return
+	}
+	for range 10000 {
+		if b.arrived.Load() > n {
+			return
 		}
 	}
+	b.lock.Lock()
+	for b.arrived.Load() == n {
+		b.both.Wait()
+	}
+	b.lock.Unlock()
 }
