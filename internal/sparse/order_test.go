@@ -174,6 +174,7 @@ func TestRefusedPatterns(t *testing.T) {
 		{"last out of range", Pattern{Dims: []int{3, 3}}, Options{Last: []int32{2}}},
 		{"last twice", Pattern{Dims: []int{3, 3}}, Options{Last: []int32{1, 1}}},
 		{"three workers", Pattern{Dims: []int{3}}, Options{Workers: 3}},
+		{"too dense", Pattern{Dims: uniform(10000, 6)}, Options{Last: shuffled(10000, rand.New(rand.NewPCG(1, 2)))}},
 		{"unknown ordering", Pattern{Dims: []int{3}}, Options{Ordering: 7}},
 	} {
 		if s, err := Analyse(c.p, c.o); err == nil || s != nil {

@@ -34,7 +34,10 @@ type Options struct {
 	Workers int
 }
 
-const maxScalars = 1 << 30
+const (
+	maxScalars = 1 << 27
+	maxNumbers = 1 << 31 // of factor and stacks: 16 GiB
+)
 
 // graph is an undirected graph in compressed rows, each edge in both directions,
 // with vertex weights in units of three scalars.
@@ -77,7 +80,7 @@ func newGraph(p Pattern) (*graph, error) {
 		g.weight[i] = int32(d / 3)
 		total += d
 	}
-	if total > maxScalars || len(p.Pairs) > maxScalars/36 {
+	if total > maxScalars || len(p.Pairs) > maxScalars/6 {
 		return nil, fmt.Errorf("sparse: %d scalars and %d blocks exceed the size this package handles", total, len(p.Pairs))
 	}
 	for k, q := range p.Pairs {

@@ -89,6 +89,9 @@ func Analyse(p Pattern, o Options) (*Symbolic, error) {
 	s.placeMatrix(p)
 	s.workers = max(1, o.Workers)
 	s.placeFronts(nodes)
+	if size := s.factorLen + s.stackLen; size > maxNumbers {
+		return nil, fmt.Errorf("sparse: the factor needs %d numbers, more than %d", size, maxNumbers)
+	}
 	s.placeBlocks(nodes)
 	return s, nil
 }
