@@ -4,8 +4,6 @@ import (
 	"fmt"
 	"math"
 
-	"gonum.org/v1/gonum/mat"
-
 	"selvage/internal/lie"
 )
 
@@ -80,56 +78,79 @@ func (b *body) around(l *link, ties []int) (lie.Tangent, cov) {
 	return e.Log(), p.c
 }
 
-// fuse returns the weighted mean of independent vectors and its covariance.
+// fuse returns the weighted mean of independent vectors and its covariance. Ways that contradict each other show that their
+// covariances promise too much: the result is scaled by the variance factor if that is above 1.
 func fuse(e []lie.Tangent, c []cov, dim int) (lie.Tangent, cov) {
 	n, index := 6, [6]int{0, 1, 2, 3, 4, 5}
 	if dim == 2 {
 		n, index = 3, [6]int{0, 1, 5}
 	}
-	info, rhs := mat.NewSymDense(n, nil), mat.NewVecDense(n, nil)
-	var m [36]float64
-	var x [6]float64
+	var sum, m [36]float64
+	var rhs, x [6]float64
 	for k := range e {
 		c[k].dense(dim, &m)
-		var ch mat.Cholesky
-		if !ch.Factorize(mat.NewSymDense(n, m[:n*n])) {
-			continue
+		if !invert(&m, n) {
+			return e[0], c[0]
 		}
-		var inv mat.SymDense
-		if ch.InverseTo(&inv) != nil {
-			continue
-		}
-		info.AddSym(info, &inv)
 		pick(&e[k], dim, &x)
-		var v mat.VecDense
-		v.MulVec(&inv, mat.NewVecDense(n, x[:n]))
-		rhs.AddVec(rhs, &v)
+		for i := 0; i < n; i++ {
+			for j := 0; j < n; j++ {
+				sum[n*i+j] += m[n*i+j]
+				rhs[i] += m[n*i+j] * x[j]
+			}
+		}
 	}
-	var ch mat.Cholesky
-	var mean mat.VecDense
-	var sum mat.SymDense
-	if !ch.Factorize(info) || ch.SolveVecTo(&mean, rhs) != nil || ch.InverseTo(&sum) != nil {
+	if !invert(&sum, n) {
 		return e[0], c[0]
 	}
-	// Ways that contradict each other show that the covariances promise too much: scale by the variance factor if above 1.
+	var mean lie.Tangent
+	for i := 0; i < n; i++ {
+		for j := 0; j < n; j++ {
+			mean[index[i]] += sum[n*i+j] * rhs[j]
+		}
+	}
 	factor := 0.0
 	for k := range e {
 		d := e[k]
-		for i := range index[:n] {
-			d[index[i]] -= mean.AtVec(i)
+		for i := range d {
+			d[i] -= mean[i]
 		}
 		factor += mahalanobis(&d, &c[k], dim)
 	}
 	factor = math.Max(1, factor/float64((len(e)-1)*n))
 	var full [36]float64
-	var out lie.Tangent
 	for i := 0; i < n; i++ {
-		out[index[i]] = mean.AtVec(i)
 		for j := 0; j < n; j++ {
-			full[6*index[i]+index[j]] = factor * sum.At(i, j)
+			full[6*index[i]+index[j]] = factor * sum[n*i+j]
 		}
 	}
-	return out, covOf(&full, dim)
+	return mean, covOf(&full, dim)
+}
+
+// invert replaces the symmetric n x n matrix in m by its inverse and reports whether it is positive definite (Gauss-Jordan; the
+// pivots of a positive definite matrix need no search).
+func invert(m *[36]float64, n int) bool {
+	for k := 0; k < n; k++ {
+		p := m[n*k+k]
+		if !(p > 0) {
+			return false
+		}
+		m[n*k+k] = 1
+		for j := 0; j < n; j++ {
+			m[n*k+j] /= p
+		}
+		for i := 0; i < n; i++ {
+			if i == k {
+				continue
+			}
+			f := m[n*i+k]
+			m[n*i+k] = 0
+			for j := 0; j < n; j++ {
+				m[n*i+j] -= f * m[n*k+j]
+			}
+		}
+	}
+	return true
 }
 
 func (b *body) names(l *link) string {

@@ -8,7 +8,7 @@ import (
 )
 
 // accident is the chance that two unrelated ties of the pair agree within the gate, taken as the geometric mean over the
-// neighbouring places of h; for a single place, as between it and the middle of the tracks.
+// neighbouring places of h; 1 for a single place.
 func (b *body) accident(h *hypothesis) float64 {
 	if len(h.spots) < 2 {
 		return 1
@@ -26,11 +26,8 @@ func (b *body) accident(h *hypothesis) float64 {
 // share is the part of the poses possible between units u and v that the gate of a misclosure with covariance c lets through.
 // Only the horizontal components and the heading count: unrelated places may well have the same floor under them.
 func (b *body) share(c *cov, u, v int) float64 {
-	var xx, xy, yy float64
-	b.scatter(u, &xx, &xy, &yy)
-	b.scatter(v, &xx, &xy, &yy)
-	// Sides of the uniform rectangle with these second moments.
-	long, short := sides(xx, xy, yy)
+	s, t := &b.spread[u], &b.spread[v]
+	long, short := sides(s[0]+t[0], s[1]+t[1], s[2]+t[2])
 	wide, narrow := sides(c.P[0], c.P[1], c.P[4])
 	g := 2 * math.Sqrt(b.gate/12)
 	wide, narrow = wide*g, narrow*g

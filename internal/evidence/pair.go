@@ -25,14 +25,14 @@ type body struct {
 	gate   float64 // bound on squared Mahalanobis distances
 	refuse float64 // the same for refusal
 	dof    int
-	give   []float64 // per unit: how far its heading may be off from end to end, rad
-	reach  []float64 // per unit: root mean square distance of its nodes from their mean, m
-	yaw    [][]float64
-	effort int
+	give   []float64    // per unit: how far its heading may be off from end to end, rad
+	reach  []float64    // per unit: root mean square distance of its nodes from their mean, m
+	spread [][3]float64 // per unit: second moments xx, xy, yy of its nodes about their mean, m^2, in its horizontal plane
+	yaw    [][]float64  // per pair of units: headings of nodes against each other, made when asked for
 }
 
 func newBody(units []Unit, ties []Tie, o Options) *body {
-	b := &body{o: o, dof: 6, effort: o.CliqueEffort}
+	b := &body{o: o, dof: 6}
 	if o.Dim == 2 {
 		b.dof = 3
 	}
@@ -40,6 +40,7 @@ func newBody(units []Unit, ties []Tie, o Options) *body {
 	b.gate = chi.Quantile(o.Gate)
 	b.refuse = chi.Quantile(1 - (1-o.Gate)/10)
 	b.tracks = make([]*track, len(units))
+	b.spread = make([][3]float64, len(units))
 	b.give = make([]float64, len(units))
 	b.reach = make([]float64, len(units))
 	for i := range units {
@@ -50,9 +51,8 @@ func newBody(units []Unit, ties []Tie, o Options) *body {
 			continue
 		}
 		b.give[i] = math.Min(0.2, o.BiasYaw*(t.TravelM[n-1]-t.TravelM[0])/math.Sqrt(12))
-		var xx, yy, xy float64
-		b.scatter(i, &xx, &xy, &yy)
-		b.reach[i] = math.Sqrt(xx + yy)
+		b.spread[i] = t.spread()
+		b.reach[i] = math.Sqrt(b.spread[i][0] + b.spread[i][2])
 	}
 	b.links = make([]link, len(ties))
 	for i := range ties {
@@ -61,9 +61,7 @@ func newBody(units []Unit, ties []Tie, o Options) *body {
 	return b
 }
 
-// scatter adds the second moments of unit u's nodes about their mean, m^2, in the unit's horizontal plane.
-func (b *body) scatter(u int, xx, xy, yy *float64) {
-	t := b.tracks[u]
+func (t *track) spread() (m [3]float64) {
 	n := float64(len(t.Poses))
 	var mx, my float64
 	for k := range t.Poses {
@@ -72,10 +70,11 @@ func (b *body) scatter(u int, xx, xy, yy *float64) {
 	}
 	for k := range t.Poses {
 		dx, dy := t.Poses[k].T[0]-mx, t.Poses[k].T[1]-my
-		*xx += dx * dx / n
-		*xy += dx * dy / n
-		*yy += dy * dy / n
+		m[0] += dx * dx / n
+		m[1] += dx * dy / n
+		m[2] += dy * dy / n
 	}
+	return m
 }
 
 // hypothesis is a consistent set while it is being weighed.

@@ -420,17 +420,24 @@ func (s *simFleet) shared(rng *rand.Rand, ties []simTie, part float64) []simTie 
 	return ties
 }
 
+func bare(ties []simTie) []Tie {
+	out := make([]Tie, len(ties))
+	for i := range ties {
+		out[i] = ties[i].Tie
+	}
+	return out
+}
+
+// siteOf is the side of a square site with as much room per robot as six have on 48 m.
+func siteOf(robots int) float64 { return 48 * math.Sqrt(float64(robots)/6) }
+
 // score is what came of one run.
 type score struct {
 	falseTies, trueTies, falseHeld, trueHeld, trueRefused, joined int
 }
 
 func (s *simFleet) decide(ties []simTie) (Result, score) {
-	plain := make([]Tie, len(ties))
-	for i := range ties {
-		plain[i] = ties[i].Tie
-	}
-	r := Decide(s.units, plain, DefaultOptions(s.dim))
+	r := Decide(s.units, bare(ties), DefaultOptions(s.dim))
 	var c score
 	for i, f := range r.Ties {
 		switch {

@@ -72,13 +72,9 @@ func site3(t *testing.T) (units []Unit, ties []simTie) {
 
 func TestPairwiseConsistencyOfSite3(t *testing.T) {
 	units, ties := site3(t)
-	plain := make([]Tie, len(ties))
-	for i := range ties {
-		plain[i] = ties[i].Tie
-	}
 	o := DefaultOptions(3)
 	o.BiasYaw = 0 // the figures are without it
-	b := newBody(units, plain, o)
+	b := newBody(units, bare(ties), o)
 	if math.Abs(b.gate-16.8119) > 1e-4 || math.Abs(b.refuse-22.4577) > 1e-4 {
 		t.Errorf("gates %.4f and %.4f, want 16.8119 and 22.4577", b.gate, b.refuse)
 	}
