@@ -58,6 +58,8 @@ func (s *Score) Finding() string {
 	}
 	if joined == 0 {
 		fmt.Fprintf(&b, "none of %s shares a datum with another", count(len(s.Robots), "robot"))
+	} else if joined == 1 {
+		b.WriteString("all sessions of one robot share the datum")
 	} else if joined == len(s.Robots) {
 		fmt.Fprintf(&b, "all %d robots share the datum", joined)
 	} else {
@@ -187,46 +189,57 @@ func (r *Run) whyApart(robot int, places []place) string {
 	case heard == 0:
 		return fmt.Sprintf("none of its %d ties reached the base", n)
 	}
-	return fmt.Sprintf("none of its %s is held", count(heard, "tie"))
+	if heard == 1 {
+		return "the only tie that touches it is not held"
+	}
+	return fmt.Sprintf("none of its %d ties is held to a robot of the datum", heard)
 }
 
-// doubts lists for each pair of robots the open ties with what would settle them.
+// doubts lists the open ties, those with one reason together: the reason says what would settle them.
 func (r *Run) doubts() []string {
-	type doubt struct{ pair, reason string }
-	var order []doubt
-	ids := map[doubt][]string{}
+	var order []string
+	ids := map[string][]string{}
+	unheard := 0
 	verdict, measured := r.verdicts(), r.measured()
 	for i := range r.Outing.Survey.Ties {
 		if !measured[i] {
 			continue
 		}
-		t := &r.Outing.Survey.Ties[i]
-		f := verdict[t.ID]
-		reason := f.Reason
-		switch f.Verdict {
+		id := r.Outing.Survey.Ties[i].ID
+		switch f := verdict[id]; f.Verdict {
 		case msgs.Held, msgs.Refused:
-			continue
 		case msgs.Open:
+			if ids[f.Reason] == nil {
+				order = append(order, f.Reason)
+			}
+			ids[f.Reason] = append(ids[f.Reason], id)
 		default:
-			reason = unheard
+			unheard++
 		}
-		d := doubt{min(t.FromRobot, t.ToRobot) + " and " + max(t.FromRobot, t.ToRobot), reason}
-		if ids[d] == nil {
-			order = append(order, d)
-		}
-		ids[d] = append(ids[d], t.ID)
 	}
 	var out []string
-	for _, d := range order {
-		names := ids[d]
-		word, verb := "Ties", "are"
-		if len(names) == 1 {
-			word, verb = "Tie", "is"
+	const most = 12 // lines
+	left := 0
+	for n, reason := range order {
+		names := ids[reason]
+		if n >= most {
+			left += len(names)
+			continue
+		}
+		word := "Tie"
+		if len(names) > 1 {
+			word = "Ties"
 		}
 		if len(names) > 6 {
 			names = append(slices.Clone(names[:5]), fmt.Sprintf("%d more", len(names)-5))
 		}
-		out = append(out, fmt.Sprintf("%s %s between %s %s open: %s.", word, list(names), d.pair, verb, d.reason))
+		out = append(out, fmt.Sprintf("%s %s open: %s.", word, list(names), reason))
+	}
+	if left > 0 {
+		out = append(out, fmt.Sprintf("%s open for other reasons, see the table.", countOf(left, "more tie")))
+	}
+	if unheard > 0 {
+		out = append(out, fmt.Sprintf("%s never reached the base.", count(unheard, "tie")))
 	}
 	return out
 }

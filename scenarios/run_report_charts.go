@@ -44,7 +44,7 @@ func (r *Run) charts(s *Score) []report.ChartGroup {
 	}
 	group := report.ChartGroup{
 		Title: "Bytes sent by each robot over time",
-		Note:  "Beside it in ink what the raw graph would have taken: 58 bytes for each keyframe, 144 for each measurement. All at one scale.",
+		Note:  "Beside it, in ink or as a threshold, what the raw graph would have taken: 58 bytes for each keyframe, 144 for each measurement. All at one scale.",
 	}
 	for i := range s.Robots {
 		x := &s.Robots[i]

@@ -69,7 +69,7 @@ func (s *Score) robotTable() report.Table {
 		}
 		if !x.Joined {
 			joined = "no"
-			if s.Truth {
+			if s.Truth && x.AteTeam == nil {
 				team = "shares no datum with another robot"
 			}
 		}
@@ -109,12 +109,15 @@ func (s *Score) acceptanceTable() report.Table {
 	}
 	for i := range s.Acceptance {
 		c := &s.Acceptance[i]
-		holds, reached, limit := "no", small(c.Value, "no sessions share a datum"), small(&c.Limit, "")
+		holds, reached, limit := "no", small(c.Value, "no sessions share a datum"), fmt.Sprint(c.Limit)
 		if c.OK {
 			holds = "yes"
 		}
-		if c.Name == "settled" {
+		switch c.Name {
+		case "settled":
 			reached, limit = holds, "yes"
+		case "gap":
+			limit = power(c.Limit, 1)
 		}
 		t.Rows = append(t.Rows, []string{c.Rule, reached, limit, holds})
 	}

@@ -70,7 +70,7 @@ type RobotScore struct {
 	ID string `json:"id"`
 	// Keyframes in its map.
 	Keyframes int `json:"keyframes"`
-	// Whether it shares the datum with others.
+	// Whether it shares the map's datum with another robot; where there is one robot only, whether its sessions share one.
 	Joined bool `json:"joined"`
 	// Bytes it sent, subjects included.
 	BytesUp int `json:"bytes_up"`
@@ -142,6 +142,7 @@ func (r *Run) Score() (*Score, error) {
 		End: float64(r.EndNS) / 1e9, Truth: len(t.pose) > 0, Refusals: len(r.Refusals), Islands: []IslandScore{},
 	}
 	places := r.places()
+	common := commonMap(places, len(r.Agents))
 	alone, err := r.errorsAlone(t)
 	if err != nil {
 		return nil, err
@@ -156,7 +157,7 @@ func (r *Run) Score() (*Score, error) {
 		for k := range places {
 			if places[k].robot == i {
 				score.Keyframes += len(places[k].IDs)
-				score.Joined = score.Joined || places[k].number == 0
+				score.Joined = score.Joined || common && places[k].number == 0
 			}
 		}
 		out.BytesUp += traffic.Up
@@ -172,7 +173,7 @@ func (r *Run) Score() (*Score, error) {
 			return nil, err
 		}
 	}
-	r.accept(out, len(places))
+	r.accept(out, len(places) > 1, common)
 	out.Accepted = true
 	for i := range out.Acceptance {
 		out.Accepted = out.Accepted && out.Acceptance[i].OK
@@ -205,8 +206,9 @@ func (r *Run) scoreIslands(out *Score, places []place) error {
 	return nil
 }
 
-// accept holds the score against the limits; sessions is how many there are.
-func (r *Run) accept(s *Score, sessions int) {
+// accept holds the score against the limits; several tells whether there is more than one session to join, common whether there is
+// a common map.
+func (r *Run) accept(s *Score, several, common bool) {
 	check := func(name, rule string, value *float64, limit float64, ok bool) {
 		s.Acceptance = append(s.Acceptance, Check{name, rule, value, limit, ok})
 	}
@@ -215,7 +217,7 @@ func (r *Run) accept(s *Score, sessions int) {
 		settled = 1
 	}
 	check("settled", "the fleet comes to rest", &settled, 1, s.Settled)
-	if sessions > 1 {
+	if several {
 		worst := math.Inf(-1) // without an island this is no finite number
 		for i := range s.Islands {
 			if g := s.Islands[i].GapRelative; g != nil {
@@ -225,6 +227,9 @@ func (r *Run) accept(s *Score, sessions int) {
 			}
 		}
 		value := figure(worst)
+		if !common {
+			value = nil
+		}
 		check("gap", "the answer of every island equals the adjustment in one piece: difference of the costs over the larger of 1 and the cost",
 			value, gapLimit, value != nil && *value <= gapLimit)
 	}

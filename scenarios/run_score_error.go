@@ -83,6 +83,21 @@ func (r *Run) places() []place {
 	return out
 }
 
+// commonMap tells whether the datum joins two robots, or sessions of the only one.
+func commonMap(places []place, robots int) bool {
+	first := -1
+	for i := range places {
+		switch p := &places[i]; {
+		case p.number != 0:
+		case first >= 0 && p.robot != first:
+			return true
+		default:
+			first = p.robot
+		}
+	}
+	return first >= 0 && robots == 1
+}
+
 // members counts the sessions of each island.
 func members(places []place) map[int]int {
 	out := map[int]int{}
