@@ -1,5 +1,7 @@
 package sparse
 
+import "math"
+
 // minimumDegree returns an elimination order of the vertices that are not in
 // halo; halo vertices take part in every degree but are never eliminated.
 //
@@ -7,15 +9,18 @@ package sparse
 // on the quotient graph: a pivot becomes an element that stands for the clique
 // of its neighbours; elements inside the new one are absorbed; neighbours with
 // equal lists are merged and eliminated together. Of vertices that tie at the start
-// the first is taken, or the last.
+// the first is taken, or the last. Hubs, whose lists would be read for each of their
+// neighbours, stay out of the graph and come last.
 func minimumDegree(g *graph, halo []bool, lastFirst bool) []int32 {
 	q := newQuotient(g, halo, lastFirst)
 	for q.open > 0 {
-		me := q.pop()
-		q.eliminate(me)
+		q.eliminate(q.pop())
 	}
-	return q.order
+	return append(q.order, q.hubs...)
 }
+
+// isHub reports whether a vertex of n has so many neighbours that it is set aside.
+func isHub(degree, n int) bool { return float64(degree) > max(16, 10*math.Sqrt(float64(n))) }
 
 type vertexState uint8
 
@@ -54,6 +59,7 @@ type quotient struct {
 	remaining int32 // weight not yet eliminated, halo included
 	open      int   // variables outside halo not yet eliminated
 	order     []int32
+	hubs      []int32
 }
 
 func newQuotient(g *graph, halo []bool, lastFirst bool) *quotient {
@@ -72,9 +78,13 @@ func newQuotient(g *graph, halo []bool, lastFirst bool) *quotient {
 	}
 	q.lists = make([]int32, len(g.adj), 3*len(g.adj)+n)
 	copy(q.lists, g.adj)
-	copy(q.weight, g.weight)
-	for _, w := range g.weight {
-		q.remaining += w
+	for i, w := range g.weight {
+		if !isHub(len(g.neighbours(int32(i))), n) {
+			q.weight[i] = w
+			q.remaining += w
+		} else if q.state[i] = gone; !halo[i] {
+			q.hubs = append(q.hubs, int32(i))
+		}
 	}
 	q.bucket = make([]int32, q.remaining+1)
 	for i := range q.bucket {
@@ -87,7 +97,7 @@ func newQuotient(g *graph, halo []bool, lastFirst bool) *quotient {
 		q.chainEnd[i] = i
 		q.hashHead[i] = -1
 		for _, j := range g.neighbours(i) {
-			q.degree[i] += g.weight[j]
+			q.degree[i] += q.weight[j]
 		}
 	}
 	for k := range int32(n) {
@@ -95,7 +105,7 @@ func newQuotient(g *graph, halo []bool, lastFirst bool) *quotient {
 		if !lastFirst {
 			i = int32(n) - 1 - k
 		}
-		if !halo[i] {
+		if !halo[i] && q.state[i] != gone {
 			q.open++
 			q.push(i)
 		}

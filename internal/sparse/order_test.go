@@ -70,9 +70,19 @@ func TestForestCounts(t *testing.T) {
 // Trees fill nothing in minimum degree order.
 func TestMinimumDegreeTree(t *testing.T) {
 	rng := rand.New(rand.NewPCG(1, 2))
-	for range 50 {
+	for trial := range 50 {
 		n := 2 + rng.IntN(60)
 		pairs := tree(rng, n)
+		if trial == 0 { // a star, with a hub
+			n = 1000
+			pairs = pairs[:0]
+			for i := range int32(n - 1) {
+				pairs = append(pairs, [2]int32{i + 1, 0})
+			}
+			if !isHub(n-1, n) {
+				t.Fatal("the star is too small")
+			}
+		}
 		g, err := newGraph(Pattern{uniform(n, 3), pairs})
 		if err != nil {
 			t.Fatal(err)
