@@ -1,7 +1,6 @@
 package evidence
 
 import (
-	"math"
 	"math/rand/v2"
 	"testing"
 
@@ -85,11 +84,11 @@ func TestMarginsAgainstExhaustion(t *testing.T) {
 		f := toy(rng, n, density, wrong, 4)
 		best, without := f.exhaust()
 		c := f.best()
+		limit := 5
+		margins := f.margins(&c, limit)
 		if c.score != best {
 			wrongBest++
 		}
-		limit := 5
-		margins := f.margins(&c, limit)
 		for k := range f.hs {
 			if !c.holds[k] {
 				continue
@@ -112,5 +111,10 @@ func TestMarginsAgainstExhaustion(t *testing.T) {
 		}
 	}
 	t.Logf("best configuration missed %d of 400; %d margins, %d below the limit, %d too large, %d too small", wrongBest, total, contested, unsafe, cautious)
-	_ = math.Pi
+	if unsafe > 0 {
+		t.Errorf("%d margins are too large", unsafe)
+	}
+	if cautious*100 > total || wrongBest*100 > 400 || contested*2 < total {
+		t.Error("the search or the trial has become poor")
+	}
 }

@@ -436,6 +436,15 @@ type score struct {
 	falseTies, trueTies, falseHeld, trueHeld, trueRefused, joined int
 }
 
+func (c *score) add(d score) {
+	c.falseTies += d.falseTies
+	c.trueTies += d.trueTies
+	c.falseHeld += d.falseHeld
+	c.trueHeld += d.trueHeld
+	c.trueRefused += d.trueRefused
+	c.joined += d.joined
+}
+
 func (s *simFleet) decide(ties []simTie) (Result, score) {
 	r := Decide(s.units, bare(ties), DefaultOptions(s.dim))
 	var c score
