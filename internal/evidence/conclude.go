@@ -134,20 +134,33 @@ func (b *body) undetermined(t int, f *fleet, w *weighed, r *Result) {
 		x.Reason = "its pair was not weighed"
 		return
 	}
-	h := &f.hs[best]
+	h, margin := &f.hs[best], w.margin[best]
+	need := b.o.BridgeMargin
+	if w.cycle[best] {
+		need = b.o.CycleMargin
+	}
+	pair, more := b.names(l), fmt.Sprintf("over %g m from the others", b.o.PlaceM)
 	switch {
 	case h.blurred:
-		x.Reason = fmt.Sprintf("too many sets of ties between %s contradict each other to be told apart", b.names(l))
-	case w.margin[best] < 0:
-		x.Reason = fmt.Sprintf("%s are undetermined, and the rest of the fleet speaks against their best set", b.names(l))
+		x.Reason = fmt.Sprintf("too many sets of ties between %s contradict each other to be told apart", pair)
+	case margin < 0:
+		x.Reason = fmt.Sprintf("the rest of the fleet speaks against the best set of ties between %s; ties at other places would settle it", pair)
+	case margin >= need:
+		x.Reason = fmt.Sprintf("the ties between %s rest on %s and might agree by chance; one more place, %s, would settle it", pair, count(len(h.spots)), more)
+	case w.cycle[best]:
+		x.Reason = fmt.Sprintf("the ties between %s rest on %s, and with all that confirms them lead by %d; %d needed: more ties %s would settle it",
+			pair, count(len(h.spots)), margin, need, more)
 	default:
-		need := b.o.BridgeMargin - max(0, w.margin[best])
-		if w.cycle[best] {
-			need = b.o.CycleMargin - max(0, w.margin[best])
-		}
-		x.Reason = fmt.Sprintf("%s rest on %d places with a margin of %d; %d more, over %g m apart, or a third unit that meets both, would settle it",
-			b.names(l), len(h.spots), w.margin[best], max(1, need), b.o.PlaceM)
+		x.Reason = fmt.Sprintf("the ties between %s rest on %s and lead by %d, with no third robot to confirm them; %d more, %s, or one that meets both would settle it",
+			pair, count(len(h.spots)), margin, need-margin, more)
 	}
+}
+
+func count(places int) string {
+	if places == 1 {
+		return "1 place"
+	}
+	return fmt.Sprintf("%d places", places)
 }
 
 // islands joins the units over the held hypotheses, the strongest first, and gives each its place in the frame of the lowest.

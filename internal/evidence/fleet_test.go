@@ -41,7 +41,7 @@ var fleets = []struct {
 	{"six that seldom meet", 2, 6, 1.6, 3, 0, 0}, // many pairs have fewer than five places: only safety counts
 	{"six that hardly meet", 2, 6, 2.2, 3, 0, 0},
 	{"two", 2, 2, 1, 5, 0, 0},
-	{"ten", 2, 10, 1, 1, 9, .85},
+	{"ten", 2, 10, 1, 0, 9, .85},
 	{"twenty", 2, 20, 1, 0, 18, .85},
 	{"thirty", 2, 30, 1, 0, 27, .85},
 }

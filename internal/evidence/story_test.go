@@ -86,7 +86,7 @@ func TestManyTiesOfOnePlaceAreOne(t *testing.T) {
 		s.tie(0, 10+k%2, 1, 20+k%2, elsewhere)
 	}
 	r := s.decide()
-	s.want(r, 0, Open, "1 places")
+	s.want(r, 0, Open, "on 1 place ")
 	if r.Hypotheses[0].Places != 1 || r.Hypotheses[0].Margin != 1 {
 		t.Errorf("%d places with margin %d, want 1 and 1", r.Hypotheses[0].Places, r.Hypotheses[0].Margin)
 	}
