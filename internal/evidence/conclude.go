@@ -74,6 +74,7 @@ func (b *body) conclude(f *fleet, w weighed) Result {
 		}
 		b.find(&r.Ties[t], l, &ps[t], tight)
 	}
+	b.part(&r)
 	return r
 }
 
@@ -192,17 +193,40 @@ func (b *body) islands(f *fleet, held []bool, r *Result) {
 			}
 		}
 	}
-	number := 0
+	r.number(comp)
+}
+
+// part makes islands of what held ties connect: a unit whose ties were all found wanting is on its own after all.
+func (b *body) part(r *Result) {
+	comp := make([]int, len(b.tracks))
+	for u := range comp {
+		comp[u] = u
+	}
+	for t := range b.links {
+		if r.Ties[t].Verdict == Held {
+			merge(comp, b.links[t].a, b.links[t].b)
+		}
+	}
+	for u := range comp {
+		comp[u] = root(comp, u)
+	}
+	r.number(comp)
+}
+
+// number numbers the islands by their lowest unit and takes each into the frame of that.
+func (r *Result) number(comp []int) {
+	count := 0
 	for u := range comp {
 		first := slices.Index(comp, comp[u])
 		if first == u {
-			r.Island[u] = number
-			number++
+			r.Island[u] = count
+			count++
 			continue
 		}
 		r.Island[u] = r.Island[first]
 	}
-	for u := len(comp) - 1; u >= 0; u-- {
+	at := r.DatumFromUnit
+	for u := len(comp) - 1; u >= 0; u-- { // the lowest last: the others need it as it was
 		at[u] = at[slices.Index(comp, comp[u])].Between(at[u])
 	}
 }

@@ -13,7 +13,7 @@
 //     share one recognition error.
 //  3. All hypotheses of the fleet are weighed together. The best configuration of the units is searched for, and for each
 //     hypothesis the best configuration that contradicts it; the difference of the two is its margin. Cycles of units are
-//     the strongest witnesses.
+//     the strongest witnesses, but only over different places: where one place looks like another, all robots err alike.
 //  4. What has a margin, and is not to be expected by chance (a contrario: Desolneux, Moisan, Morel, "Meaningful
 //     alignments", IJCV 40(1), 2000), is held. Every other tie is then tested against the prediction from the ties held.
 //

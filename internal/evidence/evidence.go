@@ -15,7 +15,7 @@ type Unit struct {
 	// TravelM holds the metres travelled along the track up to each node, ascending.
 	TravelM []float64
 
-	// Covariance returns the covariance (m^2, m rad, rad^2) of the relative pose X_i^-1 X_j in its own tangent, perturbed from
+	// Covariance returns, from the unit's own measurements alone, the covariance (m^2, m rad, rad^2) of the relative pose X_i^-1 X_j in its own tangent, perturbed from
 	// the right, row-major 6 x 6. In the plane only rows and columns 0, 1 and 5 are read. Called with i < j, both being nodes
 	// of ties; never concurrently.
 	Covariance func(i, j int) [36]float64
@@ -50,7 +50,7 @@ type Options struct {
 	PlaceM float64
 
 	// CycleMargin and BridgeMargin are the margins, in places, that a hypothesis needs to be held: the first if a cycle of units
-	// confirms it, the second if none does.
+	// confirms it, the second if none does. Two units alone have no cycle.
 	CycleMargin, BridgeMargin int
 
 	// Chance is the expected number of accidental agreements, over all pairs of units looked at, above which a hypothesis
@@ -129,7 +129,8 @@ type Hypothesis struct {
 	AFromB lie.SE3
 
 	// Margin is by how many places the best configuration of the fleet beats the best one that contradicts this hypothesis;
-	// negative if the best configuration itself contradicts it. Margins above BridgeMargin are not told apart.
+	// negative if the best configuration itself contradicts it. Margins above BridgeMargin are not told apart. It is at most 2 if
+	// striking out two places would part the units.
 	Margin int
 
 	// Cycle tells whether units other than A and B confirm it.
@@ -146,8 +147,8 @@ type Result struct {
 	Ties       []Finding // one per tie, in the order given
 	Hypotheses []Hypothesis
 
-	// Island numbers the islands of units joined by held ties, per unit; islands are numbered in the order of their lowest
-	// unit. A unit that nothing connects is an island of its own.
+	// Island numbers the islands of units joined by held ties, per unit, in the order of their lowest unit. A unit that nothing
+	// connects is an island of its own.
 	Island []int
 
 	// DatumFromUnit is a start for the joint solution: where each unit's frame lies in the frame of its island's lowest unit.
@@ -172,6 +173,9 @@ func Decide(units []Unit, ties []Tie, o Options) Result {
 func check(units []Unit, ties []Tie, o Options) {
 	if o.Dim != 2 && o.Dim != 3 {
 		panic("evidence: dimension must be 2 or 3")
+	}
+	if !(o.Gate > 0 && o.Gate < 1 && o.BiasYaw >= 0 && o.PlaceM > 0 && o.CycleMargin > 0 && o.BridgeMargin > 0) {
+		panic("evidence: thresholds must be positive, the gate below 1")
 	}
 	for i := range units {
 		if len(units[i].Poses) != len(units[i].TravelM) {
