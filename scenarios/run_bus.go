@@ -24,7 +24,7 @@ const (
 	busPublishNS = int64(1e6)
 	busSettleNS  = int64(100e6)
 	busBeatNS    = int64(200e6)
-	busRetryNS   = int64(200e6)
+	busRetryNS   = int64(500e6)
 	busAnswerNS  = int64(10e9)
 	busSolveNS   = int64(5e9)
 	busPromptNS  = int64(10e6)
