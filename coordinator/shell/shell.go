@@ -8,8 +8,8 @@
 // newer correction, want or verdict takes the place of an older one of the same robot or tie that is not sent yet.
 //
 // Ties are read from the beginning of their streams, and of summaries the newest that are kept, each time the shell starts: the
-// streams are the memory of the base, and a coordinator that was killed comes back to what it knew. The core drops what it has
-// seen.
+// streams are the memory of the base, and a coordinator that was killed comes back to what it knew, under a higher [Incarnation].
+// The core drops what it has seen.
 package shell
 
 import (

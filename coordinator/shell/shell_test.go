@@ -160,6 +160,16 @@ func joined(m *msgs.Correction) bool { return m.Parts[0].Joined }
 func TestACoordinatorComesBackToWhatItKnew(t *testing.T) {
 	server := serve(t)
 	base, r1, r2 := connect(t, server, "base"), connect(t, server, "r1"), connect(t, server, "r2")
+	if err := base.Prepare(deadline(t), "f", "r1", "r2"); err != nil {
+		t.Fatal(err)
+	}
+	next := func(want uint64) {
+		t.Helper()
+		if n, err := Incarnation(deadline(t), base, "f", []string{"r1", "r2"}); n != want || err != nil {
+			t.Errorf("incarnation %d, error %v, want %d", n, err, want)
+		}
+	}
+	next(1)
 	_, _, stop := run(t, base, 1)
 	publish(t, r1, "up.f.r1.tie", "a", tie(t, 1))
 	publish(t, r1, "up.f.r1.summary", "", summary(t, "r1", 1, 3))
@@ -188,6 +198,7 @@ func TestACoordinatorComesBackToWhatItKnew(t *testing.T) {
 
 	publish(t, r1, "up.f.r1.tie", "b", tie(t, 2)) // while nobody listens
 	publish(t, r2, "up.f.r2.summary", "", summary(t, "r2", 2, 4))
+	next(2)
 	s, _, stop := run(t, base, 2)
 	defer stop()
 	m = until(t, told, "correction of the new coordinator", func(m *msgs.Correction) bool {
