@@ -31,6 +31,7 @@ type Options struct {
 	Last     []int32
 	Ordering Ordering
 	// Workers is the number of goroutines of a factorisation, 1 or 2; 0 means 1.
+	// Two pay where two processors are free; small problems use one in any case.
 	Workers int
 }
 
