@@ -56,8 +56,10 @@ func (s *Score) Finding() string {
 	default:
 		b.WriteString("Not accepted: ")
 	}
-	if joined == 0 {
-		fmt.Fprintf(&b, "none of %s shares a datum with another", count(len(s.Robots), "robot"))
+	if joined == 0 && len(s.Robots) == 1 {
+		b.WriteString("one robot, and nothing to join it with")
+	} else if joined == 0 {
+		fmt.Fprintf(&b, "none of %d robots shares a datum with another", len(s.Robots))
 	} else if joined == 1 {
 		b.WriteString("all sessions of one robot share the datum")
 	} else if joined == len(s.Robots) {

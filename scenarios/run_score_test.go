@@ -312,3 +312,15 @@ func commentsOf(t *testing.T, name string) map[string]string {
 	})
 	return docs
 }
+
+// One robot has nothing to be joined with: that is no failure. A fleet without a common map is one.
+func TestScoreWithoutMap(t *testing.T) {
+	one := score(t, shortRun(t, func(sc *Scenario) { sc.Fleet.Robots, sc.FalseTies.Independent = 1, 0 }))
+	if !one.Accepted || one.GapRelative != nil || !strings.Contains(one.Finding(), "one robot, and nothing to join it with") {
+		t.Errorf("one robot: accepted %v, %s", one.Accepted, one.Finding())
+	}
+	apart := score(t, shortRun(t, func(sc *Scenario) { sc.Ties.Recall, sc.FalseTies.Independent = 0, 0 }))
+	if apart.Accepted || apart.GapRelative != nil || !strings.Contains(apart.Finding(), "none of 3 robots shares a datum") {
+		t.Errorf("robots that never met: accepted %v, %s", apart.Accepted, apart.Finding())
+	}
+}

@@ -34,8 +34,9 @@ func (rehearseCmd) Help() string {
 
 The exit code is 0 only if the acceptance figures hold. An interrupt ends the run where it is and keeps what was finished.
 
-Example:
+Examples:
 
+  selvage rehearse
   selvage rehearse store --seed 3 --out look-alikes
 `
 }
