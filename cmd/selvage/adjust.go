@@ -123,7 +123,6 @@ func (c *adjustCmd) Run(ctx context.Context, con *console) error {
 		}
 		*phase.seconds = time.Since(began).Seconds()
 	}
-	con.warn(a.survey.Warnings)
 	a.progress.begin("writing " + a.report.Results)
 	began := time.Now()
 	if err := a.write(); err != nil {
@@ -131,6 +130,7 @@ func (c *adjustCmd) Run(ctx context.Context, con *console) error {
 	}
 	t.Write = time.Since(began).Seconds()
 	a.progress.end()
+	con.warn(a.survey.Warnings)
 	if c.JSON {
 		e := json.NewEncoder(con.out)
 		e.SetIndent("", "  ")

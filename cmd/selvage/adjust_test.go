@@ -251,6 +251,18 @@ func TestAdjustHeedsVerdicts(t *testing.T) {
 	selvage(t, dir, "adjust", "square").want(t, exitInput, `results/verdicts.csv:2: column tie: found "cut77777", expected the id of a tie`, `results/verdicts.csv:3: column verdict: found "perhaps"`)
 }
 
+// Columns and files that nobody knows are named, and change nothing.
+func TestAdjustWarns(t *testing.T) {
+	dir := t.TempDir()
+	squareSurvey(t, dir)
+	write(t, dir, "square/notes.txt", "rain\n")
+	a := selvage(t, dir, "adjust", "square", "--json")
+	a.want(t, 0, `"level":"warn"`, `"message":"notes.txt: not read by this version"`)
+	if a = selvage(t, dir, "--log-level", "error", "adjust", "square", "--json"); strings.Contains(a.err, "notes.txt") {
+		t.Errorf("a warning at level error: %s", a.err)
+	}
+}
+
 func TestAdjustTellsWhatFailed(t *testing.T) {
 	dir := t.TempDir()
 	squareSurvey(t, dir)

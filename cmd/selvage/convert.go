@@ -54,7 +54,6 @@ func (c *convertCmd) Run(ctx context.Context, con *console) error {
 	if err != nil {
 		return err
 	}
-	con.warn(s.Warnings)
 	if at, err := filepath.Abs(c.Data); err == nil {
 		s.Meta.Name = filepath.Base(at)
 	}
@@ -63,6 +62,7 @@ func (c *convertCmd) Run(ctx context.Context, con *console) error {
 		return err
 	}
 	p.end()
+	con.warn(s.Warnings)
 	closures := 0
 	r := &s.Robots[0]
 	for i := range r.Relatives {

@@ -39,7 +39,6 @@ func (c *splitCmd) Run(ctx context.Context, con *console) error {
 	if err != nil {
 		return err
 	}
-	con.warn(s.Warnings)
 	p.begin("splitting")
 	type cut struct {
 		survey  *survey.Survey
@@ -62,6 +61,7 @@ func (c *splitCmd) Run(ctx context.Context, con *console) error {
 		return err
 	}
 	p.end()
+	con.warn(s.Warnings)
 	return c.show(con, made.survey, made.quality)
 }
 
