@@ -8,6 +8,8 @@ import (
 	"selvage/internal/evidence"
 	"selvage/internal/lie"
 	"selvage/msgs"
+
+	"gonum.org/v1/gonum/stat/distuv"
 )
 
 // Config is fixed for the life of a coordinator.
@@ -50,6 +52,7 @@ type Publish struct {
 // Coordinator is the core. Its methods must not be called concurrently.
 type Coordinator struct {
 	cfg      Config
+	limit    float64 // chi-square beyond which a tie contradicts the joint solution
 	robots   map[string]*robot
 	ties     map[string]*tie
 	order    []*tie // as they came
@@ -157,7 +160,8 @@ func New(cfg Config) *Coordinator {
 	if cfg.Dim != 2 && cfg.Dim != 3 {
 		panic("coordinator: dimension 2 or 3")
 	}
-	return &Coordinator{cfg: cfg, robots: map[string]*robot{}, ties: map[string]*tie{}, places: map[unitID]placement{}}
+	limit := distuv.ChiSquared{K: float64(3 * (cfg.Dim - 1))}.Quantile(acceptance)
+	return &Coordinator{cfg: cfg, limit: limit, robots: map[string]*robot{}, ties: map[string]*tie{}, places: map[unitID]placement{}}
 }
 
 // Message takes a message from a robot at the time nowNS. An error says why it was refused; nothing has changed then. Old and

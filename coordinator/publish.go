@@ -8,7 +8,7 @@ import (
 // publish makes the solution the newest epoch: a correction to every robot with a summary, a verdict for every tie whose verdict
 // changed.
 func (c *Coordinator) publish(j *joint) ([]Publish, error) {
-	sigma, err := j.solver.Covariance()
+	sigma, err := j.covariance()
 	if err != nil {
 		return nil, err
 	}
