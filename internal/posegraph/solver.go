@@ -21,7 +21,7 @@ type Solver struct {
 	variable []int32 // block row -> variable
 	offset   []int32
 	step     []float64
-	next     []lie.SE3
+	next     Values // the values after the step
 	diagonal []float64
 }
 
@@ -42,7 +42,7 @@ type Stop uint8
 // The reasons to stop.
 const (
 	Converged       Stop = iota + 1 // the predicted decrease is below the tolerance
-	NoDecrease                      // rounding leaves no step that lowers the cost
+	NoDecrease                      // no step lowers the cost: rounding, or a residual at half a turn, where the logarithm jumps
 	IterationLimit                  // MaxIterations steps were tried
 	Interrupted                     // Watch returned false
 	Undetermined                    // the measurements leave a variable free, whatever the damping
@@ -123,7 +123,7 @@ func NewSolver(g *Graph, fixed []int32, ordering sparse.Options) (*Solver, error
 	s.now, s.trial = s.assembly(int(scalars)), s.assembly(int(scalars))
 	s.step = make([]float64, scalars)
 	s.diagonal = make([]float64, scalars)
-	s.next = make([]lie.SE3, n)
+	s.next.Poses = make([]lie.SE3, n)
 	return s, nil
 }
 
@@ -224,43 +224,46 @@ func (s *Solver) Optimise(o Options) Result {
 	cost := s.linearise(&s.g.Values, s.now)
 	r.InitialCost, r.Cost = cost, cost
 	lambda := 0.0
-	for r.Iterations = 0; r.Iterations < o.MaxIterations; {
+	for r.Iterations < o.MaxIterations {
 		if o.Watch != nil && !o.Watch(r.Iterations, cost, lambda) {
 			r.Stop = Interrupted
 			return r
 		}
-		s.damp(lambda)
 		r.Iterations++
-		if err := s.factor.FactoriseSolve(s.now.Matrix, s.now.Gradient, s.step); err != nil {
-			var bad *sparse.NotPositiveError
-			if lambda >= mostDamping && errors.As(err, &bad) {
-				r.Weakest = s.variable[bad.Block]
-				r.Stop = Undetermined
-				return r
+		decrease, err := s.solve(lambda)
+		if err != nil {
+			if lambda >= mostDamping {
+				return s.undetermined(r, err)
 			}
-			s.undamp(lambda)
 			lambda = math.Max(8*lambda, firstDamping)
 			continue
 		}
-		s.undamp(lambda)
-		slope := 0.0 // g.d: the step is minus this solution
-		for i, g := range s.now.Gradient {
-			slope += g * s.step[i]
-		}
-		r.Decrease = slope / 2 // what the linear model predicts, the damping term left out
+		r.Decrease = decrease
 		s.advance()
-		trial := s.linearise(&Values{Poses: s.next}, s.trial)
+		trial := s.linearise(&s.next, s.trial)
 		scale := math.Max(math.Abs(cost), 1)
-		if trial <= cost {
-			s.g.Values.Poses, s.next = s.next, s.g.Values.Poses
+		lower := trial <= cost
+		rise := trial - cost
+		if lower {
+			s.g.Values, s.next = s.next, s.g.Values
 			s.now, s.trial = s.trial, s.now
-			gain := (cost - trial) / (slope / 2)
 			cost, r.Cost = trial, trial
-			if slope < 2*o.Tolerance*scale && lambda < firstDamping {
+		}
+		if decrease < o.Tolerance*scale {
+			// Rounding may hide the effect of such a step. Damping makes any step small: what counts is the plain one.
+			if lambda > 0 {
+				r.Iterations++
+				if r.Decrease, err = s.solve(0); err != nil {
+					return s.undetermined(r, err)
+				}
+			}
+			if r.Decrease < o.Tolerance*scale {
 				r.Stop = Converged
 				return r
 			}
-			switch {
+		}
+		if lower {
+			switch gain := -rise / decrease; {
 			case gain > 0.75:
 				lambda /= 10
 			case gain > 0.25:
@@ -271,18 +274,33 @@ func (s *Solver) Optimise(o Options) Result {
 			}
 			continue
 		}
-		if slope < 2*o.Tolerance*scale && lambda < firstDamping {
-			r.Stop = Converged // the step is below what rounding lets the cost show
-			return r
-		}
 		r.Refused++
-		if lambda >= mostDamping || trial-cost < 1e-14*scale {
+		if lambda >= mostDamping || rise < 1e-14*scale {
 			r.Stop = NoDecrease
 			return r
 		}
 		lambda = math.Max(8*lambda, firstDamping)
 	}
 	r.Stop = IterationLimit
+	return r
+}
+
+// solve computes the step for a damping and returns the decrease of F that the linear model expects of it, the damping left out.
+func (s *Solver) solve(lambda float64) (decrease float64, err error) {
+	s.damp(lambda)
+	err = s.factor.FactoriseSolve(s.now.Matrix, s.now.Gradient, s.step)
+	s.undamp(lambda)
+	for i, g := range s.now.Gradient {
+		decrease += g * s.step[i] / 2 // the step is minus this solution
+	}
+	return decrease, err
+}
+
+func (s *Solver) undetermined(r Result, err error) Result {
+	r.Stop = Undetermined
+	if bad := (*sparse.NotPositiveError)(nil); errors.As(err, &bad) {
+		r.Weakest = s.variable[bad.Block]
+	}
 	return r
 }
 
@@ -354,17 +372,15 @@ func (c Covariance) Across(slot Slot, dst []float64) {
 // leaves the values alone and reports false.
 func (s *Solver) Step(limit float64) (decrease float64, taken bool) {
 	s.Linearise()
-	if err := s.factor.FactoriseSolve(s.now.Matrix, s.now.Gradient, s.step); err != nil {
+	decrease, err := s.solve(0)
+	if err != nil {
 		return 0, false
-	}
-	for i, g := range s.now.Gradient {
-		decrease += g * s.step[i] / 2
 	}
 	if !(decrease < limit) {
 		return decrease, false
 	}
 	s.advance()
-	s.g.Values.Poses, s.next = s.next, s.g.Values.Poses
+	s.g.Values, s.next = s.next, s.g.Values
 	return decrease, true
 }
 
@@ -398,17 +414,17 @@ func (s *Solver) undamp(lambda float64) {
 
 // advance writes the stepped values to next.
 func (s *Solver) advance() {
-	for i := range s.next {
+	for i, x := range s.g.Values.Poses {
 		o := s.offset[i]
 		if o < 0 {
-			s.next[i] = s.g.Values.Poses[i]
+			s.next.Poses[i] = x
 			continue
 		}
 		d := s.step[o:]
 		if s.g.Dim == 3 {
-			s.next[i] = lie.Planar(&s.g.Values.Poses[i]).Plus([3]float64{-d[0], -d[1], -d[2]}).Spatial()
+			s.next.Poses[i] = lie.Planar(&x).Plus([3]float64{-d[0], -d[1], -d[2]}).Spatial()
 		} else {
-			s.next[i] = s.g.Values.Poses[i].Plus(lie.Tangent{-d[0], -d[1], -d[2], -d[3], -d[4], -d[5]})
+			s.next.Poses[i] = x.Plus(lie.Tangent{-d[0], -d[1], -d[2], -d[3], -d[4], -d[5]})
 		}
 	}
 }
