@@ -1,7 +1,9 @@
 package agent
 
 import (
+	"cmp"
 	"fmt"
+	"math"
 	"slices"
 
 	"selvage/internal/lie"
@@ -30,6 +32,9 @@ type Config struct {
 }
 
 const second = int64(1e9)
+
+// never is the time of what has not happened.
+const never = math.MinInt64
 
 // DefaultConfig returns the settings for a survey at walking pace on a thin radio link.
 func DefaultConfig(fleet, robot string, dim int) Config {
@@ -102,14 +107,14 @@ type Agent struct {
 	cfg      Config
 	sessions []*session // ascending
 
-	records []record // ties not yet safe, ascending
+	records []record // every tie, record n at n-1: a base that lost its store asks for all of them again
 	newest  uint64   // record number
-	safe    uint64
+	safe    uint64   // the base holds every record up to this one
 
 	version   uint64 // of the newest summary made
 	payload   []byte // that summary
 	answered  bool   // a correction that used it arrived
-	sentNS    int64
+	sentNS    int64  // when it was last sent, or when making one failed
 	tries     int
 	rawNow    int   // bytes of the raw graph
 	rawAtSend int   // when the newest summary was made
@@ -125,7 +130,7 @@ type Agent struct {
 	begun       bool
 }
 
-// record is a tie that the base has not declared safe.
+// record is a tie in the order of the journal.
 type record struct {
 	number  uint64
 	payload []byte
@@ -138,7 +143,7 @@ func New(cfg Config) *Agent {
 	if cfg.Dim != 2 && cfg.Dim != 3 {
 		panic("agent: dimension 2 or 3")
 	}
-	return &Agent{cfg: cfg}
+	return &Agent{cfg: cfg, sentNS: never}
 }
 
 // Handle takes one event at the time nowNS (nanoseconds of the agent's clock, never decreasing) and returns what is to be
@@ -150,14 +155,11 @@ func (a *Agent) Handle(nowNS int64, e Event) ([]Publish, error) {
 	}
 	switch e := e.(type) {
 	case Keyframe:
-		a.lastNS = nowNS
-		return nil, a.keyframe(e)
+		return nil, a.keyframe(nowNS, &e)
 	case Relative:
-		a.lastNS = nowNS
-		return nil, a.relative(e)
+		return nil, a.relative(nowNS, &e)
 	case Tie:
-		a.lastNS = nowNS
-		return a.tie(nowNS, e)
+		return a.tie(nowNS, &e)
 	case Message:
 		return a.message(nowNS, e)
 	case Tick:
@@ -166,33 +168,54 @@ func (a *Agent) Handle(nowNS int64, e Event) ([]Publish, error) {
 	panic(fmt.Sprintf("agent: event of type %T", e))
 }
 
-// session returns the session with that number, made when it is new.
-func (a *Agent) session(id uint32) *session {
-	i, found := slices.BinarySearchFunc(a.sessions, id, func(s *session, id uint32) int { return int(int64(s.id) - int64(id)) })
-	if !found {
-		a.sessions = slices.Insert(a.sessions, i, newSession(id, a.cfg.Dim))
-	}
-	return a.sessions[i]
+// find returns where the session with that number stands, or belongs.
+func (a *Agent) find(id uint32) (int, bool) {
+	return slices.BinarySearchFunc(a.sessions, id, func(s *session, id uint32) int { return cmp.Compare(s.id, id) })
 }
 
-func (a *Agent) keyframe(k Keyframe) error {
-	if err := a.session(k.Session).addKeyframe(k); err != nil {
+// session returns the session with that number, nil when it has no keyframe.
+func (a *Agent) session(id uint32) *session {
+	if i, found := a.find(id); found {
+		return a.sessions[i]
+	}
+	return nil
+}
+
+// keyframe takes a keyframe; the first of a session begins it.
+func (a *Agent) keyframe(nowNS int64, k *Keyframe) error {
+	if err := checkPose(&k.Pose, a.cfg.Dim); err != nil {
+		return fmt.Errorf("keyframe %d of session %d: %w", k.ID, k.Session, err)
+	}
+	i, found := a.find(k.Session)
+	if !found {
+		if len(a.sessions) == msgs.MaxParts {
+			return fmt.Errorf("keyframe %d begins session %d: there are %d already, the most a summary can hold", k.ID, k.Session, msgs.MaxParts)
+		}
+		a.sessions = slices.Insert(a.sessions, i, newSession(k.Session, a.cfg.Dim))
+	}
+	if err := a.sessions[i].addKeyframe(k); err != nil {
 		return err
 	}
+	a.lastNS = nowNS
 	a.rawNow += RawPoseBytes
 	return nil
 }
 
-func (a *Agent) relative(r Relative) error {
-	if err := a.session(r.Session).addRelative(r); err != nil {
+func (a *Agent) relative(nowNS int64, r *Relative) error {
+	s := a.session(r.Session)
+	if s == nil {
+		return fmt.Errorf("relative pose from %d to %d: session %d has no keyframe", r.From, r.To, r.Session)
+	}
+	if err := s.addRelative(r); err != nil {
 		return err
 	}
+	a.lastNS = nowNS
 	a.rawNow += RawMeasurementBytes
 	return nil
 }
 
 // tie numbers a tie and sends it; it stays in records until the base says it is safe.
-func (a *Agent) tie(nowNS int64, t Tie) ([]Publish, error) {
+func (a *Agent) tie(nowNS int64, t *Tie) ([]Publish, error) {
 	own := t.From
 	if own.Robot != a.cfg.Robot {
 		own = t.To
@@ -201,8 +224,11 @@ func (a *Agent) tie(nowNS int64, t Tie) ([]Publish, error) {
 		return nil, fmt.Errorf("tie %q between %s and %s: neither is %s", t.ID, t.From.Robot, t.To.Robot, a.cfg.Robot)
 	}
 	s := a.session(own.Session)
-	if _, known := s.index[own.ID]; own.ByStamp || !known {
+	if own.ByStamp || !s.knows(own.ID) {
 		return nil, fmt.Errorf("tie %q: keyframe %d of session %d is not known to %s", t.ID, own.ID, own.Session, a.cfg.Robot)
+	}
+	if err := checkMeasurement(&t.Z, &t.Info, a.cfg.Dim); err != nil {
+		return nil, fmt.Errorf("tie %q: %w", t.ID, err)
 	}
 	number := a.newest + 1
 	id := t.ID
@@ -217,22 +243,31 @@ func (a *Agent) tie(nowNS int64, t Tie) ([]Publish, error) {
 	if err != nil {
 		return nil, fmt.Errorf("tie %q: %w", id, err)
 	}
-	a.newest = number
+	a.newest, a.lastNS = number, nowNS
 	a.rawNow += RawMeasurementBytes
-	a.separate(s, own.ID)
-	if t.From.Robot == t.To.Robot { // both ends are this robot's
-		other := t.To
-		if other == own {
-			other = t.From
+	for _, end := range [2]*msgs.KeyRef{&t.From, &t.To} {
+		if end.Robot == a.cfg.Robot {
+			a.separate(end)
 		}
-		a.separate(a.session(other.Session), other.ID)
 	}
 	a.records = append(a.records, record{number: number, payload: payload, sentNS: nowNS})
 	return []Publish{{msgs.KindTie, payload, number}}, nil
 }
 
-// separate makes a keyframe a separator, if it is known and not one yet.
-func (a *Agent) separate(s *session, id int64) {
+// separate makes the keyframe that a reference names a separator, if there is one and it is none yet.
+func (a *Agent) separate(k *msgs.KeyRef) {
+	s := a.session(k.Session)
+	if s == nil {
+		return
+	}
+	id := k.ID
+	if k.ByStamp {
+		known := false
+		if id, known = s.resolve(k.StampNS); !known {
+			return
+		}
+		a.wanted = true // the next summary tells which one it is
+	}
 	if i, ok := s.index[id]; ok && !s.separator[i] {
 		s.separator[i] = true
 		s.separators++

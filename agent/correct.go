@@ -1,6 +1,7 @@
 package agent
 
 import (
+	"fmt"
 	"slices"
 
 	"selvage/internal/lie"
@@ -15,25 +16,27 @@ const relinearise = 3e-12
 // correct applies a correction: junctions go where the base found them, interior poses follow. A correction that is not newer than
 // the last one applied is dropped; keyframes it names that this robot does not know are left out.
 func (a *Agent) correct(c *msgs.Correction) error {
+	if c.Dim != a.width() {
+		return fmt.Errorf("correction of poses with %d components, this survey has %d", c.Dim, a.width())
+	}
 	if err := a.addressed(c.Fleet, c.Robot, c.Term); err != nil {
 		return err
 	}
-	a.incarnation = max(a.incarnation, c.Epoch.Incarnation)
+	a.met(c.Epoch.Incarnation)
 	if c.SummaryVersion >= a.version {
 		a.answered = true
 	}
-	if c.Epoch.Compare(a.applied) <= 0 || c.Dim != a.width() {
+	if c.Epoch.Compare(a.applied) <= 0 {
 		return nil
 	}
 	a.applied = c.Epoch
 	a.beatDue = true
 	for i := range c.Parts {
 		p := &c.Parts[i]
-		k, found := slices.BinarySearchFunc(a.sessions, p.Session, func(s *session, id uint32) int { return int(int64(s.id) - int64(id)) })
-		if !found {
+		s := a.session(p.Session)
+		if s == nil {
 			continue
 		}
-		s := a.sessions[k]
 		s.joined, s.island = p.Joined, p.Island
 		if len(p.IDs) == 0 {
 			continue
@@ -170,7 +173,7 @@ func (a *Agent) Raw() int { return a.rawNow }
 // Settled tells whether the agent has nothing left to send or to hear: every tie is safe, the newest summary is answered and
 // says all there is to say.
 func (a *Agent) Settled() bool {
-	if len(a.records) > 0 || a.payload != nil && !a.answered || a.wanted || a.relinear || a.beatDue {
+	if a.safe < a.newest || a.payload != nil && !a.answered || a.wanted || a.relinear || a.beatDue {
 		return false
 	}
 	for _, s := range a.sessions {

@@ -3,10 +3,12 @@ package agent
 import (
 	"fmt"
 	"math"
+	"slices"
 
 	"selvage/internal/lie"
 	"selvage/internal/posegraph"
 	"selvage/internal/sparse"
+	"selvage/msgs"
 	"selvage/partition"
 )
 
@@ -24,7 +26,6 @@ type session struct {
 	separator  []bool
 	separators int
 	resolved   map[int32][]int64 // variable -> stamps asked for that it answers
-	unresolved []int64           // stamps asked for that no keyframe has yet
 
 	dirty  bool // measurements came since the newest summary
 	joined bool
@@ -41,7 +42,7 @@ func newSession(id uint32, dim int) *session {
 	}
 }
 
-func (s *session) addKeyframe(k Keyframe) error {
+func (s *session) addKeyframe(k *Keyframe) error {
 	if _, known := s.index[k.ID]; known {
 		return fmt.Errorf("keyframe %d of session %d came twice", k.ID, s.id)
 	}
@@ -51,6 +52,9 @@ func (s *session) addKeyframe(k Keyframe) error {
 		step := s.front[n-1].Between(k.Pose)
 		pose = s.graph.Values.Poses[n-1].Mul(step)
 		travel = s.travel[n-1] + math.Sqrt(step.T[0]*step.T[0]+step.T[1]*step.T[1]+step.T[2]*step.T[2])
+	}
+	if !(travel <= msgs.MaxMetres) {
+		return fmt.Errorf("keyframe %d of session %d: %g m from the start, at most %g expected", k.ID, s.id, travel, float64(msgs.MaxMetres))
 	}
 	s.index[k.ID] = int32(n)
 	s.keys = append(s.keys, k.ID)
@@ -63,33 +67,39 @@ func (s *session) addKeyframe(k Keyframe) error {
 	return nil
 }
 
-func (s *session) addRelative(r Relative) error {
+func (s *session) addRelative(r *Relative) error {
 	i, ok := s.index[r.From]
 	j, found := s.index[r.To]
 	if !ok || !found || i == j {
 		return fmt.Errorf("relative pose from %d to %d of session %d: two known keyframes expected", r.From, r.To, s.id)
+	}
+	if err := checkMeasurement(&r.Z, &r.Info, s.dim); err != nil {
+		return fmt.Errorf("relative pose from %d to %d of session %d: %w", r.From, r.To, s.id, err)
 	}
 	s.factors.Add(i, j, r.Z, &r.Info)
 	s.dirty = true
 	return nil
 }
 
-// resolve looks for the keyframe with a stamp and hands its id over.
-func (s *session) resolve(stamp int64, use func(id int64)) {
-	for i, t := range s.stamps {
-		if t != stamp {
-			continue
-		}
-		v := int32(i)
-		for _, known := range s.resolved[v] {
-			if known == stamp {
-				return
-			}
-		}
-		s.resolved[v] = append(s.resolved[v], stamp)
-		use(s.keys[i])
-		return
+// knows tells whether the session has a keyframe of that id; no session has none.
+func (s *session) knows(id int64) bool {
+	if s == nil {
+		return false
 	}
+	_, known := s.index[id]
+	return known
+}
+
+// resolve looks for the keyframe with a stamp; the next summary says that it answers it.
+func (s *session) resolve(stamp int64) (id int64, known bool) {
+	v := slices.Index(s.stamps, stamp)
+	if v < 0 {
+		return 0, false
+	}
+	if !slices.Contains(s.resolved[int32(v)], stamp) {
+		s.resolved[int32(v)] = append(s.resolved[int32(v)], stamp)
+	}
+	return s.keys[v], true
 }
 
 // optimise brings the session to its own optimum, starting from its present poses. When these explain the measurements badly,

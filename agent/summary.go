@@ -1,6 +1,8 @@
 package agent
 
 import (
+	"errors"
+	"fmt"
 	"slices"
 
 	"selvage/internal/lie"
@@ -79,30 +81,35 @@ func (s *session) change(next *model) (fall float64, ok bool) {
 }
 
 // summarise makes the next summary of all sessions that have separators. Sessions with new measurements are brought to their own
-// optimum first; the others are condensed where they are, at the base's solution.
+// optimum first; the others are condensed where they are, at the base's solution. Of a session whose measurements do not hold
+// together the last summary is said again, as far as there is one; the error says why. With nothing to say the payload is nil.
 func (a *Agent) summarise() ([]byte, error) {
 	m := msgs.Summary{
 		Header: a.header(0, a.latestSession()), Version: a.version + 1, Answers: a.applied, Dim: a.width(),
 	}
+	var refused error
 	models := make([]*model, len(a.sessions))
 	for i, s := range a.sessions {
 		if s.separators == 0 {
 			continue
 		}
-		if s.dirty {
-			if err := s.optimise(); err != nil {
-				return nil, err
+		next, err := s.next()
+		if err != nil {
+			refused = errors.Join(refused, err)
+			if s.told != nil {
+				m.Parts = append(m.Parts, s.part(s.told))
 			}
+			continue
 		}
-		var err error
-		if models[i], err = s.model(); err != nil {
-			return nil, err
-		}
-		m.Parts = append(m.Parts, s.part(models[i]))
+		models[i] = next
+		m.Parts = append(m.Parts, s.part(next))
+	}
+	if len(m.Parts) == 0 {
+		return nil, refused
 	}
 	payload, err := m.Marshal()
 	if err != nil {
-		return nil, err
+		return nil, errors.Join(refused, err)
 	}
 	a.version++
 	for i, s := range a.sessions {
@@ -110,12 +117,26 @@ func (a *Agent) summarise() ([]byte, error) {
 			s.told, s.dirty = models[i], false
 		}
 	}
-	return payload, nil
+	return payload, refused
+}
+
+// next makes the model of the next summary.
+func (s *session) next() (*model, error) {
+	if s.dirty {
+		if err := s.optimise(); err != nil {
+			return nil, err
+		}
+	}
+	m, err := s.model()
+	if err != nil {
+		return nil, fmt.Errorf("session %d: %w", s.id, err)
+	}
+	return m, nil
 }
 
 // part writes a model for the wire.
 func (s *session) part(m *model) msgs.Part {
-	p := msgs.Part{Session: s.id, Cost: m.cost, Keyframes: len(s.keys)}
+	p := msgs.Part{Session: s.id, Cost: m.cost, Keyframes: len(m.at)}
 	order := slices.Clone(m.condensed.Junctions) // by id, as the wire wants it
 	slices.SortFunc(order, func(a, b int32) int {
 		if s.keys[a] < s.keys[b] {

@@ -1,6 +1,7 @@
 package agent
 
 import (
+	"errors"
 	"fmt"
 
 	"selvage/msgs"
@@ -9,7 +10,7 @@ import (
 // tick sends what is due.
 func (a *Agent) tick(nowNS int64) ([]Publish, error) {
 	var out []Publish
-	for i := range a.records {
+	for i := a.safe; i < a.newest; i++ {
 		r := &a.records[i]
 		if nowNS-r.sentNS >= a.cfg.RetryNS<<min(r.tries, 4) {
 			r.sentNS = nowNS
@@ -17,13 +18,16 @@ func (a *Agent) tick(nowNS int64) ([]Publish, error) {
 			out = append(out, Publish{msgs.KindTie, r.payload, r.number})
 		}
 	}
+	var refused error
 	switch {
 	case a.due(nowNS):
-		payload, err := a.summarise()
-		if err != nil {
-			return out, err
+		var payload []byte
+		payload, refused = a.summarise()
+		a.sentNS = nowNS
+		if payload == nil {
+			break
 		}
-		a.payload, a.answered, a.tries, a.sentNS = payload, false, 0, nowNS
+		a.payload, a.answered, a.tries = payload, false, 0
 		a.rawAtSend, a.wanted, a.relinear = a.rawNow, false, false
 		out = append(out, Publish{msgs.KindSummary, payload, a.version})
 	case a.payload != nil && !a.answered && nowNS-a.sentNS >= a.cfg.AnswerNS<<min(a.tries, 4):
@@ -34,12 +38,12 @@ func (a *Agent) tick(nowNS int64) ([]Publish, error) {
 	if a.beatDue || nowNS-a.beatNS >= a.cfg.HeartbeatNS {
 		beat, err := a.heartbeat(nowNS)
 		if err != nil {
-			return out, err
+			return out, errors.Join(refused, err)
 		}
 		a.beatNS, a.beatDue = nowNS, false
 		out = append(out, Publish{Kind: msgs.KindHeartbeat, Payload: beat})
 	}
-	return out, nil
+	return out, refused
 }
 
 // due tells whether a new summary is to be made now.
@@ -52,7 +56,7 @@ func (a *Agent) due(nowNS int64) bool {
 	if separators == 0 || !changed && !a.relinear {
 		return false
 	}
-	if a.payload == nil {
+	if a.sentNS == never {
 		return true
 	}
 	if nowNS-a.sentNS < a.cfg.PublishNS {
@@ -61,7 +65,7 @@ func (a *Agent) due(nowNS int64) bool {
 	if nowNS-a.lastNS >= a.cfg.SettleNS {
 		return true
 	}
-	return changed && float64(len(a.payload)) <= a.cfg.TrafficShare*float64(a.rawNow-a.rawAtSend)
+	return a.payload == nil || changed && float64(len(a.payload)) <= a.cfg.TrafficShare*float64(a.rawNow-a.rawAtSend)
 }
 
 func (a *Agent) heartbeat(nowNS int64) ([]byte, error) {
@@ -112,35 +116,37 @@ func (a *Agent) addressed(fleet, robot string, term uint64) error {
 	return nil
 }
 
+// met notes the incarnation of a base. A higher one than that of the base before has an empty store: nothing is safe there, and
+// it has no summary.
+func (a *Agent) met(incarnation uint64) {
+	if incarnation <= a.incarnation {
+		return
+	}
+	if a.incarnation > 0 {
+		a.safe = 0
+		a.wanted = a.wanted || a.payload != nil
+	}
+	a.incarnation = incarnation
+	a.beatDue = true
+}
+
 // want takes what the base asks for: separators, missing records, and the number below which records are safe.
 func (a *Agent) want(nowNS int64, w *msgs.Want) ([]Publish, error) {
 	if err := a.addressed(w.Fleet, w.Robot, w.Term); err != nil {
 		return nil, err
 	}
-	a.incarnation = max(a.incarnation, w.Epoch.Incarnation)
-	for _, k := range w.Keys {
-		s := a.session(k.Session)
-		if k.ByStamp {
-			s.resolve(k.StampNS, func(id int64) { a.separate(s, id) })
-			continue
-		}
-		a.separate(s, k.ID)
+	a.met(w.Epoch.Incarnation)
+	for i := range w.Keys {
+		a.separate(&w.Keys[i])
 	}
-	if w.Journal != a.cfg.Journal {
-		return nil, nil
+	if w.Journal != a.cfg.Journal || w.Epoch.Incarnation < a.incarnation {
+		return nil, nil // it counts in another journal, or speaks for a store that is gone
 	}
 	a.safe = max(a.safe, min(w.Safe, a.newest))
-	kept := a.records[:0]
-	for _, r := range a.records {
-		if r.number > a.safe {
-			kept = append(kept, r)
-		}
-	}
-	a.records = kept
 	var out []Publish
 	for _, gap := range w.Gaps {
-		for i := range a.records {
-			if r := &a.records[i]; r.number >= gap[0] && r.number <= gap[1] && nowNS-r.sentNS >= a.cfg.RetryNS/2 {
+		for n := max(gap[0], a.safe+1); n <= min(gap[1], a.newest); n++ {
+			if r := &a.records[n-1]; nowNS-r.sentNS >= a.cfg.RetryNS/2 {
 				r.sentNS = nowNS
 				out = append(out, Publish{msgs.KindTie, r.payload, r.number})
 			}
