@@ -1,6 +1,7 @@
 package coordinator
 
 import (
+	"errors"
 	"fmt"
 	"maps"
 	"slices"
@@ -54,7 +55,7 @@ type Coordinator struct {
 	cfg      Config
 	limit    float64 // chi-square beyond which a tie contradicts the joint solution
 	robots   map[string]*robot
-	ties     map[string]*tie
+	ties     map[tieID]*tie
 	order    []*tie // as they came
 	epoch    uint64
 	now      int64
@@ -67,6 +68,9 @@ type Coordinator struct {
 	places   map[unitID]placement // of the newest epoch
 	datums   uint64               // counts the datums ever made
 }
+
+// tieID names a tie: what a robot calls it concerns no other robot.
+type tieID struct{ robot, id string }
 
 // unitID names a session of a robot.
 type unitID struct {
@@ -110,15 +114,16 @@ type robot struct {
 	name    string
 	summary *msgs.Summary
 	index   []map[int64]int // part -> junction id -> junction
+	stamps  []map[int64]int // part -> resolved stamp -> junction
 	units   []*unitModel    // cached, part by part
 
-	journal msgs.JournalID
-	safe    uint64 // every record up to this one has come
-	beyond  map[uint64]bool
-	newest  uint64 // record number by the heartbeat
+	journals map[msgs.JournalID]*journal
+	current  *journal // the newest of them
 
-	applied msgs.Epoch
-	version uint64 // of the newest summary by the heartbeat
+	applied     msgs.Epoch
+	version     uint64 // of the newest summary by the heartbeat
+	incarnation uint64 // of the newest base it has heard of
+	heard       bool   // a heartbeat came
 
 	missing   []msgs.KeyRef // keyframes wanted, as of revision missingAt
 	missingAt uint64
@@ -161,7 +166,7 @@ func New(cfg Config) *Coordinator {
 		panic("coordinator: dimension 2 or 3")
 	}
 	limit := distuv.ChiSquared{K: float64(3 * (cfg.Dim - 1))}.Quantile(acceptance)
-	return &Coordinator{cfg: cfg, limit: limit, robots: map[string]*robot{}, ties: map[string]*tie{}, places: map[unitID]placement{}}
+	return &Coordinator{cfg: cfg, limit: limit, robots: map[string]*robot{}, ties: map[tieID]*tie{}, places: map[unitID]placement{}}
 }
 
 // Message takes a message from a robot at the time nowNS. An error says why it was refused; nothing has changed then. Old and
@@ -195,12 +200,7 @@ func (c *Coordinator) Message(nowNS int64, m Message) error {
 		if err := c.from(&h.Header, m.Robot); err != nil {
 			return err
 		}
-		r := c.robot(m.Robot)
-		r.applied, r.version = h.Applied, max(r.version, h.SummaryVersion)
-		if h.Header.Journal == r.journal {
-			r.newest = max(r.newest, h.NewestNumber)
-		}
-		return nil
+		return c.takeHeartbeat(h)
 	}
 	return fmt.Errorf("message of kind %q from %s: expected tie, summary or hb", m.Kind, m.Robot)
 }
@@ -212,10 +212,14 @@ func (c *Coordinator) from(h *msgs.Header, robot string) error {
 	return nil
 }
 
+// maxRobots bounds what names can fill.
+const maxRobots = 1 << 10
+
+// robot returns what is known of a robot, nil when it is new and there are too many.
 func (c *Coordinator) robot(name string) *robot {
 	r := c.robots[name]
-	if r == nil {
-		r = &robot{name: name, beyond: map[uint64]bool{}}
+	if r == nil && len(c.robots) < maxRobots {
+		r = &robot{name: name, journals: map[msgs.JournalID]*journal{}, current: &journal{}}
 		c.robots[name] = r
 	}
 	return r
@@ -231,35 +235,40 @@ func (c *Coordinator) sorted() []*robot {
 	return out
 }
 
+// maxTies bounds a survey.
+const maxTies = 1 << 18
+
 func (c *Coordinator) takeTie(m *msgs.Tie) error {
 	if m.Dim != c.width() {
 		return fmt.Errorf("tie %s: %d components, this survey has %d", m.ID, m.Dim, c.width())
 	}
 	r := c.robot(m.Header.Robot)
-	if m.Header.Journal != r.journal { // a new journal starts to count again
-		r.journal, r.safe, r.newest = m.Header.Journal, 0, 0
-		clear(r.beyond)
+	if r == nil || len(c.order) == maxTies {
+		return fmt.Errorf("tie %s of %s: more than %d robots or %d ties", m.ID, m.Header.Robot, maxRobots, maxTies)
 	}
-	n := m.Header.Number
-	if n <= r.safe || r.beyond[n] {
+	l, err := r.journalOf(&m.Header)
+	if err != nil {
+		return err
+	}
+	fresh, err := l.take(m.Header.Number)
+	if err != nil {
+		return fmt.Errorf("tie %s of %s: %w", m.ID, r.name, err)
+	}
+	if !fresh {
 		r.wantBusy = true // it sends again because it has not heard that the record is safe
 		return nil
 	}
-	if c.ties[m.ID] == nil {
-		t := &tie{msg: m, z: lie.FromQuat(m.Pose.T, m.Pose.Q), info: widen(m.Info, c.cfg.Dim)}
-		t.cov, t.regular = invert(&t.info, c.cfg.Dim)
-		t.finding = Finding{Tie: m.ID, From: m.From, To: m.To, Verdict: msgs.Open, Reason: "not yet weighed", SinceNS: c.now}
-		c.ties[m.ID] = t
-		c.order = append(c.order, t)
-		c.dirty = true
-		c.revision++
+	id := tieID{r.name, m.ID}
+	if c.ties[id] != nil {
+		return nil
 	}
-	r.beyond[n] = true
-	r.newest = max(r.newest, n)
-	for r.beyond[r.safe+1] {
-		r.safe++
-		delete(r.beyond, r.safe)
-	}
+	t := &tie{msg: m, z: lie.FromQuat(m.Pose.T, m.Pose.Q), info: widen(m.Info, c.cfg.Dim)}
+	t.cov, t.regular = invert(&t.info, c.cfg.Dim)
+	t.finding = Finding{Tie: m.ID, From: m.From, To: m.To, Verdict: msgs.Open, Reason: "not yet weighed", SinceNS: c.now}
+	c.ties[id] = t
+	c.order = append(c.order, t)
+	c.dirty = true
+	c.revision++
 	return nil
 }
 
@@ -268,7 +277,17 @@ func (c *Coordinator) takeSummary(s *msgs.Summary) error {
 		return fmt.Errorf("summary of %s: %d components, this survey has %d", s.Header.Robot, s.Dim, c.width())
 	}
 	r := c.robot(s.Header.Robot)
-	if s.Unchanged || r.summary != nil && s.Version <= r.summary.Version {
+	if r == nil {
+		return fmt.Errorf("summary of %s: more than %d robots", s.Header.Robot, maxRobots)
+	}
+	l, err := r.journalOf(&s.Header)
+	if err != nil {
+		return err
+	}
+	if l != r.current {
+		return nil // of an agent that is gone
+	}
+	if s.Unchanged || r.summary != nil && r.summary.Header.Journal == s.Header.Journal && s.Version <= r.summary.Version {
 		if r.corr != nil {
 			r.corrNS = min(r.corrNS, c.now-c.cfg.RetryNS) // it sends again because it has no answer
 		}
@@ -276,15 +295,36 @@ func (c *Coordinator) takeSummary(s *msgs.Summary) error {
 	}
 	r.summary, r.version = s, max(r.version, s.Version)
 	r.index = make([]map[int64]int, len(s.Parts))
+	r.stamps = make([]map[int64]int, len(s.Parts))
 	r.units = make([]*unitModel, len(s.Parts))
 	for i := range s.Parts {
 		r.index[i] = make(map[int64]int, len(s.Parts[i].Junctions))
+		r.stamps[i] = map[int64]int{}
 		for k := range s.Parts[i].Junctions {
 			r.index[i][s.Parts[i].Junctions[k].ID] = k
+			for _, stamp := range s.Parts[i].Junctions[k].Resolved {
+				r.stamps[i][stamp] = k
+			}
 		}
 	}
 	c.dirty = true
 	c.revision++
+	return nil
+}
+
+func (c *Coordinator) takeHeartbeat(h *msgs.Heartbeat) error {
+	r := c.robot(h.Header.Robot)
+	if r == nil {
+		return fmt.Errorf("heartbeat of %s: more than %d robots", h.Header.Robot, maxRobots)
+	}
+	l, err := r.journalOf(&h.Header)
+	if err != nil {
+		return err
+	}
+	r.turnTo(l)
+	r.heard = true
+	r.applied, r.version, r.incarnation = h.Applied, max(r.version, h.SummaryVersion), h.HighestIncarnation
+	l.announced(h.NewestNumber)
 	return nil
 }
 
@@ -295,13 +335,11 @@ func (c *Coordinator) width() int { return 3 * (c.cfg.Dim - 1) }
 func (c *Coordinator) Tick(nowNS int64) ([]Publish, error) {
 	c.now = max(c.now, nowNS)
 	var out []Publish
+	var failed error
 	c.rest = !c.dirty && c.left && c.answered()
 	if (c.dirty || c.rest) && c.due() {
 		c.begun, c.dirty, c.solved = true, false, c.now
-		var err error
-		if out, err = c.solve(); err != nil {
-			return out, err
-		}
+		out, failed = c.solve()
 	}
 	for _, r := range c.sorted() {
 		if r.corr != nil && r.applied.Compare(c.Epoch()) < 0 && c.now-r.corrNS >= c.cfg.RetryNS<<min(r.tries, 4) {
@@ -310,14 +348,12 @@ func (c *Coordinator) Tick(nowNS int64) ([]Publish, error) {
 			out = append(out, Publish{r.name, msgs.KindCorrection, r.corr})
 		}
 		want, err := c.want(r)
-		if err != nil {
-			return out, err
-		}
+		failed = errors.Join(failed, err)
 		if want != nil {
 			out = append(out, Publish{r.name, msgs.KindWant, want})
 		}
 	}
-	return out, nil
+	return out, failed
 }
 
 // due tells whether enough time has passed since the last solution.
@@ -329,7 +365,7 @@ func (c *Coordinator) due() bool {
 // complete tells whether no robot is expected to send anything: a solution now would not be overtaken by what is on its way.
 func (c *Coordinator) complete() bool {
 	for _, r := range c.robots {
-		if len(r.beyond) > 0 || r.newest > r.safe || len(c.missing(r)) > 0 {
+		if r.current.gappy() || len(c.missing(r)) > 0 {
 			return false
 		}
 		if s := r.summary; s != nil && (r.version != s.Version || r.used != 0 && r.applied != c.Epoch()) {
@@ -350,7 +386,7 @@ func (c *Coordinator) Settled() bool { return !c.dirty && !c.left && c.answered(
 // answered tells whether nothing is missing at the base and every robot has answered the newest solution.
 func (c *Coordinator) answered() bool {
 	for _, r := range c.robots {
-		if len(r.beyond) > 0 || r.newest > r.safe || r.wantBusy {
+		if r.current.gappy() || r.wantBusy {
 			return false
 		}
 		if r.summary == nil {

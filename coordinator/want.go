@@ -3,20 +3,25 @@ package coordinator
 import (
 	"bytes"
 	"cmp"
-	"maps"
 	"slices"
 
 	"selvage/msgs"
 )
+
+// maxKeys bounds a want; the rest is asked for when these have come.
+const maxKeys = 1 << 12
 
 // want returns the message that tells a robot what the base lacks, when it is due: at once when it changed, again while
 // something is missing, nil otherwise.
 func (c *Coordinator) want(r *robot) ([]byte, error) {
 	w := msgs.Want{
 		Fleet: c.cfg.Fleet, Robot: r.name, Epoch: msgs.Epoch{Incarnation: c.cfg.Incarnation}, Term: c.cfg.Term,
-		Keys: c.missing(r), Gaps: r.gaps(), Safe: r.safe, Journal: r.journal,
+		Keys: c.missing(r), Gaps: r.current.gaps(), Safe: r.current.safe, Journal: r.current.id,
 	}
-	if len(w.Keys) == 0 && len(w.Gaps) == 0 && r.safe == 0 {
+	w.Keys = w.Keys[:min(len(w.Keys), maxKeys)]
+	unknown := r.heard && r.incarnation < c.cfg.Incarnation // to the robot: it may think that what it sent before is here
+	busy := len(w.Keys) > 0 || len(w.Gaps) > 0 || unknown
+	if !busy && w.Safe == 0 {
 		r.wantBusy = false
 		return nil, nil
 	}
@@ -28,7 +33,6 @@ func (c *Coordinator) want(r *robot) ([]byte, error) {
 	if changed {
 		r.wantTry = 0
 	}
-	busy := len(w.Keys) > 0 || len(w.Gaps) > 0
 	wait := c.cfg.RetryNS / 2
 	if !changed {
 		if !busy && !r.wantBusy {
@@ -40,7 +44,7 @@ func (c *Coordinator) want(r *robot) ([]byte, error) {
 		r.wantBusy = r.wantBusy || busy || changed
 		return nil, nil
 	}
-	r.want, r.wantNS, r.wantBusy = payload, c.now, busy
+	r.want, r.wantNS, r.wantBusy = payload, c.now, len(w.Keys) > 0 || len(w.Gaps) > 0
 	r.wantTry++
 	return payload, nil
 }
@@ -75,38 +79,15 @@ func (r *robot) junction(k *msgs.KeyRef) (part, junction int, ok bool) {
 		return 0, 0, false
 	}
 	for p := range r.summary.Parts {
-		part := &r.summary.Parts[p]
-		if part.Session != k.Session {
+		if r.summary.Parts[p].Session != k.Session {
 			continue
 		}
 		if !k.ByStamp {
 			j, ok := r.index[p][k.ID]
 			return p, j, ok
 		}
-		for j := range part.Junctions {
-			if slices.Contains(part.Junctions[j].Resolved, k.StampNS) {
-				return p, j, true
-			}
-		}
+		j, ok := r.stamps[p][k.StampNS]
+		return p, j, ok
 	}
 	return 0, 0, false
-}
-
-// maxGaps bounds a want; the rest is asked for when these are filled.
-const maxGaps = 64
-
-// gaps lists the record numbers that are missing below the newest known.
-func (r *robot) gaps() [][2]uint64 {
-	var out [][2]uint64
-	next := r.safe + 1
-	for _, n := range slices.Sorted(maps.Keys(r.beyond)) {
-		if n > next {
-			out = append(out, [2]uint64{next, n - 1})
-		}
-		next = n + 1
-	}
-	if r.newest >= next {
-		out = append(out, [2]uint64{next, r.newest})
-	}
-	return out[:min(len(out), maxGaps)]
 }
