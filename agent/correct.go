@@ -75,30 +75,31 @@ func (s *session) follow(p *msgs.CorrectedPart) error {
 	if len(moved) == 0 {
 		return nil
 	}
-	slices.Sort(moved)
+	order := s.along()
+	place := make([]int, len(order)) // variable -> place along the track
+	for i, v := range order {
+		place[v] = i
+	}
+	slices.SortFunc(moved, func(a, b int32) int { return place[a] - place[b] })
 	shift := make([]lie.SE3, len(moved)) // session_from_session, junction by junction
 	for i, v := range moved {
 		shift[i] = target[v].Mul(poses[v].Inv())
 	}
 	next := 0
-	for v := range poses {
-		for next < len(moved) && int(moved[next]) < v {
+	for i, v := range order {
+		for next < len(moved) && place[moved[next]] < i {
 			next++
 		}
 		switch {
 		case next == len(moved):
 			poses[v] = shift[next-1].Mul(poses[v])
-		case next == 0 || int(moved[next]) == v:
+		case next == 0 || moved[next] == v:
 			poses[v] = shift[next].Mul(poses[v])
 		default:
-			a, b := moved[next-1], moved[next]
-			share := float64(int32(v)-a) / float64(b-a)
-			step := shift[next-1].Between(shift[next])
-			twist := step.Log()
-			for k := range twist {
-				twist[k] *= share
-			}
-			poses[v] = shift[next-1].Mul(lie.Exp(twist)).Mul(poses[v])
+			a, b := place[moved[next-1]], place[moved[next]]
+			share := float64(i-a) / float64(b-a)
+			move := between(&shift[next-1], &shift[next], share, s.dim)
+			poses[v] = move.Mul(poses[v])
 		}
 	}
 	for _, v := range moved {

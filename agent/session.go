@@ -3,7 +3,6 @@ package agent
 import (
 	"fmt"
 	"math"
-	"slices"
 
 	"selvage/internal/lie"
 	"selvage/internal/posegraph"
@@ -26,6 +25,8 @@ type session struct {
 	separator  []bool
 	separators int
 	resolved   map[int32][]int64 // variable -> stamps asked for that it answers
+	newest     int32             // variable of the newest keyframe of the front end
+	inserted   int               // keyframes made for a stamp
 
 	dirty  bool // measurements came since the newest summary
 	joined bool
@@ -48,14 +49,15 @@ func (s *session) addKeyframe(k *Keyframe) error {
 	}
 	n := len(s.keys)
 	pose, travel := k.Pose, 0.0
-	if n > 0 {
-		step := s.front[n-1].Between(k.Pose)
-		pose = s.graph.Values.Poses[n-1].Mul(step)
-		travel = s.travel[n-1] + math.Sqrt(step.T[0]*step.T[0]+step.T[1]*step.T[1]+step.T[2]*step.T[2])
+	if last := s.newest; n > 0 {
+		step := s.front[last].Between(k.Pose)
+		pose = s.graph.Values.Poses[last].Mul(step)
+		travel = s.travel[last] + math.Sqrt(step.T[0]*step.T[0]+step.T[1]*step.T[1]+step.T[2]*step.T[2])
 	}
 	if !(travel <= msgs.MaxMetres) {
 		return fmt.Errorf("keyframe %d of session %d: %g m from the start, at most %g expected", k.ID, s.id, travel, float64(msgs.MaxMetres))
 	}
+	s.newest = int32(n)
 	s.index[k.ID] = int32(n)
 	s.keys = append(s.keys, k.ID)
 	s.stamps = append(s.stamps, k.StampNS)
@@ -88,18 +90,6 @@ func (s *session) knows(id int64) bool {
 	}
 	_, known := s.index[id]
 	return known
-}
-
-// resolve looks for the keyframe with a stamp; the next summary says that it answers it.
-func (s *session) resolve(stamp int64) (id int64, known bool) {
-	v := slices.Index(s.stamps, stamp)
-	if v < 0 {
-		return 0, false
-	}
-	if !slices.Contains(s.resolved[int32(v)], stamp) {
-		s.resolved[int32(v)] = append(s.resolved[int32(v)], stamp)
-	}
-	return s.keys[v], true
 }
 
 // optimise brings the session to its own optimum, starting from its present poses. When these explain the measurements badly,

@@ -48,15 +48,26 @@ func (c *Coordinator) solve() ([]Publish, error) {
 			return nil, err
 		}
 		err = c.settle(j, &w)
-		if errors.Is(err, errParted) { // each time with fewer ties held
+		var loose *looseError
+		switch {
+		case errors.As(err, &loose): // each time with one unit more that does not hold together
+			n.units[n.unitOf(loose.variable)].model.err = err
+			w = c.weigh(n)
+		case errors.Is(err, errParted): // each time with fewer ties held
 			w.island = n.islands(w.held)
-			continue
-		}
-		if err != nil {
+		case err != nil:
 			return nil, err
+		default:
+			return c.publish(j)
 		}
-		return c.publish(j)
 	}
+}
+
+// looseError: a summary leaves one of its junctions free.
+type looseError struct{ variable int32 }
+
+func (e *looseError) Error() string {
+	return fmt.Sprintf("joint solution: junction %d of the network is left free by its summary", e.variable)
 }
 
 // errParted: the ties given up were all that connected some units.
@@ -94,6 +105,7 @@ func (c *Coordinator) pose(n *network, w *weighed) (*joint, error) {
 		}
 	}
 	c.chooseDatums(j, w, size)
+	j.anchorStrays()
 	best, bestCost := []lie.SE3(nil), math.Inf(1)
 	for _, candidate := range []func(*joint, *weighed) bool{c.startFromLast, startFromEvidence, c.startFromTies} {
 		if !candidate(j, w) {
@@ -156,6 +168,21 @@ func (c *Coordinator) chooseDatums(j *joint, w *weighed, size map[int]int) {
 			for k := range j.n.units[u].part.Junctions {
 				j.anchors = append(j.anchors, j.n.units[u].base+int32(k))
 			}
+		}
+	}
+}
+
+// anchorStrays fixes one junction of every part of a summary that is connected with nothing: it stays where it starts.
+func (j *joint) anchorStrays() {
+	component, count := j.graph.Components()
+	held := make([]bool, count)
+	for _, v := range j.anchors {
+		held[component[v]] = true
+	}
+	for v, k := range component {
+		if !held[k] {
+			held[k] = true
+			j.anchors = append(j.anchors, int32(v))
 		}
 	}
 }
@@ -346,7 +373,7 @@ const converged = 1e-12
 func (j *joint) optimise(o posegraph.Options) error {
 	r := j.solver.Optimise(o)
 	if r.Stop == posegraph.Undetermined {
-		return fmt.Errorf("joint solution: junction %d of the network is left free by its summary", r.Weakest)
+		return &looseError{r.Weakest}
 	}
 	return nil
 }

@@ -36,6 +36,8 @@ type usable struct {
 // unitModel is what a part of a summary says, decoded once for each summary.
 type unitModel struct {
 	poses []lie.SE3               // session_from_junction
+	part  []int32                 // junction -> connected part of the summary
+	main  int32                   // the part with the most junctions
 	nodes []int                   // junctions that joint covers, ascending
 	joint []float64               // their joint covariance, on demand
 	pairs map[[2]int]*[36]float64 // covariances of relative poses already asked for
@@ -57,7 +59,7 @@ func (c *Coordinator) layout() *network {
 				continue
 			}
 			if r.units[p] == nil {
-				r.units[p] = newUnitModel(part)
+				r.units[p] = newUnitModel(c.width(), part)
 			}
 			id := unitID{r.name, part.Session}
 			number[id] = len(n.units)
@@ -67,7 +69,7 @@ func (c *Coordinator) layout() *network {
 	}
 	for _, t := range c.order {
 		u := usable{tie: t}
-		missing := ""
+		missing, apart := "", ""
 		for k, ref := range [2]*msgs.KeyRef{&t.msg.From, &t.msg.To} {
 			r := c.robots[ref.Robot]
 			if r == nil {
@@ -79,6 +81,9 @@ func (c *Coordinator) layout() *network {
 				missing = ref.Robot
 				continue
 			}
+			if at := &n.units[number[unitID{ref.Robot, ref.Session}]]; at.model.part[j] != at.model.main {
+				apart = ref.Robot
+			}
 			if k == 0 {
 				u.from, u.fromNode = number[unitID{ref.Robot, ref.Session}], j
 			} else {
@@ -88,6 +93,8 @@ func (c *Coordinator) layout() *network {
 		switch {
 		case missing != "":
 			t.judge(c.now, msgs.Open, "waiting for the separator of "+missing, msgs.Evidence{})
+		case apart != "":
+			t.judge(c.now, msgs.Open, "touches a part of the map of "+apart+" that is not connected with the rest of it", msgs.Evidence{})
 		case u.from == u.to:
 			t.judge(c.now, msgs.Open, "both ends lie in one session: a loop closure belongs to its robot", msgs.Evidence{})
 		default:
@@ -105,24 +112,50 @@ func (t *tie) judge(now int64, v msgs.VerdictKind, reason string, e msgs.Evidenc
 	t.finding.Verdict, t.finding.Reason, t.finding.Evidence = v, reason, e
 }
 
-func newUnitModel(p *msgs.Part) *unitModel {
+func newUnitModel(dim int, p *msgs.Part) *unitModel {
 	m := &unitModel{poses: make([]lie.SE3, len(p.Junctions))}
 	for i := range p.Junctions {
 		m.poses[i] = lie.FromQuat(p.Junctions[i].Pose.T, p.Junctions[i].Pose.Q)
+	}
+	g := posegraph.New(dim, m.poses)
+	addCliques(p, m.poses, g.AddCliques(), 0)
+	var count int
+	m.part, count = g.Components()
+	size := make([]int, count)
+	for _, k := range m.part {
+		size[k]++
+	}
+	for k := range size {
+		if size[k] > size[m.main] {
+			m.main = int32(k)
+		}
 	}
 	return m
 }
 
 // cliques adds the factors of u to a batch, its junctions being variables from base on.
 func (u *unit) cliques(to *posegraph.Cliques, base int32) {
-	for i := range u.part.Cliques {
-		c := &u.part.Cliques[i]
+	addCliques(u.part, u.model.poses, to, base)
+}
+
+func addCliques(p *msgs.Part, poses []lie.SE3, to *posegraph.Cliques, base int32) {
+	for i := range p.Cliques {
+		c := &p.Cliques[i]
 		nodes, at := make([]int32, len(c.Nodes)), make([]lie.SE3, len(c.Nodes))
 		for k, v := range c.Nodes {
-			nodes[k], at[k] = base+int32(v), u.model.poses[v]
+			nodes[k], at[k] = base+int32(v), poses[v]
 		}
 		to.Add(nodes, at, c.H, c.B)
 	}
+}
+
+// unitOf returns the unit that a variable belongs to.
+func (n *network) unitOf(variable int32) int {
+	u := 0
+	for u+1 < len(n.units) && n.units[u+1].base <= variable {
+		u++
+	}
+	return u
 }
 
 // prepare makes the joint covariance of the given junctions, which the evidence asks for pair by pair.

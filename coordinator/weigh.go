@@ -1,7 +1,9 @@
 package coordinator
 
 import (
+	"cmp"
 	"fmt"
+	"slices"
 
 	"selvage/internal/evidence"
 	"selvage/internal/lie"
@@ -21,6 +23,10 @@ func (c *Coordinator) weigh(n *network) weighed {
 	if c.cfg.HoldAll {
 		w := weighed{held: make([]bool, len(n.ties))}
 		for i := range n.ties {
+			if n.loose(i) {
+				n.ties[i].judge(c.now, msgs.Open, looseReason, msgs.Evidence{})
+				continue
+			}
 			w.held[i] = true
 			n.ties[i].judge(c.now, msgs.Held, "taken as true on request", msgs.Evidence{})
 		}
@@ -47,8 +53,8 @@ func (c *Coordinator) weigh(n *network) weighed {
 		switch {
 		case !t.regular:
 			t.judge(c.now, msgs.Open, "measures too little of a pose to be weighed", msgs.Evidence{})
-		case n.units[t.from].model.err != nil || n.units[t.to].model.err != nil:
-			t.judge(c.now, msgs.Open, "the map of one of its robots does not hold together", msgs.Evidence{})
+		case n.loose(i):
+			t.judge(c.now, msgs.Open, looseReason, msgs.Evidence{})
 		default:
 			judged = append(judged, i)
 		}
@@ -79,14 +85,25 @@ func (c *Coordinator) weigh(n *network) weighed {
 	return w
 }
 
+const looseReason = "the map of one of its robots does not hold together"
+
+// loose tells whether a unit of tie i has a summary that leaves a junction free.
+func (n *network) loose(i int) bool {
+	return n.units[n.ties[i].from].model.err != nil || n.units[n.ties[i].to].model.err != nil
+}
+
 // evidence describes a unit by the junctions that ties touch; it numbers them in node.
 func (u *unit) evidence(width int, node map[int]int) evidence.Unit {
 	var nodes []int
 	for j := range u.part.Junctions {
 		if _, ok := node[j]; ok {
-			node[j] = len(nodes)
 			nodes = append(nodes, j)
 		}
+	}
+	travel := func(j int) float64 { return u.part.Junctions[j].TravelM }
+	slices.SortStableFunc(nodes, func(a, b int) int { return cmp.Compare(travel(a), travel(b)) }) // ids need not follow the track
+	for k, j := range nodes {
+		node[j] = k
 	}
 	u.prepare(width, nodes)
 	e := evidence.Unit{Name: u.id.robot}
