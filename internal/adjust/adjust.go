@@ -32,8 +32,8 @@ type Problem struct {
 	Anchors []int32       // the fixed variable of each island
 	Island  []int32       // variable -> island
 
-	ordering sparse.Options
-	solver   *posegraph.Solver
+	solver  *posegraph.Solver // nil before the analysis
+	workers int               // that it was made for
 }
 
 // Start says where an adjustment begins.
@@ -48,15 +48,20 @@ const (
 	Given   Start = "given"
 )
 
-// New builds the pose graph of s with the ties for which held is true; nil holds all. Ties by stamp go to the keyframe at that
-// moment, which is made between two others where there is none.
+// New builds the pose graph of s with the ties for which held is true; nil holds all. Ties by stamp go to the keyframe with
+// exactly that stamp.
 func New(s *survey.Survey, held func(tie int) bool) (*Problem, error) {
 	n := 0
 	for i := range s.Robots {
 		n += len(s.Robots[i].Keyframes)
 	}
 	p := &Problem{Keys: make([]Key, 0, n), Var: make(map[Key]int32, n), Tie: make([]int, len(s.Ties))}
-	moments := moments{p, map[Key]*track{}}
+	type moment struct {
+		robot   string
+		session uint32
+		stamp   int64
+	}
+	byStamp := map[moment]int32{}
 	poses := make([]lie.SE3, 0, n)
 	for i := range s.Robots {
 		r := &s.Robots[i]
@@ -64,13 +69,12 @@ func New(s *survey.Survey, held func(tie int) bool) (*Problem, error) {
 			key := Key{r.ID, k.Session, k.ID}
 			p.Var[key] = int32(len(poses))
 			if k.HasStamp {
-				moments.add(Key{Robot: r.ID, Session: k.Session}, k.StampNS, int32(len(poses)))
+				byStamp[moment{r.ID, k.Session, k.StampNS}] = int32(len(poses))
 			}
 			p.Keys = append(p.Keys, key)
 			poses = append(poses, Pose(k.Pose))
 		}
 	}
-	moments.sort()
 	dim := 3 * (s.Meta.Dimension - 1)
 	p.Graph = posegraph.New(dim, poses)
 	p.Factors = p.Graph.AddBetween()
@@ -99,7 +103,7 @@ func New(s *survey.Survey, held func(tie int) bool) (*Problem, error) {
 		from, ok := p.Var[Key{t.FromRobot, t.FromSession, t.FromKey}]
 		to, found := p.Var[Key{t.ToRobot, t.ToSession, t.ToKey}]
 		if t.ToByStamp {
-			to, found = moments.find(Key{Robot: t.ToRobot, Session: t.ToSession}, t.ToStampNS)
+			to, found = byStamp[moment{t.ToRobot, t.ToSession, t.ToStampNS}]
 		}
 		if !ok || !found {
 			return nil, fmt.Errorf("tie %s: no keyframe of %s at its far end", t.ID, t.ToRobot)
@@ -123,13 +127,13 @@ func (p *Problem) Begin(start Start) error {
 	switch start {
 	case Auto:
 		given := slices.Clone(p.Graph.Values.Poses)
-		if posegraph.Chordal(p.Graph, p.Anchors) == nil {
+		if p.chordal() == nil {
 			return nil
 		}
 		copy(p.Graph.Values.Poses, given)
 		posegraph.SpanningTree(p.Graph, p.Anchors)
 	case Chordal:
-		return posegraph.Chordal(p.Graph, p.Anchors)
+		return p.chordal()
 	case Tree:
 		posegraph.SpanningTree(p.Graph, p.Anchors)
 	case Given:
@@ -139,11 +143,23 @@ func (p *Problem) Begin(start Start) error {
 	return nil
 }
 
+// chordal makes the chordal start; a planar problem is analysed for it, which serves the adjustment too.
+func (p *Problem) chordal() error {
+	if p.Graph.Dim != 3 {
+		return posegraph.Chordal(p.Graph, p.Anchors)
+	}
+	if err := p.Analyse(1); err != nil {
+		return err
+	}
+	return p.solver.Chordal()
+}
+
 // Analyse orders and analyses the problem for the given number of workers.
-func (p *Problem) Analyse(workers int) error {
-	p.ordering.Workers = workers
-	var err error
-	p.solver, err = posegraph.NewSolver(p.Graph, p.Anchors, p.ordering)
+func (p *Problem) Analyse(workers int) (err error) {
+	if p.solver == nil || p.workers != workers {
+		p.workers = workers
+		p.solver, err = posegraph.NewSolver(p.Graph, p.Anchors, sparse.Options{Workers: workers})
+	}
 	return err
 }
 
