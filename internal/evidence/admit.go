@@ -52,8 +52,7 @@ func (b *body) predict(t int, same []int, a *atlas) prediction {
 		n++
 	}
 	if n < 2 {
-		ties, ok := a.walk(l, func(x int) bool { return b.links[x].a == l.a && b.links[x].b == l.b })
-		if ok {
+		if ties, ok := a.walk(l, b.sibling(l)); ok {
 			e[n], c[n] = b.around(l, ties)
 			n++
 		}
@@ -65,11 +64,45 @@ func (b *body) predict(t int, same []int, a *atlas) prediction {
 	if n > 1 {
 		x, d = fuse(e[:n], c[:n], b.o.Dim)
 	}
-	z := lie.Exp(x)
-	own := l.c.carry(&z)
-	d.add(&own)
-	return prediction{mahalanobis(&x, &d, b.o.Dim), b.share(&d, l.a, l.b), n}
+	return b.against(l, &x, d, n)
 }
+
+// against tests tie l against a way around with misclosure e and covariance c, to which the tie's own is added.
+func (b *body) against(l *link, e *lie.Tangent, c cov, ways int) prediction {
+	z := lie.Exp(*e)
+	own := l.c.carry(&z)
+	c.add(&own)
+	return prediction{mahalanobis(e, &c, b.o.Dim), b.share(&c, l.a, l.b), ways}
+}
+
+// crossing tests tie t against the shortest way through other units, if there is one. Ties of one pair may all be wrong alike:
+// an aisle taken for its neighbour gives false ties at many places, which bear each other out.
+func (b *body) crossing(t int, a *atlas) prediction {
+	l := &b.links[t]
+	ties, ok := a.walk(l, b.sibling(l))
+	if !ok {
+		return prediction{}
+	}
+	e, c := b.around(l, ties)
+	return b.against(l, &e, c, 1)
+}
+
+// sibling returns a test for ties of the same pair as l.
+func (b *body) sibling(l *link) func(t int) bool {
+	return func(t int) bool { return b.links[t].a == l.a && b.links[t].b == l.b }
+}
+
+// refusal is the squared distance from which on prediction p refuses. From further off it leans on the model of the drift, and
+// refuses only what is out of the question: at twice the distance.
+func (b *body) refusal(p *prediction) float64 {
+	if p.share > nearby {
+		return 4 * b.refuse
+	}
+	return b.refuse
+}
+
+// nearby is the share up to which a prediction counts as one from nearby.
+const nearby = 1e-4
 
 // around returns the misclosure of l against a walk, with the covariance of the walk alone.
 func (b *body) around(l *link, ties []int) (lie.Tangent, cov) {

@@ -72,7 +72,16 @@ func (b *body) conclude(f *fleet, w weighed) Result {
 			b.undetermined(t, f, &w, &r)
 			continue
 		}
-		b.find(&r.Ties[t], l, &ps[t], tight)
+		x := &r.Ties[t]
+		b.find(x, l, &ps[t], tight)
+		if x.Verdict != Held {
+			continue
+		}
+		if q := b.crossing(t, a); q.ways > 0 && q.squared >= b.refusal(&q) {
+			x.Verdict, x.Statistic = Open, q.squared
+			x.Reason = fmt.Sprintf("agrees with the ties between %s, but a way through other robots contradicts these: misclosure %.1f, bound %.1f",
+				b.names(l), q.squared, b.refusal(&q))
+		}
 	}
 	b.part(&r)
 	return r
@@ -91,10 +100,6 @@ func tightness(shares []float64, accidents float64) float64 {
 	return math.Inf(1)
 }
 
-// nearby is the share up to which a prediction counts as one from nearby. From further off it leans on the model of the drift,
-// and refuses only what is out of the question: at twice the distance.
-const nearby = 1e-4
-
 // find writes the verdict on a tie within an island.
 func (b *body) find(x *Finding, l *link, p *prediction, tight float64) {
 	if p.ways == 0 {
@@ -102,10 +107,7 @@ func (b *body) find(x *Finding, l *link, p *prediction, tight float64) {
 		return
 	}
 	x.Statistic, x.DoF = p.squared, b.dof
-	refuse := b.refuse
-	if p.share > nearby {
-		refuse *= 4
-	}
+	refuse := b.refusal(p)
 	loose := p.share >= min(tight, b.o.Accidents)
 	switch {
 	case p.squared >= refuse:
