@@ -95,6 +95,9 @@ func (c *Coordinator) pose(n *network, w *weighed) (*joint, error) {
 			}
 			continue
 		}
+		if !w.held[i] && !t.regular { // no test of fewer components than a pose has
+			continue
+		}
 		if !w.held[i] && t.finding.Verdict == msgs.Refused && t.finding.Statistic > hopeless*c.limit {
 			continue
 		}
@@ -150,16 +153,16 @@ func (c *Coordinator) chooseDatums(j *joint, w *weighed, size map[int]int) {
 			}
 		}
 		node, found := u.find(j.islands[m].key)
-		if i := &j.islands[m]; i.born == 0 || i.anchor != u.id || !found { // a new datum, or its junction is gone
+		if i := &j.islands[m]; i.born == 0 || i.anchor != u.id || !found || !u.model.inMain(node) { // a new datum, or its junction is gone
+			node = slices.Index(u.model.part, u.model.main)
 			if i.born == 0 {
 				c.datums++
 				i.born = c.datums
-				i.pose = u.model.poses[0]
+				i.pose = u.model.poses[node]
 			} else if p, ok := c.places[u.id]; ok && len(p.poses) > 0 {
-				i.pose = p.datum.Mul(u.model.poses[0])
+				i.pose = p.datum.Mul(u.model.poses[node])
 			}
-			node = 0
-			i.anchor, i.key = u.id, u.part.Junctions[0].ID
+			i.anchor, i.key = u.id, u.part.Junctions[node].ID
 		}
 		j.anchors = append(j.anchors, u.base+int32(node))
 	}

@@ -81,7 +81,7 @@ func (c *Coordinator) layout() *network {
 				missing = ref.Robot
 				continue
 			}
-			if at := &n.units[number[unitID{ref.Robot, ref.Session}]]; at.model.part[j] != at.model.main {
+			if at := &n.units[number[unitID{ref.Robot, ref.Session}]]; !at.model.inMain(j) {
 				apart = ref.Robot
 			}
 			if k == 0 {
@@ -132,6 +132,9 @@ func newUnitModel(dim int, p *msgs.Part) *unitModel {
 	}
 	return m
 }
+
+// inMain tells whether a junction belongs to the main part.
+func (m *unitModel) inMain(junction int) bool { return m.part[junction] == m.main }
 
 // cliques adds the factors of u to a batch, its junctions being variables from base on.
 func (u *unit) cliques(to *posegraph.Cliques, base int32) {

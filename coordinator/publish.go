@@ -1,6 +1,9 @@
 package coordinator
 
 import (
+	"errors"
+	"fmt"
+
 	"selvage/internal/lie"
 	"selvage/msgs"
 )
@@ -35,15 +38,18 @@ func (c *Coordinator) publish(j *joint) ([]Publish, error) {
 			continue
 		}
 		p := placement{island: i, joined: true}
-		for k := range unit.part.Junctions {
-			p.ids = append(p.ids, unit.part.Junctions[k].ID)
-			x := j.graph.Values.Poses[int(unit.base)+k]
-			p.poses = append(p.poses, x)
-			part.Poses = append(part.Poses, wirePose(&x, c.cfg.Dim))
-		}
-		p.datum = lie.Align(unit.model.poses, p.poses)
+		at := j.graph.Values.Poses[unit.base:][:len(unit.part.Junctions)]
+		p.datum = unit.frame(at)
 		if c.cfg.Dim == 2 {
 			p.datum = lie.Planar(&p.datum).Spatial()
+		}
+		for k, x := range at {
+			if !unit.model.inMain(k) { // connected with nothing: where the frame has it
+				x = p.datum.Mul(unit.model.poses[k])
+			}
+			p.ids = append(p.ids, unit.part.Junctions[k].ID)
+			p.poses = append(p.poses, x)
+			part.Poses = append(part.Poses, wirePose(&x, c.cfg.Dim))
 		}
 		places[unit.id] = p
 		part.Joined, part.IDs, part.Island = true, p.ids, i.name()
@@ -58,6 +64,7 @@ func (c *Coordinator) publish(j *joint) ([]Publish, error) {
 	c.places = places
 
 	var out []Publish
+	var failed error // what one robot makes impossible to write is no loss to the others
 	for _, r := range c.sorted() {
 		m := corrections[r]
 		if m == nil {
@@ -65,7 +72,9 @@ func (c *Coordinator) publish(j *joint) ([]Publish, error) {
 		}
 		payload, err := m.Marshal()
 		if err != nil {
-			return nil, err
+			failed = errors.Join(failed, fmt.Errorf("correction for %s: %w", r.name, err))
+			r.corr, r.used = nil, r.summary.Version
+			continue
 		}
 		r.corr, r.corrNS, r.tries, r.used = payload, c.now, 0, r.summary.Version
 		out = append(out, Publish{r.name, msgs.KindCorrection, payload})
@@ -82,11 +91,23 @@ func (c *Coordinator) publish(j *joint) ([]Publish, error) {
 		}
 		payload, err := v.Marshal()
 		if err != nil {
-			return nil, err
+			failed = errors.Join(failed, fmt.Errorf("verdict on tie %s: %w", v.Tie, err))
+			continue
 		}
 		out = append(out, Publish{v.Robot, msgs.KindVerdict, payload})
 	}
-	return out, nil
+	return out, failed
+}
+
+// frame fits datum_from_session to the poses of the junctions of the main part in the datum.
+func (u *unit) frame(poses []lie.SE3) lie.SE3 {
+	var from, to []lie.SE3
+	for k, x := range poses {
+		if u.model.inMain(k) {
+			from, to = append(from, u.model.poses[k]), append(to, x)
+		}
+	}
+	return lie.Align(from, to)
 }
 
 // wirePose writes a pose for the wire, exactly planar in the plane.
