@@ -115,6 +115,7 @@ func (s *session) follow(p *msgs.CorrectedPart) error {
 
 // settle solves for the interior with the given variables fixed.
 func (s *session) settle(fixed []int32) error {
+	s.solved = s.factors.Len()
 	component, count := s.graph.Components()
 	held := make([]bool, count)
 	for _, v := range fixed {

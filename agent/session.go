@@ -3,6 +3,7 @@ package agent
 import (
 	"fmt"
 	"math"
+	"slices"
 
 	"selvage/internal/lie"
 	"selvage/internal/posegraph"
@@ -29,6 +30,7 @@ type session struct {
 	inserted   int               // keyframes made for a stamp
 
 	dirty  bool // measurements came since the newest summary
+	solved int  // measurements there were when the map was last solved
 	joined bool
 	datum  lie.SE3 // datum_from_session of the newest correction
 	island string
@@ -95,6 +97,7 @@ func (s *session) knows(id int64) bool {
 // optimise brings the session to its own optimum, starting from its present poses. When these explain the measurements badly,
 // as a front end's first guess may, it also tries the chordal start and keeps the better of the two.
 func (s *session) optimise() error {
+	s.solved = s.factors.Len()
 	anchors := s.graph.Anchors()
 	if len(anchors) == len(s.keys) || s.factors.Len() == 0 {
 		return nil
@@ -113,6 +116,27 @@ func (s *session) optimise() error {
 		return fmt.Errorf("session %d: the measurements leave keyframe %d free", s.id, s.keys[r.Weakest])
 	}
 	return nil
+}
+
+// refresh brings the map up to date with measurements that no summary has asked about yet: with the corrected junctions fixed
+// where the base put them, or else to the session's own optimum.
+func (s *session) refresh() error {
+	if s.joined && s.told != nil {
+		return s.settle(slices.Clone(s.told.condensed.Junctions))
+	}
+	if err := s.optimise(); err != nil {
+		return err
+	}
+	if s.separators == 0 {
+		s.dirty = false
+	}
+	return nil
+}
+
+// stale tells whether the map lacks a tenth of its measurements, or any when the robot has settled.
+func (s *session) stale(settled bool) bool {
+	fresh := s.factors.Len() - s.solved
+	return fresh > 0 && (settled || 10*fresh > s.factors.Len())
 }
 
 // tryChordal replaces the values by the chordal start with the given variables fixed, if that lowers the cost.

@@ -35,6 +35,11 @@ func (a *Agent) tick(nowNS int64) ([]Publish, error) {
 		a.sentNS = nowNS
 		out = append(out, Publish{msgs.KindSummary, a.payload, a.version})
 	}
+	for _, s := range a.sessions {
+		if s.stale(nowNS-a.lastNS >= a.cfg.SettleNS) {
+			refused = errors.Join(refused, s.refresh())
+		}
+	}
 	if a.beatDue || nowNS-a.beatNS >= a.cfg.HeartbeatNS {
 		beat, err := a.heartbeat(nowNS)
 		if err != nil {
