@@ -48,20 +48,15 @@ const (
 	Given   Start = "given"
 )
 
-// New builds the pose graph of s with the ties for which held is true; nil holds all. Ties by stamp go to the keyframe with
-// exactly that stamp.
+// New builds the pose graph of s with the ties for which held is true; nil holds all. Ties by stamp go to the keyframe at that
+// moment, which is made between two others where there is none.
 func New(s *survey.Survey, held func(tie int) bool) (*Problem, error) {
 	n := 0
 	for i := range s.Robots {
 		n += len(s.Robots[i].Keyframes)
 	}
 	p := &Problem{Keys: make([]Key, 0, n), Var: make(map[Key]int32, n), Tie: make([]int, len(s.Ties))}
-	type moment struct {
-		robot   string
-		session uint32
-		stamp   int64
-	}
-	byStamp := map[moment]int32{}
+	moments := moments{p, map[Key]*track{}}
 	poses := make([]lie.SE3, 0, n)
 	for i := range s.Robots {
 		r := &s.Robots[i]
@@ -69,12 +64,13 @@ func New(s *survey.Survey, held func(tie int) bool) (*Problem, error) {
 			key := Key{r.ID, k.Session, k.ID}
 			p.Var[key] = int32(len(poses))
 			if k.HasStamp {
-				byStamp[moment{r.ID, k.Session, k.StampNS}] = int32(len(poses))
+				moments.add(Key{Robot: r.ID, Session: k.Session}, k.StampNS, int32(len(poses)))
 			}
 			p.Keys = append(p.Keys, key)
 			poses = append(poses, Pose(k.Pose))
 		}
 	}
+	moments.sort()
 	dim := 3 * (s.Meta.Dimension - 1)
 	p.Graph = posegraph.New(dim, poses)
 	p.Factors = p.Graph.AddBetween()
@@ -103,7 +99,7 @@ func New(s *survey.Survey, held func(tie int) bool) (*Problem, error) {
 		from, ok := p.Var[Key{t.FromRobot, t.FromSession, t.FromKey}]
 		to, found := p.Var[Key{t.ToRobot, t.ToSession, t.ToKey}]
 		if t.ToByStamp {
-			to, found = byStamp[moment{t.ToRobot, t.ToSession, t.ToStampNS}]
+			to, found = moments.find(Key{Robot: t.ToRobot, Session: t.ToSession}, t.ToStampNS)
 		}
 		if !ok || !found {
 			return nil, fmt.Errorf("tie %s: no keyframe of %s at its far end", t.ID, t.ToRobot)
