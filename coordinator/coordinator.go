@@ -1,6 +1,7 @@
 package coordinator
 
 import (
+	"cmp"
 	"errors"
 	"fmt"
 	"maps"
@@ -113,6 +114,7 @@ func (i *island) name() string {
 type robot struct {
 	name    string
 	summary *msgs.Summary
+	former  []msgs.Part     // what the agent of an earlier journal said last
 	index   []map[int64]int // part -> junction id -> junction
 	stamps  []map[int64]int // part -> resolved stamp -> junction
 	units   []*unitModel    // cached, part by part
@@ -293,6 +295,10 @@ func (c *Coordinator) takeSummary(s *msgs.Summary) error {
 		}
 		return nil
 	}
+	if r.summary != nil && r.summary.Header.Journal != s.Header.Journal {
+		r.former = r.summary.Parts
+	}
+	s.Parts = withFormer(s.Parts, r.former)
 	r.summary, r.version = s, max(r.version, s.Version)
 	r.index = make([]map[int64]int, len(s.Parts))
 	r.stamps = make([]map[int64]int, len(s.Parts))
@@ -310,6 +316,17 @@ func (c *Coordinator) takeSummary(s *msgs.Summary) error {
 	c.dirty = true
 	c.revision++
 	return nil
+}
+
+// withFormer adds the sessions that only an agent which is gone had told of, sessions ascending: what it said of them last stands.
+func withFormer(parts, former []msgs.Part) []msgs.Part {
+	session := func(p msgs.Part, id uint32) int { return cmp.Compare(p.Session, id) }
+	for i := range former {
+		if at, told := slices.BinarySearchFunc(parts, former[i].Session, session); !told && len(parts) < msgs.MaxParts {
+			parts = slices.Insert(parts, at, former[i])
+		}
+	}
+	return parts
 }
 
 func (c *Coordinator) takeHeartbeat(h *msgs.Heartbeat) error {
