@@ -48,42 +48,38 @@ const (
 	Given   Start = "given"
 )
 
-// New builds the pose graph of s with the ties for which held is true; nil holds all. Ties by stamp go to the keyframe at that
-// moment, which is made between two others where there is none.
+// New builds the pose graph of s with the ties for which held is true; nil holds all. Ties by stamp go to the keyframe with
+// exactly that stamp.
 func New(s *survey.Survey, held func(tie int) bool) (*Problem, error) {
-	n := 0
+	keyframes, factors, stamps := 0, len(s.Ties), false
 	for i := range s.Robots {
-		n += len(s.Robots[i].Keyframes)
+		keyframes += len(s.Robots[i].Keyframes)
+		factors += len(s.Robots[i].Relatives)
 	}
-	p := &Problem{Keys: make([]Key, 0, n), Var: make(map[Key]int32, n), Tie: make([]int, len(s.Ties))}
-	moments := moments{p, map[Key]*track{}}
-	poses := make([]lie.SE3, 0, n)
+	for k := range s.Ties {
+		stamps = stamps || s.Ties[k].ToByStamp
+	}
+	p := &Problem{Keys: make([]Key, 0, keyframes), Var: make(map[Key]int32, keyframes), Tie: make([]int, len(s.Ties))}
+	byStamp := map[Key]int32{} // ID the stamp
+	poses := make([]lie.SE3, 0, keyframes)
 	for i := range s.Robots {
 		r := &s.Robots[i]
 		for _, k := range r.Keyframes {
 			key := Key{r.ID, k.Session, k.ID}
 			p.Var[key] = int32(len(poses))
-			if k.HasStamp {
-				moments.add(Key{Robot: r.ID, Session: k.Session}, k.StampNS, int32(len(poses)))
+			if stamps && k.HasStamp {
+				byStamp[Key{r.ID, k.Session, k.StampNS}] = int32(len(poses))
 			}
 			p.Keys = append(p.Keys, key)
 			poses = append(poses, Pose(k.Pose))
 		}
 	}
-	moments.sort()
-	dim := 3 * (s.Meta.Dimension - 1)
-	p.Graph = posegraph.New(dim, poses)
+	p.Graph = posegraph.New(3*(s.Meta.Dimension-1), poses)
 	p.Factors = p.Graph.AddBetween()
+	p.Factors.Grow(factors)
 	for i := range s.Robots {
-		r := &s.Robots[i]
-		for k := range r.Relatives {
-			e := &r.Relatives[k]
-			info, err := e.Cov.Information(s.Meta.Dimension)
-			if err != nil {
-				return nil, fmt.Errorf("robot %s, session %d, %d to %d: %w", r.ID, e.Session, e.From, e.To, err)
-			}
-			from, to := p.Var[Key{r.ID, e.Session, e.From}], p.Var[Key{r.ID, e.Session, e.To}]
-			p.Factors.Add(from, to, Pose(e.Pose), &info)
+		if err := p.addRelatives(&s.Robots[i], s.Meta.Dimension); err != nil {
+			return nil, err
 		}
 	}
 	for k := range s.Ties {
@@ -92,17 +88,25 @@ func New(s *survey.Survey, held func(tie int) bool) (*Problem, error) {
 		if held != nil && !held(k) {
 			continue
 		}
+		from, ok := p.Var[Key{t.FromRobot, t.FromSession, t.FromKey}]
+		if !ok {
+			return nil, fmt.Errorf("tie %s: no keyframe %d of robot %s, session %d", t.ID, t.FromKey, t.FromRobot, t.FromSession)
+		}
+		to, ok := p.Var[Key{t.ToRobot, t.ToSession, t.ToKey}]
+		if t.ToByStamp {
+			to, ok = byStamp[Key{t.ToRobot, t.ToSession, t.ToStampNS}]
+		}
+		switch {
+		case !ok && t.ToByStamp:
+			return nil, fmt.Errorf("tie %s: no keyframe of robot %s, session %d, with the stamp %d", t.ID, t.ToRobot, t.ToSession, t.ToStampNS)
+		case !ok:
+			return nil, fmt.Errorf("tie %s: no keyframe %d of robot %s, session %d", t.ID, t.ToKey, t.ToRobot, t.ToSession)
+		case from == to:
+			return nil, fmt.Errorf("tie %s: both ends are keyframe %d of robot %s, session %d", t.ID, t.FromKey, t.FromRobot, t.FromSession)
+		}
 		info, err := t.Cov.Information(s.Meta.Dimension)
 		if err != nil {
 			return nil, fmt.Errorf("tie %s: %w", t.ID, err)
-		}
-		from, ok := p.Var[Key{t.FromRobot, t.FromSession, t.FromKey}]
-		to, found := p.Var[Key{t.ToRobot, t.ToSession, t.ToKey}]
-		if t.ToByStamp {
-			to, found = moments.find(Key{Robot: t.ToRobot, Session: t.ToSession}, t.ToStampNS)
-		}
-		if !ok || !found {
-			return nil, fmt.Errorf("tie %s: no keyframe of %s at its far end", t.ID, t.ToRobot)
 		}
 		p.Tie[k] = p.Factors.Len()
 		p.Factors.Add(from, to, Pose(t.Pose), &info)
@@ -110,6 +114,36 @@ func New(s *survey.Survey, held func(tie int) bool) (*Problem, error) {
 	p.Island, _ = p.Graph.Components()
 	p.Anchors = p.Graph.Anchors()
 	return p, nil
+}
+
+// addRelatives adds what a robot measured within its sessions.
+func (p *Problem) addRelatives(r *survey.Robot, dimension int) error {
+	ends := [2]int32{}
+	for k := range r.Relatives {
+		e := &r.Relatives[k]
+		for n, id := range [2]int64{e.From, e.To} {
+			key := Key{r.ID, e.Session, id}
+			// Keyframes mostly follow each other: look beside the last one before asking the map.
+			guess := ends[n] + 1
+			if int(guess) >= len(p.Keys) || p.Keys[guess] != key {
+				v, ok := p.Var[key]
+				if !ok {
+					return fmt.Errorf("robot %s, session %d, %d to %d: no keyframe %d", r.ID, e.Session, e.From, e.To, id)
+				}
+				guess = v
+			}
+			ends[n] = guess
+		}
+		if e.From == e.To {
+			return fmt.Errorf("robot %s, session %d, %d to %d: both ends are one keyframe", r.ID, e.Session, e.From, e.To)
+		}
+		info, err := e.Cov.Information(dimension)
+		if err != nil {
+			return fmt.Errorf("robot %s, session %d, %d to %d: %w", r.ID, e.Session, e.From, e.To, err)
+		}
+		p.Factors.Add(ends[0], ends[1], Pose(e.Pose), &info)
+	}
+	return nil
 }
 
 // Pose turns a pose of the folder into a rigid motion.

@@ -1,6 +1,10 @@
 package posegraph
 
-import "selvage/internal/lie"
+import (
+	"slices"
+
+	"selvage/internal/lie"
+)
 
 // Between is a batch of relative-pose factors: Z is the measured pose of J seen from I.
 type Between struct {
@@ -17,6 +21,12 @@ func (g *Graph) AddBetween() *Between {
 	b := &Between{dim: g.Dim}
 	g.Sets = append(g.Sets, b)
 	return b
+}
+
+// Grow makes room for n more factors.
+func (b *Between) Grow(n int) {
+	b.I, b.J, b.Z, b.W = slices.Grow(b.I, n), slices.Grow(b.J, n), slices.Grow(b.Z, n), slices.Grow(b.W, n)
+	b.info = slices.Grow(b.info, n*b.dim*b.dim)
 }
 
 // Add appends a measurement z of pose j seen from pose i with its information matrix, 6 x 6 row-major in the order of the
