@@ -39,7 +39,7 @@ func consistent(t *testing.T, what string, sum float64, n, dim int) {
 
 func TestNoiseIsAsStated(t *testing.T) {
 	for _, name := range BuiltinNames() {
-		sc, w := world(t, name, 11, func(sc *Scenario) { sc.FrontEnd.HeadingBias = 0 })
+		sc, w := world(t, name, 11, func(sc *Scenario) { sc.FrontEnd.HeadingBias, sc.Ties.Spacing = 0, 20 }) // more ties, to see their spread
 		deg := map[int]int{2: 3, 3: 6}[sc.Dimension()]
 		var odo, clo, enc, rev float64
 		var nOdo, nClo, nEnc, nRev int
