@@ -23,9 +23,9 @@ type clique struct {
 
 // cliqueWork is scratch that the largest clique fits in.
 type cliqueWork struct {
-	e, v []float64     // residuals; H e + b
-	j    [][36]float64 // de_k/dX_k, dim x dim
-	k0   [][36]float64 // de_k/dX_k0
+	e, v []float64 // residuals; H e + b
+	j, k []float64 // de_k/dX_k and de_k/dX_k0, dim x dim each, one after another
+	hk   []float64 // H times k
 	t    [36]float64
 }
 
@@ -37,7 +37,7 @@ func (g *Graph) AddCliques() *Cliques {
 }
 
 // Add appends a condensed factor: nodes (the first is the reference), the poses of the nodes where it was linearised, and its
-// matrix H (d x d row-major) and vector b without the reference, d = Dim (len(nodes) - 1). The slices are kept.
+// matrix H (d x d, symmetric) and vector b without the reference, d = Dim (len(nodes) - 1). The slices are kept.
 func (c *Cliques) Add(nodes []int32, at []lie.SE3, h, b []float64) {
 	d := c.dim * (len(nodes) - 1)
 	if len(nodes) < 2 || len(at) != len(nodes) || len(h) != d*d || len(b) != d {
@@ -50,8 +50,7 @@ func (c *Cliques) Add(nodes []int32, at []lie.SE3, h, b []float64) {
 	c.list = append(c.list, clique{nodes: nodes, rel: rel, h: h, b: b})
 	if d > len(c.work.e) {
 		c.work.e, c.work.v = make([]float64, d), make([]float64, d)
-		c.work.j = make([][36]float64, len(nodes)-1)
-		c.work.k0 = make([][36]float64, len(nodes)-1)
+		c.work.j, c.work.k, c.work.hk = make([]float64, d*c.dim), make([]float64, d*c.dim), make([]float64, d*c.dim)
 	}
 }
 
@@ -127,58 +126,61 @@ func (c *Cliques) Linearise(v *Values, a *Assembly) float64 {
 	return sum
 }
 
-// linearise adds one clique. With J_k = Jr^-1(e_k) and K_k = -J_k Ad((X_k0^-1 X_k)^-1):
+// linearise adds one clique. With J_k = Jr^-1(e_k), K_k = -J_k Ad((X_k0^-1 X_k)^-1) and S = H K (K stacked):
 //
-//	H_kl = J_k' H J_l,  H_0l = sum_k K_k' H_kl J_l,  H_00 = sum_kl K_k' H K_l,  g_k = J_k' v_k,  g_0 = sum_k K_k' v_k.
+//	H_kl = J_k' H J_l,  H_0l = S_l' J_l,  H_00 = K' S,  g_k = J_k' v_k,  g_0 = sum_k K_k' v_k.
 func (c *Cliques) linearise(q *clique, v *Values, a *Assembly) float64 {
 	cost := c.residual(q, v)
 	d, m := c.dim, len(q.rel)
+	dd := d * d
 	x0 := &v.Poses[q.nodes[0]]
 	for k := 0; k < m; k++ {
-		p := x0.Between(v.Poses[q.nodes[k+1]])
+		p := v.Poses[q.nodes[k+1]].Between(*x0)
+		jk, kk := c.work.j[k*dd:(k+1)*dd], c.work.k[k*dd:(k+1)*dd]
 		if d == 3 {
-			e := c.work.e[3*k:]
-			jr := lie.JrInv2([3]float64{e[0], e[1], e[2]})
-			copy(c.work.j[k][:], jr[:])
-			ad := lie.Planar(&p).Inv().Adjoint()
-			mulNeg(c.work.k0[k][:], jr[:], ad[:], 3)
+			jr := lie.JrInv2([3]float64(c.work.e[3*k : 3*k+3]))
+			ad := lie.Planar(&p).Adjoint()
+			copy(jk, jr[:])
+			multiplyRows(kk, jk, d, ad[:], d)
 		} else {
 			jr := lie.JrInv(lie.Tangent(c.work.e[6*k : 6*k+6]))
-			c.work.j[k] = jr
-			inv := p.Inv()
-			ad := inv.Adjoint()
-			mulNeg(c.work.k0[k][:], jr[:], ad[:], 6)
+			ad := p.Adjoint()
+			copy(jk, jr[:])
+			multiplyRows(kk, jk, d, ad[:], d)
+		}
+		for i := range kk {
+			kk[i] = -kk[i]
 		}
 	}
 	n := d * m
-	h00 := a.Diag(q.nodes[0])
-	g0 := a.Grad(q.nodes[0])
+	h00, g0 := a.Diag(q.nodes[0]), a.Grad(q.nodes[0])
+	multiplyRows(c.work.hk[:n*d], q.h, n, c.work.k[:n*d], d)
 	for k := 0; k < m; k++ {
+		jk, kk, sk := c.work.j[k*dd:(k+1)*dd], c.work.k[k*dd:(k+1)*dd], c.work.hk[k*dd:(k+1)*dd]
 		vk := c.work.v[d*k : d*k+d]
-		if g := a.Grad(q.nodes[k+1]); g != nil {
-			addTv(g, c.work.j[k][:], vk, d)
-		}
 		if g0 != nil {
-			addTv(g0, c.work.k0[k][:], vk, d)
+			addTv(g0, kk, vk, d)
+			addTm(h00, kk, sk, d)
 		}
-	}
-	t := c.work.t[:d*d]
-	for k := 0; k < m; k++ {
-		jk, kk := c.work.j[k][:], c.work.k0[k][:]
-		for l := 0; l < m; l++ {
-			block := q.h[d*k*n+d*l:] // H_kl with leading dimension n
-			mulStrided(t, block, n, c.work.j[l][:], d)
-			if l == k {
-				if dk := a.Diag(q.nodes[k+1]); dk != nil {
-					addTm(dk, jk, t, d)
+		addSlot(a, q.slots[pair(0, k+1, m+1)], sk, jk, d)
+		g := a.Grad(q.nodes[k+1])
+		if g == nil {
+			continue
+		}
+		addTv(g, jk, vk, d)
+		t := c.work.t[:dd] // H_lk J_k
+		for l := k; l < m; l++ {
+			slot := Slot(0)
+			if l > k {
+				if slot = q.slots[pair(k+1, l+1, m+1)]; slot == 0 {
+					continue
 				}
-			} else if l > k {
-				addSlot(a, q.slots[pair(k+1, l+1, m+1)], jk, t, d)
 			}
-			addSlot(a, q.slots[pair(0, l+1, m+1)], kk, t, d) // rows 0, columns l
-			if h00 != nil {
-				mulStrided(t, block, n, c.work.k0[l][:], d)
-				addTm(h00, kk, t, d)
+			multiplyRows(t, q.h[d*l*n+d*k:], n, jk, d)
+			if l == k {
+				addTm(a.Diag(q.nodes[k+1]), jk, t, d)
+			} else {
+				addSlot(a, slot, t, c.work.j[l*dd:(l+1)*dd], d)
 			}
 		}
 	}
@@ -188,31 +190,35 @@ func (c *Cliques) linearise(q *clique, v *Values, a *Assembly) float64 {
 // pair numbers the pair a < b of m nodes row by row.
 func pair(a, b, m int) int { return a*(2*m-a-1)/2 + b - a - 1 }
 
-// mulNeg writes -a b to c, d x d.
-func mulNeg(c, a, b []float64, d int) {
-	for i := 0; i < d; i++ {
-		for j := 0; j < d; j++ {
-			sum := 0.0
-			for k := 0; k < d; k++ {
-				sum += a[i*d+k] * b[k*d+j]
+// multiplyRows writes a b to c; b and c have d columns, the rows of a are ld apart and as long as b has rows.
+func multiplyRows(c, a []float64, ld int, b []float64, d int) {
+	rows, inner := len(c)/d, len(b)/d
+	for i := 0; i < rows; i++ {
+		row := a[i*ld : i*ld+inner]
+		if d == 3 {
+			var x, y, z float64
+			for k, v := range row {
+				r := (*[3]float64)(b[3*k:])
+				x += v * r[0]
+				y += v * r[1]
+				z += v * r[2]
 			}
-			c[i*d+j] = -sum
+			out := (*[3]float64)(c[3*i:])
+			out[0], out[1], out[2] = x, y, z
+			continue
 		}
-	}
-}
-
-// mulStrided writes a b to c, d x d; rows of a are ld apart.
-func mulStrided(c, a []float64, ld int, b []float64, d int) {
-	for i := 0; i < d; i++ {
-		row := a[i*ld : i*ld+d]
-		out := c[i*d : i*d+d]
-		for j := range out {
-			sum := 0.0
-			for k, x := range row {
-				sum += x * b[k*d+j]
-			}
-			out[j] = sum
+		var x, y, z, u, v, w float64
+		for k, f := range row {
+			r := (*[6]float64)(b[6*k:])
+			x += f * r[0]
+			y += f * r[1]
+			z += f * r[2]
+			u += f * r[3]
+			v += f * r[4]
+			w += f * r[5]
 		}
+		out := (*[6]float64)(c[6*i:])
+		out[0], out[1], out[2], out[3], out[4], out[5] = x, y, z, u, v, w
 	}
 }
 
@@ -229,14 +235,30 @@ func addTv(g, a, v []float64, d int) {
 
 // addTm adds a' b to c, all d x d.
 func addTm(c, a, b []float64, d int) {
-	for i := 0; i < d; i++ {
-		for j := 0; j < d; j++ {
-			sum := 0.0
-			for k := 0; k < d; k++ {
-				sum += a[k*d+i] * b[k*d+j]
-			}
-			c[i*d+j] += sum
+	if d == 3 {
+		m, x, y := (*lie.Mat3)(c), (*lie.Mat3)(a), (*lie.Mat3)(b)
+		mulTAdd(m, x, y)
+		return
+	}
+	for i := 0; i < 6; i++ {
+		var x, y, z, u, v, w float64
+		for k := 0; k < 6; k++ {
+			f := a[k*6+i]
+			r := (*[6]float64)(b[6*k:])
+			x += f * r[0]
+			y += f * r[1]
+			z += f * r[2]
+			u += f * r[3]
+			v += f * r[4]
+			w += f * r[5]
 		}
+		out := (*[6]float64)(c[6*i:])
+		out[0] += x
+		out[1] += y
+		out[2] += z
+		out[3] += u
+		out[4] += v
+		out[5] += w
 	}
 }
 
