@@ -48,32 +48,33 @@ const (
 	Given   Start = "given"
 )
 
-// New builds the pose graph of s with the ties for which held is true; nil holds all. Ties by stamp go to the keyframe with
-// exactly that stamp.
+// New builds the pose graph of s with the ties for which held is true; nil holds all. Ties by stamp go to the keyframe at that
+// moment, which is made between two others where there is none.
 func New(s *survey.Survey, held func(tie int) bool) (*Problem, error) {
-	keyframes, factors, stamps := 0, len(s.Ties), false
+	keyframes, factors, byStamp := 0, len(s.Ties), false
 	for i := range s.Robots {
 		keyframes += len(s.Robots[i].Keyframes)
 		factors += len(s.Robots[i].Relatives)
 	}
 	for k := range s.Ties {
-		stamps = stamps || s.Ties[k].ToByStamp
+		byStamp = byStamp || s.Ties[k].ToByStamp
 	}
 	p := &Problem{Keys: make([]Key, 0, keyframes), Var: make(map[Key]int32, keyframes), Tie: make([]int, len(s.Ties))}
-	byStamp := map[Key]int32{} // ID the stamp
+	moments := moments{p, map[Key]*track{}}
 	poses := make([]lie.SE3, 0, keyframes)
 	for i := range s.Robots {
 		r := &s.Robots[i]
 		for _, k := range r.Keyframes {
 			key := Key{r.ID, k.Session, k.ID}
 			p.Var[key] = int32(len(poses))
-			if stamps && k.HasStamp {
-				byStamp[Key{r.ID, k.Session, k.StampNS}] = int32(len(poses))
+			if byStamp && k.HasStamp {
+				moments.add(Key{Robot: r.ID, Session: k.Session}, k.StampNS, int32(len(poses)))
 			}
 			p.Keys = append(p.Keys, key)
 			poses = append(poses, Pose(k.Pose))
 		}
 	}
+	moments.sort()
 	p.Graph = posegraph.New(3*(s.Meta.Dimension-1), poses)
 	p.Factors = p.Graph.AddBetween()
 	p.Factors.Grow(factors)
@@ -94,11 +95,11 @@ func New(s *survey.Survey, held func(tie int) bool) (*Problem, error) {
 		}
 		to, ok := p.Var[Key{t.ToRobot, t.ToSession, t.ToKey}]
 		if t.ToByStamp {
-			to, ok = byStamp[Key{t.ToRobot, t.ToSession, t.ToStampNS}]
+			to, ok = moments.find(Key{Robot: t.ToRobot, Session: t.ToSession}, t.ToStampNS)
 		}
 		switch {
 		case !ok && t.ToByStamp:
-			return nil, fmt.Errorf("tie %s: no keyframe of robot %s, session %d, with the stamp %d", t.ID, t.ToRobot, t.ToSession, t.ToStampNS)
+			return nil, fmt.Errorf("tie %s: no keyframe of robot %s, session %d, at or around the stamp %d", t.ID, t.ToRobot, t.ToSession, t.ToStampNS)
 		case !ok:
 			return nil, fmt.Errorf("tie %s: no keyframe %d of robot %s, session %d", t.ID, t.ToKey, t.ToRobot, t.ToSession)
 		case from == to:

@@ -172,6 +172,48 @@ func TestTieByStamp(t *testing.T) {
 	}
 }
 
+// A tie to a moment between two keyframes makes one there, on the geodesic of the odometry between them; later ties find it, or the
+// shorter stretch beside it.
+func TestTieBetweenKeyframes(t *testing.T) {
+	s, _, _, _ := net(t, "consistent")
+	b := &s.Robots[1]
+	for k := range b.Keyframes {
+		b.Keyframes[k].StampNS = 100 * b.Keyframes[k].ID
+	}
+	for k, stamp := range []int64{125, 150, 125} {
+		s.Ties[k].ToByStamp, s.Ties[k].ToStampNS = true, stamp
+	}
+	p, r := adjusted(t, s, func(k int) bool { return k == 0 }, Auto, 1)
+	if r.Stop != posegraph.Converged || r.Cost > 1e-20 {
+		t.Errorf("%+v: one tie costs nothing", r)
+	}
+	z := Pose(b.Relatives[1].Pose)
+	part := z.Log()
+	for i := range part {
+		part[i] /= 4
+	}
+	at := func(p *Problem, id int64) lie.SE3 {
+		v, ok := p.Var[Key{Robot: "b", ID: id}]
+		if !ok {
+			t.Fatalf("no keyframe %d of b", id)
+		}
+		return p.Graph.Values.Poses[v]
+	}
+	off := lie.Exp(part).Between(at(p, 1).Between(at(p, -125)))
+	for _, x := range off.Log() {
+		if math.Abs(x) > 1e-9 {
+			t.Errorf("the keyframe made lies off the geodesic by %v", off.Log())
+		}
+	}
+	p, r = adjusted(t, s, nil, Auto, 1)
+	if r.Stop != posegraph.Converged || len(p.Keys) != 10 || p.Factors.Len() != 11 {
+		t.Errorf("%v, %d keyframes, %d factors; want 10 and 11", r.Stop, len(p.Keys), p.Factors.Len())
+	}
+	if first, last := p.Factors.J[p.Tie[0]], p.Factors.J[p.Tie[2]]; first != last || p.Keys[first].ID != -125 {
+		t.Errorf("ties to one moment end at %v and %v", p.Keys[first], p.Keys[last])
+	}
+}
+
 // Without ties every session is an island of its own and keeps its first keyframe where the front end had it.
 func TestIslands(t *testing.T) {
 	s, _, _, _ := net(t, "consistent")
@@ -204,7 +246,7 @@ func TestErrorsNameThePlace(t *testing.T) {
 		"near keyframe":            {func(s *survey.Survey) { s.Ties[0].FromKey = 98 }, []string{"tie a3b1", "keyframe 98 of robot a"}},
 		"far robot":                {func(s *survey.Survey) { s.Ties[0].ToRobot = "c" }, []string{"tie a3b1", "robot c"}},
 		"far session":              {func(s *survey.Survey) { s.Ties[0].ToSession = 4 }, []string{"tie a3b1", "robot b, session 4"}},
-		"moment":                   {func(s *survey.Survey) { s.Ties[0].ToByStamp, s.Ties[0].ToStampNS = true, 5 }, []string{"tie a3b1", "robot b", "stamp 5"}},
+		"moment":                   {func(s *survey.Survey) { s.Ties[0].ToByStamp, s.Ties[0].ToStampNS = true, 5 }, []string{"tie a3b1", "robot b", "the stamp 5"}},
 		"tie to itself":            {func(s *survey.Survey) { s.Ties[0].ToRobot, s.Ties[0].ToKey = "a", s.Ties[0].FromKey }, []string{"tie a3b1", "both ends"}},
 		"measured from nowhere":    {func(s *survey.Survey) { s.Robots[0].Relatives[1].From = 77 }, []string{"robot a", "77 to 2", "no keyframe 77"}},
 		"measured to nowhere":      {func(s *survey.Survey) { s.Robots[0].Relatives[1].To = -5 }, []string{"robot a", "no keyframe -5"}},
