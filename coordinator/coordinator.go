@@ -32,7 +32,7 @@ const second = int64(1e9)
 // DefaultConfig returns the settings for a survey at walking pace on a thin radio link.
 func DefaultConfig(fleet string, dim int) Config {
 	return Config{
-		Fleet: fleet, Dim: dim, Incarnation: 1, Term: 1, SolveNS: 30 * second, RetryNS: 10 * second,
+		Fleet: fleet, Dim: dim, Incarnation: 1, Term: 1, SolveNS: 30 * second, PromptNS: 12 * second, RetryNS: 10 * second,
 		Evidence: evidence.DefaultOptions(dim),
 	}
 }
