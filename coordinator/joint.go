@@ -160,7 +160,7 @@ func (c *Coordinator) chooseDatums(j *joint, w *weighed, size map[int]int) {
 				i.born = c.datums
 				i.pose = u.model.poses[node]
 			} else if p, ok := c.places[u.id]; ok && len(p.poses) > 0 {
-				i.pose = p.datum.Mul(u.model.poses[node])
+				node, i.pose = u.heir(&p, node)
 			}
 			i.anchor, i.key = u.id, u.part.Junctions[node].ID
 		}
@@ -173,6 +173,17 @@ func (c *Coordinator) chooseDatums(j *joint, w *weighed, size map[int]int) {
 			}
 		}
 	}
+}
+
+// heir returns the first junction of the main part that the last solution placed, and where; without one it is the given junction, where
+// the frame has it.
+func (u *unit) heir(p *placement, otherwise int) (junction int, pose lie.SE3) {
+	for k := range u.part.Junctions {
+		if at, ok := slices.BinarySearch(p.ids, u.part.Junctions[k].ID); ok && u.model.inMain(k) {
+			return k, p.poses[at]
+		}
+	}
+	return otherwise, p.datum.Mul(u.model.poses[otherwise])
 }
 
 // anchorStrays fixes one junction of every part of a summary that is connected with nothing: it stays where it starts.
