@@ -1,42 +1,15 @@
 package posegraph
 
-import (
-	"math"
-
-	"selvage/internal/lie"
-)
+import "math"
 
 // Innovation returns r' (J Sigma J' + C)^-1 r of factor k at v: how far the measurement lies from what the others predict, chi-square
 // with Dim degrees of freedom when it is true. The factor must not be part of the solution (weight zero); sigma is the covariance
 // of that solution and c the covariance of the measurement, 6 x 6 in the order of the tangent.
 func (b *Between) Innovation(k int, v *Values, sigma Covariance, c *[36]float64) float64 {
 	d := b.dim
-	x := v.Poses[b.J[k]].Between(v.Poses[b.I[k]]) // (X_i^-1 X_j)^-1
 	r := b.Residual(k, v)
-	var ad, jr [36]float64
-	if d == 3 {
-		a := lie.Planar(&x).Adjoint()
-		j := lie.JrInv2([3]float64{r[0], r[1], r[5]})
-		copy(ad[:], a[:])
-		copy(jr[:], j[:])
-	} else {
-		ad, jr = x.Adjoint(), lie.JrInv(r)
-	}
-	// Covariance of the relative pose: S_jj - A S_ij - S_ji A' + A S_ii A'.
-	var sii, sij, as, asa, s [36]float64
-	copy(sii[:], sigma.Of(b.I[k]))
-	copy(s[:], sigma.Of(b.J[k]))
-	sigma.Across(b.slots[k], sij[:])
-	multiply(&as, &ad, &sii, d)
-	multiplyT(&asa, &as, &ad, d)
-	multiply(&as, &ad, &sij, d)
-	for i := 0; i < d; i++ {
-		for j := 0; j < d; j++ {
-			s[i*d+j] += asa[i*d+j] - as[i*d+j] - as[j*d+i]
-		}
-	}
-	multiply(&as, &jr, &s, d)
-	multiplyT(&s, &as, &jr, d)
+	var s [36]float64
+	b.Predicted(k, v, sigma, s[:])
 	var e [6]float64
 	if d == 3 {
 		for i, p := range planar {

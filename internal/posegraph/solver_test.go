@@ -142,6 +142,30 @@ func TestDampingFromFarOff(t *testing.T) {
 	})
 }
 
+// Damping multiplies the diagonal and leaves no trace.
+func TestDampingIsTakenBack(t *testing.T) {
+	both(t, func(t *testing.T, dim int) {
+		g := loop(dim)
+		s := solver(t, g, []int32{1})
+		s.Linearise()
+		for k := range 2 * dim {
+			plain := column(s, k)
+			want := slices.Clone(plain)
+			want[k] *= 1 + 0.5
+			s.damp(0.5)
+			near(t, "damped", column(s, k), want, 1e-15, 0)
+			s.undamp(0.5)
+			if !slices.Equal(column(s, k), plain) {
+				t.Errorf("column %d: damping left a trace", k)
+			}
+			s.damp(0)
+			if !slices.Equal(column(s, k), plain) {
+				t.Errorf("column %d: no damping changed the matrix", k)
+			}
+		}
+	})
+}
+
 // loop is a small graph with one solution: three poses, three measurements.
 func loop(dim int) *Graph {
 	r := random(5)
