@@ -32,13 +32,14 @@ func Chordal(g *Graph, fixed []int32) error {
 	return s.chordal(g.Dim)
 }
 
-// Chordal is [Chordal] for the graph and the fixed variables of s. In the plane the structure of s serves the start as well.
+// Chordal is [Chordal] for the graph and the fixed variables of s. In the plane the structure of s serves the start as well, unless
+// there are points.
 func (s *Solver) Chordal() error {
-	if s.g.Dim == 3 {
+	if s.g.Dim == 3 && len(s.g.Values.Points) == 0 {
 		return s.chordal(3)
 	}
 	var fixed []int32
-	for v, b := range s.block {
+	for v, b := range s.block[:len(s.g.Values.Poses)] {
 		if b < 0 {
 			fixed = append(fixed, int32(v))
 		}

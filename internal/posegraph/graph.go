@@ -9,7 +9,8 @@ import (
 
 // Values are the present estimates of all variables.
 type Values struct {
-	Poses []lie.SE3
+	Poses  []lie.SE3
+	Points [][3]float64 // marks, in the frame of the poses; they are numbered after them, see [Graph.Point]
 }
 
 // Graph is an estimation problem: variables, factors, and the variables that are held fixed.
@@ -80,7 +81,7 @@ func (g *Graph) Cost() float64 {
 
 // Components numbers the connected components of the graph in the order of their lowest variable: component[variable].
 func (g *Graph) Components() (component []int32, count int) {
-	n := len(g.Values.Poses)
+	n := g.Variables()
 	parent := make([]int32, n)
 	for i := range parent {
 		parent[i] = int32(i)
@@ -115,13 +116,18 @@ func (g *Graph) Components() (component []int32, count int) {
 }
 
 // Anchors returns the lowest variable of each connected component: fixing these, and no more, makes relative measurements
-// determine the rest.
+// determine the rest. A component that control points hold already has none.
 func (g *Graph) Anchors() []int32 {
 	component, count := g.Components()
+	held := g.held(component, count)
 	anchors := make([]int32, 0, count)
+	met := 0
 	for i, c := range component {
-		if int(c) == len(anchors) {
-			anchors = append(anchors, int32(i))
+		if int(c) == met {
+			met++
+			if !held[c] {
+				anchors = append(anchors, int32(i))
+			}
 		}
 	}
 	return anchors
@@ -129,7 +135,7 @@ func (g *Graph) Anchors() []int32 {
 
 // check panics on a variable out of range: graphs are built by this module from validated input.
 func (g *Graph) check(i, j int32) {
-	if n := int32(len(g.Values.Poses)); i < 0 || j < 0 || i >= n || j >= n || i == j {
+	if n := int32(g.Variables()); i < 0 || j < 0 || i >= n || j >= n || i == j {
 		panic(fmt.Sprintf("posegraph: factor on variables %d and %d of %d", i, j, n))
 	}
 }

@@ -83,7 +83,7 @@ var ErrNoFixed = errors.New("posegraph: no variable is fixed, so relative measur
 
 // NewSolver orders and analyses the graph with the given variables held fixed. Variables in last are eliminated last.
 func NewSolver(g *Graph, fixed []int32, ordering sparse.Options) (*Solver, error) {
-	n := len(g.Values.Poses)
+	n := g.Variables()
 	s := &Solver{g: g, block: make([]int32, n), offset: make([]int32, n)}
 	for _, f := range fixed {
 		if f < 0 || int(f) >= n {
@@ -91,7 +91,7 @@ func NewSolver(g *Graph, fixed []int32, ordering sparse.Options) (*Solver, error
 		}
 		s.block[f] = -1
 	}
-	if len(fixed) == 0 && n > 0 {
+	if len(fixed) == 0 && n > 0 && !g.absolute() {
 		return nil, ErrNoFixed
 	}
 	scalars := int32(0)
@@ -103,11 +103,11 @@ func NewSolver(g *Graph, fixed []int32, ordering sparse.Options) (*Solver, error
 		s.block[i] = int32(len(s.variable))
 		s.offset[i] = scalars
 		s.variable = append(s.variable, int32(i))
-		scalars += int32(g.Dim)
+		scalars += int32(g.width(int32(i)))
 	}
 	dims := make([]int, len(s.variable))
-	for i := range dims {
-		dims[i] = g.Dim
+	for i, v := range s.variable {
+		dims[i] = g.width(v)
 	}
 	pairs, slots := s.pairs()
 	var err error
@@ -123,7 +123,8 @@ func NewSolver(g *Graph, fixed []int32, ordering sparse.Options) (*Solver, error
 	s.now, s.trial = s.assembly(int(scalars)), s.assembly(int(scalars))
 	s.step = make([]float64, scalars)
 	s.diagonal = make([]float64, scalars)
-	s.next.Poses = make([]lie.SE3, n)
+	s.next.Poses = make([]lie.SE3, len(g.Values.Poses))
+	s.next.Points = make([][3]float64, len(g.Values.Points))
 	return s, nil
 }
 
@@ -201,6 +202,7 @@ func (s *Solver) linearise(v *Values, a *Assembly) float64 {
 	for _, set := range s.g.Sets {
 		cost += set.Linearise(v, a)
 	}
+	s.level(a)
 	return cost
 }
 
@@ -341,7 +343,7 @@ func (s *Solver) Covariance() (Covariance, error) {
 	return Covariance{s, s.trial.Matrix}, nil
 }
 
-// Of returns the covariance of a variable, Dim x Dim row-major; nil when it is fixed, that is zero.
+// Of returns the covariance of a variable, Dim x Dim row-major (3 x 3 for a point); nil when it is fixed, that is zero.
 func (c Covariance) Of(variable int32) []float64 {
 	if b := c.s.block[variable]; b >= 0 {
 		return c.m.Diag(int(b))
@@ -349,8 +351,8 @@ func (c Covariance) Of(variable int32) []float64 {
 	return nil
 }
 
-// Across writes the cross covariance of the pair that owns a slot, rows i and columns j as the factor set coupled them, to dst
-// (Dim x Dim).
+// Across writes the cross covariance of the pair of poses that owns a slot, rows i and columns j as the factor set coupled them, to
+// dst (Dim x Dim).
 func (c Covariance) Across(slot Slot, dst []float64) {
 	d := c.s.g.Dim
 	switch {
@@ -389,11 +391,11 @@ func (s *Solver) damp(lambda float64) {
 	if lambda == 0 {
 		return
 	}
-	d := s.g.Dim
-	for b := range s.variable {
+	for b, v := range s.variable {
+		d, kept := s.g.width(v), s.diagonal[s.offset[v]:]
 		m := s.now.Matrix.Diag(b)
 		for i := 0; i < d; i++ {
-			s.diagonal[b*d+i] = m[i*(d+1)]
+			kept[i] = m[i*(d+1)]
 			m[i*(d+1)] *= 1 + lambda
 		}
 	}
@@ -403,11 +405,11 @@ func (s *Solver) undamp(lambda float64) {
 	if lambda == 0 {
 		return
 	}
-	d := s.g.Dim
-	for b := range s.variable {
+	for b, v := range s.variable {
+		d, kept := s.g.width(v), s.diagonal[s.offset[v]:]
 		m := s.now.Matrix.Diag(b)
 		for i := 0; i < d; i++ {
-			m[i*(d+1)] = s.diagonal[b*d+i]
+			m[i*(d+1)] = kept[i]
 		}
 	}
 }
@@ -427,22 +429,27 @@ func (s *Solver) advance() {
 			s.next.Poses[i] = x.Plus(lie.Tangent{-d[0], -d[1], -d[2], -d[3], -d[4], -d[5]})
 		}
 	}
+	s.advancePoints()
 }
 
-// Joint returns the joint covariance of some variables, (Dim len)^2 row-major, in the tangents at the values and relative to the
-// fixed variables (whose rows are zero). Every pair of variables is covered, whatever the pattern; the cost is one solution
-// for each scalar.
+// Joint returns the joint covariance of some variables, square and row-major with Dim rows for a pose and 3 for a point, in the
+// tangents at the values and relative to the fixed variables (whose rows are zero). Every pair of variables is covered, whatever
+// the pattern; the cost is one solution for each scalar.
 func (s *Solver) Joint(variables []int32) ([]float64, error) {
 	s.Linearise()
 	if err := s.factor.Factorise(s.now.Matrix); err != nil {
 		return nil, err
 	}
-	d, n := s.g.Dim, len(s.step)
-	m := d * len(variables)
-	out := make([]float64, m*m)
-	columns := make([]float64, d*n)
+	n := len(s.step)
+	row := make([]int, len(variables)+1) // of each variable in the result
 	for k, v := range variables {
-		o := int(s.offset[v])
+		row[k+1] = row[k] + s.g.width(v)
+	}
+	m := row[len(variables)]
+	out := make([]float64, m*m)
+	columns := make([]float64, s.g.Dim*n)
+	for k, v := range variables {
+		o, d := int(s.offset[v]), row[k+1]-row[k]
 		if o < 0 {
 			continue
 		}
@@ -450,15 +457,15 @@ func (s *Solver) Joint(variables []int32) ([]float64, error) {
 		for c := 0; c < d; c++ {
 			columns[c*n+o+c] = 1
 		}
-		s.factor.SolveMany(columns, d)
+		s.factor.SolveMany(columns[:d*n], d)
 		for l, w := range variables {
 			p := int(s.offset[w])
 			if p < 0 {
 				continue
 			}
 			for c := 0; c < d; c++ {
-				for r := 0; r < d; r++ {
-					out[(l*d+r)*m+k*d+c] = columns[c*n+p+r]
+				for r := 0; r < row[l+1]-row[l]; r++ {
+					out[(row[l]+r)*m+row[k]+c] = columns[c*n+p+r]
 				}
 			}
 		}

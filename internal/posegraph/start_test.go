@@ -152,3 +152,28 @@ func TestStartsLeadToOneOptimum(t *testing.T) {
 		}
 	})
 }
+
+// A solver's own chordal start is the start of its graph, whatever other factors it holds; a start leaves solvers of the graph alone.
+func TestChordalOfASolver(t *testing.T) {
+	both(t, func(t *testing.T, dim int) {
+		for seed := range uint64(5) {
+			a, b := sample(random(seed), dim, 9, 0.05, true), sample(random(seed), dim, 9, 0.05, true)
+			fixed := []int32{4, 2}
+			s := solver(t, a, fixed)
+			if err := s.Chordal(); err != nil {
+				t.Fatal(err)
+			}
+			bound := solver(t, b, fixed)
+			if err := Chordal(b, fixed); err != nil {
+				t.Fatal(err)
+			}
+			samePoses(t, "poses", a.Values.Poses, b.Values.Poses, 1e-9)
+			_, got := bound.Linearise()
+			near(t, "gradient after a start", got, twin(b, fixed).g, 1e-6, 1)
+			if _, got = s.Linearise(); len(got) != 7*dim {
+				t.Errorf("%d scalars", len(got))
+			}
+			near(t, "gradient after the solver's start", got, twin(a, fixed).g, 1e-6, 1)
+		}
+	})
+}

@@ -1,0 +1,120 @@
+package posegraph
+
+import (
+	"math"
+
+	"selvage/internal/lie"
+)
+
+// PlacePoints gives the points starting values through the present poses: from the first sighting that tells range and bearing or
+// the position, else from the bearings of two or more views, as the point nearest to their rays. It returns the points that no
+// sighting places, which keep their values.
+func PlacePoints(g *Graph) (unplaced []int32) {
+	const rank = 1e-3 // of the rays' normal matrix: about two degrees between them
+	n := len(g.Values.Points)
+	placed := make([]bool, n)
+	rays := make([]lie.Mat3, n)
+	sums := make([][3]float64, n)
+	for _, set := range g.Sets {
+		if c, ok := set.(*PointPriors); ok {
+			for k, p := range c.point {
+				g.Values.Points[p], placed[p] = c.at[k], true
+			}
+		}
+	}
+	for _, set := range g.Sets {
+		s, ok := set.(*Sightings)
+		if !ok || !s.ofPoints || s.sense == Range {
+			continue
+		}
+		for k, p := range s.To {
+			if placed[p] || s.W[k] == 0 {
+				continue
+			}
+			x := g.Values.Poses[s.From[k]].Mul(s.Mount[k])
+			if s.sense != Bearing {
+				g.Values.Points[p], placed[p] = g.flat(x.Apply(s.local(k))), true
+				continue
+			}
+			// The sum of (I - d d') (p - t) is zero at the point nearest to all rays.
+			d := x.R.Apply(direction(s.Z[k]))
+			for r := 0; r < 3; r++ {
+				for c := 0; c < 3; c++ {
+					q := -d[r] * d[c]
+					if r == c {
+						q++
+					}
+					rays[p][3*r+c] += q
+					sums[p][r] += q * x.T[c]
+				}
+			}
+		}
+	}
+	for p := range placed {
+		if placed[p] {
+			continue
+		}
+		m := &rays[p]
+		scale := (m[0] + m[4] + m[8]) / 2
+		if at, ok := solve3(m, sums[p]); ok && scale > 0 && weakest(m) > rank*scale {
+			g.Values.Points[p] = g.flat(at)
+		} else {
+			unplaced = append(unplaced, int32(p))
+		}
+	}
+	return unplaced
+}
+
+// flat drops the height in the plane.
+func (g *Graph) flat(p [3]float64) [3]float64 {
+	if g.Dim == 3 {
+		p[2] = 0
+	}
+	return p
+}
+
+// local returns the place that sighting k measured in the frame of its sensor; it must tell range and bearing, or the position.
+func (s *Sightings) local(k int) [3]float64 {
+	z := s.Z[k]
+	if s.sense == Position {
+		return z
+	}
+	d := direction(z)
+	return [3]float64{z[0] * d[0], z[0] * d[1], z[0] * d[2]}
+}
+
+// direction returns the unit vector of a bearing and an elevation, components 1 and 2 of a measurement.
+func direction(z [3]float64) [3]float64 {
+	c := math.Cos(z[2])
+	return [3]float64{c * math.Cos(z[1]), c * math.Sin(z[1]), math.Sin(z[2])}
+}
+
+// solve3 solves m x = b.
+func solve3(m *lie.Mat3, b [3]float64) (x [3]float64, ok bool) {
+	r0, r1, r2 := [3]float64(m[0:3]), [3]float64(m[3:6]), [3]float64(m[6:9])
+	c0, c1, c2 := cross(r1, r2), cross(r2, r0), cross(r0, r1)
+	det := r0[0]*c0[0] + r0[1]*c0[1] + r0[2]*c0[2]
+	if det == 0 {
+		return x, false
+	}
+	for i := range x {
+		x[i] = (c0[i]*b[0] + c1[i]*b[1] + c2[i]*b[2]) / det
+	}
+	return x, true
+}
+
+func cross(a, b [3]float64) [3]float64 {
+	return [3]float64{a[1]*b[2] - a[2]*b[1], a[2]*b[0] - a[0]*b[2], a[0]*b[1] - a[1]*b[0]}
+}
+
+// weakest bounds the least eigenvalue of a positive semidefinite m from below within a factor of three: det over the sum of the
+// products of the other two.
+func weakest(m *lie.Mat3) float64 {
+	r0, r1, r2 := [3]float64(m[0:3]), [3]float64(m[3:6]), [3]float64(m[6:9])
+	c0, c1, c2 := cross(r1, r2), cross(r2, r0), cross(r0, r1)
+	det := r0[0]*c0[0] + r0[1]*c0[1] + r0[2]*c0[2]
+	if minors := c0[0] + c1[1] + c2[2]; minors > 0 {
+		return det / minors
+	}
+	return 0
+}
