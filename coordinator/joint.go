@@ -48,10 +48,13 @@ func (c *Coordinator) solve() ([]Publish, error) {
 			return nil, err
 		}
 		err = c.settle(j, &w)
+		if err == nil {
+			_, err = j.covariance()
+		}
 		var loose *looseError
 		switch {
 		case errors.As(err, &loose): // each time with one unit more that does not hold together
-			n.units[n.unitOf(loose.variable)].model.err = err
+			n.blame(loose)
 			w = c.weigh(n)
 		case errors.Is(err, errParted): // each time with fewer ties held
 			w.island = n.islands(w.held)
@@ -68,6 +71,53 @@ type looseError struct{ variable int32 }
 
 func (e *looseError) Error() string {
 	return fmt.Sprintf("joint solution: junction %d of the network is left free by its summary", e.variable)
+}
+
+// loose names the variable whose pivot a factorisation lost.
+func (j *joint) loose(err error) error {
+	var bad *sparse.NotPositiveError
+	if !errors.As(err, &bad) {
+		return err
+	}
+	fixed := make([]bool, len(j.graph.Values.Poses))
+	for _, v := range j.anchors {
+		fixed[v] = true
+	}
+	row := -1 // of the matrix: one for each variable that is not fixed
+	for v := range fixed {
+		if !fixed[v] {
+			row++
+		}
+		if row == bad.Block {
+			return &looseError{int32(v)}
+		}
+	}
+	return err
+}
+
+// blame marks the units whose summaries do not hold together by themselves; when all do, the one that the solution could not place.
+func (n *network) blame(loose *looseError) {
+	found := false
+	for u := range n.units {
+		if m := n.units[u].model; m.err == nil && !n.units[u].sound(n.dim) {
+			m.err, found = loose, true
+		}
+	}
+	if !found {
+		n.units[n.unitOf(loose.variable)].model.err = loose
+	}
+}
+
+// sound tells whether the summary of u determines its junctions by itself, each part for itself.
+func (u *unit) sound(dim int) bool {
+	g := posegraph.New(dim, slices.Clone(u.model.poses))
+	u.cliques(g.AddCliques(), 0)
+	solver, err := posegraph.NewSolver(g, g.Anchors(), sparse.Options{})
+	if err != nil {
+		return false
+	}
+	_, err = solver.Covariance()
+	return err == nil
 }
 
 // errParted: the ties given up were all that connected some units.
@@ -371,7 +421,7 @@ func (c *Coordinator) finish(j *joint) error {
 			cost, gradient := j.solver.Linearise()
 			left, err := j.solver.Decrease(gradient)
 			c.left = left > converged*max(cost, 1)
-			return err
+			return j.loose(err)
 		}
 		copy(j.graph.Values.Poses, at)
 	}
@@ -387,7 +437,7 @@ const converged = 1e-12
 func (j *joint) optimise(o posegraph.Options) error {
 	r := j.solver.Optimise(o)
 	if r.Stop == posegraph.Undetermined {
-		return &looseError{r.Weakest}
+		return &looseError{max(r.Weakest, 0)}
 	}
 	return nil
 }
@@ -397,7 +447,7 @@ func (j *joint) covariance() (posegraph.Covariance, error) {
 	if j.sigma == nil {
 		sigma, err := j.solver.Covariance()
 		if err != nil {
-			return sigma, err
+			return sigma, j.loose(err)
 		}
 		j.sigma = &sigma
 	}

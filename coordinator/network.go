@@ -13,6 +13,7 @@ import (
 // network is the present state of the survey laid out for a solution: units, their junctions as variables, and the ties whose
 // two ends are junctions.
 type network struct {
+	dim   int // of a pose: 3 in the plane, 6 in space
 	units []unit
 	ties  []usable
 }
@@ -46,7 +47,7 @@ type unitModel struct {
 
 // layout collects the network. Ties with a missing end are left open with that said.
 func (c *Coordinator) layout() *network {
-	n := &network{}
+	n := &network{dim: c.width()}
 	number := map[unitID]int{}
 	base := int32(0)
 	for _, r := range c.sorted() {
@@ -243,7 +244,11 @@ func widen(m []float64, dim int) (out [36]float64) {
 	return out
 }
 
-// invert inverts the active part of a 6 x 6 information matrix by Cholesky; ok is false when it has no full rank.
+// strongest bounds the information that a tie may claim, 1/m^2 or 1/rad^2: nothing is measured to a nanometre.
+const strongest = 1e18
+
+// invert inverts the active part of a 6 x 6 information matrix by Cholesky; ok is false when it has no full rank,
+// or more than [strongest].
 func invert(m *[36]float64, dim int) (out [36]float64, ok bool) {
 	active := []int{0, 1, 2, 3, 4, 5}
 	if dim == 2 {
@@ -258,7 +263,7 @@ func invert(m *[36]float64, dim int) (out [36]float64, ok bool) {
 				v -= l[i][k] * l[j][k]
 			}
 			if i == j {
-				if !(v > 1e-14*m[7*active[i]]) {
+				if !(v > 1e-14*m[7*active[i]] && v < strongest) {
 					return out, false
 				}
 				l[i][i] = math.Sqrt(v)

@@ -27,6 +27,10 @@ func (c *Coordinator) weigh(n *network) weighed {
 				n.ties[i].judge(c.now, msgs.Open, looseReason, msgs.Evidence{})
 				continue
 			}
+			if n.ties[i].wild() {
+				n.ties[i].judge(c.now, msgs.Open, "claims more than can be measured", msgs.Evidence{})
+				continue
+			}
 			w.held[i] = true
 			n.ties[i].judge(c.now, msgs.Held, "taken as true on request", msgs.Evidence{})
 		}
@@ -90,6 +94,16 @@ const looseReason = "the map of one of its robots does not hold together"
 // loose tells whether a unit of tie i has a summary that leaves a junction free.
 func (n *network) loose(i int) bool {
 	return n.units[n.ties[i].from].model.err != nil || n.units[n.ties[i].to].model.err != nil
+}
+
+// wild tells whether a tie claims more information than [strongest].
+func (t *tie) wild() bool {
+	for i := range 6 {
+		if t.info[7*i] > strongest {
+			return true
+		}
+	}
+	return false
 }
 
 // evidence describes a unit by the junctions that ties touch; it numbers them in node.
