@@ -27,29 +27,31 @@ var (
 	below      = append(append([]string{"internal/adjust", "agent", "agent/shell", "coordinator", "coordinator/shell"}, outside...), cores...)
 
 	rooms = map[string][]string{
-		"internal/lie":       nil,
-		"internal/sparse":    nil,
-		"internal/bus":       nil,
-		"internal/survey":    nil,
-		"internal/report":    nil,
-		"internal/house":     nil,
-		"internal/posegraph": ground,
-		"internal/evidence":  {"internal/lie"},
-		"internal/adjust":    append([]string{"internal/posegraph", "internal/survey"}, ground...),
-		"partition":          append([]string{"internal/posegraph"}, ground...),
-		"msgs":               {"msgs/internal/pb"},
-		"msgs/internal/pb":   nil,
-		"agent":              cores,
-		"coordinator":        cores,
-		"agent/shell":        append(append([]string{"agent"}, outside...), cores...),
-		"coordinator/shell":  append(append([]string{"coordinator"}, outside...), cores...),
-		"scenarios":          below,
-		"cmd/selvage":        append([]string{"scenarios"}, below...),
+		"internal/lie":         nil,
+		"internal/sparse":      nil,
+		"internal/bus":         nil,
+		"internal/survey":      nil,
+		"internal/report":      nil,
+		"internal/house":       nil,
+		"internal/posegraph":   ground,
+		"internal/evidence":    {"internal/lie"},
+		"internal/adjust":      append([]string{"internal/posegraph", "internal/survey"}, ground...),
+		"internal/reliability": nil,
+		"internal/audit":       append([]string{"internal/adjust", "internal/reliability", "internal/survey", "internal/report"}, estimation...),
+		"partition":            append([]string{"internal/posegraph"}, ground...),
+		"msgs":                 {"msgs/internal/pb"},
+		"msgs/internal/pb":     nil,
+		"agent":                cores,
+		"coordinator":          cores,
+		"agent/shell":          append(append([]string{"agent"}, outside...), cores...),
+		"coordinator/shell":    append(append([]string{"coordinator"}, outside...), cores...),
+		"scenarios":            below,
+		"cmd/selvage":          append([]string{"scenarios", "internal/audit", "internal/reliability"}, below...),
 	}
 )
 
 // pure are the packages that give the same effects for the same events on a robot, in a container and in a simulation.
-var pure = []string{"agent", "coordinator", "partition", "msgs", "internal/lie", "internal/sparse", "internal/posegraph", "internal/evidence"}
+var pure = []string{"agent", "coordinator", "partition", "msgs", "internal/lie", "internal/sparse", "internal/posegraph", "internal/evidence", "internal/reliability"}
 
 // Why a pure package may not import a path, or one below it.
 var forbidden = []struct{ path, why string }{

@@ -1,0 +1,134 @@
+package reliability
+
+import (
+	"errors"
+	"math"
+	"math/rand/v2"
+	"testing"
+
+	"gonum.org/v1/gonum/mat"
+)
+
+// spreads runs the estimate on a linear net whose observations belong to groups.
+func spreads(t *testing.T, n *linear, group []int, groups int) ([]Spread, bool) {
+	t.Helper()
+	full := make([]float64, len(group))
+	out, arrived, err := Spreads(groups, 2000, func(scale []float64) (squares, redundancy []float64, err error) {
+		for i, g := range group {
+			full[i] = scale[g]
+		}
+		v, _, q := n.adjust(nil, full)
+		squares, redundancy = make([]float64, groups), make([]float64, groups)
+		for i, g := range group {
+			f := n.figures(v, q, i, 1, full)
+			squares[g] += v[i] * v[i] / n.sigma[i] / n.sigma[i] / scale[g]
+			redundancy[g] += f.Total()
+		}
+		return squares, redundancy, nil
+	})
+	if err != nil {
+		t.Fatal(err)
+	}
+	return out, arrived
+}
+
+// restricted is -2 log of the restricted likelihood of the groups' variance factors, up to a constant (Patterson and Thompson,
+// Biometrika 58, 1971): log det C + log det A' C^-1 A + v' C^-1 v.
+func restricted(t *testing.T, n *linear, group []int, scale []float64) float64 {
+	full := make([]float64, len(group))
+	for i, g := range group {
+		full[i] = scale[g]
+	}
+	v, _, q := n.adjust(nil, full)
+	sum := 0.0
+	for i := range v {
+		c := n.sigma[i] * n.sigma[i] * full[i]
+		sum += math.Log(c) + v[i]*v[i]/c
+	}
+	det, sign := mat.LogDet(q)
+	if sign <= 0 {
+		t.Fatal("not positive")
+	}
+	return sum - det
+}
+
+// The estimate is a minimum of the restricted likelihood, found without it.
+func TestSpreadsAreOfRestrictedLikelihood(t *testing.T) {
+	r := rand.New(rand.NewPCG(8, 1))
+	for range 8 {
+		n := randomNet(r, 60, 1, 6)
+		group := make([]int, 60)
+		truth := [3]float64{1, 9, 0.25}
+		for i := range group {
+			group[i] = i % 3
+			n.l[i] = n.sigma[i] * math.Sqrt(truth[i%3]) * r.NormFloat64()
+		}
+		got, arrived := spreads(t, n, group, 3)
+		if !arrived {
+			t.Fatal("did not arrive")
+		}
+		scale := make([]float64, 3)
+		for g := range scale {
+			scale[g] = got[g].Ratio * got[g].Ratio
+			if !got[g].Known || !(got[g].Low < got[g].Ratio && got[g].Ratio < got[g].High) {
+				t.Errorf("group %d: %+v", g, got[g])
+			}
+		}
+		at := restricted(t, n, group, scale)
+		for g := range scale {
+			for _, by := range []float64{0.93, 1.07} {
+				moved := append([]float64(nil), scale...)
+				moved[g] *= by
+				if x := restricted(t, n, group, moved); x < at {
+					t.Errorf("group %d times %g: %.8g, less than %.8g at the estimate", g, by, x, at)
+				}
+			}
+		}
+	}
+}
+
+// The bounds hold as often as they say: of 900 groups about 95 %, the standard deviation of that count being 0.7 %.
+func TestSpreadBoundsHold(t *testing.T) {
+	r := rand.New(rand.NewPCG(2, 9))
+	inside, all := 0, 0
+	truth := [3]float64{1, 2.3, 0.6} // of sigmas
+	for range 300 {
+		n := randomNet(r, 90, 1, 8)
+		group := make([]int, 90)
+		for i := range group {
+			group[i] = i % 3
+			n.l[i] = n.sigma[i] * truth[i%3] * r.NormFloat64()
+		}
+		got, _ := spreads(t, n, group, 3)
+		for g, s := range got {
+			all++
+			if s.Low <= truth[g] && truth[g] <= s.High {
+				inside++
+			}
+		}
+	}
+	if share := float64(inside) / float64(all); share < 0.925 || share > 0.975 {
+		t.Errorf("the bounds hold in %.3f of the cases, expected 0.95", share)
+	}
+}
+
+func TestSpreadsOfGroupsWithoutRedundancy(t *testing.T) {
+	calls := 0
+	got, arrived, err := Spreads(2, 3, func(scale []float64) ([]float64, []float64, error) {
+		calls++
+		return []float64{100, 4 * 20 / scale[1]}, []float64{0.3, 20}, nil
+	})
+	if err != nil || !arrived || calls != 2 {
+		t.Fatalf("%v %v after %d evaluations", err, arrived, calls)
+	}
+	if got[0].Known || got[0].Ratio != 1 || math.Abs(got[1].Ratio-2) > 1e-12 {
+		t.Errorf("%+v", got)
+	}
+	if _, arrived, _ := Spreads(1, 2, func(scale []float64) ([]float64, []float64, error) { return []float64{30}, []float64{10}, nil }); arrived {
+		t.Error("arrived although the last round changed the sigma")
+	}
+	broken := errors.New("no")
+	if _, _, err := Spreads(1, 2, func([]float64) ([]float64, []float64, error) { return nil, nil, broken }); err != broken {
+		t.Errorf("error %v", err)
+	}
+}
