@@ -1,6 +1,7 @@
 package agent
 
 import (
+	"errors"
 	"fmt"
 	"slices"
 
@@ -14,7 +15,8 @@ import (
 const relinearise = 3e-12
 
 // correct applies a correction: junctions go where the base found them, interior poses follow. A correction that is not newer than
-// the last one applied is dropped; keyframes it names that this robot does not know are left out.
+// the last one applied is dropped; keyframes it names that this robot does not know are left out. A session that it would tear out of
+// bounds stays as it was.
 func (a *Agent) correct(c *msgs.Correction) error {
 	if c.Dim != a.width() {
 		return fmt.Errorf("correction of poses with %d components, this survey has %d", c.Dim, a.width())
@@ -31,31 +33,53 @@ func (a *Agent) correct(c *msgs.Correction) error {
 	}
 	a.applied = c.Epoch
 	a.beatDue = true
+	var refused error
 	for i := range c.Parts {
 		p := &c.Parts[i]
 		s := a.session(p.Session)
 		if s == nil {
 			continue
 		}
+		if err := s.followSafely(p); err != nil {
+			refused = errors.Join(refused, err)
+			continue
+		}
 		s.joined, s.island = p.Joined, p.Island
 		if len(p.IDs) == 0 {
 			continue
-		}
-		if err := s.follow(p); err != nil {
-			return err
 		}
 		if s.dirty || s.told == nil {
 			continue // new measurements are waiting: the next summary says it all
 		}
 		next, err := s.model()
 		if err != nil {
-			return err
+			refused = errors.Join(refused, err)
+			continue
 		}
 		if fall, ok := s.change(next); !ok || fall > relinearise*max(next.cost, 1) {
 			a.relinear = true
 		}
 	}
-	return nil
+	return refused
+}
+
+// followSafely follows a correction, or leaves the session as it was when it would be torn farther apart than a summary can tell.
+func (s *session) followSafely(p *msgs.CorrectedPart) error {
+	if len(p.IDs) == 0 {
+		return nil
+	}
+	datum, before := s.datum, slices.Clone(s.graph.Values.Poses)
+	err := s.follow(p)
+	for v := 0; err == nil && v < len(before); v++ {
+		if checkPose(&s.graph.Values.Poses[v], s.dim) != nil {
+			err = fmt.Errorf("correction of session %d carries keyframe %d out of bounds", s.id, s.keys[v])
+		}
+	}
+	if err != nil {
+		s.datum = datum
+		copy(s.graph.Values.Poses, before)
+	}
+	return err
 }
 
 // follow moves the session's poses after its corrected junctions: these exactly, the others first by the correction interpolated
