@@ -1,0 +1,93 @@
+package adjust
+
+import (
+	"selvage/internal/evidence"
+	"selvage/internal/posegraph"
+)
+
+// Cutoffs are the squared residuals r' Omega r beyond which a sighting counts as wrong, by the numbers that it measures: chi-square at
+// one in a thousand.
+var Cutoffs = [4]float64{0, 10.828, 13.816, 16.266}
+
+// robust weighs the sightings of a problem by graduated non-convexity with truncated least squares, see [evidence.Schedule]: from a
+// cost that every sighting pulls at to one in which those that fit badly are cut off.
+type robust struct {
+	sets    []*posegraph.Sightings
+	graph   *posegraph.Graph
+	squared []float64 // of all sightings, each divided by the cutoff of its kind
+	weights []float64
+}
+
+func newRobust(g *posegraph.Graph) *robust {
+	r := &robust{graph: g}
+	n := 0
+	for _, set := range g.Sets {
+		if s, ok := set.(*posegraph.Sightings); ok {
+			r.sets = append(r.sets, s)
+			n += s.Len()
+		}
+	}
+	r.squared, r.weights = make([]float64, n), make([]float64, n)
+	return r
+}
+
+// measure squares the residuals.
+func (r *robust) measure() {
+	i := 0
+	for _, s := range r.sets {
+		bound := Cutoffs[s.Sense().Freedoms(r.graph.Dim)]
+		for k := range s.W {
+			r.squared[i] = s.Chi2(k, &r.graph.Values) / bound
+			i++
+		}
+	}
+}
+
+// weigh hands the weights to the sightings.
+func (r *robust) weigh() {
+	i := 0
+	for _, s := range r.sets {
+		i += copy(s.W, r.weights[i:])
+	}
+}
+
+// SolveRobust adjusts with all sightings, then leaves out those that do not fit, and returns how many those are; their weight is
+// [evidence.Floor] thereafter. Analyse must have been called.
+func (p *Problem) SolveRobust(o posegraph.Options) (result posegraph.Result, cut int) {
+	return solveRobust(p.solver, p.Graph, o)
+}
+
+func solveRobust(s *posegraph.Solver, g *posegraph.Graph, o posegraph.Options) (result posegraph.Result, cut int) {
+	r := newRobust(g)
+	for i := range r.weights {
+		r.weights[i] = 1
+	}
+	r.weigh()
+	rough := o // a stage is only a way to the next
+	rough.Tolerance, rough.MaxIterations = 1e-5, 20
+	result = s.Optimise(rough)
+	r.measure()
+	schedule, any := evidence.NewSchedule(1, r.squared)
+	for stage := 0; any && stage < 200 && result.Stop != posegraph.Interrupted && result.Stop != posegraph.Undetermined; stage++ {
+		decided := schedule.Next(r.weights, r.squared)
+		r.weigh()
+		if decided {
+			break
+		}
+		rough.MaxIterations = 4
+		first := result.InitialCost
+		result = s.Optimise(rough)
+		result.InitialCost = first
+		r.measure()
+	}
+	if result.Stop == posegraph.Interrupted || result.Stop == posegraph.Undetermined {
+		return result, 0
+	}
+	result = s.Optimise(o)
+	for _, w := range r.weights {
+		if w < 0.5 {
+			cut++
+		}
+	}
+	return result, cut
+}
