@@ -10,6 +10,7 @@
 //	keyframe, relative pose     into the pose graph of their session
 //	tie                         numbered, kept until the base says it is safe, published; its keyframe becomes a separator
 //	want                        names separators the base needs, records it misses, and the number below which all is safe
+//	a base of a new incarnation its store is empty: nothing is safe any more, ties and summary are said again
 //	correction                  junctions go where the base found them, interior poses follow by a solve of their own; the
 //	                            robot's frame keeps its place, where it stands in the datum is kept beside it
 //	tick                        what is due: ties again that are not safe yet, a new summary, the old one again, a heartbeat
@@ -18,6 +19,6 @@
 // that its linearisation matters: when condensing again would change the cost by more than three parts in 1e12. Otherwise the
 // correction is answered by a heartbeat.
 //
-// The robot's own poses never jump: they stay in the session's frame, and [Agent.Poses] gives them there together with the
+// The robot's own poses never jump: they stay in the session's frame, and [Agent.Tracks] gives them there together with the
 // transform into the datum.
 package agent
