@@ -134,8 +134,8 @@ var badFolders = []struct {
 		"robots/r1/relative.csv:2: column c_x_y..c_ry_rz: found a correlation matrix that is not positive semidefinite (smallest eigenvalue -0.8, largest 1.9), expected one that is positive definite"},
 
 	// Ties
-	{"tie of another kind", "space.good", "ties.csv", swap("pose,-4", "range,-4"),
-		`ties.csv:3: column kind: found "range", expected one of the kinds that this version reads: pose`},
+	{"tie of another kind", "space.good", "ties.csv", swap("pose,-4", "heading,-4"),
+		`ties.csv:3: column kind: found "heading", expected pose, position, range_bearing, range or bearing`},
 	{"tie id twice", "space.good", "ties.csv", swap("a.2", "a.1"),
 		`ties.csv:3: column id: found "a.1" a second time, expected each id once`},
 	{"tie id", "space.good", "ties.csv", swap("a.2", ".2"),

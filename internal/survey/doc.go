@@ -4,7 +4,10 @@
 //	survey.yaml               what and where: dimension, datum, robots and their sessions
 //	robots/ID/keyframes.csv   the keyframes of one robot, in the frame of their session
 //	robots/ID/relative.csv    odometry and loop closures of that robot
+//	robots/ID/sightings.csv   optional: where that robot has seen marks
+//	marks.csv                 optional: marks, control points and check points
 //	ties.csv                  measurements between robots (or between sessions of one robot)
+//	rulings.csv               optional: what a person has decided on ties, robots and sessions
 //	truth.csv                 optional: true poses, never used in fitting
 //	results/                  what was computed from the survey; ignored on reading
 //
@@ -54,6 +57,7 @@ const (
 	maxText       = 128 // bytes of a name or source
 	maxRobotID    = 32  // characters
 	maxTieID      = 128 // characters
+	maxNote       = 256 // bytes of the note of a ruling
 
 	maxMetres = 1e9   // coordinate, absolute
 	minSigma  = 1e-12 // m or rad

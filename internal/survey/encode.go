@@ -6,6 +6,7 @@ import (
 	"math"
 	"os"
 	"path/filepath"
+	"slices"
 	"strconv"
 )
 
@@ -155,26 +156,66 @@ func encodeRelatives(all []Relative) []byte {
 	return w.b
 }
 
-func encodeTies(all []Tie) []byte {
+func encodeTies(all []Tie, dim int) []byte {
 	var used correlated
+	var from, polar, sensor, target bool // columns that some row needs
 	for i := range all {
-		used.add(&all[i].Cov)
+		m := &all[i]
+		if m.Kind == WholePose {
+			used.add(&m.Cov)
+			continue
+		}
+		c := m.Sight.cov()
+		used.add(&c)
+		from = from || m.FromByStamp
+		polar = polar || m.Kind != Position
+		sensor = sensor || m.Sight.Sensor != ""
+		target = target || m.Sight.Target != ""
 	}
+	unused := used.skip(tieCov)
 	var w csvWriter
-	w.header(tieColumns, used.skip(tieCov))
+	w.header(tieColumns, func(c int) bool {
+		return unused(c) || c == tieFromStamp && !from || tiePolar <= c && c < tiePolar+6 && !polar ||
+			c == tieSensor && !sensor || c == tieTarget && !target
+	})
 	for i := range all {
 		m := &all[i]
 		w.text(m.ID)
 		w.text(m.FromRobot)
 		w.int(int64(m.FromSession))
-		w.int(m.FromKey)
+		w.optional(m.FromKey, !m.FromByStamp)
+		if from {
+			w.optional(m.FromStampNS, m.FromByStamp)
+		}
 		w.text(m.ToRobot)
 		w.int(int64(m.ToSession))
 		w.optional(m.ToKey, !m.ToByStamp)
 		w.optional(m.ToStampNS, m.ToByStamp)
-		w.text("pose")
-		w.pose(m.Pose)
-		w.cov(&m.Cov, &used)
+		w.text(m.Kind.String())
+		if m.Kind == WholePose {
+			w.pose(m.Pose)
+			w.cov(&m.Cov, &used)
+		} else {
+			w.position(&m.Sight.Value, m.Kind)
+			w.empty(4)
+			w.position(&m.Sight.Sigma, m.Kind)
+			w.empty(3)
+			c := m.Sight.cov()
+			for k, v := range c.Corr {
+				if used[k] {
+					w.optionalFloat(v, m.Kind == Position && slices.Contains(sightCorr[:], k))
+				}
+			}
+		}
+		if polar {
+			w.polar(&m.Sight, m.Kind, dim)
+		}
+		if sensor {
+			w.text(m.Sight.Sensor)
+		}
+		if target {
+			w.text(m.Sight.Target)
+		}
 		w.text(m.Source)
 		w.optional(m.StampNS, m.HasStamp)
 		w.end()
@@ -206,18 +247,25 @@ func writeTable(path string, text []byte) error {
 	if len(text) < gzipAbove {
 		return writeFile(path, text)
 	}
-	var b bytes.Buffer
-	z, err := gzip.NewWriterLevel(&b, gzip.BestSpeed)
+	text, err := compress(text)
 	if err != nil {
 		return err
 	}
+	return writeFile(path+".gz", text)
+}
+
+// compress gzips text, the same text to the same bytes.
+func compress(text []byte) ([]byte, error) {
+	var b bytes.Buffer
+	z, err := gzip.NewWriterLevel(&b, gzip.BestSpeed)
+	if err != nil {
+		return nil, err
+	}
 	if _, err := z.Write(text); err != nil {
-		return err
+		return nil, err
 	}
-	if err := z.Close(); err != nil {
-		return err
-	}
-	return writeFile(path+".gz", b.Bytes())
+	err = z.Close()
+	return b.Bytes(), err
 }
 
 // writeFile writes a new file and has it on the disk when it returns.

@@ -14,6 +14,14 @@ func (t *table) text(c int) []byte {
 	return nil
 }
 
+// shown returns the field in column c as a message shows it.
+func (t *table) shown(c int) string {
+	if t.at[c] < 0 {
+		return "no such column"
+	}
+	return quote(string(t.fields[t.at[c]]))
+}
+
 // int64 returns the integer in column c and whether it is one.
 func (t *table) int64(c int) (int64, bool) {
 	v, err := strconv.ParseInt(string(t.text(c)), 10, 64)
@@ -46,7 +54,7 @@ func (t *table) float(c int) (float64, bool) {
 	f := t.text(c)
 	v, ok := parseFloat(f)
 	if !ok {
-		t.faultAt(c, quote(string(f)), "a finite decimal number")
+		t.faultAt(c, t.shown(c), "a finite decimal number")
 	}
 	return v, ok
 }

@@ -10,22 +10,33 @@ import (
 // FuzzRead puts anything in place of one file of a good folder. What Read then
 // takes must come back from Write and Read unchanged.
 func FuzzRead(f *testing.F) {
-	files := []string{"survey.yaml", "robots/carrier_1/keyframes.csv", "robots/carrier_1/relative.csv", "ties.csv", "truth.csv", "ties.csv.gz"}
-	good := filepath.Join("testdata", "space.good")
-	for i, name := range files[:5] {
-		b, err := os.ReadFile(filepath.Join(good, name))
+	files := []string{"survey.yaml", "robots/carrier_1/keyframes.csv", "robots/carrier_1/relative.csv", "ties.csv", "truth.csv", "ties.csv.gz",
+		"ties.csv", "marks.csv", "rulings.csv", "robots/r1/sightings.csv"}
+	const sights = 6 // from there on of the folder with sights
+	folder := func(i int) string {
+		if i < sights {
+			return "space.good"
+		}
+		return "sights.good"
+	}
+	for i, name := range files {
+		if i == 5 {
+			continue
+		}
+		b, err := os.ReadFile(filepath.Join("testdata", folder(i), name))
 		if err != nil {
 			f.Fatal(err)
 		}
 		f.Add(uint8(i), b)
-		if name == "ties.csv" {
+		if i == 3 {
 			f.Add(uint8(5), gzipped(f, string(b)))
 		}
 	}
-	dir := copyOf(f, "space.good")
+	folders := map[string]string{"space.good": copyOf(f, "space.good"), "sights.good": copyOf(f, "sights.good")}
 	out := filepath.Join(f.TempDir(), "out")
 	f.Fuzz(func(t *testing.T, which uint8, data []byte) {
-		name := files[int(which)%len(files)]
+		i := int(which) % len(files)
+		name, dir := files[i], folders[folder(i)]
 		replaced := name
 		if name == "ties.csv.gz" {
 			replaced = "ties.csv"
@@ -48,11 +59,18 @@ func FuzzRead(f *testing.F) {
 			return
 		}
 		for _, m := range s.Ties {
-			if _, err := m.Cov.Information(3); err != nil {
+			_, err := m.Cov.Information(3)
+			if m.Kind != WholePose {
+				_, err = m.Sight.Information(3)
+			}
+			if err != nil {
 				t.Fatalf("tie %s was read, but %v", m.ID, err)
 			}
 		}
 		s.Warnings = nil
+		if err := os.RemoveAll(out); err != nil { // its rulings are none of s
+			t.Fatal(err)
+		}
 		if err := Write(out, s); err != nil {
 			t.Fatal(err)
 		}
@@ -63,7 +81,7 @@ func FuzzRead(f *testing.F) {
 		if !sameMeta(&back.Meta, &s.Meta) {
 			t.Fatalf("meta data %+v, want %+v", back.Meta, s.Meta)
 		}
-		back.Meta = s.Meta
+		back.Meta, back.Warnings = s.Meta, nil
 		if !reflect.DeepEqual(back, s) {
 			t.Fatalf("got %+v, want %+v", back, s)
 		}

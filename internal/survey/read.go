@@ -16,7 +16,10 @@ const (
 	robotsName    = "robots"
 	keyframesName = "keyframes.csv"
 	relativeName  = "relative.csv"
+	sightingsName = "sightings.csv"
+	marksName     = "marks.csv"
 	tiesName      = "ties.csv"
+	rulingsName   = "rulings.csv"
 	truthName     = "truth.csv"
 	resultsName   = "results"
 )
@@ -32,22 +35,27 @@ func Read(dir string) (*Survey, error) {
 		return nil, fmt.Errorf("survey: %s is a file, expected a survey folder", dir)
 	}
 	r := &reader{root: dir}
-	if err := r.meta(); err != nil {
-		return nil, err
-	}
-	if err := r.sink.err(); err != nil {
-		return nil, err // the tables make no sense without it
-	}
-	for _, step := range []func() error{r.robots, r.ties, r.truth, r.others} {
-		if err := step(); err != nil {
-			return nil, err
-		}
-	}
-	if err := r.sink.err(); err != nil {
+	if err := r.read(); err != nil {
 		return nil, err
 	}
 	r.survey.Warnings = r.sink.warnings
 	return &r.survey, nil
+}
+
+// read reads the whole folder.
+func (r *reader) read() error {
+	if err := r.meta(); err != nil {
+		return err
+	}
+	if err := r.sink.err(); err != nil {
+		return err // the tables make no sense without it
+	}
+	for _, step := range []func() error{r.robots, r.marks, r.sights, r.ties, r.rulings, r.truth, r.others} {
+		if err := step(); err != nil {
+			return err
+		}
+	}
+	return r.sink.err()
 }
 
 // unit is one session of one robot.
@@ -73,6 +81,10 @@ type reader struct {
 	// keys holds the keyframes of each robot, also those of rows with another
 	// mistake; nil for a robot whose keyframes could not all be told.
 	keys map[string]map[key]bool
+
+	markNames map[string]bool // nil when they could not all be told
+	tieNames  map[string]bool // likewise
+	warned    map[string]bool // what is to be said once
 }
 
 // rows calls row for each row of a table and reports whether it saw them all.
@@ -106,6 +118,16 @@ func (r *reader) robots() error {
 			return err
 		}
 		r.survey.Robots = append(r.survey.Robots, robot)
+	}
+	return nil
+}
+
+// sights reads what all robots have seen of marks.
+func (r *reader) sights() error {
+	for i := range r.survey.Robots {
+		if err := r.sightings(&r.survey.Robots[i]); err != nil {
+			return err
+		}
 	}
 	return nil
 }
@@ -226,7 +248,7 @@ func (r *reader) others() error {
 	}
 	for _, name := range names {
 		switch strings.TrimSuffix(name, ".gz") {
-		case metaName, robotsName, tiesName, truthName, resultsName:
+		case metaName, robotsName, marksName, tiesName, rulingsName, truthName, resultsName:
 		default:
 			r.sink.warn("%s: not read by this version", name)
 		}
@@ -246,7 +268,7 @@ func (r *reader) others() error {
 		}
 		for _, name := range names {
 			switch strings.TrimSuffix(name, ".gz") {
-			case keyframesName, relativeName:
+			case keyframesName, relativeName, sightingsName:
 			default:
 				r.sink.warn("%s/%s/%s: not read by this version", robotsName, id, name)
 			}

@@ -17,9 +17,11 @@ var (
 	keyframeColumns = columns([]column{{name: "session"}, {name: "id"}, {name: "stamp_ns"}}, poseColumns)
 	relativeColumns = columns([]column{{name: "session"}, {name: "from"}, {name: "to"}, {name: "kind"}},
 		poseColumns, sigmaColumns, corrColumns)
-	tieColumns = columns([]column{{name: "id"}, {name: "from_robot"}, {name: "from_session"}, {name: "from_key"},
+	// What a row of a tie has to have besides depends on its kind.
+	tieColumns = columns([]column{{name: "id"}, {name: "from_robot"}, {name: "from_session"}, {name: "from_key"}, {name: "from_stamp_ns", optional: true},
 		{name: "to_robot"}, {name: "to_session"}, {name: "to_key"}, {name: "to_stamp_ns", optional: true}, {name: "kind"}},
-		poseColumns, sigmaColumns, corrColumns, []column{{name: "source", optional: true}, {name: "stamp_ns", optional: true}})
+		optional(poseColumns), optional(sigmaColumns), corrColumns, polarColumns,
+		[]column{{name: "sensor", optional: true}, {name: "target", optional: true}, {name: "source", optional: true}, {name: "stamp_ns", optional: true}})
 	truthColumns = columns([]column{{name: "robot"}, {name: "session"}, {name: "key"}, {name: "stamp_ns", optional: true}}, poseColumns)
 )
 
@@ -30,11 +32,25 @@ const (
 
 	relativeCov = relativePose + 7
 
-	tieID, tieFromRobot, tieFromSession, tieFromKey           = 0, 1, 2, 3
-	tieToRobot, tieToSession, tieToKey, tieToStamp, tieKind   = 4, 5, 6, 7, 8
-	tiePose, tieCov, tieSource, tieStamp                      = 9, 16, 37, 38
+	tieID, tieFromRobot, tieFromSession, tieFromKey, tieFromStamp = 0, 1, 2, 3, 4
+	tieToRobot, tieToSession, tieToKey, tieToStamp, tieKind       = 5, 6, 7, 8, 9
+	tiePose, tieCov, tiePolar                                     = 10, 17, 38
+	tieSensor, tieTarget, tieSource, tieStamp                     = 44, 45, 46, 47
+
 	truthRobot, truthSession, truthKey, truthStamp, truthPose = 0, 1, 2, 3, 4
 )
+
+var tieSightAt = sightAt{position: tiePose, positionSigma: tieCov, polar: tiePolar, polarSigma: tiePolar + 3,
+	corr: [3]int{tieCov + 6 + sightCorr[0], tieCov + 6 + sightCorr[1], tieCov + 6 + sightCorr[2]}}
+
+// optional returns the columns as such that may be absent.
+func optional(all []column) []column {
+	out := append([]column(nil), all...)
+	for i := range out {
+		out[i].optional = true
+	}
+	return out
+}
 
 func columns(parts ...[]column) []column {
 	var all []column
@@ -93,16 +109,9 @@ func quatNorm(q [4]float64) float64 {
 func (t *table) cov(c int) (v Cov) {
 	sound := true
 	for i := range 6 {
-		f := t.text(c + i)
-		s, ok := parseFloat(f)
-		switch {
-		case string(f) == "inf" || string(f) == "+inf" || string(f) == "Inf" || string(f) == "+Inf":
-			s = math.Inf(1)
-		case !ok || s < minSigma || s > maxSigma:
-			t.faultAt(c+i, quote(string(f)), fmt.Sprintf("a number from %g to %g, or inf for a component that was not measured", minSigma, maxSigma))
-			sound = false
-		}
+		s, ok := t.sigma(c+i, true)
 		v.Sigma[i] = s
+		sound = sound && ok
 	}
 	correlated := false
 	k := 0
@@ -111,18 +120,9 @@ func (t *table) cov(c int) (v Cov) {
 			if len(t.text(c+6+k)) == 0 {
 				continue // absent means none
 			}
-			r, ok := t.float(c + 6 + k)
-			switch {
-			case !ok:
-				sound = false
-			case math.Abs(r) > 1:
-				t.faultAt(c+6+k, strconv.FormatFloat(r, 'g', -1, 64), "a correlation from -1 to 1")
-				sound = false
-			case r != 0 && (math.IsInf(v.Sigma[i], 1) || math.IsInf(v.Sigma[j], 1)):
-				t.faultAt(c+6+k, strconv.FormatFloat(r, 'g', -1, 64), "0 where a sigma is inf")
-				sound = false
-			}
+			r, ok := t.correlation(c+6+k, v.Sigma[i], v.Sigma[j])
 			v.Corr[k] = r
+			sound = sound && ok
 			correlated = correlated || r != 0
 		}
 	}
@@ -132,4 +132,38 @@ func (t *table) cov(c int) (v Cov) {
 		}
 	}
 	return v
+}
+
+var sigmaRule = fmt.Sprintf("a number from %g to %g", minSigma, maxSigma)
+
+// sigma reads a standard deviation and reports whether it is one.
+func (t *table) sigma(c int, mayBeInf bool) (float64, bool) {
+	f := t.text(c)
+	s, ok := parseFloat(f)
+	switch {
+	case mayBeInf && (string(f) == "inf" || string(f) == "+inf" || string(f) == "Inf" || string(f) == "+Inf"):
+		return math.Inf(1), true
+	case ok && minSigma <= s && s <= maxSigma:
+		return s, true
+	case mayBeInf:
+		t.faultAt(c, t.shown(c), sigmaRule+", or inf for a component that was not measured")
+	default:
+		t.faultAt(c, t.shown(c), sigmaRule)
+	}
+	return s, false
+}
+
+// correlation reads the correlation of two components with the given sigmas and reports whether it is one.
+func (t *table) correlation(c int, si, sj float64) (float64, bool) {
+	r, ok := t.float(c)
+	switch {
+	case !ok:
+	case math.Abs(r) > 1:
+		t.faultAt(c, strconv.FormatFloat(r, 'g', -1, 64), "a correlation from -1 to 1")
+		ok = false
+	case r != 0 && (math.IsInf(si, 1) || math.IsInf(sj, 1)):
+		t.faultAt(c, strconv.FormatFloat(r, 'g', -1, 64), "0 where a sigma is inf")
+		ok = false
+	}
+	return r, ok
 }

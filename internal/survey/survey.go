@@ -5,8 +5,12 @@ package survey
 type Survey struct {
 	Meta   Meta
 	Robots []Robot
+	Marks  []Mark
 	Ties   []Tie
 	Truth  []TruthPose
+
+	// Rulings are in the order in which they were made; see [Survey.TieRulings].
+	Rulings []Ruling
 
 	// Warnings are what Read left aside, one sentence each: columns and files
 	// that this version does not know. Write ignores them.
@@ -18,6 +22,7 @@ type Robot struct {
 	ID        string
 	Keyframes []Keyframe
 	Relatives []Relative
+	Sightings []Sighting
 }
 
 // Pose is the pose of a second frame in a first: translation in metres and
@@ -71,13 +76,19 @@ type Relative struct {
 	Cov      Cov // in the frame of To
 }
 
-// Tie is a measured pose of a keyframe of one robot in a keyframe of another,
-// or of another session of the same robot.
+// Tie is what one robot has measured of another, or of itself in another
+// session: a pose of its base_link, or a sight of it.
 type Tie struct {
-	ID          string
+	ID string
+
+	// The near end, which measured: keyframe FromKey or, if FromByStamp, the
+	// moment FromStampNS of the clock of FromRobot. A tie of kind WholePose has a
+	// keyframe.
 	FromRobot   string
 	FromSession uint32
 	FromKey     int64
+	FromStampNS int64
+	FromByStamp bool
 
 	// The far end: keyframe ToKey or, if ToByStamp, the moment ToStampNS of
 	// the clock of ToRobot.
@@ -87,8 +98,11 @@ type Tie struct {
 	ToStampNS int64
 	ToByStamp bool
 
-	Pose     Pose
-	Cov      Cov    // in the frame of the far end
+	Kind  Kind
+	Pose  Pose  // of the far end in the near one, for kind WholePose
+	Cov   Cov   // in the frame of the far end, for kind WholePose
+	Sight Sight // for any other kind
+
 	Source   string // the sensor or program that made it
 	StampNS  int64  // when it was made
 	HasStamp bool

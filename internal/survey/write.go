@@ -18,13 +18,12 @@ import (
 // then put in place, so dir holds the whole survey or what it held before. A
 // survey that Read would refuse is not written: the error is *Violations and
 // names the lines as they would have stood. Write refuses a dir that holds
-// anything else than a survey, or parts of one that it does not write, such as
-// rulings.csv.
+// anything else than a survey, or rulings that s does not have.
 func Write(dir string, s *Survey) error {
 	if err := s.checkNames(); err != nil {
 		return err
 	}
-	if err := replaceable(dir); err != nil {
+	if err := replaceable(dir, s); err != nil {
 		return err
 	}
 	dir, err := resolve(dir)
@@ -114,7 +113,7 @@ func (s *Survey) checkNames() error {
 // replaceable returns an error unless dir is absent, empty, or a survey folder
 // with nothing in it that Write would not write again or that is not computed
 // from what it writes.
-func replaceable(dir string) error {
+func replaceable(dir string, s *Survey) error {
 	info, err := os.Stat(dir)
 	if errors.Is(err, fs.ErrNotExist) {
 		return nil
@@ -142,10 +141,13 @@ func replaceable(dir string) error {
 	}
 	for _, e := range entries {
 		switch strings.TrimSuffix(e.Name(), ".gz") {
-		case metaName, robotsName, tiesName, truthName, resultsName:
+		case metaName, robotsName, marksName, tiesName, rulingsName, truthName, resultsName:
 		default:
 			return refuse(e.Name())
 		}
+	}
+	if err := KeepsRulings(dir, s); err != nil {
+		return err
 	}
 	robots, err := os.ReadDir(filepath.Join(dir, robotsName))
 	if err != nil && !errors.Is(err, fs.ErrNotExist) {
@@ -158,7 +160,7 @@ func replaceable(dir string) error {
 		}
 		for _, f := range files {
 			switch strings.TrimSuffix(f.Name(), ".gz") {
-			case keyframesName, relativeName:
+			case keyframesName, relativeName, sightingsName:
 			default:
 				return refuse(robotsName + "/" + robot.Name() + "/" + f.Name())
 			}
@@ -191,8 +193,17 @@ func writeAll(dir string, s *Survey) error {
 		folder(at)
 		put(filepath.Join(at, keyframesName), encodeKeyframes(robot.Keyframes))
 		put(filepath.Join(at, relativeName), encodeRelatives(robot.Relatives))
+		if len(robot.Sightings) > 0 {
+			put(filepath.Join(at, sightingsName), encodeSightings(robot.Sightings, s.Meta.Dimension))
+		}
 	}
-	put(tiesName, encodeTies(s.Ties))
+	if len(s.Marks) > 0 {
+		put(marksName, encodeMarks(s.Marks))
+	}
+	put(tiesName, encodeTies(s.Ties, s.Meta.Dimension))
+	if len(s.Rulings) > 0 {
+		put(rulingsName, encodeRulings(s.Rulings))
+	}
 	if len(s.Truth) > 0 {
 		put(truthName, encodeTruth(s.Truth))
 	}

@@ -64,9 +64,9 @@ func TestWriteFollowsALink(t *testing.T) {
 
 func TestWriteRefusesToLoseThings(t *testing.T) {
 	for name, put := range map[string]string{
-		"rulings.csv":                  "holds rulings.csv, which would be lost",
+		"rulings.csv":                  "holds rulings.csv with what a person has decided, which would be lost",
 		"photo.jpg":                    "holds photo.jpg, which would be lost",
-		"robots/s-2/sightings.csv":     "holds robots/s-2/sightings.csv, which would be lost",
+		"robots/s-2/scans.bin":         "holds robots/s-2/scans.bin, which would be lost",
 		"robots/other/keyframes.csv~":  "holds robots/other/keyframes.csv~, which would be lost",
 		"../elsewhere/of/another/file": "is not empty and holds no survey.yaml",
 	} {
