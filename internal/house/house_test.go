@@ -35,7 +35,7 @@ var (
 		"internal/house":       nil,
 		"internal/posegraph":   ground,
 		"internal/evidence":    {"internal/lie"},
-		"internal/adjust":      append([]string{"internal/posegraph", "internal/survey"}, ground...),
+		"internal/adjust":      append([]string{"internal/survey"}, estimation...),
 		"internal/reliability": nil,
 		"internal/audit":       append([]string{"internal/adjust", "internal/reliability", "internal/survey", "internal/report"}, estimation...),
 		"partition":            append([]string{"internal/posegraph"}, ground...),
