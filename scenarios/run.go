@@ -262,6 +262,9 @@ func FrontEnd(s *survey.Survey, robot int, e Event) (agent.Event, error) {
 		return agent.Relative{Session: m.Session, From: m.From, To: m.To, Z: adjust.Pose(m.Pose), Info: info}, err
 	case TieEvent:
 		t := &s.Ties[e.Index]
+		if t.Kind != survey.WholePose {
+			return nil, fmt.Errorf("tie %s is of kind %s, expected a pose", t.ID, t.Kind)
+		}
 		info, err := t.Cov.Information(s.Meta.Dimension)
 		return agent.Tie{
 			ID: t.ID, From: msgs.KeyRef{Robot: t.FromRobot, Session: t.FromSession, ID: t.FromKey},

@@ -16,6 +16,9 @@ func SplitSurvey(s *survey.Survey, k int, seed uint64) (*survey.Survey, partitio
 		return nil, quality, fmt.Errorf("the survey has %d robots and %d ties: one robot without ties can be split", len(s.Robots), len(s.Ties))
 	}
 	r := &s.Robots[0]
+	if len(r.Sightings) > 0 {
+		return nil, quality, fmt.Errorf("robot %s has %d sightings of marks: a survey without them can be split", r.ID, len(r.Sightings))
+	}
 	index := make(map[int64]int32, len(r.Keyframes))
 	for i := range r.Keyframes {
 		if r.Keyframes[i].Session != r.Keyframes[0].Session {

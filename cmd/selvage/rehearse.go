@@ -117,6 +117,9 @@ func (c *rehearseCmd) plan() (func() (rehearsal, error), error) {
 		if err != nil {
 			return nil, err
 		}
+		if err := s.PosesOnly(); err != nil {
+			return nil, badInput("%s: %w", c.Survey, err)
+		}
 		if len(s.Robots) == 0 {
 			return nil, badInput("%s has no robots: there is nothing to rehearse", c.Survey)
 		}

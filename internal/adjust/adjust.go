@@ -51,6 +51,9 @@ const (
 // New builds the pose graph of s with the ties for which held is true; nil holds all. Ties by stamp go to the keyframe at that
 // moment, which is made between two others where there is none.
 func New(s *survey.Survey, held func(tie int) bool) (*Problem, error) {
+	if err := s.PosesOnly(); err != nil {
+		return nil, err
+	}
 	keyframes, factors, byStamp := 0, len(s.Ties), false
 	for i := range s.Robots {
 		keyframes += len(s.Robots[i].Keyframes)
