@@ -17,13 +17,14 @@ import (
 // Config is fixed for the life of a coordinator.
 type Config struct {
 	Fleet       string
-	Dim         int    // of the survey: 2 or 3
-	Incarnation uint64 // of the base's store
-	Term        uint64 // of the lease under which it speaks
-	SolveNS     int64  // least time between two solutions, nanoseconds
-	PromptNS    int64  // the same once every robot has answered the last solution and nothing is missing
-	RetryNS     int64  // first waiting time before something unanswered is sent again; it doubles up to sixteen times
-	HoldAll     bool   // take every tie as true
+	Dim         int                // of the survey: 2 or 3
+	Incarnation uint64             // of the base's store
+	Term        uint64             // of the lease under which it speaks
+	SolveNS     int64              // least time between two solutions, nanoseconds
+	PromptNS    int64              // the same once every robot has answered the last solution and nothing is missing
+	RetryNS     int64              // first waiting time before something unanswered is sent again; it doubles up to sixteen times
+	HoldAll     bool               // take every tie as true
+	Rulings     map[TieName]Ruling // what a person has decided
 	Evidence    evidence.Options
 }
 
@@ -149,6 +150,7 @@ type tie struct {
 	regular bool // the information has full rank
 	finding Finding
 	told    msgs.VerdictKind
+	ruled   *Ruling // nil: it is left to the evidence
 }
 
 // Finding is the present verdict on a tie.
@@ -267,6 +269,9 @@ func (c *Coordinator) takeTie(m *msgs.Tie) error {
 	t := &tie{msg: m, z: lie.FromQuat(m.Pose.T, m.Pose.Q), info: widen(m.Info, c.cfg.Dim)}
 	t.cov, t.regular = invert(&t.info, c.cfg.Dim)
 	t.finding = Finding{Tie: m.ID, From: m.From, To: m.To, Verdict: msgs.Open, Reason: "not yet weighed", SinceNS: c.now}
+	if r, ruled := c.cfg.Rulings[TieName{r.name, m.ID}]; ruled {
+		t.ruled = &r
+	}
 	c.ties[id] = t
 	c.order = append(c.order, t)
 	c.dirty = true

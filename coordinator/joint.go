@@ -61,6 +61,9 @@ func (c *Coordinator) solve() ([]Publish, error) {
 		case err != nil:
 			return nil, err
 		default:
+			if err := c.weighRulings(j); err != nil {
+				return nil, err
+			}
 			return c.publish(j)
 		}
 	}
@@ -140,7 +143,7 @@ func (c *Coordinator) pose(n *network, w *weighed) (*joint, error) {
 		t := &n.ties[i]
 		j.factor[i] = -1
 		if w.island[t.from] != w.island[t.to] {
-			if t.finding.Verdict == msgs.Refused {
+			if t.finding.Verdict == msgs.Refused && t.ruled == nil {
 				t.judge(c.now, msgs.Open, "nothing held connects its two robots", t.finding.Evidence)
 			}
 			continue
@@ -461,7 +464,7 @@ func (c *Coordinator) giveUp(j *joint, w *weighed) error {
 	o.Tolerance = 1e-6
 	var active []int
 	for i := range j.n.ties {
-		if w.held[i] && j.factor[i] >= 0 {
+		if w.held[i] && j.factor[i] >= 0 && j.n.ties[i].ruled == nil {
 			active = append(active, i)
 		}
 	}
@@ -517,7 +520,7 @@ func (c *Coordinator) test(j *joint, w *weighed) (readmitted bool, err error) {
 	limit := c.limit
 	var idle []int
 	for i := range j.n.ties {
-		if j.factor[i] >= 0 && !w.held[i] {
+		if j.factor[i] >= 0 && !w.held[i] && j.n.ties[i].ruled == nil {
 			idle = append(idle, i)
 		}
 	}

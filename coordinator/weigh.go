@@ -20,9 +20,19 @@ type weighed struct {
 
 // weigh decides which ties to believe.
 func (c *Coordinator) weigh(n *network) weighed {
+	w := c.believe(n)
+	c.rule(n, &w)
+	return w
+}
+
+// believe decides on the ties that nobody has ruled on.
+func (c *Coordinator) believe(n *network) weighed {
 	if c.cfg.HoldAll {
 		w := weighed{held: make([]bool, len(n.ties))}
 		for i := range n.ties {
+			if n.ties[i].ruled != nil {
+				continue
+			}
 			if n.loose(i) {
 				n.ties[i].judge(c.now, msgs.Open, looseReason, msgs.Evidence{})
 				continue
@@ -43,7 +53,7 @@ func (c *Coordinator) weigh(n *network) weighed {
 		touched[u] = map[int]int{}
 	}
 	for i := range n.ties {
-		if t := &n.ties[i]; t.regular {
+		if t := &n.ties[i]; t.regular && t.ruled == nil {
 			touched[t.from][t.fromNode], touched[t.to][t.toNode] = 0, 0
 		}
 	}
@@ -55,6 +65,7 @@ func (c *Coordinator) weigh(n *network) weighed {
 	for i := range n.ties {
 		t := &n.ties[i]
 		switch {
+		case t.ruled != nil:
 		case !t.regular:
 			t.judge(c.now, msgs.Open, "measures too little of a pose to be weighed", msgs.Evidence{})
 		case n.loose(i):

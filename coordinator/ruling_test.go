@@ -1,0 +1,135 @@
+package coordinator
+
+import (
+	"strings"
+	"testing"
+
+	"selvage/msgs"
+)
+
+// ruled returns a change of settings that rules on one tie.
+func ruled(robot, id string, v msgs.VerdictKind, note string) func(c *Config) {
+	return func(c *Config) {
+		c.HoldAll = false
+		c.Rulings = map[TieName]Ruling{{robot, id}: {Verdict: v, By: "lead", Note: note}}
+	}
+}
+
+// threeRobots lets three robots meet in thirty places, with a tie of r1 at the end, number 11, that is off sideways.
+func threeRobots(b *base, off float64) {
+	var k []*track
+	for i, robot := range []string{"r1", "r2", "r3"} {
+		k = append(k, newTrack(robot, 1, 30, 3, uint64(i)))
+		b.summarise(k[i])
+	}
+	for i := 0; i < 30; i += 3 {
+		b.sees(k[0], i, k[1], 29-i)
+		b.sees(k[1], i+1, k[2], i)
+		b.sees(k[2], i+2, k[0], i+1)
+	}
+	b.hear("r1", msgs.KindTie, b.tie(k[0], 7, k[1], 5, off))
+}
+
+func finding(t *testing.T, b *base, robot, tie string) Finding {
+	t.Helper()
+	for _, f := range b.Findings() {
+		if f.From.Robot == robot && f.Tie == tie {
+			return f
+		}
+	}
+	t.Fatalf("no finding on %s", tie)
+	return Finding{}
+}
+
+// A false tie that a person holds stays in the solution and pulls at it; what it costs is told.
+func TestRuledHeld(t *testing.T) {
+	free, held := newBase(t, 3, func(c *Config) { c.HoldAll = false }), newBase(t, 3, ruled("r1", "r1-11", msgs.Held, "seen twice"))
+	threeRobots(free, 3)
+	threeRobots(held, 3)
+	free.tick(31)
+	held.tick(31)
+	if f := finding(t, free, "r1", "r1-11"); f.Verdict != msgs.Refused {
+		t.Fatalf("left to the evidence: %+v", f)
+	}
+	f := finding(t, held, "r1", "r1-11")
+	if f.Verdict != msgs.Held || !strings.HasPrefix(f.Reason, "ruled held by lead: seen twice; it contradicts the joint solution: misclosure ") || !(f.Statistic > f.Limit) || f.DoF != 6 {
+		t.Errorf("finding %+v", f)
+	}
+	worst := 0.0
+	for _, robot := range []string{"r2", "r3"} {
+		x, y := placed(t, free, robot), placed(t, held, robot)
+		for k := range x.Poses {
+			worst = max(worst, apart(x.Poses[k], y.Poses[k]))
+		}
+	}
+	if worst < 0.01 {
+		t.Errorf("the map moves by %g m only: the tie is not in it", worst)
+	}
+}
+
+// A true tie that a person refuses takes no part: the map is that without it, and it is told that it agrees with it.
+func TestRuledRefused(t *testing.T) {
+	for _, holdAll := range []bool{false, true} {
+		refused := newBase(t, 3, func(c *Config) {
+			ruled("r1", "r1-11", msgs.Refused, "behind glass")(c)
+			c.HoldAll = holdAll
+		})
+		threeRobots(refused, 0.2)
+		refused.tick(31)
+		f := finding(t, refused, "r1", "r1-11")
+		if f.Verdict != msgs.Refused || !strings.HasPrefix(f.Reason, "ruled refused by lead: behind glass; it agrees with the joint solution: misclosure ") || !(f.Statistic < f.Limit) || f.Statistic == 0 {
+			t.Errorf("hold all %v: finding %+v", holdAll, f)
+		}
+		other := newBase(t, 3, func(c *Config) {
+			ruled("r1", "r1-11", msgs.Refused, "behind glass")(c)
+			c.HoldAll = holdAll
+		})
+		threeRobots(other, 20)
+		other.tick(31)
+		if f := finding(t, other, "r1", "r1-11"); f.Verdict != msgs.Refused || !strings.Contains(f.Reason, "; it contradicts the joint solution: ") {
+			t.Errorf("hold all %v: finding %+v", holdAll, f)
+		}
+		for _, robot := range []string{"r2", "r3"} {
+			x, y := placed(t, refused, robot), placed(t, other, robot)
+			for k := range x.Poses {
+				if e := apart(x.Poses[k], y.Poses[k]); e > 1e-6 {
+					t.Fatalf("hold all %v: the refused tie moves %s by %g", holdAll, robot, e)
+				}
+			}
+		}
+	}
+}
+
+// One tie is not enough evidence to join two maps, but a person's word is; the other ties between them are then tested against it.
+func TestRulingJoins(t *testing.T) {
+	run := func(with func(c *Config)) *base {
+		b := newBase(t, 2, with)
+		x, y := newTrack("r1", 1, 10, 2, 1), newTrack("r2", 1, 10, 2, 2)
+		b.summarise(x)
+		b.summarise(y)
+		b.sees(x, 2, y, 1)
+		b.hear("r1", msgs.KindTie, b.tie(x, 8, y, 7, 9))
+		b.tick(31)
+		return b
+	}
+	b := run(func(c *Config) { c.HoldAll = false })
+	if f := finding(t, b, "r1", "r1-1"); f.Verdict != msgs.Open || placed(t, b, "r2").Joined {
+		t.Fatalf("without a ruling: %+v", f)
+	}
+	b = run(ruled("r1", "r1-1", msgs.Held, "by tape"))
+	if f := finding(t, b, "r1", "r1-1"); f.Verdict != msgs.Held || !placed(t, b, "r2").Joined {
+		t.Errorf("with a ruling: %+v", f)
+	}
+	if f := finding(t, b, "r1", "r1-2"); f.Verdict != msgs.Refused || !strings.HasPrefix(f.Reason, "contradicts what the other ties predict") {
+		t.Errorf("the tie that contradicts it: %+v", f)
+	}
+	b = run(ruled("r1", "r1-1", msgs.Refused, "by tape"))
+	if f := finding(t, b, "r1", "r1-1"); f.Verdict != msgs.Refused || placed(t, b, "r2").Joined ||
+		f.Reason != "ruled refused by lead: by tape; nothing held connects its two robots, so nothing else speaks about it" {
+		t.Errorf("refused: %+v", f)
+	}
+	b = run(ruled("r2", "r1-1", msgs.Held, "of another robot"))
+	if f := finding(t, b, "r1", "r1-1"); f.Verdict != msgs.Open {
+		t.Errorf("a ruling on a tie of another robot: %+v", f)
+	}
+}
