@@ -162,3 +162,35 @@ func dot(a, b []float64) float64 {
 	}
 	return sum
 }
+
+// Judge tests a measurement that is not part of the adjustment against what the adjustment predicts: with residual r, information
+// omega and predicted covariance p of the residual it returns r' (P + Omega^-1)^-1 r over what was measured, chi-square with dof
+// degrees of freedom if the measurement is sound.
+func Judge(r, omega, p []float64) (t float64, dof int) {
+	m := len(r)
+	g, _ := roots(omega, m)
+	if g == nil {
+		return 0, 0
+	}
+	_, q := g.Dims()
+	sum := redundancy(g, mat.NewDense(m, m, p)) // I - G' P G, of which I + G' P G is 2 I minus it
+	for i := range q {
+		for j := i; j < q; j++ {
+			x := -sum.At(i, j)
+			if i == j {
+				x += 2
+			}
+			sum.SetSym(i, j, x)
+		}
+	}
+	var white, solved mat.Dense
+	white.Mul(g.T(), mat.NewDense(m, 1, r))
+	var chol mat.Cholesky
+	if !chol.Factorize(sum) {
+		panic("reliability: a predicted covariance that is not positive semidefinite")
+	}
+	if err := chol.SolveTo(&solved, &white); err != nil {
+		panic("reliability: " + err.Error()) // eigenvalues are 1 or more
+	}
+	return mat.Dot(white.ColView(0), solved.ColView(0)), q
+}

@@ -1,0 +1,159 @@
+package audit
+
+import (
+	"bytes"
+	"encoding/csv"
+	"encoding/json"
+	"errors"
+	"fmt"
+	"math"
+	"os"
+	"path/filepath"
+	"strconv"
+
+	"selvage/internal/reliability"
+	"selvage/internal/report"
+)
+
+// MarshalJSON writes a missing figure as null.
+func (f Figure) MarshalJSON() ([]byte, error) {
+	if x := float64(f); math.IsNaN(x) || math.IsInf(x, 0) {
+		return []byte("null"), nil
+	}
+	return json.Marshal(float64(f))
+}
+
+// UnmarshalJSON reads what MarshalJSON wrote.
+func (f *Figure) UnmarshalJSON(b []byte) error {
+	if string(b) == "null" {
+		*f = Figure(math.NaN())
+		return nil
+	}
+	return json.Unmarshal(b, (*float64)(f))
+}
+
+// Write writes ties.csv, audit.json and audit.html to the folder dir, which is made. All three are complete before the first is put in
+// place. Made is the date and time with zone as the page prints it, version the program's.
+func (a *Audit) Write(dir, made, version string) error {
+	var page bytes.Buffer
+	if err := report.Write(&page, a.Page(made, version)); err != nil {
+		return err
+	}
+	object, err := json.MarshalIndent(a, "", "  ")
+	if err != nil {
+		return err
+	}
+	ties, err := a.csv()
+	if err != nil {
+		return err
+	}
+	if err := os.MkdirAll(dir, 0o755); err != nil {
+		return err
+	}
+	tmp, err := os.MkdirTemp(dir, ".new-")
+	if err != nil {
+		return err
+	}
+	defer os.RemoveAll(tmp)
+	files := []struct {
+		name string
+		text []byte
+	}{{"ties.csv", ties}, {"audit.json", append(object, '\n')}, {"audit.html", page.Bytes()}}
+	for _, f := range files {
+		if err := os.WriteFile(filepath.Join(tmp, f.name), f.text, 0o644); err != nil {
+			return err
+		}
+	}
+	for _, f := range files {
+		err = errors.Join(err, os.Rename(filepath.Join(tmp, f.name), filepath.Join(dir, f.name)))
+	}
+	return err
+}
+
+// csv writes the ties as a table, one row each in the order of the survey. Empty cells are figures that do not exist.
+func (a *Audit) csv() ([]byte, error) {
+	var b bytes.Buffer
+	fmt.Fprintf(&b, "# audit of %s, datum %s; residuals and detectable errors along the axes of the far end; detectable: alpha %g, power %g; shift relative to the gauge keyframe\n",
+		a.Survey, a.Datum, reliability.Alpha, reliability.Power)
+	names := []string{"x", "y", "z", "rx", "ry", "rz"}
+	if a.Dimension == 2 {
+		names = []string{"x", "y", "rz"}
+	}
+	unit := func(c int) string {
+		if names[c][0] == 'r' {
+			return "_rad"
+		}
+		return "_m"
+	}
+	head := []string{"tie", "from_robot", "from_session", "from_key", "to_robot", "to_session", "to_key", "verdict", "reason", "status", "bridge", "single_place", "set"}
+	for c, n := range names {
+		head = append(head, "r_"+n+unit(c))
+	}
+	head = append(head, "residual_m", "residual_rad")
+	for _, n := range names {
+		head = append(head, "w_"+n)
+	}
+	head = append(head, "statistic", "dof", "p", "bound", "redundancy", "redundancy_translation", "redundancy_rotation")
+	for c, n := range names {
+		head = append(head, "detectable_"+n+unit(c))
+	}
+	head = append(head, "shift_m", "shift_is", "shift_component", "shift_robot", "shift_session", "shift_key", "gauge_robot", "gauge_session", "gauge_key", "leave_one_out_m", "leave_one_out_rad")
+	w := csv.NewWriter(&b)
+	if err := w.Write(head); err != nil {
+		return nil, err
+	}
+	number := func(x *float64) string {
+		if x == nil || math.IsNaN(*x) || math.IsInf(*x, 0) {
+			return ""
+		}
+		return strconv.FormatFloat(*x, 'g', -1, 64)
+	}
+	for k := range a.Ties {
+		t := &a.Ties[k]
+		set := ""
+		if t.Set > 0 {
+			set = strconv.Itoa(t.Set)
+		}
+		row := []string{t.ID, t.From.Robot, fmt.Sprint(t.From.Session), fmt.Sprint(t.From.Key), t.To.Robot, fmt.Sprint(t.To.Session), fmt.Sprint(t.To.Key),
+			t.Verdict, t.Reason, string(t.Status), strconv.FormatBool(t.Bridge), strconv.FormatBool(t.Place), set}
+		for c := range names {
+			row = append(row, number(at(t.Residual, c)))
+		}
+		row = append(row, number(t.ResidualM), number(t.ResidualRad))
+		for c := range names {
+			row = append(row, number(at(t.W, c)))
+		}
+		row = append(row, number(t.T), strconv.Itoa(t.DoF), number(t.P), number(t.Bound), number(t.Redundancy), number(t.RedundancyTranslation), number(t.RedundancyRotation))
+		for c := range names {
+			row = append(row, number(at(t.Detectable, c)))
+		}
+		if s := t.Shift; s != nil {
+			is := "bound"
+			where := []string{"", "", ""}
+			if s.Exact {
+				is = "exact"
+			}
+			if s.At != nil {
+				where = []string{s.At.Robot, fmt.Sprint(s.At.Session), fmt.Sprint(s.At.Key)}
+			}
+			row = append(row, number(&s.M), is, s.Component, where[0], where[1], where[2], s.Gauge.Robot, fmt.Sprint(s.Gauge.Session), fmt.Sprint(s.Gauge.Key))
+		} else {
+			row = append(row, make([]string, 9)...)
+		}
+		row = append(row, number(t.ApartM), number(t.ApartRad))
+		if err := w.Write(row); err != nil {
+			return nil, err
+		}
+	}
+	w.Flush()
+	return b.Bytes(), w.Error()
+}
+
+// at returns a component, nil where there is none.
+func at[T ~float64](all []T, c int) *float64 {
+	if c >= len(all) {
+		return nil
+	}
+	x := float64(all[c])
+	return &x
+}
