@@ -151,7 +151,7 @@ func Virtual(ctx context.Context, o *Outing, set Settings) (*Run, error) {
 	r.track = newTruthIndex(o.Survey)
 	dim := o.Survey.Meta.Dimension
 	config := coordinator.DefaultConfig(fleetName, dim)
-	config.HoldAll = set.HoldAll
+	config.HoldAll, config.Rulings = set.HoldAll, rulings(o.Survey)
 	r.Coordinator = coordinator.New(config)
 	for i := range o.Survey.Robots {
 		id := o.Survey.Robots[i].ID

@@ -150,6 +150,7 @@ func (r *Run) attention(s *Score, places []place, truth []bool) []string {
 		}
 		out = append(out, fmt.Sprintf("%s and %s are held together by the single tie %s; %s.", p.a, p.b, p.tie, what))
 	}
+	out = append(out, r.ruled()...)
 	out = append(out, r.doubts()...)
 	if s.Refusals > 0 {
 		out = append(out, fmt.Sprintf("%s refused by the receiver; the first: %s", countOf(s.Refusals, "message"), r.Refusals[0]))

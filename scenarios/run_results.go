@@ -26,8 +26,8 @@ const summaryName = "results/summary.json"
 var ErrOccupied = errors.New("folder in use")
 
 // CheckFolder returns an error unless dir is absent, empty, or the folder of an earlier rehearsal with nothing in it that a person
-// added. The error wraps ErrOccupied or comes from the file system.
-func CheckFolder(dir string) error {
+// added, but for rulings that s has too; s may be nil. The error wraps ErrOccupied or comes from the file system.
+func CheckFolder(dir string, s *survey.Survey) error {
 	info, err := os.Stat(dir)
 	if errors.Is(err, fs.ErrNotExist) {
 		return nil
@@ -45,11 +45,14 @@ func CheckFolder(dir string) error {
 	if _, err := os.Stat(filepath.Join(dir, summaryName)); err != nil {
 		return fmt.Errorf("%s is not empty and holds no earlier rehearsal (no %s), expected a new folder: %w", dir, summaryName, ErrOccupied)
 	}
-	ours := []string{"survey.yaml", "robots", "ties.csv", "truth.csv", "results"}
+	ours := []string{"survey.yaml", "robots", "marks.csv", "ties.csv", "rulings.csv", "truth.csv", "results"}
 	for _, e := range entries {
 		if !slices.Contains(ours, strings.TrimSuffix(e.Name(), ".gz")) {
 			return fmt.Errorf("%s holds %s, which would be lost, expected a folder without it: %w", dir, e.Name(), ErrOccupied)
 		}
+	}
+	if err := survey.KeepsRulings(dir, s); err != nil {
+		return fmt.Errorf("%w: %w", err, ErrOccupied)
 	}
 	return nil
 }
@@ -59,7 +62,7 @@ func CheckFolder(dir string) error {
 // name and then put in place as a whole. Made is the date and time as the report prints it, version the program's; the same run,
 // score, made and version give the same bytes.
 func (r *Run) Write(dir string, score *Score, made, version string) error {
-	if err := CheckFolder(dir); err != nil {
+	if err := CheckFolder(dir, r.Outing.Survey); err != nil {
 		return err
 	}
 	dir, err := filepath.Abs(dir)

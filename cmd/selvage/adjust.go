@@ -22,12 +22,12 @@ type adjustCmd struct {
 	Workers       int     `default:"1" help:"Processors to use, 1 or 2 (default 1); the result is the same to the last bit."`
 	Tolerance     float64 `default:"1e-12" help:"Converged when a step would lower the cost by less than this share of it (default 1e-12)."`
 	MaxIterations int     `default:"500" placeholder:"N" help:"Give up after so many steps (default 500)."`
-	AllTies       bool    `help:"Also use ties that the survey's verdicts call refused or open."`
+	AllTies       bool    `help:"Also use ties that the survey's verdicts call refused or open, but not those that were ruled refused."`
 	JSON          bool    `name:"json" help:"Print one JSON object instead of the table."`
 }
 
 func (adjustCmd) Help() string {
-	return `Every keyframe, every measurement and the ties in one least-squares adjustment; poses, covariances and the place of each session's frame go to results/. Ties that results/verdicts.csv calls refused or open stay out.
+	return `Every keyframe, every measurement and the ties in one least-squares adjustment; poses, covariances and the place of each session's frame go to results/. Ties that results/verdicts.csv calls refused or open stay out; what rulings.csv says of a tie comes before that (selvage rule).
 
 Example, with the survey that the example of split makes:
 
@@ -37,23 +37,24 @@ Example, with the survey that the example of split makes:
 
 // adjustReport is what --json prints. Costs are F = 1/2 sum r' Omega r; times are seconds.
 type adjustReport struct {
-	Survey       string     `json:"survey"`
-	Results      string     `json:"results"`
-	Dimension    int        `json:"dimension"`
-	Robots       int        `json:"robots"`
-	Keyframes    int        `json:"keyframes"`
-	Measurements int        `json:"measurements"` // within sessions
-	Ties         int        `json:"ties"`
-	TiesHeld     int        `json:"ties_held"`     // in the adjustment
-	TiesLeftOut  []string   `json:"ties_left_out"` // refused or open
-	Islands      int        `json:"islands"`
-	Start        string     `json:"start"`
-	InitialCost  float64    `json:"initial_cost"`
-	Cost         float64    `json:"cost"`
-	Iterations   int        `json:"iterations"`
-	RefusedSteps int        `json:"refused_steps"`
-	Stop         string     `json:"stop"`
-	Seconds      phaseTimes `json:"seconds"`
+	Survey       string      `json:"survey"`
+	Results      string      `json:"results"`
+	Dimension    int         `json:"dimension"`
+	Robots       int         `json:"robots"`
+	Keyframes    int         `json:"keyframes"`
+	Measurements int         `json:"measurements"` // within sessions
+	Ties         int         `json:"ties"`
+	TiesHeld     int         `json:"ties_held"`     // in the adjustment
+	TiesLeftOut  []string    `json:"ties_left_out"` // refused or open
+	Rulings      []tieRuling `json:"rulings"`       // on single ties or on their robots: they come before the verdicts
+	Islands      int         `json:"islands"`
+	Start        string      `json:"start"`
+	InitialCost  float64     `json:"initial_cost"`
+	Cost         float64     `json:"cost"`
+	Iterations   int         `json:"iterations"`
+	RefusedSteps int         `json:"refused_steps"`
+	Stop         string      `json:"stop"`
+	Seconds      phaseTimes  `json:"seconds"`
 }
 
 type phaseTimes struct {
@@ -86,6 +87,7 @@ type adjustment struct {
 	progress *progress
 	survey   *survey.Survey
 	verdicts []survey.ResultVerdict // one a tie
+	rulings  []*survey.Ruling       // one a tie, nil for none
 	problem  *adjust.Problem
 	islands  *islands
 	sigma    posegraph.Covariance
@@ -146,6 +148,9 @@ func (c *adjustCmd) Run(ctx context.Context, con *console) error {
 	return nil
 }
 
+// unseen is the reason of a verdict that nothing speaks for.
+const unseen = "taken as true: nobody has looked at it"
+
 // read reads survey and verdicts, and makes sure that the results can go where they are to go.
 func (a *adjustment) read() error {
 	s, err := survey.Read(a.Survey)
@@ -164,13 +169,17 @@ func (a *adjustment) read() error {
 		found[known[i].Tie] = &known[i]
 	}
 	a.report.TiesLeftOut = []string{}
+	a.rulings = s.TieRulings()
 	for i := range s.Ties {
-		v := survey.ResultVerdict{Tie: s.Ties[i].ID, Verdict: "held", Reason: "taken as true: nobody has looked at it",
+		v := survey.ResultVerdict{Tie: s.Ties[i].ID, Verdict: "held", Reason: unseen,
 			ChiSquare: math.NaN(), Threshold: math.NaN(), Redundancy: math.NaN(), Detectable: math.NaN()}
 		if f := found[v.Tie]; f != nil {
-			v = *f
+			v = unruled(*f, v)
 		}
-		if v.Verdict != "held" && !a.AllTies {
+		if r := a.rulings[i]; r != nil {
+			v = ruled(v, r)
+		}
+		if !a.in(i, v.Verdict) {
 			a.report.TiesLeftOut = append(a.report.TiesLeftOut, v.Tie)
 		}
 		a.verdicts = append(a.verdicts, v)
@@ -183,6 +192,11 @@ func (a *adjustment) read() error {
 		a.report.Measurements += len(s.Robots[i].Relatives)
 	}
 	return nil
+}
+
+// in tells whether a tie with that verdict is in the adjustment: --all-ties lets all in that nobody has ruled on.
+func (a *adjustment) in(tie int, verdict string) bool {
+	return verdict == "held" || a.AllTies && a.rulings[tie] == nil
 }
 
 // writable returns an error unless dir is absent or empty, or holds a survey or results of one.
@@ -206,7 +220,7 @@ func writable(dir string) error {
 
 func (a *adjustment) build() error {
 	var err error
-	a.problem, err = adjust.New(a.survey, func(tie int) bool { return a.AllTies || a.verdicts[tie].Verdict == "held" })
+	a.problem, err = adjust.New(a.survey, func(tie int) bool { return a.in(tie, a.verdicts[tie].Verdict) })
 	if err != nil {
 		return err
 	}
@@ -232,6 +246,7 @@ func (a *adjustment) optimise() error {
 		k := a.problem.Keys[r.Weakest]
 		return badInput("%s: the measurements leave keyframe %d of robot %s, session %d, free in some direction; nothing was written", a.Survey, k.ID, k.Robot, k.Session)
 	}
+	a.weighRulings()
 	a.report.InitialCost, a.report.Cost = r.InitialCost, r.Cost
 	a.report.Iterations, a.report.RefusedSteps, a.report.Stop = r.Iterations, r.Refused, r.Stop.String()
 	return nil

@@ -116,6 +116,7 @@ func (a *adjustment) show(con *console) error {
 	for _, u := range a.islands.broken {
 		fmt.Fprintf(con.out, "Robot %s, session %d, falls into parts that no measurement joins.\n", u.robot, u.session)
 	}
+	a.showRulings(con)
 	t := report.Table{Caption: "The adjustment", Columns: []report.Column{{Name: "figure"}, {Name: "value", Right: true}}}
 	row := func(name, format string, args ...any) {
 		t.Rows = append(t.Rows, []string{name, fmt.Sprintf(format, args...)})

@@ -24,6 +24,7 @@ type cli struct {
 	Adjust   adjustCmd   `cmd:"" help:"Adjust a whole survey in one piece."`
 	Split    splitCmd    `cmd:"" help:"Cut the survey of one robot into connected pieces."`
 	Convert  convertCmd  `cmd:"" help:"Turn data in another format into a survey."`
+	Rule     ruleCmd     `cmd:"" help:"Hold or refuse a tie, or all ties of a robot or session, whatever the evidence says."`
 	Show     versionCmd  `cmd:"" name:"version" help:"Print the version of the program."`
 }
 

@@ -43,11 +43,11 @@ Examples:
 
 // Run implements the verb.
 func (c *rehearseCmd) Run(ctx context.Context, con *console) error {
-	prepare, err := c.plan()
+	prepare, recorded, err := c.plan()
 	if err != nil {
 		return err
 	}
-	if err := c.reserve(); err != nil {
+	if err := c.reserve(recorded); err != nil {
 		return err
 	}
 	watch := con.watch(c.NoProgress, c.RealBus)
@@ -107,32 +107,32 @@ func (c *rehearseCmd) run(ctx context.Context, o rehearsal, w *watch) (*scenario
 	return run, fmt.Sprintf("%s, %d h %02d min of virtual time", o.origin, minutes/60, minutes%60), nil
 }
 
-// plan checks the command line, settles where to write, and returns what makes the outing.
-func (c *rehearseCmd) plan() (func() (rehearsal, error), error) {
+// plan checks the command line, settles where to write, and returns what makes the outing, with the survey if it is a recorded one.
+func (c *rehearseCmd) plan() (func() (rehearsal, error), *survey.Survey, error) {
 	if c.Survey != "" {
 		if c.Scenario != "" || c.Seed != nil || c.Robots != nil || c.False != nil || c.Clustered != nil {
-			return nil, badInput("--survey goes without a scenario and without --seed, --robots, --false and --clustered: they change a simulation")
+			return nil, nil, badInput("--survey goes without a scenario and without --seed, --robots, --false and --clustered: they change a simulation")
 		}
 		s, err := survey.Read(c.Survey)
 		if err != nil {
-			return nil, err
+			return nil, nil, err
 		}
 		if err := s.PosesOnly(); err != nil {
-			return nil, badInput("%s: %w", c.Survey, err)
+			return nil, nil, badInput("%s: %w", c.Survey, err)
 		}
 		if len(s.Robots) == 0 {
-			return nil, badInput("%s has no robots: there is nothing to rehearse", c.Survey)
+			return nil, nil, badInput("%s has no robots: there is nothing to rehearse", c.Survey)
 		}
 		if c.Out == "" {
 			c.Out = "rehearsal-" + s.Meta.Name
 		}
 		return func() (rehearsal, error) {
 			return rehearsal{scenarios.Recorded(s), "recorded survey"}, nil
-		}, nil
+		}, s, nil
 	}
 	sc, err := c.scenario()
 	if err != nil {
-		return nil, err
+		return nil, nil, err
 	}
 	if c.Out == "" {
 		c.Out = fmt.Sprintf("rehearsal-%s-%d", sc.Name, sc.Seed)
@@ -143,12 +143,12 @@ func (c *rehearseCmd) plan() (func() (rehearsal, error), error) {
 			return rehearsal{}, badInput("%w", err)
 		}
 		return rehearsal{w.Outing(sc, sc.Seed), fmt.Sprintf("seed %d", sc.Seed)}, nil
-	}, nil
+	}, nil, nil
 }
 
 // reserve makes sure, before the work begins, that the folder can be written when it is done.
-func (c *rehearseCmd) reserve() error {
-	if err := scenarios.CheckFolder(c.Out); err != nil {
+func (c *rehearseCmd) reserve(recorded *survey.Survey) error {
+	if err := scenarios.CheckFolder(c.Out, recorded); err != nil {
 		return err
 	}
 	parent := filepath.Dir(filepath.Clean(c.Out))

@@ -37,6 +37,9 @@ type ResultVerdict struct {
 	Threshold  float64
 	Redundancy float64
 	Detectable float64
+
+	// Evidence is the verdict that a person's ruling has replaced: held, refused, open, or empty for none.
+	Evidence string
 }
 
 // ResultDatum is the place of one session frame in the datum.
@@ -52,9 +55,12 @@ type ResultDatum struct {
 var (
 	resultPoseColumns = columns([]column{{name: "robot"}, {name: "session"}, {name: "id"}, {name: "stamp_ns"}}, poseColumns, covarianceColumns())
 	verdictColumns    = []column{{name: "tie"}, {name: "verdict"}, {name: "reason"},
-		{name: "chi_square"}, {name: "threshold"}, {name: "redundancy"}, {name: "detectable"}}
+		{name: "chi_square"}, {name: "threshold"}, {name: "redundancy"}, {name: "detectable"}, {name: "evidence", optional: true}}
 	datumColumns = columns([]column{{name: "robot"}, {name: "session"}, {name: "joined"}, {name: "island"}}, poseColumns)
 )
+
+// verdictEvidence is the number of that column of verdicts.csv.
+const verdictEvidence = 7
 
 func covarianceColumns() []column {
 	var all []column
@@ -79,6 +85,9 @@ func WriteResults(dir string, poses []ResultPose, verdicts []ResultVerdict, datu
 	for _, v := range verdicts {
 		if v.Verdict != "held" && v.Verdict != "refused" && v.Verdict != "open" {
 			return fmt.Errorf("survey: verdict %s on tie %s, expected held, refused or open", quote(v.Verdict), quote(v.Tie))
+		}
+		if e := v.Evidence; e != "" && e != "held" && e != "refused" && e != "open" {
+			return fmt.Errorf("survey: evidence %s on tie %s, expected held, refused, open or nothing", quote(e), quote(v.Tie))
 		}
 		if !validTie(v.Tie) || !validNote(v.Reason) {
 			return fmt.Errorf("survey: verdict on tie %s for the reason %s, expected a tie id and one line of printable text", quote(v.Tie), quote(v.Reason))
@@ -189,8 +198,12 @@ func encodeResultPoses(all []ResultPose, note string) []byte {
 
 func encodeVerdicts(all []ResultVerdict, note string) []byte {
 	var w csvWriter
+	evidence := false
+	for i := range all {
+		evidence = evidence || all[i].Evidence != ""
+	}
 	w.comment(note)
-	w.header(verdictColumns, nil)
+	w.header(verdictColumns, func(c int) bool { return c == verdictEvidence && !evidence })
 	for i := range all {
 		v := &all[i]
 		w.text(v.Tie)
@@ -198,6 +211,9 @@ func encodeVerdicts(all []ResultVerdict, note string) []byte {
 		w.text(v.Reason)
 		for _, x := range [4]float64{v.ChiSquare, v.Threshold, v.Redundancy, v.Detectable} {
 			w.optionalFloat(x, !math.IsNaN(x))
+		}
+		if evidence {
+			w.text(v.Evidence)
 		}
 		w.end()
 	}

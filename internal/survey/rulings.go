@@ -56,6 +56,14 @@ type Ruling struct {
 	Time    time.Time // read as UTC
 }
 
+// On says what the ruling is on: tie T, robot R, or session N of robot R.
+func (m *Ruling) On() string {
+	if m.Target == OnSession {
+		return fmt.Sprintf("session %d of robot %s", m.Session, m.Name)
+	}
+	return m.Target.String() + " " + m.Name
+}
+
 var rulingColumns = []column{{name: "target"}, {name: "name"}, {name: "session"}, {name: "verdict"}, {name: "by"}, {name: "note"}, {name: "time"}}
 
 const (

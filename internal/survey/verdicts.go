@@ -32,7 +32,7 @@ func ReadVerdicts(dir string, s *Survey) ([]ResultVerdict, error) {
 		if !ok {
 			break
 		}
-		v := ResultVerdict{Tie: string(t.text(0)), Verdict: string(t.text(1)), Reason: string(t.text(2))}
+		v := ResultVerdict{Tie: string(t.text(0)), Verdict: string(t.text(1)), Reason: string(t.text(2)), Evidence: string(t.text(verdictEvidence))}
 		switch still, known := left[v.Tie]; {
 		case !known:
 			t.faultAt(0, quote(v.Tie), "the id of a tie of this survey")
@@ -43,6 +43,9 @@ func ReadVerdicts(dir string, s *Survey) ([]ResultVerdict, error) {
 		}
 		if v.Verdict != "held" && v.Verdict != "refused" && v.Verdict != "open" {
 			t.faultAt(1, quote(v.Verdict), "held, refused or open")
+		}
+		if e := v.Evidence; e != "" && e != "held" && e != "refused" && e != "open" {
+			t.faultAt(verdictEvidence, quote(e), "held, refused, open or nothing")
 		}
 		if !validNote(v.Reason) {
 			t.faultAt(2, quote(v.Reason), "one line of printable text")
