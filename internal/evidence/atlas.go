@@ -149,17 +149,26 @@ func (a *atlas) reach(v int, cost float64, via, prev int) {
 		return
 	}
 	a.seen[v], a.dist[v], a.via[v], a.prev[v] = a.stamp, cost, via, prev
-	h := append(a.heap, entry{cost, v})
+	a.heap = push(a.heap, entry{cost, v})
+}
+
+func (a *atlas) pop() (e entry) {
+	e, a.heap = pop(a.heap)
+	return e
+}
+
+// push and pop keep the entry of least cost at the front.
+func push(h []entry, e entry) []entry {
+	h = append(h, e)
 	k := len(h) - 1
 	for k > 0 && h[(k-1)/2].cost > h[k].cost {
 		h[k], h[(k-1)/2] = h[(k-1)/2], h[k]
 		k = (k - 1) / 2
 	}
-	a.heap = h
+	return h
 }
 
-func (a *atlas) pop() entry {
-	h := a.heap
+func pop(h []entry) (entry, []entry) {
 	top := h[0]
 	n := len(h) - 1
 	h[0] = h[n]
@@ -178,6 +187,5 @@ func (a *atlas) pop() entry {
 		h[k], h[c] = h[c], h[k]
 		k = c
 	}
-	a.heap = h
-	return top
+	return top, h
 }

@@ -1,5 +1,5 @@
-// Package evidence decides which inter-robot ties are believed, from nothing but the ties themselves and the relative
-// poses that every robot knows of its own track. There is no prior on where the robots' frames lie.
+// Package evidence decides which inter-robot ties, and which loop closures, are believed. Ties are judged from nothing but the ties
+// themselves and the relative poses that every robot knows of its own track. There is no prior on where the robots' frames lie.
 //
 // An alignment that is wrong is worse than none, so every finding is one of three: held (part of the solution), refused
 // (contradicted by what is held) and open (not enough evidence either way). The way there:
@@ -19,6 +19,9 @@
 //
 // What no method can do: a false set that outnumbers the true ties of its pair, and meets no cycle, cannot be told from the
 // truth. Such pairs stay open until a third unit or another place bears witness.
+//
+// The loop closures within one session are judged the same way, by the robot itself ([Chain.Judge]): closures that agree with each
+// other, over the ways along the session's own odometry.
 //
 // Chance is bounded, look-alike structure is not: where long aisles repeat themselves, the margins asked for here are the
 // only protection, and a person should look at pairs whose findings say that no third unit confirms them.
