@@ -29,6 +29,8 @@ type Config struct {
 	RetryNS int64
 	// AnswerNS is the same for a summary without a correction; it should exceed the time the base takes between solutions.
 	AnswerNS int64
+	// HoldAll takes every loop closure as true.
+	HoldAll bool
 }
 
 const second = int64(1e9)
@@ -68,6 +70,7 @@ type Relative struct {
 	From, To int64
 	Z        lie.SE3
 	Info     [36]float64 // order x, y, z, rx, ry, rz; zero rows and columns for what was not measured
+	Closure  bool        // a loop closure, which may be false; odometry is taken as it is
 }
 
 // Tie is a measurement of another robot, or of another session, by this one: Z is the pose of To in From.
@@ -206,7 +209,7 @@ func (a *Agent) relative(nowNS int64, r *Relative) error {
 	if s == nil {
 		return fmt.Errorf("relative pose from %d to %d: session %d has no keyframe", r.From, r.To, r.Session)
 	}
-	if err := s.addRelative(r); err != nil {
+	if err := s.addRelative(r, a.cfg.HoldAll); err != nil {
 		return err
 	}
 	a.lastNS = nowNS

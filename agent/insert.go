@@ -39,7 +39,7 @@ func (s *session) insert(stamp int64) int32 {
 	}
 	step := -1
 	for k := range s.factors.I {
-		if s.factors.I[k] == before && s.factors.J[k] == after {
+		if s.factors.I[k] == before && s.factors.J[k] == after && !s.judges(int32(k)) {
 			step = k
 			break
 		}
@@ -58,6 +58,7 @@ func (s *session) insert(stamp int64) int32 {
 	s.keys = append(s.keys, -stamp)
 	s.stamps = append(s.stamps, stamp)
 	s.separator = append(s.separator, false)
+	s.place = append(s.place, -1)
 	s.inserted++
 	s.dirty = true
 	return v

@@ -5,6 +5,7 @@ import (
 	"math"
 	"slices"
 
+	"selvage/internal/evidence"
 	"selvage/internal/lie"
 	"selvage/internal/posegraph"
 	"selvage/internal/sparse"
@@ -28,6 +29,10 @@ type session struct {
 	resolved   map[int32][]int64 // variable -> stamps asked for that it answers
 	newest     int32             // variable of the newest keyframe of the front end
 	inserted   int               // keyframes made for a stamp
+	chain      *evidence.Chain   // of the keyframes of the front end
+	place      []int32           // variable -> place in the chain; -1 for inserted keyframes
+	closures   []int32           // factors that are judged
+	findings   []evidence.ClosureFinding
 
 	dirty  bool // measurements came since the newest summary
 	solved int  // measurements there were when the map was last solved
@@ -41,7 +46,7 @@ func newSession(id uint32, dim int) *session {
 	g := posegraph.New(3*(dim-1), nil)
 	return &session{
 		id: id, dim: dim, index: map[int64]int32{}, graph: g, factors: g.AddBetween(), resolved: map[int32][]int64{},
-		datum: lie.Identity(),
+		datum: lie.Identity(), chain: evidence.NewChain(dim),
 	}
 }
 
@@ -50,15 +55,17 @@ func (s *session) addKeyframe(k *Keyframe) error {
 		return fmt.Errorf("keyframe %d of session %d came twice", k.ID, s.id)
 	}
 	n := len(s.keys)
-	pose, travel := k.Pose, 0.0
+	pose, travel, step := k.Pose, 0.0, lie.Identity()
 	if last := s.newest; n > 0 {
-		step := s.front[last].Between(k.Pose)
+		step = s.front[last].Between(k.Pose)
 		pose = s.graph.Values.Poses[last].Mul(step)
 		travel = s.travel[last] + math.Sqrt(step.T[0]*step.T[0]+step.T[1]*step.T[1]+step.T[2]*step.T[2])
 	}
 	if !(travel <= msgs.MaxMetres) {
 		return fmt.Errorf("keyframe %d of session %d: %g m from the start, at most %g expected", k.ID, s.id, travel, float64(msgs.MaxMetres))
 	}
+	s.place = append(s.place, int32(s.chain.Len()))
+	s.chain.Keyframe(step)
 	s.newest = int32(n)
 	s.index[k.ID] = int32(n)
 	s.keys = append(s.keys, k.ID)
@@ -71,7 +78,7 @@ func (s *session) addKeyframe(k *Keyframe) error {
 	return nil
 }
 
-func (s *session) addRelative(r *Relative) error {
+func (s *session) addRelative(r *Relative, trusted bool) error {
 	i, ok := s.index[r.From]
 	j, found := s.index[r.To]
 	if !ok || !found || i == j {
@@ -81,6 +88,12 @@ func (s *session) addRelative(r *Relative) error {
 		return fmt.Errorf("relative pose from %d to %d of session %d: %w", r.From, r.To, s.id, err)
 	}
 	s.factors.Add(i, j, r.Z, &r.Info)
+	switch {
+	case !r.Closure:
+		s.odometry(i, j, r)
+	case !trusted && s.place[i] >= 0 && s.place[j] >= 0:
+		s.enter(int32(s.factors.Len() - 1))
+	}
 	s.dirty = true
 	return nil
 }
@@ -97,6 +110,7 @@ func (s *session) knows(id int64) bool {
 // optimise brings the session to its own optimum, starting from its present poses. When these explain the measurements badly,
 // as a front end's first guess may, it also tries the chordal start and keeps the better of the two.
 func (s *session) optimise() error {
+	s.judge()
 	s.solved = s.factors.Len()
 	anchors := s.graph.Anchors()
 	if len(anchors) == len(s.keys) || s.factors.Len() == 0 {
@@ -122,6 +136,7 @@ func (s *session) optimise() error {
 // where the base put them, or else to the session's own optimum.
 func (s *session) refresh() error {
 	if s.joined && s.told != nil {
+		s.judge()
 		return s.settle(slices.Clone(s.told.condensed.Junctions))
 	}
 	if err := s.optimise(); err != nil {
@@ -147,19 +162,22 @@ func (s *session) tryChordal(fixed []int32, cost float64) {
 	}
 }
 
-// condense condenses the session at its present poses.
+// condense condenses the session at its present poses; closures that are not held say nothing.
 func (s *session) condense() (*partition.Condensed, error) {
 	d := s.graph.Dim
-	terms := make([]partition.Quadratic, s.factors.Len())
-	h := make([]float64, len(terms)*4*d*d)
-	b := make([]float64, len(terms)*2*d)
-	nodes := make([]int32, 2*len(terms))
-	for k := range terms {
-		q := &terms[k]
-		q.Nodes = nodes[2*k : 2*k+2 : 2*k+2]
+	n := s.factors.Len()
+	terms := make([]partition.Quadratic, 0, n)
+	h := make([]float64, n*4*d*d)
+	b := make([]float64, n*2*d)
+	nodes := make([]int32, 2*n)
+	for k := range n {
+		if s.factors.W[k] == 0 {
+			continue
+		}
+		q := partition.Quadratic{Nodes: nodes[2*k : 2*k+2 : 2*k+2], H: h[k*4*d*d : (k+1)*4*d*d], B: b[k*2*d : (k+1)*2*d]}
 		q.Nodes[0], q.Nodes[1] = s.factors.I[k], s.factors.J[k]
-		q.H, q.B = h[k*4*d*d:(k+1)*4*d*d], b[k*2*d:(k+1)*2*d]
 		s.factors.Quadratic(k, &s.graph.Values, q.H, q.B)
+		terms = append(terms, q)
 	}
 	var separators []int32
 	for i, is := range s.separator {
