@@ -64,8 +64,9 @@ func legs(sc *Scenario, robot int, t *track) (cut []leg) {
 }
 
 // record lets the front end measure along a leg and adds what it finds to the rows of the robot: keyframes dead reckoned from
-// the odometry in the frame of the first, one odometry step between neighbours, then the closures.
-func record(sc *Scenario, r *survey.Robot, l *leg, seed uint64) error {
+// the odometry in the frame of the first, one odometry step between neighbours, then the closures, of which the last ones, as many as
+// wrong says, are false.
+func record(sc *Scenario, r *survey.Robot, l *leg, seed uint64) (wrong int, err error) {
 	f := &sc.FrontEnd
 	dim := sc.Dimension()
 	t := &l.track
@@ -90,19 +91,20 @@ func record(sc *Scenario, r *survey.Robot, l *leg, seed uint64) error {
 		}
 		r.Keyframes = append(r.Keyframes, survey.Keyframe{Session: l.session, ID: int64(k), StampNS: t.atNS[k], HasStamp: true, Pose: poseOf(&x)})
 	}
-	found, err := closures(sc, t, stream(seed, "closures/"+part))
+	found, wrong, err := closures(sc, t, stream(seed, "closures/"+part))
 	for i := range found {
 		found[i].Session = l.session
 	}
 	r.Relatives = append(r.Relatives, found...)
-	return err
+	return wrong, err
 }
 
-// closures finds where a robot comes back to its own track, and adds the false ones asked for.
-func closures(sc *Scenario, t *track, rng *rand.Rand) (found []survey.Relative, err error) {
+// closures finds where a robot comes back to its own track, and adds the false ones asked for, wrong of them, at
+// the end.
+func closures(sc *Scenario, t *track, rng *rand.Rand) (found []survey.Relative, wrong int, err error) {
 	f := &sc.FrontEnd
 	if f.ClosureRange == 0 {
-		return nil, nil
+		return nil, 0, nil
 	}
 	c := f.Closure.cov(sc.Dimension())
 	s := newPlaces(f.ClosureRange, t)
@@ -128,15 +130,16 @@ func closures(sc *Scenario, t *track, rng *rand.Rand) (found []survey.Relative, 
 			last = t.travel[k]
 		}
 	}
-	for range falseCount(len(found), f.FalseClosures) {
+	wrong = falseCount(len(found), f.FalseClosures)
+	for range wrong {
 		j, k, ok := apart(rng, t, t, 20*f.ClosureRange)
 		if !ok {
-			return nil, errCramped
+			return nil, 0, errCramped
 		}
 		z := anywhere(rng, f.ClosureRange, sc.Dimension())
 		found = append(found, survey.Relative{From: int64(min(j, k)), To: int64(max(j, k)), Kind: survey.Closure, Pose: poseOf(&z), Cov: c})
 	}
-	return found, nil
+	return found, wrong, nil
 }
 
 // places finds keyframes by their place, as far as they have been entered.

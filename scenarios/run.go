@@ -22,6 +22,8 @@ type Outing struct {
 
 	// TieTrue says which ties are true, in the order of the survey; nil when nobody knows.
 	TieTrue []bool
+	// ClosureTrue says the same of each robot's relative poses, of which only loop closures can be false; nil when nobody knows.
+	ClosureTrue [][]bool
 }
 
 // Link decides what becomes of a message between a robot and the base, see [Radio].
@@ -32,7 +34,7 @@ type Link interface {
 
 // Outing returns the world as it goes into a rehearsal.
 func (w *World) Outing(sc *Scenario, seed uint64) *Outing {
-	return &Outing{Survey: w.Survey, Feed: w.Feed, EndNS: w.EndNS, Link: NewRadio(sc, w, seed), TieTrue: w.TieTrue}
+	return &Outing{Survey: w.Survey, Feed: w.Feed, EndNS: w.EndNS, Link: NewRadio(sc, w, seed), TieTrue: w.TieTrue, ClosureTrue: w.ClosureTrue}
 }
 
 // Recorded returns a survey as an outing over at once: everything is delivered at time zero over a faultless link.
@@ -57,7 +59,7 @@ func Recorded(s *survey.Survey) *Outing {
 
 // Settings are how agents and coordinator run in a rehearsal.
 type Settings struct {
-	HoldAll bool // take every tie as true
+	HoldAll bool // take every tie and every loop closure as true
 	// Progress is told from time to time how far the rehearsal is; it may be nil.
 	Progress func(p Progress)
 }
@@ -78,6 +80,7 @@ type Run struct {
 	Samples     []Sample  // about once a minute
 	Settled     bool      // nothing was left to send or to answer
 	Interrupted bool
+	HoldAll     bool  // every tie and loop closure was taken as true
 	OnBus       bool  // on the real bus: times count from its start
 	EndNS       int64 // time at the end
 	Rounds      int   // solutions after the last measurement had been delivered
@@ -147,7 +150,7 @@ type runner struct {
 // Virtual runs an outing on a virtual clock and bus. The same outing and settings give the same run, byte for byte. When ctx ends
 // the run stops where it is.
 func Virtual(ctx context.Context, o *Outing, set Settings) (*Run, error) {
-	r := &runner{Run: &Run{Outing: o, Traffic: make([]Traffic, len(o.Feed))}, number: map[string]int{}, next: make([]int, len(o.Feed))}
+	r := &runner{Run: &Run{Outing: o, Traffic: make([]Traffic, len(o.Feed)), HoldAll: set.HoldAll}, number: map[string]int{}, next: make([]int, len(o.Feed))}
 	r.track = newTruthIndex(o.Survey)
 	dim := o.Survey.Meta.Dimension
 	config := coordinator.DefaultConfig(fleetName, dim)
@@ -157,7 +160,7 @@ func Virtual(ctx context.Context, o *Outing, set Settings) (*Run, error) {
 		id := o.Survey.Robots[i].ID
 		r.number[id] = i
 		c := agent.DefaultConfig(fleetName, id, dim)
-		c.Journal = journalOf(id)
+		c.Journal, c.HoldAll = journalOf(id), set.HoldAll
 		r.Agents = append(r.Agents, agent.New(c))
 	}
 	nextSample := int64(0)
@@ -259,7 +262,7 @@ func FrontEnd(s *survey.Survey, robot int, e Event) (agent.Event, error) {
 	case RelativeEvent:
 		m := &s.Robots[robot].Relatives[e.Index]
 		info, err := m.Cov.Information(s.Meta.Dimension)
-		return agent.Relative{Session: m.Session, From: m.From, To: m.To, Z: adjust.Pose(m.Pose), Info: info}, err
+		return agent.Relative{Session: m.Session, From: m.From, To: m.To, Z: adjust.Pose(m.Pose), Info: info, Closure: m.Kind == survey.Closure}, err
 	case TieEvent:
 		t := &s.Ties[e.Index]
 		if t.Kind != survey.WholePose {

@@ -49,7 +49,7 @@ func OnBus(ctx context.Context, o *Outing, set Settings) (*Run, error) {
 	}
 	defer server.Close()
 	r := &busRun{
-		runner: &runner{Run: &Run{Outing: o, Traffic: make([]Traffic, len(o.Feed))}, track: newTruthIndex(o.Survey)},
+		runner: &runner{Run: &Run{Outing: o, Traffic: make([]Traffic, len(o.Feed)), HoldAll: set.HoldAll}, track: newTruthIndex(o.Survey)},
 		begin:  time.Now(),
 	}
 	if err := r.run(ctx, server, set); err != nil {
@@ -124,7 +124,7 @@ func (r *busRun) run(ctx context.Context, server *bus.Server, set Settings) (err
 	}
 	for _, id := range names {
 		c := agent.DefaultConfig(fleetName, id, dim)
-		c.Journal = journalOf(id)
+		c.Journal, c.HoldAll = journalOf(id), r.HoldAll
 		c.PublishNS, c.SettleNS, c.HeartbeatNS, c.RetryNS, c.AnswerNS = busPublishNS, busSettleNS, busBeatNS, busRetryNS, busAnswerNS
 		core := agent.New(c)
 		r.Agents = append(r.Agents, core)

@@ -17,7 +17,7 @@ type Gap struct {
 	Island string
 	Robots []string
 	Fleet  float64 // F at the agents' own final poses
-	Whole  float64 // F of the one-piece adjustment over the same held ties
+	Whole  float64 // F of the one-piece adjustment over the same held ties and loop closures
 }
 
 // Relative is the gap as a share of the one-piece cost, or of 1 when that is smaller.
@@ -64,6 +64,7 @@ func (r *Run) gaps() ([]Gap, error) {
 	for _, f := range r.Coordinator.Findings() {
 		heldTie[f.Tie] = f.Verdict == msgs.Held
 	}
+	closure := r.closureVerdicts()
 	var out []Gap
 	for _, name := range names {
 		if members[name] < 2 {
@@ -78,8 +79,8 @@ func (r *Run) gaps() ([]Gap, error) {
 					robot.Keyframes = append(robot.Keyframes, k)
 				}
 			}
-			for _, m := range s.Robots[i].Relatives {
-				if islandOf[unit{robot.ID, m.Session}] == name {
+			for k, m := range s.Robots[i].Relatives {
+				if closure[i][k] == msgs.Held && islandOf[unit{robot.ID, m.Session}] == name {
 					robot.Relatives = append(robot.Relatives, m)
 				}
 			}

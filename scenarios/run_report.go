@@ -33,6 +33,7 @@ func (r *Run) page(s *Score, places []place, poses [][]survey.ResultPose, made, 
 			{Name: "summary.json", About: "the figures of this page: acceptance, robots, ties, islands"},
 			{Name: "poses.csv", About: "every keyframe in the datum of its island, m and quaternions, with covariances"},
 			{Name: "verdicts.csv", About: "every tie with its verdict, the reason and the evidence"},
+			{Name: "closures.csv", About: "every loop closure with the verdict of its robot's agent, the reason and the evidence"},
 			{Name: "datum_from_session.csv", About: "where the frame of every session lies"},
 			{Name: "../survey.yaml", About: "what was measured: with robots/, ties.csv and truth.csv the survey behind this page"},
 		},
@@ -143,6 +144,7 @@ func (r *Run) attention(s *Score, places []place, truth []bool) []string {
 			out = append(out, fmt.Sprintf("%s does not share the datum: %s.", x.ID, r.whyApart(i, places)))
 		}
 	}
+	out = append(out, misled(s)...)
 	for _, p := range r.singles() {
 		what := "a wrong one would not show"
 		if !p.bridge {

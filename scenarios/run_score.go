@@ -46,13 +46,15 @@ type Score struct {
 	Robots []RobotScore `json:"robots"`
 	// The ties measured before the run ended, counted by truth and verdict.
 	Ties TieScore `json:"ties"`
+	// The loop closures delivered before the run ended, counted by truth and verdict. Their own agents judge them.
+	Closures TieScore `json:"closures"`
 	// Sets of two and more sessions that share a datum; the first is the map's datum.
 	Islands []IslandScore `json:"islands"`
 }
 
 // Check is one acceptance figure.
 type Check struct {
-	// What is checked: gap, settled, false_ties_held, largest_summary or bytes_up.
+	// What is checked: gap, settled, false_ties_held, false_closures_held, largest_summary or bytes_up.
 	Name string `json:"name"`
 	// The rule in words.
 	Rule string `json:"rule"`
@@ -88,9 +90,11 @@ type RobotScore struct {
 	// The same for its part of the fleet's map, all robots of its island moved onto the truth by one rigid motion. Null without
 	// truth and for a robot that shares no datum with another.
 	AteTeam *float64 `json:"ate_team_m"`
+	// Its loop closures by verdict of its agent.
+	Closures Verdicts `json:"closures"`
 }
 
-// TieScore counts ties.
+// TieScore counts ties, or loop closures.
 type TieScore struct {
 	// All of them.
 	All Verdicts `json:"all"`
@@ -100,7 +104,7 @@ type TieScore struct {
 	False *Verdicts `json:"false"`
 }
 
-// Verdicts counts ties by verdict.
+// Verdicts counts ties, or loop closures, by verdict.
 type Verdicts struct {
 	// In the solution.
 	Held int `json:"held"`
@@ -108,7 +112,7 @@ type Verdicts struct {
 	Refused int `json:"refused"`
 	// Not enough evidence either way.
 	Open int `json:"open"`
-	// Never reached the base.
+	// Never reached the base; of loop closures none.
 	Unheard int `json:"unheard"`
 }
 
@@ -168,6 +172,7 @@ func (r *Run) Score() (*Score, error) {
 	if err := r.countTies(&out.Ties, t); err != nil {
 		return nil, err
 	}
+	r.countClosures(out)
 	if !r.Interrupted { // what had been measured but not yet used would count as a gap
 		if err := r.scoreIslands(out, places); err != nil {
 			return nil, err
@@ -236,6 +241,10 @@ func (r *Run) accept(s *Score, several, common bool) {
 	if s.Ties.False != nil {
 		held := float64(s.Ties.False.Held)
 		check("false_ties_held", "no false tie is held", &held, 0, held == 0)
+	}
+	if f := s.Closures.False; f != nil && *f != (Verdicts{}) {
+		held := float64(f.Held)
+		check("false_closures_held", "no false loop closure is held", &held, 0, held == 0)
 	}
 	if r.Outing.Link == nil || len(s.Robots) == 0 {
 		return

@@ -9,6 +9,7 @@ import (
 	"selvage/internal/adjust"
 	"selvage/internal/lie"
 	"selvage/internal/survey"
+	"selvage/msgs"
 )
 
 // place is one session of one robot in the final map.
@@ -217,11 +218,12 @@ func (r *Run) keyframes() map[adjust.Key]bool {
 }
 
 // known returns the survey as far as it had been delivered when the run ended: the keyframes that the agents have, and the
-// measurements among them.
+// measurements among them, without the loop closures that an agent does not hold.
 func (r *Run) known() *survey.Survey {
 	s := r.Outing.Survey
 	have := r.keyframes()
 	out := &survey.Survey{Meta: s.Meta}
+	closure := r.closureVerdicts()
 	stamped := map[adjust.Key]bool{} // by stamp
 	for i := range s.Robots {
 		robot := survey.Robot{ID: s.Robots[i].ID}
@@ -231,8 +233,8 @@ func (r *Run) known() *survey.Survey {
 				stamped[adjust.Key{Robot: robot.ID, Session: k.Session, ID: k.StampNS}] = k.HasStamp
 			}
 		}
-		for _, m := range s.Robots[i].Relatives {
-			if have[adjust.Key{Robot: robot.ID, Session: m.Session, ID: m.From}] && have[adjust.Key{Robot: robot.ID, Session: m.Session, ID: m.To}] {
+		for k, m := range s.Robots[i].Relatives {
+			if closure[i][k] == msgs.Held && have[adjust.Key{Robot: robot.ID, Session: m.Session, ID: m.From}] && have[adjust.Key{Robot: robot.ID, Session: m.Session, ID: m.To}] {
 				robot.Relatives = append(robot.Relatives, m)
 			}
 		}

@@ -18,6 +18,9 @@ type World struct {
 	TieTrue   []bool
 	Clustered []bool
 
+	// ClosureTrue says for each robot and each of its relative poses whether it is true; only loop closures can be false.
+	ClosureTrue [][]bool
+
 	// Feed holds for each robot, in the order of Survey.Robots, what its front end delivers, in the order of time.
 	Feed [][]Event
 
@@ -71,9 +74,14 @@ func Simulate(sc *Scenario, seed uint64) (*World, error) {
 		robot := survey.Robot{ID: robotID(i)}
 		meta := survey.RobotMeta{ID: robot.ID}
 		w.tracks[i] = s.walk(sc, homes[i], stream(seed, "walk/"+robot.ID))
+		var isTrue []bool
 		for _, l := range legs(sc, i, &w.tracks[i]) {
-			if err := record(sc, &robot, &l, seed); err != nil {
+			wrong, err := record(sc, &robot, &l, seed)
+			if err != nil {
 				return nil, fmt.Errorf("scenarios: robot %s: %w", robot.ID, err)
+			}
+			for len(isTrue) < len(robot.Relatives) {
+				isTrue = append(isTrue, len(isTrue) < len(robot.Relatives)-wrong)
 			}
 			for k := range l.track.pose {
 				sv.Truth = append(sv.Truth, survey.TruthPose{Robot: robot.ID, Session: l.session, Key: int64(k), Pose: poseOf(&l.track.pose[k])})
@@ -83,6 +91,7 @@ func Simulate(sc *Scenario, seed uint64) (*World, error) {
 		}
 		sv.Meta.Robots = append(sv.Meta.Robots, meta)
 		sv.Robots = append(sv.Robots, robot)
+		w.ClosureTrue = append(w.ClosureTrue, isTrue)
 	}
 	tracks := make([]*track, len(all))
 	for i := range all {
