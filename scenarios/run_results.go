@@ -109,6 +109,9 @@ func (r *Run) fill(dir string, score *Score, made, version string) error {
 	if err := survey.WriteResults(dir, slices.Concat(poses...), r.resultVerdicts(), r.resultDatum(places), r.note(score)); err != nil {
 		return err
 	}
+	if err := survey.WriteClosures(dir, r.resultClosures(), r.note(score)); err != nil {
+		return err
+	}
 	summary, err := json.MarshalIndent(score, "", "  ")
 	if err != nil {
 		return err
