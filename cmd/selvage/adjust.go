@@ -22,12 +22,12 @@ type adjustCmd struct {
 	Workers       int     `default:"1" help:"Processors to use, 1 or 2 (default 1); the result is the same to the last bit."`
 	Tolerance     float64 `default:"1e-12" help:"Converged when a step would lower the cost by less than this share of it (default 1e-12)."`
 	MaxIterations int     `default:"500" placeholder:"N" help:"Give up after so many steps (default 500)."`
-	AllTies       bool    `help:"Also use ties that the survey's verdicts call refused or open, but not those that were ruled refused."`
+	AllTies       bool    `help:"Also use ties and loop closures that the survey's verdicts call refused or open, but not ties that were ruled refused."`
 	JSON          bool    `name:"json" help:"Print one JSON object instead of the table."`
 }
 
 func (adjustCmd) Help() string {
-	return `Every keyframe, every measurement and the ties in one least-squares adjustment; poses, covariances and the place of each session's frame go to results/. Ties that results/verdicts.csv calls refused or open stay out; what rulings.csv says of a tie comes before that (selvage rule).
+	return `Every keyframe, every measurement and the ties in one least-squares adjustment; poses, covariances and the place of each session's frame go to results/. Ties that results/verdicts.csv calls refused or open stay out, and so do the loop closures that results/closures.csv calls so; what rulings.csv says of a tie comes before that (selvage rule).
 
 Example, with the survey that the example of split makes:
 
@@ -42,7 +42,8 @@ type adjustReport struct {
 	Dimension    int         `json:"dimension"`
 	Robots       int         `json:"robots"`
 	Keyframes    int         `json:"keyframes"`
-	Measurements int         `json:"measurements"` // within sessions
+	Measurements int         `json:"measurements"`      // within sessions
+	ClosuresOut  int         `json:"closures_left_out"` // refused or open, not counted above
 	Ties         int         `json:"ties"`
 	TiesHeld     int         `json:"ties_held"`     // in the adjustment
 	TiesLeftOut  []string    `json:"ties_left_out"` // refused or open
@@ -183,6 +184,11 @@ func (a *adjustment) read() error {
 			a.report.TiesLeftOut = append(a.report.TiesLeftOut, v.Tie)
 		}
 		a.verdicts = append(a.verdicts, v)
+	}
+	if !a.AllTies {
+		if a.report.ClosuresOut, err = survey.LeaveOutClosures(a.Survey, s); err != nil {
+			return err
+		}
 	}
 	a.survey = s
 	a.report.Dimension, a.report.Robots, a.report.Ties = s.Meta.Dimension, len(s.Robots), len(s.Ties)

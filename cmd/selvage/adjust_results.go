@@ -123,6 +123,9 @@ func (a *adjustment) show(con *console) error {
 	}
 	row("keyframes", "%d", r.Keyframes)
 	row("measurements within sessions", "%d", r.Measurements)
+	if r.ClosuresOut > 0 {
+		row("loop closures left out by verdict", "%d", r.ClosuresOut)
+	}
 	row("ties in the adjustment", "%d of %d", r.TiesHeld, r.Ties)
 	row("cost at the start", "%.8g", r.InitialCost)
 	row("cost", "%.10g", r.Cost)

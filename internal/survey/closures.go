@@ -6,6 +6,7 @@ import (
 	"math"
 	"os"
 	"path/filepath"
+	"slices"
 )
 
 // ResultClosure is the finding on one loop closure. Of those that join the same two keyframes the n-th belongs to the n-th relative
@@ -70,10 +71,25 @@ func WriteClosures(dir string, all []ResultClosure, note string) error {
 
 func validVerdict(s string) bool { return s == "held" || s == "refused" || s == "open" }
 
-// ReadClosures reads results/closures.csv of the survey folder dir, from which s was read, and returns for each robot of s and each
-// of its relative poses whether the file leaves it out: a loop closure that is refused or open. Without such a file none is. An
-// error is *Violations when the content breaks the rules: every row is one of the loop closures of s, each at most once.
-func ReadClosures(dir string, s *Survey) ([][]bool, error) {
+// LeaveOutClosures takes the loop closures that results/closures.csv calls refused or open out of s, which was read from the survey
+// folder dir, and returns how many. Without such a file there are none. An error is *Violations when the content breaks the rules:
+// every row is one of the loop closures of s, each at most once; s is then as it was.
+func LeaveOutClosures(dir string, s *Survey) (int, error) {
+	out, err := readClosures(dir, s)
+	if err != nil {
+		return 0, err
+	}
+	n := 0
+	for i := range out {
+		r, row := &s.Robots[i], -1
+		r.Relatives = slices.DeleteFunc(r.Relatives, func(Relative) bool { row++; return out[i][row] })
+		n += len(out[i]) - len(r.Relatives)
+	}
+	return n, nil
+}
+
+// readClosures returns for each robot of s and each of its relative poses whether the file leaves it out.
+func readClosures(dir string, s *Survey) ([][]bool, error) {
 	type key struct {
 		robot    string
 		session  uint32
