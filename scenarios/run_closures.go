@@ -114,6 +114,31 @@ func (r *Run) countClosures(out *Score) {
 	})
 }
 
+// closureTables is empty where no loop closure was delivered.
+func (s *Score) closureTables() []report.Table {
+	c := &s.Closures
+	if c.All == (Verdicts{}) {
+		return nil
+	}
+	t := report.Table{
+		Caption: "Loop closures by verdict",
+		Columns: []report.Column{{Name: "loop closures"}, {Name: "held", Right: true}, {Name: "refused", Right: true}, {Name: "open", Right: true}},
+		File:    "closures.csv",
+	}
+	row := func(name string, v *Verdicts) {
+		t.Rows = append(t.Rows, []string{name, fmt.Sprint(v.Held), fmt.Sprint(v.Refused), fmt.Sprint(v.Open)})
+	}
+	row("all", &c.All)
+	if c.True != nil {
+		row("true", c.True)
+		row("false", c.False)
+	}
+	for i := range s.Robots {
+		row("of "+s.Robots[i].ID, &s.Robots[i].Closures)
+	}
+	return []report.Table{t}
+}
+
 // misled lists the robots whose agents refused loop closures.
 func misled(s *Score) []string {
 	var out []string

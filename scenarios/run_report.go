@@ -27,7 +27,7 @@ func (r *Run) page(s *Score, places []place, poses [][]survey.ResultPose, made, 
 		Attention: r.attention(s, places, truth),
 		Plans:     []report.Plan{r.plan(places, poses, t, truth)},
 		Charts:    r.charts(s),
-		Tables:    slices.Concat([]report.Table{s.robotTable(), s.tieTable(), s.acceptanceTable()}, s.islandTables(), []report.Table{r.doubtTable(truth)}),
+		Tables:    slices.Concat([]report.Table{s.robotTable(), s.tieTable()}, s.closureTables(), []report.Table{s.acceptanceTable()}, s.islandTables(), []report.Table{r.doubtTable(truth)}),
 		Method:    r.method(s),
 		Files: []report.File{
 			{Name: "summary.json", About: "the figures of this page: acceptance, robots, ties, islands"},
