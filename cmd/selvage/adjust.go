@@ -23,6 +23,7 @@ type adjustCmd struct {
 	Tolerance     float64 `default:"1e-12" help:"Converged when a step would lower the cost by less than this share of it (default 1e-12)."`
 	MaxIterations int     `default:"500" placeholder:"N" help:"Give up after so many steps (default 500)."`
 	AllTies       bool    `help:"Also use ties and loop closures that the survey's verdicts call refused or open, but not ties that were ruled refused."`
+	AllSightings  bool    `help:"Let every sighting count in full, also those that do not fit the others."`
 	JSON          bool    `name:"json" help:"Print one JSON object instead of the table."`
 }
 
@@ -48,6 +49,8 @@ type adjustReport struct {
 	TiesHeld     int         `json:"ties_held"`     // in the adjustment
 	TiesLeftOut  []string    `json:"ties_left_out"` // refused or open
 	Rulings      []tieRuling `json:"rulings"`       // on single ties or on their robots: they come before the verdicts
+	Sightings    int         `json:"sightings"`     // of marks, and ties that are less than a pose
+	SightingsCut int         `json:"sightings_left_out"`
 	Islands      int         `json:"islands"`
 	Start        string      `json:"start"`
 	InitialCost  float64     `json:"initial_cost"`
@@ -114,7 +117,7 @@ func (c *adjustCmd) Run(ctx context.Context, con *console) error {
 	}{
 		{"reading " + c.Survey, &t.Read, a.read},
 		{"building the pose graph", &t.Build, a.build},
-		{"finding starting values", &t.Start, func() error { return a.problem.Begin(adjust.Start(c.Start)) }},
+		{"finding starting values", &t.Start, a.start},
 		{"analysing", &t.Analyse, func() error { return a.problem.Analyse(c.Workers) }},
 		{"adjusting", &t.Optimise, a.optimise},
 		{"computing covariances", &t.Covariance, a.covariance},
@@ -233,6 +236,14 @@ func (a *adjustment) build() error {
 	if len(a.problem.Keys) == 0 {
 		return badInput("%s holds no keyframes: there is nothing to adjust", a.Survey)
 	}
+	a.report.Sightings = len(a.problem.Sights())
+	return nil
+}
+
+func (a *adjustment) start() error {
+	if err := a.problem.Begin(adjust.Start(a.Start)); err != nil {
+		return err
+	}
 	a.islands = findIslands(a.problem)
 	a.report.Islands = len(a.islands.sessions)
 	return nil
@@ -244,13 +255,17 @@ func (a *adjustment) optimise() error {
 		a.progress.at(-1, "step %d, cost %.8g", iteration, cost)
 		return a.ctx.Err() == nil
 	}
-	r := a.problem.Solve(o)
+	var r posegraph.Result
+	if a.report.Sightings > 0 && !a.AllSightings {
+		r, a.report.SightingsCut = a.problem.SolveRobust(o)
+	} else {
+		r = a.problem.Solve(o)
+	}
 	switch r.Stop {
 	case posegraph.Interrupted:
 		return a.ctx.Err()
 	case posegraph.Undetermined:
-		k := a.problem.Keys[r.Weakest]
-		return badInput("%s: the measurements leave keyframe %d of robot %s, session %d, free in some direction; nothing was written", a.Survey, k.ID, k.Robot, k.Session)
+		return badInput("%s: the measurements leave %s, free in some direction; nothing was written", a.Survey, a.problem.Describe(r.Weakest))
 	}
 	a.weighRulings()
 	a.report.InitialCost, a.report.Cost = r.InitialCost, r.Cost

@@ -31,8 +31,8 @@ type islands struct {
 func findIslands(p *adjust.Problem) *islands {
 	var l islands
 	at := map[unit]int{}
-	sessions := make([][]unit, len(p.Anchors))
-	keyframes := make([]int, len(p.Anchors))
+	sessions := make([][]unit, p.Islands)
+	keyframes := make([]int, p.Islands)
 	for v, k := range p.Keys {
 		u := unit{k.Robot, k.Session}
 		keyframes[p.Island[v]]++
@@ -127,6 +127,9 @@ func (a *adjustment) show(con *console) error {
 		row("loop closures left out by verdict", "%d", r.ClosuresOut)
 	}
 	row("ties in the adjustment", "%d of %d", r.TiesHeld, r.Ties)
+	if r.Sightings > 0 {
+		row("sightings left out", "%d of %d", r.SightingsCut, r.Sightings)
+	}
 	row("cost at the start", "%.8g", r.InitialCost)
 	row("cost", "%.10g", r.Cost)
 	row("steps", "%d (%d refused)", r.Iterations, r.RefusedSteps)

@@ -28,9 +28,16 @@ type Problem struct {
 	Factors *posegraph.Between
 	Keys    []Key         // variable -> keyframe
 	Var     map[Key]int32 // keyframe -> variable
-	Tie     []int         // tie of the survey -> factor, -1 when it is not in the adjustment
-	Anchors []int32       // the fixed variable of each island
+	Tie     []int         // tie of the survey -> factor, -1 when it is no whole pose or not in the adjustment
+	Anchors []int32       // the fixed variables: one of each island that no control points hold
 	Island  []int32       // variable -> island
+	Islands int
+	Points  []Point // the points of the graph, which Begin makes; their variables follow those of Keys
+
+	body   []int32   // pose -> what whole relative poses hold together, mostly a session; nil before a start with sightings
+	own    []lie.SE3 // the own map of each body where it was found to stand, before the bodies were adjusted together
+	sights []sighted // sightings of marks and ties that are less than a pose, in the order of the survey
+	marks  []survey.Mark
 
 	solver  *posegraph.Solver // nil before the analysis
 	workers int               // that it was made for
@@ -51,19 +58,21 @@ const (
 // New builds the pose graph of s with the ties for which held is true; nil holds all. Ties by stamp go to the keyframe at that
 // moment, which is made between two others where there is none.
 func New(s *survey.Survey, held func(tie int) bool) (*Problem, error) {
-	if err := s.PosesOnly(); err != nil {
-		return nil, err
-	}
 	keyframes, factors, byStamp := 0, len(s.Ties), false
 	for i := range s.Robots {
 		keyframes += len(s.Robots[i].Keyframes)
 		factors += len(s.Robots[i].Relatives)
 	}
 	for k := range s.Ties {
-		byStamp = byStamp || s.Ties[k].ToByStamp
+		byStamp = byStamp || s.Ties[k].ToByStamp || s.Ties[k].FromByStamp
+	}
+	for i := range s.Robots {
+		for k := range s.Robots[i].Sightings {
+			byStamp = byStamp || s.Robots[i].Sightings[k].ByStamp
+		}
 	}
 	p := &Problem{Keys: make([]Key, 0, keyframes), Var: make(map[Key]int32, keyframes), Tie: make([]int, len(s.Ties))}
-	moments := moments{p, map[Key]*track{}}
+	moments := moments{problem: p, tracks: map[Key]*track{}}
 	poses := make([]lie.SE3, 0, keyframes)
 	for i := range s.Robots {
 		r := &s.Robots[i]
@@ -92,21 +101,22 @@ func New(s *survey.Survey, held func(tie int) bool) (*Problem, error) {
 		if held != nil && !held(k) {
 			continue
 		}
-		from, ok := p.Var[Key{t.FromRobot, t.FromSession, t.FromKey}]
-		if !ok {
-			return nil, fmt.Errorf("tie %s: no keyframe %d of robot %s, session %d", t.ID, t.FromKey, t.FromRobot, t.FromSession)
+		from, err := moments.end(t.FromRobot, t.FromSession, t.FromKey, t.FromStampNS, t.FromByStamp)
+		if err != nil {
+			return nil, fmt.Errorf("tie %s: %w", t.ID, err)
 		}
-		to, ok := p.Var[Key{t.ToRobot, t.ToSession, t.ToKey}]
-		if t.ToByStamp {
-			to, ok = moments.find(Key{Robot: t.ToRobot, Session: t.ToSession}, t.ToStampNS)
+		to, err := moments.end(t.ToRobot, t.ToSession, t.ToKey, t.ToStampNS, t.ToByStamp)
+		if err != nil {
+			return nil, fmt.Errorf("tie %s: %w", t.ID, err)
 		}
-		switch {
-		case !ok && t.ToByStamp:
-			return nil, fmt.Errorf("tie %s: no keyframe of robot %s, session %d, at or around the stamp %d", t.ID, t.ToRobot, t.ToSession, t.ToStampNS)
-		case !ok:
-			return nil, fmt.Errorf("tie %s: no keyframe %d of robot %s, session %d", t.ID, t.ToKey, t.ToRobot, t.ToSession)
-		case from == to:
+		if from == to {
 			return nil, fmt.Errorf("tie %s: both ends are keyframe %d of robot %s, session %d", t.ID, t.FromKey, t.FromRobot, t.FromSession)
+		}
+		if t.Kind != survey.WholePose {
+			if err := p.addEncounter(s, k, from, to); err != nil {
+				return nil, fmt.Errorf("tie %s: %w", t.ID, err)
+			}
+			continue
 		}
 		info, err := t.Cov.Information(s.Meta.Dimension)
 		if err != nil {
@@ -115,8 +125,10 @@ func New(s *survey.Survey, held func(tie int) bool) (*Problem, error) {
 		p.Tie[k] = p.Factors.Len()
 		p.Factors.Add(from, to, Pose(t.Pose), &info)
 	}
-	p.Island, _ = p.Graph.Components()
-	p.Anchors = p.Graph.Anchors()
+	if err := p.addSightings(s, &moments); err != nil {
+		return nil, err
+	}
+	p.connect(nil, false)
 	return p, nil
 }
 
@@ -156,8 +168,12 @@ func Pose(p survey.Pose) lie.SE3 { return lie.FromQuat(p.T, p.Q) }
 // Folder turns a rigid motion into a pose of the folder.
 func Folder(x *lie.SE3) survey.Pose { return survey.Pose{T: x.T, Q: x.Quat()} }
 
-// Begin sets starting values.
+// Begin sets starting values. Where there are sightings it also finds how the frames of the robots stand to each other and
+// leaves those that it cannot join in islands of their own.
 func (p *Problem) Begin(start Start) error {
+	if len(p.sights) > 0 {
+		return p.beginSighted(start)
+	}
 	switch start {
 	case Auto:
 		given := slices.Clone(p.Graph.Values.Poses)

@@ -2,6 +2,7 @@ package adjust
 
 import (
 	"cmp"
+	"fmt"
 	"slices"
 
 	"selvage/internal/lie"
@@ -16,7 +17,24 @@ type track struct {
 // moments finds the keyframe of a session at a moment, for ties that name their far end so.
 type moments struct {
 	problem *Problem
-	tracks  map[Key]*track // by robot and session, the id being zero
+	tracks  map[Key]*track     // by robot and session, the id being zero
+	steps   map[[2]int32]int32 // from one keyframe to another -> factor, once it was needed
+}
+
+// end returns the variable of what a tie or a sighting names: a keyframe, or a moment.
+func (m *moments) end(robot string, session uint32, id, stamp int64, byStamp bool) (int32, error) {
+	if byStamp {
+		v, ok := m.find(Key{Robot: robot, Session: session}, stamp)
+		if !ok {
+			return 0, fmt.Errorf("no keyframe of robot %s, session %d, at or around the stamp %d", robot, session, stamp)
+		}
+		return v, nil
+	}
+	v, ok := m.problem.Var[Key{robot, session, id}]
+	if !ok {
+		return 0, fmt.Errorf("no keyframe %d of robot %s, session %d", id, robot, session)
+	}
+	return v, nil
 }
 
 // add notes the stamp of a variable.
@@ -64,26 +82,32 @@ func (m *moments) find(unit Key, stamp int64) (int32, bool) {
 	}
 	p, from, to := m.problem, t.pose[k-1], t.pose[k]
 	f := p.Factors
-	for i := range f.I {
-		if f.I[i] != from || f.J[i] != to {
-			continue
+	if m.steps == nil {
+		m.steps = make(map[[2]int32]int32, f.Len())
+		for i := f.Len() - 1; i >= 0; i-- { // the first of two
+			m.steps[[2]int32{f.I[i], f.J[i]}] = int32(i)
 		}
-		v := int32(len(p.Keys))
-		share := float64(stamp-t.at[k-1]) / float64(t.at[k]-t.at[k-1])
-		key := Key{unit.Robot, unit.Session, -stamp}
-		if _, taken := p.Var[key]; taken {
-			return 0, false
-		}
-		step := f.Split(i, v, share)
-		x := p.Graph.Values.Poses[from].Mul(step)
-		if p.Graph.Dim == 3 {
-			x = lie.Planar(&x).Spatial()
-		}
-		p.Graph.Values.Poses = append(p.Graph.Values.Poses, x)
-		p.Keys = append(p.Keys, key)
-		p.Var[key] = v
-		t.at, t.pose = slices.Insert(t.at, k, stamp), slices.Insert(t.pose, k, v)
-		return v, true
 	}
-	return 0, false
+	i, ok := m.steps[[2]int32{from, to}]
+	if !ok {
+		return 0, false
+	}
+	v := int32(len(p.Keys))
+	share := float64(stamp-t.at[k-1]) / float64(t.at[k]-t.at[k-1])
+	key := Key{unit.Robot, unit.Session, -stamp}
+	if _, taken := p.Var[key]; taken {
+		return 0, false
+	}
+	step := f.Split(int(i), v, share)
+	delete(m.steps, [2]int32{from, to})
+	m.steps[[2]int32{from, v}], m.steps[[2]int32{v, to}] = i, int32(f.Len()-1)
+	x := p.Graph.Values.Poses[from].Mul(step)
+	if p.Graph.Dim == 3 {
+		x = lie.Planar(&x).Spatial()
+	}
+	p.Graph.Values.Poses = append(p.Graph.Values.Poses, x)
+	p.Keys = append(p.Keys, key)
+	p.Var[key] = v
+	t.at, t.pose = slices.Insert(t.at, k, stamp), slices.Insert(t.pose, k, v)
+	return v, true
 }

@@ -14,7 +14,7 @@ var Cutoffs = [4]float64{0, 10.828, 13.816, 16.266}
 type robust struct {
 	sets    []*posegraph.Sightings
 	graph   *posegraph.Graph
-	squared []float64 // of all sightings, each divided by the cutoff of its kind
+	squared []float64 // of all sightings, each divided by its cutoff
 	weights []float64
 }
 
@@ -35,9 +35,8 @@ func newRobust(g *posegraph.Graph) *robust {
 func (r *robust) measure() {
 	i := 0
 	for _, s := range r.sets {
-		bound := Cutoffs[s.Sense().Freedoms(r.graph.Dim)]
 		for k := range s.W {
-			r.squared[i] = s.Chi2(k, &r.graph.Values) / bound
+			r.squared[i] = s.Chi2(k, &r.graph.Values) / Cutoffs[max(1, s.Freedoms(k))]
 			i++
 		}
 	}
@@ -54,10 +53,11 @@ func (r *robust) weigh() {
 // SolveRobust adjusts with all sightings, then leaves out those that do not fit, and returns how many those are; their weight is
 // [evidence.Floor] thereafter. Analyse must have been called.
 func (p *Problem) SolveRobust(o posegraph.Options) (result posegraph.Result, cut int) {
-	return solveRobust(p.solver, p.Graph, o)
+	return solveRobust(p.solver, p.Graph, o, false)
 }
 
-func solveRobust(s *posegraph.Solver, g *posegraph.Graph, o posegraph.Options) (result posegraph.Result, cut int) {
+// solveRobust begins at the values as they stand, or first lets all sightings pull.
+func solveRobust(s *posegraph.Solver, g *posegraph.Graph, o posegraph.Options, fromAll bool) (result posegraph.Result, cut int) {
 	r := newRobust(g)
 	for i := range r.weights {
 		r.weights[i] = 1
@@ -65,7 +65,10 @@ func solveRobust(s *posegraph.Solver, g *posegraph.Graph, o posegraph.Options) (
 	r.weigh()
 	rough := o // a stage is only a way to the next
 	rough.Tolerance, rough.MaxIterations = 1e-5, 20
-	result = s.Optimise(rough)
+	result.InitialCost = g.Cost()
+	if fromAll {
+		result = s.Optimise(rough)
+	}
 	r.measure()
 	schedule, any := evidence.NewSchedule(1, r.squared)
 	for stage := 0; any && stage < 200 && result.Stop != posegraph.Interrupted && result.Stop != posegraph.Undetermined; stage++ {
@@ -75,19 +78,25 @@ func solveRobust(s *posegraph.Solver, g *posegraph.Graph, o posegraph.Options) (
 			break
 		}
 		rough.MaxIterations = 4
-		first := result.InitialCost
-		result = s.Optimise(rough)
-		result.InitialCost = first
+		result = then(result, s.Optimise(rough))
 		r.measure()
 	}
 	if result.Stop == posegraph.Interrupted || result.Stop == posegraph.Undetermined {
 		return result, 0
 	}
-	result = s.Optimise(o)
+	result = then(result, s.Optimise(o))
 	for _, w := range r.weights {
 		if w < 0.5 {
 			cut++
 		}
 	}
 	return result, cut
+}
+
+// then joins the results of two adjustments of which one went on where the other ended.
+func then(a, b posegraph.Result) posegraph.Result {
+	b.InitialCost = a.InitialCost
+	b.Iterations += a.Iterations
+	b.Refused += a.Refused
+	return b
 }

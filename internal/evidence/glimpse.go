@@ -1,6 +1,7 @@
 package evidence
 
 import (
+	"cmp"
 	"math"
 	"slices"
 
@@ -13,47 +14,48 @@ type Glimpse struct {
 	A, B     int        // units
 	InA, InB [3]float64 // the spot, m; z is zero in the plane
 	Sigma    float64    // of its difference once the frames are aligned, m
-	At       float64    // when, s
+	Drift    float64    // variance that the places of both units had by then in their own frames, m^2
 }
 
 // FrameOptions steer [Frames].
 type FrameOptions struct {
-	Growth float64 // variance that the relative frame of two units gains in a second, by the drift of both, m^2/s
-	Bound  float64 // squared normalised residual above which a glimpse counts for nothing
-	Least  int     // glimpses that must agree beyond those that make up a hypothesis
+	Bound float64 // squared normalised residual above which a glimpse counts for nothing
+	Least int     // glimpses that must agree beyond those that make up a hypothesis
 }
 
-// DefaultFrameOptions suit units that hold their own maps together by marks or closures.
-func DefaultFrameOptions() FrameOptions { return FrameOptions{Growth: 0, Bound: 13.816, Least: 2} }
+// DefaultFrameOptions take a glimpse for wrong at one in a thousand.
+func DefaultFrameOptions() FrameOptions { return FrameOptions{Bound: 13.816, Least: 2} }
 
 // Frame is where the frame of a unit stands in that of the first unit of its group.
 type Frame struct {
 	Group int // its first unit
-	Pose  lie.SE2
+	Pose  lie.SE3
 	Score float64 // by which it joined
 }
 
 // relation is a possible pose of frame b in frame a.
 type relation struct {
 	a, b  int
-	pose  lie.SE2
+	pose  lie.SE3
 	at    float64
 	score float64
 }
 
 const (
 	mostGlimpses = 160 // of a pair that hypotheses are made from, evenly chosen
-	keptOfPair   = 6   // hypotheses
+	mostInSpace  = 40
+	keptOfPair   = 6 // hypotheses
 )
 
-// Frames finds how the frames of planar units stand to each other from glimpses alone. Two glimpses of a pair that lie apart make a
-// hypothesis; all others of the pair vote on it, the less the longer ago they were (consensus after Fischler and Bolles, "Random
+// Frames finds how the frames of units stand to each other from glimpses alone. Two glimpses of a pair that lie apart make a
+// hypothesis, in space three; all others of the pair vote on it, the less the more the units have
+// drifted in between (consensus after Fischler and Bolles, "Random
 // sample consensus: a paradigm for model fitting with applications to image analysis and automated cartography", Communications of
 // the ACM 24(6), 1981, here over all pairs of glimpses instead of a random sample). The strongest pair begins a group; then, one after
 // another, the unit joins whose best hypothesis has most votes among the glimpses with all units of the group, so that a
 // hypothesis which contradicts a third robot loses. Units that nothing places are groups of their own.
-func Frames(units int, glimpses []Glimpse, o FrameOptions) []Frame {
-	f := framing{o: o, of: map[[2]int][]Glimpse{}, frames: make([]Frame, units)}
+func Frames(units int, planar bool, glimpses []Glimpse, o FrameOptions) []Frame {
+	f := framing{planar: planar, o: o, of: map[[2]int][]Glimpse{}, frames: make([]Frame, units)}
 	for _, g := range glimpses {
 		if g.A > g.B {
 			g.A, g.B, g.InA, g.InB = g.B, g.A, g.InB, g.InA
@@ -67,7 +69,7 @@ func Frames(units int, glimpses []Glimpse, o FrameOptions) []Frame {
 	}
 	placed := make([]bool, units)
 	for i := range f.frames {
-		f.frames[i] = Frame{Group: i, Pose: lie.SE2{C: 1}}
+		f.frames[i] = Frame{Group: i, Pose: lie.Identity()}
 	}
 	for {
 		best := -1
@@ -85,6 +87,7 @@ func Frames(units int, glimpses []Glimpse, o FrameOptions) []Frame {
 }
 
 type framing struct {
+	planar bool
 	o      FrameOptions
 	of     map[[2]int][]Glimpse
 	found  []relation
@@ -131,17 +134,16 @@ func (f *framing) grow(h *relation, placed []bool) {
 	}
 }
 
-// votes returns how far the glimpses of two units bear out a relative pose at a moment, and how many do.
-func (f *framing) votes(a, b int, pose lie.SE2, at float64) (score float64, count int) {
+// votes returns how far the glimpses of two units bear out a relative pose that held at a stage of their drift, and how many do.
+func (f *framing) votes(a, b int, pose lie.SE3, at float64) (score float64, count int) {
 	if a > b {
 		a, b, pose = b, a, pose.Inv()
 	}
 	for i := range f.of[[2]int{a, b}] {
 		g := &f.of[[2]int{a, b}][i]
 		own := g.Sigma * g.Sigma
-		v := own + f.o.Growth*math.Abs(g.At-at)
-		x, y := shift(pose, g)
-		if r := (x*x + y*y) / v; r < f.o.Bound {
+		v := own + math.Abs(g.Drift-at)
+		if r := shift(&pose, g) / v; r < f.o.Bound {
 			score += (f.o.Bound - r) * own / v
 			count++
 		}
@@ -149,41 +151,55 @@ func (f *framing) votes(a, b int, pose lie.SE2, at float64) (score float64, coun
 	return score, count
 }
 
-// shift returns the difference of the two places of a glimpse, in the frame of A.
-func shift(pose lie.SE2, g *Glimpse) (x, y float64) {
-	return pose.X + pose.C*g.InB[0] - pose.S*g.InB[1] - g.InA[0], pose.Y + pose.S*g.InB[0] + pose.C*g.InB[1] - g.InA[1]
+// shift returns the squared distance of the two places of a glimpse.
+func shift(pose *lie.SE3, g *Glimpse) float64 {
+	p := pose.Apply(g.InB)
+	return squaredDistance(p, g.InA)
+}
+
+func squaredDistance(a, b [3]float64) float64 {
+	x, y, z := a[0]-b[0], a[1]-b[1], a[2]-b[2]
+	return x*x + y*y + z*z
 }
 
 // pair returns the hypotheses with most votes of two units, different from each other.
 func (f *framing) pair(a, b int) (best []relation) {
 	all := f.of[[2]int{a, b}]
-	step := max(1, (len(all)+mostGlimpses-1)/mostGlimpses)
+	most := mostGlimpses
+	if !f.planar {
+		most = mostInSpace
+	}
+	step := max(1, (len(all)+most-1)/most)
+	try := func(set ...*Glimpse) {
+		var from, to [3][3]float64
+		at := 0.0
+		for i, g := range set {
+			from[i], to[i] = g.InB, g.InA
+			at += g.Drift / float64(len(set))
+		}
+		pose, ok := lie.FitPoints(f.planar, from[:len(set)], to[:len(set)], nil)
+		if !ok {
+			return
+		}
+		score, count := f.votes(a, b, pose, at)
+		if count >= len(set)+f.o.Least && (len(best) < keptOfPair || score > best[keptOfPair-1].score) {
+			best = keep(best, relation{a, b, pose, at, score})
+		}
+	}
 	for i := 0; i < len(all); i += step {
 		for j := i + step; j < len(all); j += step {
-			g, h := &all[i], &all[j]
-			ax, ay := h.InA[0]-g.InA[0], h.InA[1]-g.InA[1]
-			bx, by := h.InB[0]-g.InB[0], h.InB[1]-g.InB[1]
-			la, lb := math.Hypot(ax, ay), math.Hypot(bx, by)
-			v := g.Sigma*g.Sigma + h.Sigma*h.Sigma + f.o.Growth*math.Abs(g.At-h.At)
-			// The direction must come out to a third of a radian or so, and the lengths must agree.
-			if la*lb < 9*v || (la-lb)*(la-lb) > f.o.Bound*v {
+			if !f.apart(&all[i], &all[j]) {
 				continue
 			}
-			c, s := bx*ax+by*ay, bx*ay-by*ax
-			n := math.Hypot(c, s)
-			p := lie.SE2{C: c / n, S: s / n}
-			mx, my := (g.InB[0]+h.InB[0])/2, (g.InB[1]+h.InB[1])/2
-			p.X = (g.InA[0]+h.InA[0])/2 - p.C*mx + p.S*my
-			p.Y = (g.InA[1]+h.InA[1])/2 - p.S*mx - p.C*my
-			at := (g.At + h.At) / 2
-			score, count := f.votes(a, b, p, at)
-			if count < 2+f.o.Least {
+			if f.planar {
+				try(&all[i], &all[j])
 				continue
 			}
-			if len(best) == keptOfPair && score <= best[keptOfPair-1].score {
-				continue
+			for k := j + step; k < len(all); k += step {
+				if f.apart(&all[i], &all[k]) && f.apart(&all[j], &all[k]) {
+					try(&all[i], &all[j], &all[k])
+				}
 			}
-			best = keep(best, relation{a, b, p, at, score})
 		}
 	}
 	for i := range best {
@@ -193,23 +209,24 @@ func (f *framing) pair(a, b int) (best []relation) {
 		}
 		h.score, _ = f.votes(a, b, h.pose, h.at)
 	}
-	slices.SortStableFunc(best, func(x, y relation) int {
-		switch {
-		case x.score > y.score:
-			return -1
-		case x.score < y.score:
-			return 1
-		}
-		return 0
-	})
+	slices.SortStableFunc(best, func(x, y relation) int { return cmp.Compare(y.score, x.score) })
 	return best
+}
+
+// apart tells whether two glimpses lie far enough apart, in both frames equally, for the direction between them to come out to
+// about a third of a radian.
+func (f *framing) apart(g, h *Glimpse) bool {
+	v := g.Sigma*g.Sigma + h.Sigma*h.Sigma + math.Abs(g.Drift-h.Drift)
+	la, lb := math.Sqrt(squaredDistance(g.InA, h.InA)), math.Sqrt(squaredDistance(g.InB, h.InB))
+	return la*lb >= 9*v && (la-lb)*(la-lb) <= f.o.Bound*v
 }
 
 // keep enters h in a list by score, in place of those that say nearly the same with fewer votes.
 func keep(list []relation, h relation) []relation {
 	for i := range list {
-		d := list[i].pose.Between(h.pose).Log()
-		if math.Hypot(d[0], d[1]) < 1 && math.Abs(d[2]) < 0.2 {
+		between := list[i].pose.Between(h.pose)
+		d := between.Log()
+		if d[0]*d[0]+d[1]*d[1]+d[2]*d[2] < 1 && d[3]*d[3]+d[4]*d[4]+d[5]*d[5] < 0.04 {
 			if list[i].score >= h.score {
 				return list
 			}
@@ -225,37 +242,20 @@ func keep(list []relation, h relation) []relation {
 	return list[:min(len(list), keptOfPair)]
 }
 
-// refine fits the pose to the glimpses that bear it out, each by its weight: the rigid fit in closed form.
-func (f *framing) refine(h *relation) lie.SE2 {
-	var w, ax, ay, bx, by float64
+// refine fits the pose to the glimpses that bear it out, each by its weight.
+func (f *framing) refine(h *relation) lie.SE3 {
+	var from, to [][3]float64
+	var weights []float64
 	all := f.of[[2]int{h.a, h.b}]
-	weights := make([]float64, len(all))
 	for i := range all {
 		g := &all[i]
-		v := g.Sigma*g.Sigma + f.o.Growth*math.Abs(g.At-h.at)
-		x, y := shift(h.pose, g)
-		if x*x+y*y < f.o.Bound*v {
-			q := 1 / v
-			weights[i] = q
-			w += q
-			ax, ay, bx, by = ax+q*g.InA[0], ay+q*g.InA[1], bx+q*g.InB[0], by+q*g.InB[1]
+		v := g.Sigma*g.Sigma + math.Abs(g.Drift-h.at)
+		if shift(&h.pose, g) < f.o.Bound*v {
+			from, to, weights = append(from, g.InB), append(to, g.InA), append(weights, 1/v)
 		}
 	}
-	if w == 0 {
-		return h.pose
+	if pose, ok := lie.FitPoints(f.planar, from, to, weights); ok {
+		return pose
 	}
-	ax, ay, bx, by = ax/w, ay/w, bx/w, by/w
-	var c, s float64
-	for i := range all {
-		px, py, qx, qy := all[i].InB[0]-bx, all[i].InB[1]-by, all[i].InA[0]-ax, all[i].InA[1]-ay
-		c += weights[i] * (px*qx + py*qy)
-		s += weights[i] * (px*qy - py*qx)
-	}
-	n := math.Hypot(c, s)
-	if n == 0 {
-		return h.pose
-	}
-	p := lie.SE2{C: c / n, S: s / n}
-	p.X, p.Y = ax-p.C*bx+p.S*by, ay-p.S*bx-p.C*by
-	return p
+	return h.pose
 }

@@ -32,9 +32,12 @@ func PlacePoints(g *Graph) (unplaced []int32) {
 				continue
 			}
 			x := g.Values.Poses[s.From[k]].Mul(s.Mount[k])
-			if s.sense != Bearing {
-				g.Values.Points[p], placed[p] = g.flat(x.Apply(s.local(k))), true
+			if u, ok := s.Place(k); ok {
+				g.Values.Points[p], placed[p] = g.flat(g.Values.Poses[s.From[k]].Apply(u)), true
 				continue
+			}
+			if s.sense != Bearing || s.Freedoms(k) < s.g.Dim/3 {
+				continue // a part of a direction or of a position
 			}
 			// The sum of (I - d d') (p - t) is zero at the point nearest to all rays.
 			d := x.R.Apply(direction(s.Z[k]))
@@ -73,14 +76,27 @@ func (g *Graph) flat(p [3]float64) [3]float64 {
 	return p
 }
 
-// local returns the place that sighting k measured in the frame of its sensor; it must tell range and bearing, or the position.
-func (s *Sightings) local(k int) [3]float64 {
+// Place returns where sighting k measured what it saw in the frame of its pose, if it tells range and bearing or the position whole.
+func (s *Sightings) Place(k int) (place [3]float64, whole bool) {
 	z := s.Z[k]
-	if s.sense == Position {
-		return z
+	if s.sense == Range || s.sense == Bearing || s.Freedoms(k) < 1+s.g.Dim/3 {
+		return place, false
 	}
+	if s.sense == RangeBearing {
+		d := direction(z)
+		z = [3]float64{z[0] * d[0], z[0] * d[1], z[0] * d[2]}
+	}
+	return s.Mount[k].Apply(z), true
+}
+
+// Cartesian turns a range with a bearing (and an elevation, in space) into the position with its information, to first order. As a
+// measurement it pulls less wildly than the angles do while what is seen is still estimated near the sensor: good for a start.
+func Cartesian(dim int, z [3]float64, info *lie.Mat3) (at [3]float64, of lie.Mat3) {
 	d := direction(z)
-	return [3]float64{z[0] * d[0], z[0] * d[1], z[0] * d[2]}
+	at = [3]float64{z[0] * d[0], z[0] * d[1], z[0] * d[2]}
+	s := Sightings{g: &Graph{Dim: dim}, sense: RangeBearing, Mount: []lie.SE3{lie.Identity()}, Z: [][3]float64{z}}
+	_, j := s.evaluate(0, at, true)
+	return at, j.T().Mul(*info).Mul(j)
 }
 
 // direction returns the unit vector of a bearing and an elevation, components 1 and 2 of a measurement.

@@ -72,6 +72,18 @@ func (c *PointPriors) Add(point int32, at [3]float64, info *lie.Mat3) {
 	c.point, c.at, c.info = append(c.point, point), append(c.at, at), append(c.info, m)
 }
 
+// Keep removes the control points for which keep is false.
+func (c *PointPriors) Keep(keep func(point int32) bool) {
+	n := 0
+	for k, p := range c.point {
+		if keep(p) {
+			c.point[n], c.at[n], c.info[n] = p, c.at[k], c.info[k]
+			n++
+		}
+	}
+	c.point, c.at, c.info = c.point[:n], c.at[:n], c.info[:n]
+}
+
 // Couplings implements [FactorSet]: a control point couples nothing.
 func (c *PointPriors) Couplings(func(i, j int32)) {}
 

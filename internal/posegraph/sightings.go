@@ -32,16 +32,6 @@ func (s Sense) measures(dim int) [3]bool {
 	panic("posegraph: unknown sense")
 }
 
-// Freedoms returns how many numbers the sense measures.
-func (s Sense) Freedoms(dim int) (n int) {
-	for _, m := range s.measures(dim) {
-		if m {
-			n++
-		}
-	}
-	return n
-}
-
 // Sightings is a batch of factors in which a sensor on pose From sees something: a point of the graph, or a spot on another robot. The
 // bearing is counted in the x-y plane of the sensor from x towards y, the elevation from that plane towards z.
 type Sightings struct {
@@ -99,6 +89,16 @@ func (s *Sightings) OfPoints() bool { return s.ofPoints }
 
 // Info returns the information matrix of sighting k; it may be written.
 func (s *Sightings) Info(k int) *lie.Mat3 { return &s.info[k] }
+
+// Freedoms returns how many components sighting k has measured.
+func (s *Sightings) Freedoms(k int) (n int) {
+	for i := range 3 {
+		if s.info[k][4*i] > 0 {
+			n++
+		}
+	}
+	return n
+}
 
 // target returns the variable that sighting k sees.
 func (s *Sightings) target(k int) int32 {

@@ -1,0 +1,195 @@
+package adjust
+
+import (
+	"fmt"
+
+	"selvage/internal/lie"
+	"selvage/internal/posegraph"
+	"selvage/internal/survey"
+)
+
+// Point is a point of the graph: a mark, or what one island knows of it where islands do not hang together.
+type Point struct {
+	Mark   int   // of the survey
+	Island int32 // that has seen it
+}
+
+// sighted is one sighting of a mark, or one tie that is less than a pose, whether or not it is in the graph at present.
+type sighted struct {
+	from  int32 // variable that sees
+	to    int32 // variable of the robot seen, -1 for a mark
+	mark  int32
+	sense posegraph.Sense
+	mount lie.SE3
+	spot  [3]float64
+	z     [3]float64
+	info  lie.Mat3
+	Sight
+}
+
+// Sight tells where a sighting of a mark, or a tie that is less than a pose, stands in the graph.
+type Sight struct {
+	Tie             int                  // of the survey, -1 for the sighting of a mark
+	Robot, Sighting int                  // of the survey, for the sighting of a mark
+	Set             *posegraph.Sightings // nil when it is not in the graph
+	K               int                  // factor of Set
+}
+
+// Sights lists the partial ties that are held, then the sightings of marks, in the order of the survey.
+func (p *Problem) Sights() []Sight {
+	out := make([]Sight, len(p.sights))
+	for i := range p.sights {
+		out[i] = p.sights[i].Sight
+	}
+	return out
+}
+
+var senses = map[survey.Kind]posegraph.Sense{
+	survey.Position: posegraph.Position, survey.RangeBearing: posegraph.RangeBearing,
+	survey.Range: posegraph.Range, survey.Bearing: posegraph.Bearing,
+}
+
+// addSight notes a sight of something by a robot.
+func (p *Problem) addSight(s *survey.Survey, robot string, kind survey.Kind, sight *survey.Sight, e sighted) error {
+	info, err := sight.Information(s.Meta.Dimension)
+	if err != nil {
+		return err
+	}
+	mount, err := mounting(s, robot, sight.Sensor)
+	if err != nil {
+		return err
+	}
+	e.sense, e.mount, e.z, e.info = senses[kind], mount, sight.Value, info
+	p.sights = append(p.sights, e)
+	return nil
+}
+
+func mounting(s *survey.Survey, robot, name string) (lie.SE3, error) {
+	for i := range s.Meta.Robots {
+		if m := &s.Meta.Robots[i]; m.ID == robot {
+			if x, ok := m.MountPose(name); ok {
+				return Pose(x), nil
+			}
+		}
+	}
+	if name == "" {
+		return lie.Identity(), nil
+	}
+	return lie.SE3{}, fmt.Errorf("robot %s has no mounting %q", robot, name)
+}
+
+// addEncounter notes tie k, which sees another robot.
+func (p *Problem) addEncounter(s *survey.Survey, k int, from, to int32) error {
+	t := &s.Ties[k]
+	target, err := mounting(s, t.ToRobot, t.Sight.Target)
+	if err != nil {
+		return err
+	}
+	return p.addSight(s, t.FromRobot, t.Kind, &t.Sight, sighted{from: from, to: to, spot: target.T, Sight: Sight{Tie: k}})
+}
+
+// addSightings notes the sightings of marks.
+func (p *Problem) addSightings(s *survey.Survey, m *moments) error {
+	p.marks = s.Marks
+	number := make(map[string]int32, len(s.Marks))
+	for i := range s.Marks {
+		number[s.Marks[i].Name] = int32(i)
+	}
+	for i := range s.Robots {
+		r := &s.Robots[i]
+		for k := range r.Sightings {
+			e := &r.Sightings[k]
+			fault := func(err error) error {
+				return fmt.Errorf("robot %s, session %d, sighting %d of mark %s: %w", r.ID, e.Session, k+1, e.Mark, err)
+			}
+			mark, ok := number[e.Mark]
+			if !ok {
+				return fault(fmt.Errorf("no such mark"))
+			}
+			from, err := m.end(r.ID, e.Session, e.Key, e.StampNS, e.ByStamp)
+			if err != nil {
+				return fault(err)
+			}
+			if err := p.addSight(s, r.ID, e.Kind, &e.Sight, sighted{from: from, to: -1, mark: mark, Sight: Sight{Tie: -1, Robot: i, Sighting: k}}); err != nil {
+				return fault(err)
+			}
+		}
+	}
+	return nil
+}
+
+// connect enters the sightings into the graph, and finds its islands and what holds them. Given a label of each pose, only sightings
+// between poses of one label are entered, a mark being another point for each label; nil enters all. Coarse turns
+// ranges with bearings into positions.
+func (p *Problem) connect(label []int32, coarse bool) {
+	g := p.Graph
+	g.Sets = append(g.Sets[:0], p.Factors)
+	g.Values.Points, p.Points, p.solver = nil, nil, nil
+	type place struct{ mark, label int32 }
+	point := map[place]int32{}
+	sets := sets{graph: g}
+	for i := range p.sights {
+		e := &p.sights[i]
+		e.Set = nil
+		l := int32(0)
+		if label != nil {
+			l = label[e.from]
+		}
+		to := e.to
+		if to < 0 {
+			at, ok := point[place{e.mark, l}]
+			if !ok {
+				at = int32(len(p.Points))
+				point[place{e.mark, l}] = at
+				p.Points = append(p.Points, Point{Mark: int(e.mark)})
+			}
+			to = at
+		} else if label != nil && label[to] != l {
+			continue
+		}
+		sense, z, info := e.sense, e.z, e.info
+		if coarse && sense == posegraph.RangeBearing {
+			sense = posegraph.Position
+			z, info = posegraph.Cartesian(g.Dim, z, &info)
+		}
+		e.Set = sets.of(sense, e.to < 0)
+		e.K = e.Set.Len()
+		e.Set.Add(e.from, to, e.mount, e.spot, z, &info)
+	}
+	g.Values.Points = make([][3]float64, len(p.Points))
+	var islands int
+	p.Island, islands = g.Components()
+	p.Islands = islands
+	p.Anchors = g.Anchors()
+	for k := range p.Points {
+		p.Points[k].Island = p.Island[g.Point(int32(k))]
+	}
+}
+
+// sets are those of a graph, made as they are needed.
+type sets struct {
+	graph *posegraph.Graph
+	made  [2][posegraph.Position + 1]*posegraph.Sightings
+}
+
+func (s *sets) of(sense posegraph.Sense, points bool) *posegraph.Sightings {
+	if points {
+		if s.made[1][sense] == nil {
+			s.made[1][sense] = s.graph.AddSightings(sense)
+		}
+		return s.made[1][sense]
+	}
+	if s.made[0][sense] == nil {
+		s.made[0][sense] = s.graph.AddEncounters(sense)
+	}
+	return s.made[0][sense]
+}
+
+// Describe names a variable of the graph.
+func (p *Problem) Describe(variable int32) string {
+	if k := int(variable) - len(p.Keys); k >= 0 {
+		return fmt.Sprintf("mark %s", p.marks[p.Points[k].Mark].Name)
+	}
+	k := p.Keys[variable]
+	return fmt.Sprintf("keyframe %d of robot %s, session %d", k.ID, k.Robot, k.Session)
+}
