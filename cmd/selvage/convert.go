@@ -9,9 +9,11 @@ import (
 )
 
 type convertCmd struct {
-	From string `enum:"pose-tables" required:"" placeholder:"FORMAT" help:"Format of the data: pose-tables."`
+	From string `enum:"pose-tables,sighting-log" required:"" placeholder:"FORMAT" help:"Format of the data: pose-tables or sighting-log."`
 	Data string `arg:"" help:"Folder with the data."`
 	Out  string `short:"o" required:"" placeholder:"FOLDER" help:"Survey to write: new, empty, or a survey that is replaced."`
+
+	logFlags `embed:""`
 }
 
 func (convertCmd) Help() string {
@@ -21,6 +23,16 @@ func (convertCmd) Help() string {
   relative.csv   from to x y z qx qy qz qw i00 i01 i02 i03 i04 i05 i11 ... i55
 
 Metres and radians; i.. is the upper triangle of the information matrix, translation first. They become the one session of the robot r1. Nothing is written unless every line is sound.
+
+A sighting log is what wheeled robots on one floor were told to drive, and what they have seen by range and bearing, on one clock:
+
+  odometry.csv         robot t_s v_mps w_radps                  held until the next row of the robot
+  observations.csv     observer t_s subject range_m bearing_rad  a robot, another number for a landmark, or 0
+  landmarks_truth.csv  subject x_m y_m x_sd_m y_sd_m            optional
+  truth.csv            robot t_s x_m y_m theta_rad              optional
+  run.json             time_origin_unix_s                       optional
+
+Robot N becomes rN, and landmark N the mark mN; commands become odometry by dead reckoning, sightings of robots ties of kind range_bearing, those of landmarks sightings of marks.
 
 Example, with four poses on a square and its tables made first:
 
@@ -38,7 +50,17 @@ func (c *convertCmd) Run(ctx context.Context, con *console) error {
 	p := con.progress()
 	defer p.end()
 	p.begin("reading " + c.Data)
-	s, err := interruptible(ctx, func() (*survey.Survey, error) { return survey.ReadPoseTables(c.Data) })
+	holds := ""
+	s, err := interruptible(ctx, func() (s *survey.Survey, err error) {
+		if c.From == "sighting-log" {
+			s, holds, err = c.readLog()
+			return s, err
+		}
+		if c.logFlags != (logFlags{}) {
+			return nil, badInput("%s goes without the flags of a sighting log", c.From)
+		}
+		return survey.ReadPoseTables(c.Data)
+	})
 	var bad *survey.Violations
 	if errors.As(err, &bad) {
 		const shown = 5
@@ -63,6 +85,10 @@ func (c *convertCmd) Run(ctx context.Context, con *console) error {
 	}
 	p.end()
 	con.warn(s.Warnings)
+	if c.From == "sighting-log" {
+		con.finding("%s holds %s.", c.Out, holds)
+		return nil
+	}
 	closures := 0
 	r := &s.Robots[0]
 	for i := range r.Relatives {

@@ -7,8 +7,8 @@ import (
 	"strings"
 )
 
-// PosesOnly returns an error that counts what a program cannot use that knows nothing but relative poses: ties of other kinds and
-// sightings of marks.
+// PosesOnly returns an error that counts what agents and coordinator, who know nothing but relative poses, cannot use: ties of other
+// kinds and sightings of marks.
 func (s *Survey) PosesOnly() error {
 	var count [len(kindNames)]int
 	for i := range s.Ties {
@@ -33,7 +33,7 @@ func (s *Survey) PosesOnly() error {
 	if n := len(found); n > 1 {
 		found = append(slices.Clone(found[:n-2]), found[n-2]+" and "+found[n-1])
 	}
-	return errors.New("this version adjusts pose ties; " + strings.Join(found, ", "))
+	return errors.New("a fleet works with ties of kind pose; " + strings.Join(found, ", "))
 }
 
 func plural(n int, one, many string) string {
