@@ -17,7 +17,8 @@ type Chain struct {
 	length []float64 // metres
 	part   []bool    // no odometry leads into this keyframe: another part of the track begins
 
-	ready  int // keyframes for which the running sums hold
+	bias   float64 // of the heading, radians per metre, that the poses are cleared of
+	ready  int     // keyframes for which the running sums hold
 	pose   []lie.SE3
 	travel []float64
 	begin  []int         // first keyframe of the part
@@ -82,8 +83,11 @@ func covarianceOf(info *[36]float64, dim int, least float64) (cov, bool) {
 	return covOf(&full, dim), true
 }
 
-// prepare brings the running sums up to date.
-func (c *Chain) prepare() {
+// prepare brings the running sums up to date, at the poses dead-reckoned without the given heading bias.
+func (c *Chain) prepare(bias float64) {
+	if bias != c.bias {
+		c.bias, c.ready = bias, 0
+	}
 	n := len(c.step)
 	c.pose, c.travel, c.begin = c.pose[:c.ready], c.travel[:c.ready], c.begin[:c.ready]
 	c.sum, c.turn = c.sum[:c.ready], c.turn[:c.ready]
@@ -92,7 +96,9 @@ func (c *Chain) prepare() {
 		var sum cov
 		var turn lie.Tangent
 		if k > 0 {
-			x = c.pose[k-1].Mul(c.step[k]).Plus(lie.Tangent{}) // clean of rounding
+			half := c.length[k] / 2
+			back := lie.Exp(lie.Tangent{5: -bias * half})
+			x = c.pose[k-1].Mul(back).Mul(c.step[k]).Mul(back).Plus(lie.Tangent{}) // clean of rounding
 			m, sum, turn, begin = c.travel[k-1]+c.length[k], c.sum[k-1], c.turn[k-1], c.begin[k-1]
 			if c.part[k] {
 				begin = k
@@ -100,7 +106,6 @@ func (c *Chain) prepare() {
 			inv := x.Inv()
 			left := c.noise[k].carry(&inv)
 			sum.add(&left)
-			half := c.length[k] / 2
 			for _, p := range [2]*lie.SE3{&c.pose[k-1], &x} { // a bias turns the track about its up axis, all along the step
 				up := [3]float64{p.R[2] * half, p.R[5] * half, p.R[8] * half}
 				shift := cross(p.T, up)

@@ -44,7 +44,7 @@ func (w *wander) chain(steps []lie.SE3) *Chain {
 			c.Odometry(k-1, k, z, &w.info)
 		}
 	}
-	c.prepare()
+	c.prepare(0)
 	return c
 }
 
@@ -132,7 +132,7 @@ func TestWalkIsTheShortest(t *testing.T) {
 		if rng.IntN(3) == 0 { // a track in two parts
 			at := 1 + rng.IntN(n-1)
 			c.part[at], c.ready = true, at
-			c.prepare()
+			c.prepare(0)
 		}
 		var links []link
 		for range 1 + rng.IntN(8) {

@@ -42,18 +42,53 @@ type ClosureFinding struct {
 //   - that contradicts the way round is refused;
 //   - to which there is no way round, because the odometry is broken, is held: without it the parts would lie loose.
 //
-// Closures that are held also tell how large the heading bias is, of which the odometry's covariance knows nothing. The findings depend
-// on chain, closures and options alone, not on what was found before. Of the options Gate, BiasYaw, PlaceM, Chance and CliqueEffort are
-// used; the dimension is that of the chain.
+// Closures that are held also tell how large the heading bias is, of which the odometry's covariance knows nothing, and whether all
+// covariances promise too much. The findings depend on chain, closures and options alone, not on what was found before. Of the options
+// Gate, BiasYaw, PlaceM, Chance and CliqueEffort are used; the dimension is that of the chain.
 func (c *Chain) Judge(closures []Closure, o Options) []ClosureFinding {
 	if len(closures) == 0 {
 		return nil
 	}
-	c.prepare()
-	j := newJudge(c, closures, o)
-	for j.grow() || j.unite() || j.bridge() {
+	bias, factor := 0.0, 1.0
+	for pass := 1; ; pass++ {
+		c.prepare(bias)
+		j := newJudge(c, closures, o, factor)
+		for j.grow() || j.unite() || j.bridge() {
+		}
+		found := j.conclude()
+		b, f := j.value/j.known, factor*j.excess(found)
+		if pass == passes || math.Abs(b) <= o.BiasYaw/5 && f <= promise*factor {
+			return found
+		}
+		// A bias that bends long ways too much for a linear model is taken out of the poses, and all is looked at again.
+		bias += b
+		if f > promise*factor {
+			factor = f
+		}
 	}
-	return j.conclude()
+}
+
+// passes bounds how often [Chain.Judge] begins anew; promise is how much larger than promised variances must be to be believed so.
+const (
+	passes  = 4
+	promise = 1.5
+)
+
+// excess returns by how much the squared distances exceed what the covariances promise: their median over the expected one, false
+// closures, which lie far out, left aside. It is 1 when there are too few to tell.
+func (j *judge) excess(found []ClosureFinding) float64 {
+	var near []float64
+	for i := range found {
+		if x := &found[i]; x.DoF > 0 && x.Statistic < 10*j.gate {
+			near = append(near, x.Statistic)
+		}
+	}
+	const enough = 10
+	if len(near) < enough {
+		return 1
+	}
+	slices.Sort(near)
+	return near[len(near)/2] / distuv.ChiSquared{K: float64(j.dof)}.Quantile(0.5)
 }
 
 // judge is the state of [Chain.Judge].
@@ -73,6 +108,7 @@ type judge struct {
 
 	// The heading bias as the held closures show it: information and information times value.
 	known, value float64
+	factor       float64 // of all covariances
 }
 
 // sight is a closure against a way round: e is the misclosure, s what a heading bias does to it, C its covariance without the bias.
@@ -84,7 +120,7 @@ type sight struct {
 	length     float64
 }
 
-func newJudge(c *Chain, closures []Closure, o Options) *judge {
+func newJudge(c *Chain, closures []Closure, o Options, factor float64) *judge {
 	j := &judge{c: c, o: o, dof: 3 * (c.dim - 1), held: make([]bool, len(closures)), seen: make([]sight, len(closures))}
 	chi := distuv.ChiSquared{K: float64(j.dof)}
 	j.gate = chi.Quantile(o.Gate)
@@ -106,6 +142,8 @@ func newJudge(c *Chain, closures []Closure, o Options) *judge {
 	j.long, j.short = c.extent()
 	j.net = newNetwork(c, j.links)
 	j.known = 1 / (o.BiasYaw * o.BiasYaw)
+	j.value = -c.bias * j.known
+	j.factor = factor
 	return j
 }
 
@@ -140,6 +178,7 @@ func (j *judge) look(t int) sight {
 
 func (j *judge) against(l *link, w *way) sight {
 	e, c := w.misclosure(l)
+	c.scale(j.factor)
 	v := sight{found: true, c: c, s: w.turn, length: w.length}
 	var m [36]float64
 	n := c.dense(j.c.dim, &m)

@@ -74,14 +74,15 @@ func TestSquaredWithBias(t *testing.T) {
 	for _, dim := range []int{2, 3} {
 		rng := rand.New(rand.NewPCG(4, uint64(dim)))
 		c, truth := rounds(rng, dim, 2, 1e-4)
-		c.prepare()
+		c.prepare(0)
 		for range 20 {
 			i := rng.IntN(150)
-			j := newJudge(c, []Closure{closure(rng, dim, truth, i, i+160, false)}, DefaultOptions(dim))
+			j := newJudge(c, []Closure{closure(rng, dim, truth, i, i+160, false)}, DefaultOptions(dim), 1+rng.Float64())
 			j.known, j.value = 3e6*(1+rng.Float64()), 300*rng.NormFloat64()
 			v := j.look(0)
 			w, _ := j.net.walk(0)
 			e, spread := w.misclosure(&j.links[0])
+			spread.scale(j.factor)
 			b, variance := j.bias()
 			for k := range e {
 				e[k] -= b * w.turn[k]
@@ -147,12 +148,20 @@ func TestBrokenOdometry(t *testing.T) {
 	}
 }
 
-// TestManyFalseClosures: six rounds with as many false closures as true ones, in any order and direction.
+// TestManyFalseClosures: six rounds with as many false closures as true ones, in any order and direction, also with a large heading
+// bias and with sigmas that promise twice too much.
 func TestManyFalseClosures(t *testing.T) {
 	for _, dim := range []int{2, 3} {
 		for seed := range uint64(10) {
 			rng := rand.New(rand.NewPCG(seed, 7))
-			c, truth := rounds(rng, dim, 6, 3e-4*rng.NormFloat64())
+			c, truth := rounds(rng, dim, 6, 1e-3*rng.NormFloat64())
+			promised := 1.0 // times the information there is
+			if seed%3 == 2 {
+				promised = 4
+				for k := range c.noise {
+					c.noise[k].scale(1 / promised)
+				}
+			}
 			var closures []Closure
 			var wrong []bool
 			for k := 165; k < len(truth); k += 11 {
@@ -163,6 +172,11 @@ func TestManyFalseClosures(t *testing.T) {
 				}
 				closures = append(closures, closure(rng, dim, truth, i, j, true))
 				wrong = append(wrong, false, true)
+			}
+			for k := range closures {
+				for i := range 6 {
+					closures[k].Info[7*i] *= promised
+				}
 			}
 			found := c.Judge(closures, DefaultOptions(dim))
 			refused, kept := 0, 0

@@ -34,6 +34,14 @@ func (c *cov) add(d *cov) {
 	}
 }
 
+func (c *cov) scale(f float64) {
+	for i := range c.P {
+		c.P[i] *= f
+		c.Q[i] *= f
+		c.S[i] *= f
+	}
+}
+
 // carry returns Ad(Y^-1) c Ad(Y^-1)': the covariance of a perturbation left of the leg Y, seen from its right.
 func (c *cov) carry(y *lie.SE3) cov {
 	// Ad(Y^-1) = [[R' 0] [0 R']] [[I -K] [0 I]], K = Skew(t).
