@@ -19,6 +19,9 @@
 // that its linearisation matters: when condensing again would change the cost by more than three parts in 1e12. Otherwise the
 // correction is answered by a heartbeat.
 //
+// Loop closures may be false, and a false one would bend the map before it reaches the base: whenever the map is brought up to date
+// they are judged anew against the robot's own odometry and each other, and only those that are held have weight ([Agent.Closures]).
+//
 // The robot's own poses never jump: they stay in the session's frame, and [Agent.Tracks] gives them there together with the
 // transform into the datum.
 package agent
