@@ -7,19 +7,19 @@ import (
 	"selvage/internal/lie"
 )
 
-// Quadratic is the second-order model 1/2 d'Hd + b'd of some measurements at the present poses; d stacks the tangents (right
-// perturbations) of Nodes in order.
+// Quadratic is the second-order model 1/2 d'Hd + b'd of some measurements at the present values; d stacks the tangents of Nodes in
+// order: D numbers for a pose (right perturbation), 3 for a point (what is added to it; in the plane the third is not used).
 type Quadratic struct {
 	Nodes []int32   // distinct, any order
-	H     []float64 // row-major, (D len(Nodes))^2, symmetric
-	B     []float64 // D len(Nodes)
+	H     []float64 // row-major, square, symmetric
+	B     []float64
 }
 
-// Clique is a condensed term over a few junctions, free of the frame: the reference, Nodes[0], has no rows.
+// Clique is a condensed term over a few junctions, free of the frame: the reference, Nodes[0], is a pose and has no rows.
 type Clique struct {
 	Nodes []int32   // ascending, at least two
-	H     []float64 // row-major, d x d, d = D (len(Nodes)-1)
-	B     []float64 // d
+	H     []float64 // row-major, square: D rows for a pose and 3 for a point but for the reference
+	B     []float64
 }
 
 // Condensed is a pose graph condensed onto its junctions. Together the cliques have exactly the gradient and the Gauss-Newton
@@ -30,7 +30,8 @@ type Condensed struct {
 	Bytes     int      // size of the summary by the model that chose the junctions, see [CliqueBytes] and [PoseBytes]
 
 	dim   int           // D
-	n     int           // poses of the graph
+	poses int           // of the graph; points come after them
+	n     int           // poses and points of the graph
 	terms []term        // the cliques with the rows of their references, for NullResidual
 	steps []elimination // in order
 }
@@ -38,19 +39,14 @@ type Condensed struct {
 // Sizes of a summary in bytes, the model by which junctions are chosen.
 const (
 	PoseBytes   = 58 // a junction: its id, its pose in float64
+	PointBytes  = 26 // a junction that is a point: its id, its place in float64
 	numberBytes = 4  // a number of a clique, float32
 	idBytes     = 2  // a junction named in a clique
 )
 
 // CliqueBytes is the modelled size of a clique of k poses with tangents of dim numbers: the upper triangle of H, b and ids.
 // A clique of one pose says nothing and takes nothing.
-func CliqueBytes(dim, k int) int {
-	if k < 2 {
-		return 0
-	}
-	d := dim * (k - 1)
-	return numberBytes*(d*(d+1)/2+d) + idBytes*k
-}
+func CliqueBytes(dim, k int) int { return cliqueBytes(dim, k, 0) }
 
 // Condense condenses the graph of n poses and the given terms onto junctions that include all separators. dim is D, the numbers
 // of a tangent: 6 in space, 3 in the plane.
@@ -74,35 +70,39 @@ func CondenseAt(dim int, poses []lie.SE3, factors []Quadratic, separators []int3
 }
 
 func condenseAt(dim, n int, poses []lie.SE3, factors []Quadratic, separators []int32) (*Condensed, error) {
+	return layout{dim: dim, count: n, poses: poses}.condense(n, factors, separators)
+}
+
+// condense condenses a graph of n nodes.
+func (at layout) condense(n int, factors []Quadratic, separators []int32) (*Condensed, error) {
+	dim := at.dim
 	if dim != 3 && dim != 6 {
 		return nil, fmt.Errorf("partition: tangents of %d numbers, expected 3 or 6", dim)
 	}
-	if err := validate(dim, n, factors, separators); err != nil {
+	if err := validate(at, n, factors, separators); err != nil {
 		return nil, err
 	}
-	o := newOrdering(dim, n, factors, separators)
+	factors = at.pad(n, factors)
+	o := newOrdering(dim, at.count, n, factors, separators)
 	o.run()
-	e := newEliminator(o, dim, poses, factors)
+	e := newEliminator(o, at, factors)
 	if err := e.run(); err != nil {
 		return nil, err
 	}
 	return e.result(), nil
 }
 
-func validate(dim, n int, factors []Quadratic, separators []int32) error {
+func validate(at layout, n int, factors []Quadratic, separators []int32) error {
 	if n < 1 {
 		return fmt.Errorf("partition: %d poses, expected at least one", n)
 	}
 	seen := make([]int, n)
 	for i := range factors {
 		f := &factors[i]
-		d := dim * len(f.Nodes)
-		if d == 0 {
+		if len(f.Nodes) == 0 {
 			return fmt.Errorf("partition: factor %d names no pose", i)
 		}
-		if len(f.H) != d*d || len(f.B) != d {
-			return fmt.Errorf("partition: factor %d on %d poses has %d numbers in H and %d in B, expected %d and %d", i, len(f.Nodes), len(f.H), len(f.B), d*d, d)
-		}
+		d := 0
 		for _, v := range f.Nodes {
 			if v < 0 || int(v) >= n {
 				return fmt.Errorf("partition: factor %d names pose %d, expected 0..%d", i, v, n-1)
@@ -111,6 +111,10 @@ func validate(dim, n int, factors []Quadratic, separators []int32) error {
 				return fmt.Errorf("partition: factor %d names pose %d twice", i, v)
 			}
 			seen[v] = i + 1
+			d += at.width(v)
+		}
+		if len(f.H) != d*d || len(f.B) != d {
+			return fmt.Errorf("partition: factor %d on %d poses has %d numbers in H and %d in B, expected %d and %d", i, len(f.Nodes), len(f.H), len(f.B), d*d, d)
 		}
 		if !finite(f.H) || !finite(f.B) {
 			return fmt.Errorf("partition: factor %d holds a number that is not finite", i)
@@ -132,8 +136,8 @@ func finite(x []float64) bool {
 	return sum == 0
 }
 
-// Interior completes a step: steps holds D numbers for each pose, those of the junctions filled in, and receives for the interior
-// poses the steps that minimise the linearised graph given these.
+// Interior completes a step: steps holds D numbers for each pose and for each point (of which a point uses the first three), those of
+// the junctions filled in, and receives for the interior the steps that minimise the linearised graph given these.
 func (c *Condensed) Interior(steps []float64) {
 	if len(steps) != c.dim*c.n {
 		panic("partition: length of steps")
@@ -167,23 +171,28 @@ func (c *Condensed) Interior(steps []float64) {
 // poses has, |H| that of the clique or of what was condensed into it; poses are those at which the graph was linearised, all n
 // of them. It is zero but for rounding, below 1e-9, when every term is relative and belongs to these poses: a check that
 // costs next to nothing.
-func (c *Condensed) NullResidual(poses []lie.SE3) float64 {
-	if len(poses) != c.n {
-		panic("partition: number of poses")
+func (c *Condensed) NullResidual(poses []lie.SE3) float64 { return c.NullResidualWith(poses, nil) }
+
+// NullResidualWith is [Condensed.NullResidual] for a graph with points.
+func (c *Condensed) NullResidualWith(poses []lie.SE3, points [][3]float64) float64 {
+	if len(poses) != c.poses || len(points) != c.n-c.poses {
+		panic("partition: number of poses or points")
 	}
+	at := layout{dim: c.dim, count: len(poses), poses: poses, points: points}
 	worst := 0.0
 	for i := range c.terms {
-		worst = max(worst, c.terms[i].nullResidual(c.dim, poses))
+		worst = max(worst, c.terms[i].nullResidual(&at))
 	}
 	return worst
 }
 
-func (t *term) nullResidual(d int, poses []lie.SE3) float64 {
+func (t *term) nullResidual(at *layout) float64 {
 	// N is taken relative to the first pose: the same space, without levers to a far origin.
+	d := at.dim
 	m := d * len(t.nodes)
 	N := make([]float64, m*d)
 	for k, v := range t.nodes {
-		motion(d, poses[v], poses[t.nodes[0]], N[k*d*d:][:d*d])
+		at.motion(v, t.nodes[0], N[k*d*d:][:d*d])
 	}
 	product, largest := 0.0, t.scale
 	for i := 0; i < m; i++ {
@@ -205,18 +214,6 @@ func (t *term) nullResidual(d int, poses []lie.SE3) float64 {
 	return product / largest
 }
 
-// motion writes Ad(X^-1 Y), D x D: the tangent at X of a motion given by its tangent at Y.
-func motion(d int, x, y lie.SE3, out []float64) {
-	z := x.Between(y)
-	if d == 6 {
-		a := z.Adjoint()
-		copy(out, a[:])
-		return
-	}
-	a := lie.Planar(&z).Adjoint()
-	copy(out, a[:])
-}
-
 func abs(x float64) float64 {
 	if x < 0 {
 		return -x
@@ -226,7 +223,7 @@ func abs(x float64) float64 {
 
 // result collects what remains after the elimination.
 func (e *eliminator) result() *Condensed {
-	c := &Condensed{dim: e.d, n: len(e.pos), steps: e.steps}
+	c := &Condensed{dim: e.d, poses: e.layout.count, n: len(e.pos), steps: e.steps}
 	gone := make([]bool, c.n)
 	for i := range e.steps {
 		gone[e.steps[i].pose] = true
@@ -243,11 +240,13 @@ func (e *eliminator) result() *Condensed {
 		}
 	}
 	slices.SortFunc(c.terms, func(a, b term) int { return slices.Compare(a.nodes, b.nodes) })
-	c.Bytes = PoseBytes * len(c.Junctions)
+	for _, v := range c.Junctions {
+		c.Bytes += e.plan.nodeBytes(v)
+	}
 	for i := range c.terms {
 		t := &c.terms[i]
-		c.Cliques = append(c.Cliques, t.clique(e.d))
-		c.Bytes += CliqueBytes(e.d, len(t.nodes))
+		c.Cliques = append(c.Cliques, e.layout.strip(t.clique(e.d)))
+		c.Bytes += e.plan.bytes(t.nodes)
 	}
 	return c
 }

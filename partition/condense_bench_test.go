@@ -78,7 +78,7 @@ func BenchmarkOrder(b *testing.B) {
 	g, separators := survey(6, 5000, 300, rand.New(rand.NewPCG(1, 5000)))
 	terms := g.linearise()
 	for b.Loop() {
-		newOrdering(6, len(g.poses), terms, separators).run()
+		newOrdering(6, len(g.poses), len(g.poses), terms, separators).run()
 	}
 }
 

@@ -1,10 +1,6 @@
 package partition
 
-import (
-	"fmt"
-
-	"selvage/internal/lie"
-)
+import "fmt"
 
 // term is one quadratic term during elimination. Of h only the lower triangle of D x D blocks in the order of nodes is used.
 type term struct {
@@ -33,8 +29,8 @@ type elimination struct {
 
 // eliminator carries out the steps of an ordering on the numbers.
 type eliminator struct {
-	d     int
-	poses []lie.SE3 // nil when not known
+	d int
+	layout
 	plan  *ordering
 	terms []term // h is nil when merged or not yet made
 	owned []bool // h and b are ours, not the caller's
@@ -48,15 +44,15 @@ type eliminator struct {
 // ofPivot is the position of the pose being eliminated.
 const ofPivot = -1
 
-func newEliminator(plan *ordering, dim int, poses []lie.SE3, factors []Quadratic) *eliminator {
+func newEliminator(plan *ordering, at layout, factors []Quadratic) *eliminator {
 	e := &eliminator{
-		d:     dim,
-		poses: poses,
-		plan:  plan,
-		terms: make([]term, len(plan.nodes)),
-		owned: make([]bool, len(plan.nodes)),
-		pos:   make([]int32, len(plan.of)),
-		steps: make([]elimination, 0, len(plan.steps)),
+		d:      at.dim,
+		layout: at,
+		plan:   plan,
+		terms:  make([]term, len(plan.nodes)),
+		owned:  make([]bool, len(plan.nodes)),
+		pos:    make([]int32, len(plan.of)),
+		steps:  make([]elimination, 0, len(plan.steps)),
 	}
 	for i := range factors {
 		if len(factors[i].Nodes) > 1 {
@@ -113,7 +109,7 @@ func (e *eliminator) eliminate(s *step) error {
 		sum.scale = max(sum.scale, v)
 	}
 	subtractOuter(d, k, sum.h, x.y)
-	if e.poses != nil {
+	if e.known() {
 		e.mend(&sum)
 	}
 	for i := range sum.b {
@@ -157,12 +153,16 @@ func (e *eliminator) mend(sum *term) {
 		if !worn {
 			continue
 		}
+		if int(u) >= e.count {
+			e.mendPoint(sum, k)
+			continue
+		}
 		var block, ad [36]float64
 		for j, w := range sum.nodes {
 			if j == k {
 				continue
 			}
-			motion(d, e.poses[w], e.poses[u], ad[:d*d])
+			e.motion(w, u, ad[:d*d])
 			for r := 0; r < d; r++ {
 				for s := 0; s < d; s++ {
 					h := sum.at(d, k*d+r, j*d+s)

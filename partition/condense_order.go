@@ -5,8 +5,10 @@ import "slices"
 // ordering plays the elimination on node sets alone: which pose next, which terms it merges, where to stop. Sizes decide, so no
 // number of any matrix is looked at, and steps that are later thrown away cost little.
 type ordering struct {
-	bytes     []int     // of a clique by its number of poses
+	dim       int
+	poses     int32     // nodes from here on are points
 	nodes     [][]int32 // of each term, ascending: first the input's, then those made on the way
+	size      []int     // bytes of each term
 	of        [][]int32 // terms touching each pose
 	separator []bool
 	absorbed  []absorption // input terms inside another input term
@@ -44,8 +46,10 @@ type step struct {
 	into       int32   // the new term, or an older one that holds all neighbours, or -1: nothing remains
 }
 
-func newOrdering(dim, n int, factors []Quadratic, separators []int32) *ordering {
+func newOrdering(dim, poses, n int, factors []Quadratic, separators []int32) *ordering {
 	o := &ordering{
+		dim:       dim,
+		poses:     int32(poses),
 		separator: make([]bool, n),
 		gone:      make([]bool, n),
 		delta:     make([]int, n),
@@ -53,13 +57,10 @@ func newOrdering(dim, n int, factors []Quadratic, separators []int32) *ordering 
 		hits:      make([]int32, n),
 		marked:    make([]int32, n),
 		of:        make([][]int32, n),
-		bytes:     make([]int, n+1),
 		nodes:     make([][]int32, len(factors), len(factors)+n),
+		size:      make([]int, len(factors), len(factors)+n),
 		counted:   make([]int32, len(factors), len(factors)+n),
 		count:     make([]int32, len(factors), len(factors)+n),
-	}
-	for k := range o.bytes {
-		o.bytes[k] = CliqueBytes(dim, k)
 	}
 	for _, v := range separators {
 		o.separator[v] = true
@@ -97,7 +98,7 @@ func (o *ordering) place(factors []Quadratic) {
 		set := o.ids.take(len(factors[i].Nodes))
 		copy(set, factors[i].Nodes)
 		slices.Sort(set)
-		o.nodes[i] = set
+		o.nodes[i], o.size[i] = set, o.bytes(set)
 		if into := o.holderOf(set); into >= 0 {
 			o.absorbed = append(o.absorbed, absorption{i, into})
 			continue
@@ -137,7 +138,7 @@ func (o *ordering) look(v int32) (neighbours, merged []int32, holder int32, delt
 	near, merged := o.neighbour[:0], o.merged[:0]
 	o.seen[v] = o.stamp
 	for _, t := range o.of[v] {
-		delta -= o.bytes[len(o.nodes[t])]
+		delta -= o.size[t]
 		merged = append(merged, t)
 		o.counted[t], o.count[t] = o.stamp, -1<<30 // merged already
 		for _, u := range o.nodes[t] {
@@ -152,7 +153,7 @@ func (o *ordering) look(v int32) (neighbours, merged []int32, holder int32, delt
 		for _, t := range o.of[u] {
 			switch c := o.tally(t); {
 			case c == len(o.nodes[t]):
-				delta -= o.bytes[c]
+				delta -= o.size[t]
 				merged = append(merged, t)
 			case c == len(near):
 				holder = t // perhaps equal so far and larger: the case above comes first for an equal one
@@ -162,11 +163,22 @@ func (o *ordering) look(v int32) (neighbours, merged []int32, holder int32, delt
 	if len(near) < 2 {
 		holder = -1 // nothing remains to be held
 	}
+	points := 0
+	if o.poses < int32(len(o.of)) {
+		for _, u := range near {
+			if u >= o.poses {
+				points++
+			}
+		}
+	}
 	if holder < 0 {
-		delta += o.bytes[len(near)]
+		delta += cliqueBytes(o.dim, len(near)-points, points)
 	}
 	o.neighbour, o.merged = near, merged
-	return near, merged, holder, delta - PoseBytes
+	if points > 0 && points == len(near) {
+		return near, merged, holder, never // points without a pose would be free to turn
+	}
+	return near, merged, holder, delta - o.nodeBytes(v)
 }
 
 // run orders every connected part and keeps of each the steps that lead to its shortest summary.
@@ -177,22 +189,23 @@ func (o *ordering) run() {
 }
 
 func (o *ordering) runPart(part []int32) {
-	total, shared := PoseBytes*len(part), 0
+	total, shared, separators := 0, 0, 0
 	o.queue = o.queue[:0]
 	for _, v := range part {
+		total += o.nodeBytes(v)
 		for _, t := range o.of[v] {
 			if o.nodes[t][0] == v {
-				total += o.bytes[len(o.nodes[t])]
+				total += o.size[t]
 				shared = max(shared, o.separatorsIn(o.nodes[t]))
 			}
 		}
 		if o.separator[v] {
+			separators += o.nodeBytes(v)
 			continue
 		}
 		_, _, _, o.delta[v] = o.look(v)
 		o.queue = append(o.queue, candidate{o.delta[v], v})
 	}
-	separators := len(part) - len(o.queue)
 	o.queue.init()
 	best, kept := total, len(o.steps)
 	for left := len(part); left > 1 && len(o.queue) > 0; {
@@ -206,6 +219,9 @@ func (o *ordering) runPart(part []int32) {
 			o.queue.push(candidate{delta, top.pose})
 			continue
 		}
+		if delta == never {
+			break // and all that are left cost more
+		}
 		o.eliminate(top.pose, neighbours, merged, holder)
 		left--
 		total += delta
@@ -215,7 +231,7 @@ func (o *ordering) runPart(part []int32) {
 		// Separators that meet in one term stay together in one to the end: no later summary is shorter than that.
 		s := &o.steps[len(o.steps)-1]
 		shared = max(shared, o.separatorsIn(s.neighbours))
-		if separators*PoseBytes+o.bytes[shared] > best {
+		if separators+shared > best {
 			break
 		}
 		o.reconsider(s)
@@ -223,13 +239,19 @@ func (o *ordering) runPart(part []int32) {
 	o.steps = o.steps[:kept]
 }
 
-func (o *ordering) separatorsIn(set []int32) (k int) {
+// separatorsIn returns the bytes of a clique of the separators in a set.
+func (o *ordering) separatorsIn(set []int32) int {
+	poses, points := 0, 0
 	for _, v := range set {
-		if o.separator[v] {
-			k++
+		switch {
+		case !o.separator[v]:
+		case v < o.poses:
+			poses++
+		default:
+			points++
 		}
 	}
-	return k
+	return cliqueBytes(o.dim, poses, points)
 }
 
 // eliminate enters the step and changes the node sets.
@@ -251,6 +273,7 @@ func (o *ordering) eliminate(v int32, neighbours, merged []int32, holder int32) 
 	if holder < 0 && len(s.neighbours) > 1 {
 		s.into = int32(len(o.nodes))
 		o.nodes = append(o.nodes, s.neighbours)
+		o.size = append(o.size, o.bytes(s.neighbours))
 		o.counted = append(o.counted, 0)
 		o.count = append(o.count, 0)
 		for _, u := range s.neighbours {
