@@ -51,6 +51,7 @@ type adjustReport struct {
 	Rulings      []tieRuling `json:"rulings"`       // on single ties or on their robots: they come before the verdicts
 	Sightings    int         `json:"sightings"`     // of marks, and ties that are less than a pose
 	SightingsCut int         `json:"sightings_left_out"`
+	RuledOut     int         `json:"sightings_ruled_out"` // of marks, by robots or sessions that were ruled refused
 	Islands      int         `json:"islands"`
 	Start        string      `json:"start"`
 	InitialCost  float64     `json:"initial_cost"`
@@ -236,7 +237,16 @@ func (a *adjustment) build() error {
 	if len(a.problem.Keys) == 0 {
 		return badInput("%s holds no keyframes: there is nothing to adjust", a.Survey)
 	}
-	a.report.Sightings = len(a.problem.Sights())
+	sights := a.problem.Sights()
+	a.report.Sightings = len(sights)
+	for i := range a.survey.Robots {
+		a.report.RuledOut += len(a.survey.Robots[i].Sightings)
+	}
+	for i := range sights {
+		if sights[i].Tie < 0 {
+			a.report.RuledOut--
+		}
+	}
 	return nil
 }
 
@@ -257,7 +267,7 @@ func (a *adjustment) optimise() error {
 	}
 	var r posegraph.Result
 	if a.report.Sightings > 0 && !a.AllSightings {
-		r, a.report.SightingsCut = a.problem.SolveRobust(o)
+		r, a.report.SightingsCut = a.problem.SolveRobust(o, func(tie int) bool { return a.rulings[tie] != nil && a.rulings[tie].Verdict == survey.RuledHeld })
 	} else {
 		r = a.problem.Solve(o)
 	}

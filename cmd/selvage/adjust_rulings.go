@@ -20,7 +20,7 @@ type tieRuling struct {
 	Note    string `json:"note"`
 
 	// Misclosure is r' Omega r of the tie at the adjusted poses, over its own sigmas alone, also where it is refused; null where
-	// nothing joins its ends.
+	// nothing joins its ends, and for a refused tie that is less than a pose or ends between keyframes.
 	Misclosure *float64 `json:"misclosure"`
 }
 
@@ -56,12 +56,22 @@ func unruled(v, fresh survey.ResultVerdict) survey.ResultVerdict {
 // weighRulings fills in what the adjustment makes of the ties that were ruled on.
 func (a *adjustment) weighRulings() {
 	a.report.Rulings = []tieRuling{}
+	partial := map[int]adjust.Sight{}
+	for _, s := range a.problem.Sights() {
+		if s.Tie >= 0 && s.Set != nil {
+			partial[s.Tie] = s
+		}
+	}
 	for i, r := range a.rulings {
 		if r == nil {
 			continue
 		}
 		ruling := tieRuling{Tie: a.survey.Ties[i].ID, Verdict: r.Verdict.String(), On: r.On(), By: r.By, Note: r.Note}
-		if m, ok := a.misclosure(&a.survey.Ties[i]); ok {
+		m, ok := a.misclosure(&a.survey.Ties[i])
+		if s, sight := partial[i]; sight {
+			m, ok = s.Set.Chi2(s.K, &a.problem.Graph.Values), true
+		}
+		if ok {
 			ruling.Misclosure = &m
 			a.verdicts[i].Reason += fmt.Sprintf("; misclosure %.1f over its own sigmas", m)
 		}
@@ -92,6 +102,9 @@ func (a *adjustment) misclosure(t *survey.Tie) (float64, bool) {
 func (a *adjustment) showRulings(con *console) {
 	const most = 12
 	all := a.report.Rulings
+	if n := a.report.RuledOut; n > 0 {
+		fmt.Fprintf(con.out, "%s of marks %s left out, by robots or sessions that are ruled refused.\n", counted(n, "sighting"), oneOr(n, "is", "are"))
+	}
 	for i, r := range all {
 		if i == most {
 			fmt.Fprintf(con.out, "%d more ties are ruled on: results/verdicts.csv lists them.\n", len(all)-most)

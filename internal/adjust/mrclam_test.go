@@ -331,7 +331,7 @@ func solo(t *testing.T, s *survey.Survey) *Problem {
 	if p.Islands != robots {
 		t.Fatalf("%d islands without what robots saw of each other, want %d", p.Islands, robots)
 	}
-	analysed(t, p).SolveRobust(posegraph.DefaultOptions())
+	analysed(t, p).SolveRobust(posegraph.DefaultOptions(), nil)
 	return p
 }
 
@@ -357,7 +357,7 @@ func TestRecordedTeam(t *testing.T) {
 		s := recorded(&fleet, c.until, true)
 		alone, _ := offTruth(&fleet, s, solo(t, s), true)
 		p := begun(t, s)
-		res, cut := analysed(t, p).SolveRobust(posegraph.DefaultOptions())
+		res, cut := analysed(t, p).SolveRobust(posegraph.DefaultOptions(), nil)
 		rms, worst := offTruth(&fleet, s, p, false)
 		t.Logf("%.0f s: alone %.3f m, together %.3f, worst %.3f; %v, %d of %d sightings cut", c.until, alone, rms, worst, res.Stop, cut, len(p.Sights()))
 		if res.Stop != posegraph.Converged || rms > c.together || worst > c.worst {
@@ -393,7 +393,7 @@ func TestRecordedTeam(t *testing.T) {
 		s = recorded(&fleet, c.until, false)
 		reckoned, _ := offTruth(&fleet, s, solo(t, s), true)
 		p = begun(t, s)
-		analysed(t, p).SolveRobust(posegraph.DefaultOptions())
+		analysed(t, p).SolveRobust(posegraph.DefaultOptions(), nil)
 		rms, worst = offTruth(&fleet, s, p, false)
 		t.Logf("%.0f s: dead reckoning %.3f m, with sightings of each other %.3f, worst %.3f", c.until, reckoned, rms, worst)
 		if rms > c.robots || rms > 0.6*reckoned {

@@ -16,6 +16,7 @@ type robust struct {
 	graph   *posegraph.Graph
 	squared []float64 // of all sightings, each divided by its cutoff
 	weights []float64
+	pinned  []bool // those never left out; nil for none
 }
 
 func newRobust(g *posegraph.Graph) *robust {
@@ -36,7 +37,10 @@ func (r *robust) measure() {
 	i := 0
 	for _, s := range r.sets {
 		for k := range s.W {
-			r.squared[i] = s.Chi2(k, &r.graph.Values) / Cutoffs[max(1, s.Freedoms(k))]
+			r.squared[i] = 0
+			if r.pinned == nil || !r.pinned[i] {
+				r.squared[i] = s.Chi2(k, &r.graph.Values) / Cutoffs[max(1, s.Freedoms(k))]
+			}
 			i++
 		}
 	}
@@ -50,22 +54,46 @@ func (r *robust) weigh() {
 	}
 }
 
-// SolveRobust adjusts with all sightings, then leaves out those that do not fit, and returns how many those are; their weight is
-// [evidence.Floor] thereafter. Analyse must have been called.
-func (p *Problem) SolveRobust(o posegraph.Options) (result posegraph.Result, cut int) {
-	return solveRobust(p.solver, p.Graph, o, false)
+// pin keeps the sightings of some ties from being left out.
+func (r *robust) pin(sights []sighted, keep func(tie int) bool) {
+	first := map[*posegraph.Sightings]int{}
+	n := 0
+	for _, s := range r.sets {
+		first[s] = n
+		n += s.Len()
+	}
+	r.pinned = make([]bool, n)
+	for i := range sights {
+		if e := &sights[i]; e.Set != nil && e.Tie >= 0 && keep(e.Tie) {
+			r.pinned[first[e.Set]+e.K] = true
+		}
+	}
 }
 
-// solveRobust begins at the values as they stand, or first lets all sightings pull.
+// SolveRobust adjusts with all sightings, then leaves out those that do not fit, but for ties that are to be kept (nil: none), and
+// returns how many those are; their weight is [evidence.Floor] thereafter. Analyse must have been called.
+func (p *Problem) SolveRobust(o posegraph.Options, keep func(tie int) bool) (result posegraph.Result, cut int) {
+	r := newRobust(p.Graph)
+	if keep != nil {
+		r.pin(p.sights, keep)
+	}
+	return r.solve(p.solver, o, false)
+}
+
+// solveRobust weighs all sightings of a graph.
 func solveRobust(s *posegraph.Solver, g *posegraph.Graph, o posegraph.Options, fromAll bool) (result posegraph.Result, cut int) {
-	r := newRobust(g)
+	return newRobust(g).solve(s, o, fromAll)
+}
+
+// solve begins at the values as they stand, or first lets all sightings pull.
+func (r *robust) solve(s *posegraph.Solver, o posegraph.Options, fromAll bool) (result posegraph.Result, cut int) {
 	for i := range r.weights {
 		r.weights[i] = 1
 	}
 	r.weigh()
 	rough := o // a stage is only a way to the next
 	rough.Tolerance, rough.MaxIterations = 1e-5, 20
-	result.InitialCost = g.Cost()
+	result.InitialCost = r.graph.Cost()
 	if fromAll {
 		result = s.Optimise(rough)
 	}

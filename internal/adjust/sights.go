@@ -88,7 +88,7 @@ func (p *Problem) addEncounter(s *survey.Survey, k int, from, to int32) error {
 	return p.addSight(s, t.FromRobot, t.Kind, &t.Sight, sighted{from: from, to: to, spot: target.T, Sight: Sight{Tie: k}})
 }
 
-// addSightings notes the sightings of marks.
+// addSightings notes the sightings of marks, but for those of sessions that a person has ruled refused.
 func (p *Problem) addSightings(s *survey.Survey, m *moments) error {
 	p.marks = s.Marks
 	number := make(map[string]int32, len(s.Marks))
@@ -97,8 +97,18 @@ func (p *Problem) addSightings(s *survey.Survey, m *moments) error {
 	}
 	for i := range s.Robots {
 		r := &s.Robots[i]
+		refused := map[uint32]bool{} // by session
 		for k := range r.Sightings {
 			e := &r.Sightings[k]
+			out, known := refused[e.Session]
+			if !known {
+				u := s.UnitRuling(r.ID, e.Session)
+				out = u != nil && u.Verdict == survey.RuledRefused
+				refused[e.Session] = out
+			}
+			if out {
+				continue
+			}
 			fault := func(err error) error {
 				return fmt.Errorf("robot %s, session %d, sighting %d of mark %s: %w", r.ID, e.Session, k+1, e.Mark, err)
 			}

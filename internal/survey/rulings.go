@@ -45,7 +45,8 @@ func (v RulingVerdict) String() string {
 	return "unknown"
 }
 
-// Ruling is what a person has decided. A ruling on a robot or a session is one on all ties at either end of which it stands.
+// Ruling is what a person has decided. A ruling on a robot or a session is one on all ties at either end of which it stands; one that
+// refuses is also on its sightings of marks.
 type Ruling struct {
 	Target  Target
 	Name    string // of the tie or robot
