@@ -2,6 +2,7 @@ package scenarios
 
 import (
 	"context"
+	"errors"
 	"os"
 	"testing"
 	"time"
@@ -66,6 +67,39 @@ func TestClosuresJudged(t *testing.T) {
 				t.Errorf("of the true closures %+v: refused more than 2 %%", right)
 			}
 		})
+	}
+}
+
+// TestFaultsHealDespiteFalseClosures runs fault schedules in which a fifth of many loop closures is false.
+func TestFaultsHealDespiteFalseClosures(t *testing.T) {
+	refused := 0
+	for seed := uint64(1); seed <= 12; seed++ {
+		sc := smallFleet(seed)
+		sc.FrontEnd.FalseClosures, sc.FrontEnd.ClosureSpacing = 0.2, 2
+		w, err := Simulate(sc, seed)
+		if errors.Is(err, errCramped) {
+			continue
+		}
+		if err != nil {
+			t.Fatal(err)
+		}
+		o := w.Outing(sc, seed)
+		o.Link = healing{NewRadio(sc, w, seed), w.EndNS}
+		r, err := Virtual(context.Background(), o, Settings{})
+		if err != nil {
+			t.Fatal(err)
+		}
+		checkHealed(t, r)
+		var s Score
+		s.Robots = make([]RobotScore, len(r.Agents))
+		r.countClosures(&s)
+		if s.Closures.False.Held > 0 {
+			t.Errorf("seed %d: false closures are held: %+v", seed, *s.Closures.False)
+		}
+		refused += s.Closures.False.Refused
+	}
+	if refused == 0 {
+		t.Error("no false closure was there to be refused")
 	}
 }
 
