@@ -32,6 +32,20 @@
 // float64, and Read changes none: a quaternion whose norm is within 1e-6 of 1
 // is accepted as it stands, so whoever turns it into a rotation normalises it.
 //
+// # Sights
+//
+// A tie of kind pose has the pose of the far base_link in the near one. Any other
+// kind, and every sighting of a mark, is a [Sight] of a point: position (x_m, y_m,
+// z_m in the frame of the sensor, with sx_m, sy_m, sz_m and c_x_y, c_x_z, c_y_z),
+// range_bearing (range_m, bearing_rad counter-clockwise from x forward,
+// elevation_rad, with s_range_m, s_bearing_rad, s_elevation_rad), range or
+// bearing. Columns that do not belong to the kind of a row are empty or absent;
+// in the plane there is no elevation. The columns sensor and target name
+// mountings; empty is base_link.
+//
+// A sighting is at a keyframe or at a moment, one of the two, and so is either
+// end of a tie, but for the near end of a tie of kind pose, which is a keyframe.
+//
 // # Uncertainty
 //
 // A measurement carries sigmas and correlations, not an information matrix
