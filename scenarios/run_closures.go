@@ -50,7 +50,7 @@ func (r *Run) eachClosure(visit func(robot, row int, v *survey.ResultClosure, ve
 		for _, c := range a.Closures() {
 			k := name(c.Session, c.From, c.To)
 			v := survey.ResultClosure{Reason: c.Reason, ChiSquare: math.NaN()}
-			if c.DoF > 0 {
+			if c.DoF > 0 && !math.IsInf(c.Statistic, 0) {
 				v.ChiSquare, v.DoF = c.Statistic, c.DoF
 			}
 			found[k], verdict[k] = v, c.Verdict

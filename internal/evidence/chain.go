@@ -48,6 +48,9 @@ func (c *Chain) Odometry(from, to int, z lie.SE3, info *[36]float64) {
 		return
 	}
 	noise, ok := covarianceOf(info, c.dim, 0)
+	for i := 0; i < 9; i += 4 {
+		ok = ok && noise.P[i] < 1/vague && noise.S[i] < 1/vague
+	}
 	if !ok {
 		return
 	}
@@ -60,7 +63,8 @@ func (c *Chain) Odometry(from, to int, z lie.SE3, info *[36]float64) {
 	c.ready = min(c.ready, k)
 }
 
-// covarianceOf inverts an information matrix to which the identity times least is added, and tells whether it can.
+// covarianceOf inverts an information matrix and tells whether it can. With least above 0 the diagonal grows by that and by 1e-8 of itself,
+// so that an information of lower rank, known to 1e-9 of its diagonal, can be inverted too.
 func covarianceOf(info *[36]float64, dim int, least float64) (cov, bool) {
 	index := [6]int{0, 1, 2, 3, 4, 5}
 	if dim == 2 {
@@ -70,7 +74,9 @@ func covarianceOf(info *[36]float64, dim int, least float64) (cov, bool) {
 	var m, full [36]float64
 	d := omega.dense(dim, &m)
 	for i := 0; i < d; i++ {
-		m[(d+1)*i] += least
+		if least > 0 {
+			m[(d+1)*i] += least + 1e-8*m[(d+1)*i]
+		}
 	}
 	if !invert(&m, d) {
 		return cov{}, false

@@ -128,9 +128,12 @@ func newJudge(c *Chain, closures []Closure, o Options, factor float64) *judge {
 	j.links = make([]link, len(closures))
 	for k := range closures {
 		x := &closures[k]
+		if min(x.From, x.To) < 0 || max(x.From, x.To) >= c.Len() || x.From == x.To {
+			panic("evidence: a closure joins two keyframes of the chain")
+		}
 		spread, ok := covarianceOf(&x.Info, c.dim, vague)
-		if !ok || min(x.From, x.To) < 0 || max(x.From, x.To) >= c.Len() || x.From == x.To {
-			panic("evidence: a closure joins two keyframes of the chain, with a positive semidefinite information")
+		if !ok { // it says nothing that can be used
+			spread, _ = covarianceOf(&[36]float64{}, c.dim, vague)
 		}
 		l := link{i: x.From, j: x.To, z: x.Z, c: spread}
 		if l.i > l.j {
@@ -183,7 +186,8 @@ func (j *judge) against(l *link, w *way) sight {
 	var m [36]float64
 	n := c.dense(j.c.dim, &m)
 	if !invert(&m, n) {
-		return sight{}
+		v.ee = math.Inf(1)
+		return v
 	}
 	var x, y [6]float64
 	pick(&e, j.c.dim, &x)
@@ -194,6 +198,9 @@ func (j *judge) against(l *link, w *way) sight {
 			v.se += y[r] * m[n*r+q] * x[q]
 			v.ss += y[r] * m[n*r+q] * y[q]
 		}
+	}
+	if !(v.ee < math.Inf(1) && v.ss < math.Inf(1)) {
+		v.ee, v.se, v.ss = math.Inf(1), 0, 0
 	}
 	return v
 }

@@ -214,6 +214,52 @@ func TestManyFalseClosures(t *testing.T) {
 	}
 }
 
+// TestClosuresOfAnyInformation: whatever passes for an information, of any rank and size, panics nowhere; a closure that measures only
+// where it lies is judged by that.
+func TestClosuresOfAnyInformation(t *testing.T) {
+	for _, dim := range []int{2, 3} {
+		rng := rand.New(rand.NewPCG(8, uint64(dim)))
+		for range 200 {
+			c, truth := rounds(rng, dim, 2, 0)
+			var closures []Closure
+			for k := 162; k < 300; k += 9 {
+				x := closure(rng, dim, truth, k-160, k, rng.IntN(3) == 0)
+				x.Info = [36]float64{}
+				for range rng.IntN(7) { // sum of rank one matrices
+					var v [6]float64
+					for i := range v {
+						if dim == 3 || i < 2 || i == 5 {
+							v[i] = rng.NormFloat64() * math.Pow(10, float64(rng.IntN(13)-6))
+						}
+					}
+					for i := range v {
+						for j := range v {
+							x.Info[6*i+j] += v[i] * v[j]
+						}
+					}
+				}
+				for i := range 6 {
+					x.Info[7*i] *= 1 - 0.9e-9
+				}
+				closures = append(closures, x)
+			}
+			for k, f := range c.Judge(closures, DefaultOptions(dim)) {
+				if math.IsNaN(f.Statistic) {
+					t.Fatalf("closure %d: %+v", k, f)
+				}
+			}
+		}
+		c, truth := rounds(rng, dim, 1, 0)
+		place := closure(rng, dim, truth, 100, 106, false)
+		place.Info = [36]float64{0: 400, 7: 400}
+		moved := place
+		moved.Z.T[1] += 1
+		if got := verdicts(c.Judge([]Closure{place, moved}, DefaultOptions(dim))); !slices.Equal(got, []Verdict{Open, Refused}) && !slices.Equal(got, []Verdict{Held, Refused}) {
+			t.Errorf("dimension %d: closures without a rotation: %v", dim, got)
+		}
+	}
+}
+
 // turned returns the information of a closure seen the other way round.
 func turned(x *Closure) (m [36]float64) {
 	inv := x.Z.Inv()
