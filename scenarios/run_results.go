@@ -106,7 +106,7 @@ func (r *Run) fill(dir string, score *Score, made, version string) error {
 	if err != nil {
 		return err
 	}
-	if err := survey.WriteResults(dir, slices.Concat(poses...), r.resultVerdicts(), r.resultDatum(places), r.note(score)); err != nil {
+	if err := survey.WriteResults(dir, slices.Concat(poses...), r.Verdicts(), r.resultDatum(places), r.note(score)); err != nil {
 		return err
 	}
 	if err := survey.WriteClosures(dir, r.resultClosures(), r.note(score)); err != nil {
@@ -234,8 +234,8 @@ func upper(c []float64) (out [21]float64) {
 	return out
 }
 
-// resultVerdicts returns the finding on every tie, in the order of the survey.
-func (r *Run) resultVerdicts() []survey.ResultVerdict {
+// Verdicts returns the finding on every tie, in the order of the survey.
+func (r *Run) Verdicts() []survey.ResultVerdict {
 	verdict, measured := r.verdicts(), r.measured()
 	unknown := math.NaN()
 	var out []survey.ResultVerdict

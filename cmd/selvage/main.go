@@ -22,6 +22,7 @@ type cli struct {
 
 	Rehearse rehearseCmd `cmd:"" help:"Run a whole fleet on a virtual clock and score it."`
 	Adjust   adjustCmd   `cmd:"" help:"Adjust a whole survey in one piece."`
+	Audit    auditCmd    `cmd:"" help:"Tell how far every tie of a finished survey is checked, and where to go next."`
 	Split    splitCmd    `cmd:"" help:"Cut the survey of one robot into connected pieces."`
 	Convert  convertCmd  `cmd:"" help:"Turn data in another format into a survey."`
 	Rule     ruleCmd     `cmd:"" help:"Hold or refuse a tie, or all ties of a robot or session, whatever the evidence says."`

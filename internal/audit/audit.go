@@ -40,8 +40,9 @@ type Audit struct {
 	Next       []Candidate `json:"next"`                  // where a further tie would help most, best first
 	Basin      string      `json:"starting_basin"`        // certified or not decided
 
-	plan report.Plan
-	main int // the island that the plan is in
+	plan   report.Plan
+	hidden bool // the plan does not show all ties
+	main   int  // the island that the plan is in
 }
 
 // Adjustment says how the one-piece adjustment of the held ties went. T is r' Omega r of all its measurements.
@@ -99,6 +100,7 @@ type Tie struct {
 	ResidualRad *float64  `json:"residual_rad,omitempty"`
 	W           []Figure  `json:"normalised_residual,omitempty"` // sigmas
 	T           *float64  `json:"statistic,omitempty"`
+	AtLeast     bool      `json:"statistic_at_least,omitempty"` // the statistic is no less than that
 	DoF         int       `json:"dof"`
 	P           *float64  `json:"p,omitempty"`
 	Bound       *float64  `json:"bound,omitempty"` // that the statistic was held against
@@ -119,7 +121,9 @@ type Tie struct {
 	Set    int  `json:"set,omitempty"` // from 1: index into the sets that no test can tell apart
 
 	held      bool
-	factor    int     // in the problem, -1: none
+	placed    bool    // not held, and both ends lie in one island
+	i, j      int32   // the ends, as variables
+	factor    int     // in the problem, -1: not held
 	effect    float64 // largest reliability.Figures.Effect
 	component int     // of which it is
 }

@@ -37,7 +37,7 @@ type work struct {
 	bridge []bool // factor: on no loop
 }
 
-// build makes the pose graph of everything, ties that are not held with weight zero: what the map says of them is wanted too.
+// build makes the pose graph of everything that is held.
 func (w *work) build() error {
 	s := w.s
 	verdict := make(map[string]*survey.ResultVerdict, len(w.in.Verdicts))
@@ -63,8 +63,8 @@ func (w *work) build() error {
 		w.out.Ties[i] = t
 	}
 	var err error
-	// A tie to a moment makes a keyframe there: only what is held may do so.
-	w.p, err = adjust.New(s, func(k int) bool { return w.out.Ties[k].held || !s.Ties[k].ToByStamp })
+	// Only what is held is in the graph: false ties join what lies far apart, and would fill the factor.
+	w.p, err = adjust.New(s, func(k int) bool { return w.out.Ties[k].held })
 	if err != nil {
 		return err
 	}
@@ -73,13 +73,15 @@ func (w *work) build() error {
 	for k, f := range w.p.Tie {
 		t := &w.out.Ties[k]
 		t.factor = f
-		if f < 0 {
+		if f >= 0 {
+			t.i, t.j = w.b.I[f], w.b.J[f]
+			t.To = keyframe(w.p.Keys[t.j])
 			continue
 		}
-		t.To = keyframe(w.p.Keys[w.b.J[f]])
-		if !t.held {
-			w.b.W[f] = 0
-		}
+		var from, to bool
+		t.i, from = w.p.Var[adjust.Key{Robot: t.From.Robot, Session: t.From.Session, ID: t.From.Key}]
+		t.j, to = w.p.Var[adjust.Key{Robot: t.To.Robot, Session: t.To.Session, ID: t.To.Key}]
+		t.placed = from && to && t.i != t.j && w.p.Island[t.i] == w.p.Island[t.j]
 	}
 	w.findUnits()
 	w.findIslands()
@@ -118,30 +120,14 @@ func (w *work) unitName(u int32) string {
 	return fmt.Sprintf("%s/%d", w.units[u].robot, w.units[u].session)
 }
 
-// findIslands numbers what hangs together without the ties that are not held, and has its first keyframe held fixed.
+// findIslands names the sessions of each island and its first keyframe, which is held fixed.
 func (w *work) findIslands() {
-	n := len(w.p.Keys)
-	group := newGroups(n)
-	for k := range w.b.I {
-		if w.b.W[k] != 0 {
-			group.join(w.b.I[k], w.b.J[k])
-		}
-	}
-	w.p.Anchors = w.p.Anchors[:0]
-	island := make([]int32, n)
-	for v := range island {
-		if r := group.root(int32(v)); r != int32(v) {
-			island[v] = island[r]
-			continue
-		}
-		island[v] = int32(w.parts)
-		w.parts++
-		w.p.Anchors = append(w.p.Anchors, int32(v))
+	w.parts = len(w.p.Anchors)
+	for _, v := range w.p.Anchors {
 		w.out.Islands = append(w.out.Islands, Island{Gauge: keyframe(w.p.Keys[v])})
 	}
-	w.p.Island = island
 	seen := map[[2]int32]bool{}
-	for v, i := range island {
+	for v, i := range w.p.Island {
 		if at := [2]int32{i, w.unit[v]}; !seen[at] {
 			seen[at] = true
 			w.out.Islands[i].Sessions = append(w.out.Islands[i].Sessions, w.unitName(w.unit[v]))

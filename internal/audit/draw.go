@@ -7,6 +7,9 @@ import (
 	"selvage/internal/report"
 )
 
+// drawn is how many ties the plan has at most: more would be a grey cloud, and no page.
+const drawn = 1000
+
 // draw makes the plan: tracks, and the ties whose two ends share a datum. The island with the most sessions is the one whose frame
 // the plan is in; the others get plans of their own.
 func (w *work) draw() error {
@@ -43,15 +46,21 @@ func (w *work) draw() error {
 	}
 	grid := w.s.Meta.Datum.Grid
 	plan := report.Plan{Title: w.out.Survey, Datum: w.out.Datum, Epoch: "the adjustment in one piece", DatumTiedToNorth: grid != nil && grid.YawRad == 0, Tracks: tracks}
+	ties := make([]*Tie, 0, len(w.out.Ties))
 	for k := range w.out.Ties {
-		t := &w.out.Ties[k]
-		if t.factor < 0 {
-			continue
+		if t := &w.out.Ties[k]; t.held || t.placed {
+			ties = append(ties, t)
 		}
-		i, j := w.b.I[t.factor], w.b.J[t.factor]
-		if w.p.Island[i] != w.p.Island[j] {
-			continue
-		}
+	}
+	if len(ties) > drawn {
+		slices.SortStableFunc(ties, func(x, y *Tie) int {
+			return cmp.Or(cmp.Compare(rank[x.Status], rank[y.Status]), cmp.Compare(y.detectable(), x.detectable()))
+		})
+		ties = ties[:drawn]
+		w.out.hidden = true
+	}
+	for _, t := range ties {
+		i, j := t.i, t.j
 		m := report.TieMark{ID: t.ID, From: poses[i].T, To: poses[j].T, Island: number[w.p.Island[i]], Verdict: t.Verdict, Unchecked: t.Status == Unchecked}
 		if t.DetectableM != nil {
 			m.SmallestDetectableM = *t.DetectableM

@@ -9,8 +9,8 @@ import (
 )
 
 // followed bounds the numbers that exact shifts are computed from: vectors times their length. All ties of an ordinary survey fit, of
-// 100 000 keyframes in space the worst four hundred.
-const followed = 1.5e9
+// 100 000 keyframes in space the worst 250.
+const followed = 0.9e9
 
 // effects computes how far an undetected error of the detectable size of each checked tie moves the map: dx = Q J' Omega e, exact
 // for the ties for which it may be worst, and for the others a bound. No pose moves by more of its standard deviation than

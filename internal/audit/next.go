@@ -35,7 +35,7 @@ func (w *work) next() error {
 	if len(weak) == 0 {
 		return nil
 	}
-	near := w.meetings(w.reach())
+	near := w.meetings(w.reach(), weak)
 	if len(near) == 0 {
 		return nil
 	}
@@ -72,7 +72,7 @@ func (w *work) next() error {
 		columns := vectors[:len(batch)*w.d*scalars]
 		clear(columns)
 		for i, t := range batch {
-			w.jacobian(t.factor, columns[i*w.d*scalars:], scalars)
+			w.jacobian(w.b, t.factor, &w.p.Graph.Values, columns[i*w.d*scalars:], scalars)
 		}
 		w.sigma.Apply(columns, len(batch)*w.d)
 		for i, t := range batch {
@@ -135,9 +135,10 @@ func (w *work) usual() (info [36]float64) {
 	return info
 }
 
-// meetings finds where tracks of two units of one island pass within reach of each other, the nearest pair for each two units and
-// stretch of the site; stretches are as long as it takes for no more than [candidates].
-func (w *work) meetings(reach float64) []meeting {
+// meetings finds where tracks of two units of one island pass within reach of each other: around each weak tie the nearest ones that
+// lie at another place, then the nearest pair for each two units and stretch of the site, stretches being as long as it takes for no
+// more than [candidates] in all.
+func (w *work) meetings(reach float64, weak []*Tie) []meeting {
 	type spot struct {
 		unit int32
 		cell [3]int32
@@ -176,6 +177,7 @@ func (w *work) meetings(reach float64) []meeting {
 			}
 		}
 	}
+	out := w.around(pairs, weak)
 	type stretch struct {
 		a, b int32
 		cell [3]int32
@@ -193,31 +195,41 @@ func (w *work) meetings(reach float64) []meeting {
 				best[s] = i
 			}
 		}
-		if len(order) > candidates && size < 1e9 {
+		if len(order) > candidates-len(out) && size < 1e9 {
 			continue
 		}
-		out := make([]meeting, 0, len(order))
-		for _, s := range order[:min(len(order), candidates)] {
+		for _, s := range order[:min(len(order), candidates-len(out))] {
 			out = append(out, pairs[best[s]])
 		}
 		return out
 	}
 }
 
-// jacobian writes J' of a factor, one vector for each component of its residual.
-func (w *work) jacobian(factor int, vectors []float64, scalars int) {
-	d := w.d
-	ji, jj := make([]float64, d*d), make([]float64, d*d)
-	w.b.Jacobians(factor, &w.p.Graph.Values, ji, jj)
-	for c := range d {
-		v := vectors[c*scalars:]
-		if o := w.sigma.Offset(w.b.I[factor]); o >= 0 {
-			copy(v[o:o+d], ji[c*d:])
+// around picks, for each weak tie, the five meetings nearest to it that are not at its place.
+func (w *work) around(pairs []meeting, weak []*Tie) []meeting {
+	type choice struct {
+		pair int
+		far  float64
+	}
+	var out []meeting
+	taken := map[int]bool{}
+	for _, t := range weak {
+		var best []choice
+		for i := range pairs {
+			far := distance(w.p.Graph.Values.Poses[t.i].T, w.p.Graph.Values.Poses[pairs[i].a].T)
+			if len(best) == 5 && far >= best[4].far || taken[i] || w.onePlace(t, &pairs[i]) {
+				continue
+			}
+			best = append(best, choice{i, far})
+			slices.SortStableFunc(best, func(a, b choice) int { return cmp.Compare(a.far, b.far) })
+			best = best[:min(len(best), 5)]
 		}
-		if o := w.sigma.Offset(w.b.J[factor]); o >= 0 {
-			copy(v[o:o+d], jj[c*d:])
+		for _, c := range best {
+			taken[c.pair] = true
+			out = append(out, pairs[c.pair])
 		}
 	}
+	return out
 }
 
 // after returns the detectable error of t with the candidate measured, given the vectors Q J' of t; NaN where nothing would check it.
@@ -229,26 +241,8 @@ func (w *work) after(t *Tie, m *meeting, vectors []float64, scalars int) float64
 		return t.detectable()
 	}
 	d := w.d
-	ji, jj := make([]float64, d*d), make([]float64, d*d)
-	w.b.Jacobians(m.factor, &w.p.Graph.Values, ji, jj)
 	x := mat.NewDense(d, d, nil) // J_n Q J_k'
-	for c := range d {
-		v := vectors[c*scalars:]
-		for r := range d {
-			sum := 0.0
-			if o := w.sigma.Offset(m.a); o >= 0 {
-				for i := range d {
-					sum += ji[r*d+i] * v[o+i]
-				}
-			}
-			if o := w.sigma.Offset(m.b); o >= 0 {
-				for i := range d {
-					sum += jj[r*d+i] * v[o+i]
-				}
-			}
-			x.Set(r, c, sum)
-		}
-	}
+	w.across(w.b, m.factor, &w.p.Graph.Values, vectors, scalars, x.RawMatrix().Data)
 	s := mat.NewSymDense(d, nil)
 	p, info := w.predicted(m.factor), w.b.Info(m.factor)
 	for i := range d {

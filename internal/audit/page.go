@@ -102,6 +102,9 @@ func (a *Audit) cautions() []string {
 	if tested := n[Passed] + n[Failed]; tested > 0 {
 		out = append(out, fmt.Sprintf("Of %s tested about %s would fail by chance alone if all were sound.", count(tested, "tie"), short(reliability.Alpha*float64(tested))))
 	}
+	if a.hidden {
+		out = append(out, fmt.Sprintf("The plan shows %d ties, those that need an eye and then the weakest; all stand in ties.csv.", drawn))
+	}
 	if a.Basin == "not decided" {
 		out = append(out, "Whether another starting point would lead to a better map was not decided.")
 	}

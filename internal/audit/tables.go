@@ -128,7 +128,11 @@ func (a *Audit) leftTable() report.Table {
 			continue
 		}
 		const none = "its ends share no datum, or it names a moment"
-		t.Rows = append(t.Rows, []string{x.ID, x.From.String(), x.To.String(), x.Verdict, string(x.Status), figure(x.ApartM, none), degrees(x.ApartRad, none), figure(x.T, none), x.Reason})
+		stat := figure(x.T, none)
+		if x.AtLeast {
+			stat = "≥ " + stat
+		}
+		t.Rows = append(t.Rows, []string{x.ID, x.From.String(), x.To.String(), x.Verdict, string(x.Status), figure(x.ApartM, none), degrees(x.ApartRad, none), stat, x.Reason})
 	}
 	return cut(t, "ties.csv")
 }

@@ -11,16 +11,12 @@ import (
 func (w *work) test() error {
 	for k := range w.out.Ties {
 		t := &w.out.Ties[k]
-		if t.factor < 0 || w.p.Island[w.b.I[t.factor]] != w.p.Island[w.b.J[t.factor]] || w.b.I[t.factor] == w.b.J[t.factor] {
+		if !t.held {
 			continue
 		}
 		r := w.residual(t.factor)
 		m, rad := w.lengths(r)
 		t.Residual, t.ResidualM, t.ResidualRad = r, &m, &rad
-		if !t.held {
-			w.judge(t, r)
-			continue
-		}
 		if w.bridge[t.factor] {
 			zero := 0.0
 			t.Status, t.Redundancy, t.RedundancyTranslation, t.RedundancyRotation = Unchecked, &zero, &zero, &zero
@@ -28,7 +24,7 @@ func (w *work) test() error {
 		}
 		w.assess(t, r)
 	}
-	return nil
+	return w.judge()
 }
 
 // assess fills in the figures of a held tie that is no bridge.
@@ -58,21 +54,6 @@ func (w *work) assess(t *Tie, r []float64) {
 	t.DetectableM, t.DetectableRad = largest(f.Detectable[:turns]), largest(f.Detectable[turns:])
 	if m, rad := w.lengths(f.Apart); !math.IsNaN(m) && !math.IsNaN(rad) {
 		t.ApartM, t.ApartRad = &m, &rad
-	}
-}
-
-// judge tests a tie that is not held.
-func (w *work) judge(t *Tie, r []float64) {
-	stat, dof := reliability.Judge(r, w.b.Info(t.factor), w.predicted(t.factor))
-	if dof == 0 {
-		return
-	}
-	p, bound := reliability.Survival(stat, dof), reliability.Bound(dof)
-	t.T, t.DoF, t.P, t.Bound = &stat, dof, &p, &bound
-	t.ApartM, t.ApartRad = t.ResidualM, t.ResidualRad
-	t.Status = Fits
-	if stat > bound {
-		t.Status = Contradicts
 	}
 }
 

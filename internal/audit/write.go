@@ -93,7 +93,7 @@ func (a *Audit) csv() ([]byte, error) {
 	for _, n := range names {
 		head = append(head, "w_"+n)
 	}
-	head = append(head, "statistic", "dof", "p", "bound", "redundancy", "redundancy_translation", "redundancy_rotation")
+	head = append(head, "statistic", "statistic_is", "dof", "p", "bound", "redundancy", "redundancy_translation", "redundancy_rotation")
 	for c, n := range names {
 		head = append(head, "detectable_"+n+unit(c))
 	}
@@ -123,7 +123,15 @@ func (a *Audit) csv() ([]byte, error) {
 		for c := range names {
 			row = append(row, number(at(t.W, c)))
 		}
-		row = append(row, number(t.T), strconv.Itoa(t.DoF), number(t.P), number(t.Bound), number(t.Redundancy), number(t.RedundancyTranslation), number(t.RedundancyRotation))
+		is := ""
+		switch {
+		case t.T == nil:
+		case t.AtLeast:
+			is = "at_least"
+		default:
+			is = "exact"
+		}
+		row = append(row, number(t.T), is, strconv.Itoa(t.DoF), number(t.P), number(t.Bound), number(t.Redundancy), number(t.RedundancyTranslation), number(t.RedundancyRotation))
 		for c := range names {
 			row = append(row, number(at(t.Detectable, c)))
 		}
