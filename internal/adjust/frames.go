@@ -43,7 +43,6 @@ func (p *Problem) beginSighted(start Start) error {
 		posegraph.SpanningTree(whole, anchors)
 	case Given:
 		p.connect(nil, false)
-		posegraph.PlacePoints(p.Graph)
 		return p.control(false)
 	default:
 		return fmt.Errorf("start %q: expected auto, chordal, tree or given", start)
@@ -63,8 +62,7 @@ func (p *Problem) beginSighted(start Start) error {
 	}
 	p.own = slices.Clone(p.Graph.Values.Poses)
 	for _, coarse := range [2]bool{true, false} {
-		p.connect(body, coarse)
-		posegraph.PlacePoints(p.Graph)
+		p.reconnect(body, coarse)
 		if err := p.control(coarse); err != nil {
 			return err
 		}
@@ -75,6 +73,15 @@ func (p *Problem) beginSighted(start Start) error {
 		}
 	}
 	return nil
+}
+
+// reconnect is connect; after the coarse stage the points stay where that has brought them.
+func (p *Problem) reconnect(body []int32, coarse bool) {
+	before, places := p.Points, p.Graph.Values.Points
+	p.connect(body, coarse)
+	if !coarse && slices.Equal(before, p.Points) {
+		copy(p.Graph.Values.Points, places)
+	}
 }
 
 // rough adjusts robustly, well enough for a start.
@@ -92,11 +99,9 @@ func (p *Problem) rough(fromAll bool) (*posegraph.Solver, error) {
 // ownMaps adjusts every body by itself, without what it saw of others and with marks of its own, and returns what bodies know of
 // each other's frames thereafter.
 func (p *Problem) ownMaps(body []int32) ([]evidence.Glimpse, error) {
-	g := p.Graph
 	var s *posegraph.Solver
 	for _, coarse := range [2]bool{true, false} {
-		p.connect(body, coarse)
-		posegraph.PlacePoints(g)
+		p.reconnect(body, coarse)
 		var err error
 		if s, err = p.rough(coarse); err != nil {
 			return nil, err
@@ -195,7 +200,6 @@ func (p *Problem) control(move bool) error {
 			}
 		}
 	}
-	posegraph.PlacePoints(g)
 	return nil
 }
 
@@ -241,6 +245,11 @@ func (p *Problem) toDatum(island int32) error {
 	for v := range g.Values.Poses {
 		if p.Island[v] == island {
 			g.Values.Poses[v] = move.Mul(g.Values.Poses[v])
+		}
+	}
+	for k := range p.Points {
+		if p.Points[k].Island == island {
+			g.Values.Points[k] = move.Apply(g.Values.Points[k])
 		}
 	}
 	return nil

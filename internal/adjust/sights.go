@@ -12,6 +12,7 @@ import (
 type Point struct {
 	Mark   int   // of the survey
 	Island int32 // that has seen it
+	label  int32 // of the poses that have
 }
 
 // sighted is one sighting of a mark, or one tie that is less than a pose, whether or not it is in the graph at present.
@@ -128,14 +129,39 @@ func (p *Problem) addSightings(s *survey.Survey, m *moments) error {
 	return nil
 }
 
-// connect enters the sightings into the graph, and finds its islands and what holds them. Given a label of each pose, only sightings
+// connect enters the sightings into the graph, places the points, and finds the islands and what holds them. Marks that their sightings
+// do not place are left out. Given a label of each pose, only sightings
 // between poses of one label are entered, a mark being another point for each label; nil enters all. Coarse turns
 // ranges with bearings into positions.
 func (p *Problem) connect(label []int32, coarse bool) {
+	lost := map[place]bool{}
+	p.enter(label, coarse, lost)
+	// Points are numbered by the first sighting: without the lost ones the others keep their order.
+	if un := posegraph.PlacePoints(p.Graph); len(un) > 0 {
+		for _, k := range un {
+			lost[place{p.Points[k].Mark, p.Points[k].label}] = true
+		}
+		p.enter(label, coarse, lost)
+		posegraph.PlacePoints(p.Graph)
+	}
+	p.Island, p.Islands = p.Graph.Components()
+	p.Anchors = p.Graph.Anchors()
+	for k := range p.Points {
+		p.Points[k].Island = p.Island[p.Graph.Point(int32(k))]
+	}
+}
+
+// place is a mark as the poses of one label know it.
+type place struct {
+	mark  int
+	label int32
+}
+
+// enter makes the sets of sightings anew.
+func (p *Problem) enter(label []int32, coarse bool, lost map[place]bool) {
 	g := p.Graph
 	g.Sets = append(g.Sets[:0], p.Factors)
 	g.Values.Points, p.Points, p.solver = nil, nil, nil
-	type place struct{ mark, label int32 }
 	point := map[place]int32{}
 	sets := sets{graph: g}
 	for i := range p.sights {
@@ -147,11 +173,15 @@ func (p *Problem) connect(label []int32, coarse bool) {
 		}
 		to := e.to
 		if to < 0 {
-			at, ok := point[place{e.mark, l}]
+			here := place{int(e.mark), l}
+			if lost[here] {
+				continue
+			}
+			at, ok := point[here]
 			if !ok {
 				at = int32(len(p.Points))
-				point[place{e.mark, l}] = at
-				p.Points = append(p.Points, Point{Mark: int(e.mark)})
+				point[here] = at
+				p.Points = append(p.Points, Point{Mark: int(e.mark), label: l})
 			}
 			to = at
 		} else if label != nil && label[to] != l {
@@ -167,13 +197,6 @@ func (p *Problem) connect(label []int32, coarse bool) {
 		e.Set.Add(e.from, to, e.mount, e.spot, z, &info)
 	}
 	g.Values.Points = make([][3]float64, len(p.Points))
-	var islands int
-	p.Island, islands = g.Components()
-	p.Islands = islands
-	p.Anchors = g.Anchors()
-	for k := range p.Points {
-		p.Points[k].Island = p.Island[g.Point(int32(k))]
-	}
 }
 
 // sets are those of a graph, made as they are needed.
