@@ -87,8 +87,8 @@ func wordOf(v msgs.VerdictKind) string {
 	return report.Open
 }
 
-// resultClosures returns the finding on every loop closure, robot by robot in the order of the survey.
-func (r *Run) resultClosures() []survey.ResultClosure {
+// Closures returns the finding on every loop closure, robot by robot in the order of the survey.
+func (r *Run) Closures() []survey.ResultClosure {
 	var out []survey.ResultClosure
 	r.eachClosure(func(_, _ int, v *survey.ResultClosure, _ msgs.VerdictKind) { out = append(out, *v) })
 	return out

@@ -109,7 +109,7 @@ func (r *Run) fill(dir string, score *Score, made, version string) error {
 	if err := survey.WriteResults(dir, slices.Concat(poses...), r.Verdicts(), r.resultDatum(places), r.note(score)); err != nil {
 		return err
 	}
-	if err := survey.WriteClosures(dir, r.resultClosures(), r.note(score)); err != nil {
+	if err := survey.WriteClosures(dir, r.Closures(), r.note(score)); err != nil {
 		return err
 	}
 	summary, err := json.MarshalIndent(score, "", "  ")

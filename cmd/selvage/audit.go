@@ -48,9 +48,17 @@ func (c *auditCmd) Run(ctx context.Context, con *console) error {
 	if len(s.Robots) == 0 {
 		return badInput("%s has no robots: there is nothing to audit", c.Survey)
 	}
+	if err := s.PosesOnly(); err != nil {
+		return badInput("%s cannot be audited: %w", c.Survey, err)
+	}
 	in := audit.Input{Survey: s, Progress: p.begin}
 	if in.Verdicts, in.Decided, err = c.verdicts(ctx, s, p); err != nil {
 		return err
+	}
+	for i, r := range s.TieRulings() {
+		if r != nil && (!c.HoldAll || r.Verdict == survey.RuledRefused) {
+			in.Verdicts[i] = ruled(in.Verdicts[i], r)
+		}
 	}
 	a, err := interruptible(ctx, func() (*audit.Audit, error) { return audit.Run(ctx, in) })
 	if errors.Is(err, audit.ErrUndetermined) {
@@ -83,26 +91,45 @@ func (c *auditCmd) Run(ctx context.Context, con *console) error {
 	return nil
 }
 
-// verdicts returns who says what of the ties.
+// verdicts returns one verdict for each tie, in the order of the survey, and who says so. It takes the loop closures that are not
+// held out of s.
 func (c *auditCmd) verdicts(ctx context.Context, s *survey.Survey, p *progress) ([]survey.ResultVerdict, string, error) {
-	if c.HoldAll {
-		all := make([]survey.ResultVerdict, len(s.Ties))
-		for i := range all {
-			all[i] = survey.ResultVerdict{Tie: s.Ties[i].ID, Verdict: "held", Reason: "taken as true: nobody has looked at it"}
+	all := make([]survey.ResultVerdict, len(s.Ties))
+	for i := range all {
+		all[i] = survey.ResultVerdict{Tie: s.Ties[i].ID, Verdict: "open", Reason: "has no verdict"}
+		if c.HoldAll {
+			all[i].Verdict, all[i].Reason = "held", unseen
 		}
+	}
+	if c.HoldAll {
 		return all, "nobody: every tie is taken as true", nil
 	}
 	known, err := survey.ReadVerdicts(c.Survey, s)
 	if err != nil {
 		return nil, "", err
 	}
-	if known != nil || len(s.Ties) == 0 {
-		decided := "results/verdicts.csv"
-		if n := len(s.Ties) - len(known); n > 0 {
-			decided += fmt.Sprintf(" (%d of %d ties have none there and are left out)", n, len(s.Ties))
-		}
-		return known, decided, nil
+	if known == nil && len(s.Ties) > 0 {
+		return c.decide(ctx, s, p)
 	}
+	at := make(map[string]int, len(all))
+	for i := range all {
+		at[all[i].Tie] = i
+	}
+	for _, v := range known {
+		all[at[v.Tie]] = unruled(v, all[at[v.Tie]])
+	}
+	if _, err := survey.LeaveOutClosures(c.Survey, s); err != nil {
+		return nil, "", err
+	}
+	decided := "results/verdicts.csv"
+	if n := len(all) - len(known); n > 0 {
+		decided += fmt.Sprintf(" (%d of %d ties have none there and are left out)", n, len(all))
+	}
+	return all, decided, nil
+}
+
+// decide has agents and coordinator judge the survey, all of it delivered at once.
+func (c *auditCmd) decide(ctx context.Context, s *survey.Survey, p *progress) ([]survey.ResultVerdict, string, error) {
 	p.begin("deciding on the ties")
 	run, err := scenarios.Virtual(ctx, scenarios.Recorded(s), scenarios.Settings{})
 	if err != nil {
@@ -111,5 +138,21 @@ func (c *auditCmd) verdicts(ctx context.Context, s *survey.Survey, p *progress) 
 	if run.Interrupted {
 		return nil, "", context.Canceled
 	}
-	return run.Verdicts(), "the coordinator, from the whole survey at once", nil
+	verdicts, closures := run.Verdicts(), run.Closures()
+	for i := range s.Robots {
+		r := &s.Robots[i]
+		kept := make([]survey.Relative, 0, len(r.Relatives))
+		for _, m := range r.Relatives {
+			if m.Kind == survey.Closure {
+				held := closures[0].Verdict == "held"
+				closures = closures[1:]
+				if !held {
+					continue
+				}
+			}
+			kept = append(kept, m)
+		}
+		r.Relatives = kept
+	}
+	return verdicts, "the coordinator, from the whole survey at once", nil
 }
