@@ -115,7 +115,20 @@ func TestSite3(t *testing.T) {
 		if x.T != nil && *x.T > *a.Ties[3].T && x.held {
 			t.Errorf("%s has a larger T than t3", x.ID)
 		}
-		t.Logf("%s %s shift %+v set %d place %v det %v", x.ID, x.Status, x.Shift, x.Set, x.Place, x.DetectableM)
 	}
-	t.Logf("%+v\n%+v\n%+v\n%+v\n%+v\n%+v", a.Adjustment, a.Sets, a.Places, a.Loops, a.Spread, a.Next)
+	if n := len(a.Loops); n != 10 { // 12 ties, two of them in the tree
+		t.Errorf("%d loops", n)
+	}
+	// Two ties between robots 0 and 1 close a loop whose misclosure is the pairwise consistency of the two.
+	for i, want := range map[int]float64{0: 5.3754, 1: 3.925} {
+		near(t, "loop of t0 and "+a.Loops[i].Tie, a.Loops[i].T, want, 1e-2)
+	}
+	sum := 0.0
+	for _, x := range a.Spread {
+		sum += x.Redundancy
+	}
+	near(t, "sum of redundancies", sum, 72, 1e-4)
+	if !a.Arrived {
+		t.Error("the real spread did not settle")
+	}
 }

@@ -20,6 +20,9 @@ const enough = 5
 // settled is the relative change of a sigma below which the iteration has arrived; far below what any estimate is certain to.
 const settled = 2e-3
 
+// extreme bounds the factors of variances: simulated data without any error would have none.
+const extreme = 1e6
+
 // Spreads estimates variance components: one factor for the sigmas of every group. Evaluate adjusts with the variances of the groups
 // multiplied by scale and returns for each group the sum of r' Omega r and of the redundancies, both with these variances. Repeated,
 // each group's variance times its quotient of the two: Helmert's estimate, in the simplified form of Förstner, 'Ein Verfahren zur
@@ -45,9 +48,9 @@ func Spreads(groups, rounds int, evaluate func(scale []float64) (squares, redund
 			if !out[i].Known {
 				continue
 			}
-			quotient := max(squares[i]/redundancy[i], 1e-6)
-			scale[i] *= quotient
-			arrived = arrived && math.Abs(math.Sqrt(quotient)-1) < settled
+			now := min(max(scale[i]*squares[i]/redundancy[i], 1/extreme), extreme)
+			arrived = arrived && math.Abs(math.Sqrt(now/scale[i])-1) < settled
+			scale[i] = now
 		}
 		if arrived {
 			break

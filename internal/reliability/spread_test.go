@@ -127,6 +127,9 @@ func TestSpreadsOfGroupsWithoutRedundancy(t *testing.T) {
 	if _, arrived, _ := Spreads(1, 2, func(scale []float64) ([]float64, []float64, error) { return []float64{30}, []float64{10}, nil }); arrived {
 		t.Error("arrived although the last round changed the sigma")
 	}
+	if got, arrived, _ := Spreads(1, 8, func([]float64) ([]float64, []float64, error) { return []float64{0}, []float64{10}, nil }); !arrived || got[0].Ratio != 1e-3 {
+		t.Errorf("data without error: %+v, arrived %v", got, arrived)
+	}
 	broken := errors.New("no")
 	if _, _, err := Spreads(1, 2, func([]float64) ([]float64, []float64, error) { return nil, nil, broken }); err != broken {
 		t.Errorf("error %v", err)
