@@ -92,7 +92,7 @@ func (a *Audit) cautions() []string {
 	out = append(out, fmt.Sprintf("The verdicts are those of %s. The figures hold under these verdicts: with others they would be others.", a.Decided))
 	wide := 0
 	for i := range a.Spread {
-		if s := &a.Spread[i]; s.Low != nil && *s.Low > 1 {
+		if s := &a.Spread[i]; s.Low != nil && *s.Low > 1.2 {
 			wide++
 		}
 	}

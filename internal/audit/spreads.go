@@ -6,8 +6,9 @@ import (
 	"selvage/internal/reliability"
 )
 
-// rounds bounds the iteration that estimates the real spread.
-const rounds = 8
+// rounds bounds the iteration that estimates the real spread: groups that little checks settle slowly, and every round adjusts the
+// survey again.
+func (w *work) rounds() int { return min(100, max(8, 3_000_000/max(1, w.sigma.Scalars()))) }
 
 // spreads estimates, per robot and class of measurement, how the errors that were met compare with the stated sigmas. A tie counts for
 // the robot that measured it.
@@ -28,7 +29,7 @@ func (w *work) spreads() error {
 	}
 	restore := w.keep()
 	defer restore()
-	all, arrived, err := reliability.Spreads(len(count), rounds, func(scale []float64) (squares, redundancy []float64, err error) {
+	all, arrived, err := reliability.Spreads(len(count), w.rounds(), func(scale []float64) (squares, redundancy []float64, err error) {
 		for k, g := range group {
 			if g >= 0 {
 				w.b.W[k] = 1 / scale[g]
