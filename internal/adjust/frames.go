@@ -67,6 +67,7 @@ func (p *Problem) beginSighted(start Start) error {
 			return err
 		}
 		if coarse {
+			p.grow()
 			if _, err := p.rough(true); err != nil {
 				return err
 			}

@@ -224,9 +224,7 @@ type sighted struct {
 //
 //	by pose From A [-I, skew(u)], by a point A R_i', by the pose of a robot A R_ij [I, -skew(spot)].
 func (s *Sightings) linearise(k int, v *Values, w float64, f *sighted) float64 {
-	x := &v.Poses[s.From[k]]
-	u := s.seen(k, v)
-	r, a := s.evaluate(k, u, true)
+	r, a := s.evaluate(k, s.seen(k, v), true)
 	or := s.info[k].Apply(r)
 	chi2 := r[0]*or[0] + r[1]*or[1] + r[2]*or[2]
 	at := a.T()
@@ -239,20 +237,7 @@ func (s *Sightings) linearise(k int, v *Values, w float64, f *sighted) float64 {
 		g[i] *= w
 	}
 	var li, lj [18]float64
-	dim := s.g.Dim
-	f.di, f.dj = dim, dim
-	spread(&li, dim, &lie.Mat3{-1, 0, 0, 0, -1, 0, 0, 0, -1}, u)
-	rt := x.R.T()
-	if s.ofPoints {
-		f.dj = 3
-		copy(lj[:], rt[:])
-		if dim == 3 {
-			lj[2], lj[5], lj[8] = 0, 0, 0
-		}
-	} else {
-		m := rt.Mul(v.Poses[s.To[k]].R)
-		spread(&lj, dim, &m, s.Spot[k])
-	}
+	f.di, f.dj = s.spreads(k, v, &li, &lj)
 	gram(f.hii[:], &li, f.di, &G, &li, f.di)
 	gram(f.hij[:], &li, f.di, &G, &lj, f.dj)
 	gram(f.hjj[:], &lj, f.dj, &G, &lj, f.dj)
@@ -263,6 +248,24 @@ func (s *Sightings) linearise(k int, v *Values, w float64, f *sighted) float64 {
 		f.gj[c] = lj[c]*g[0] + lj[f.dj+c]*g[1] + lj[2*f.dj+c]*g[2]
 	}
 	return chi2
+}
+
+// spreads writes the derivatives of the place seen, in the frame of From, by the tangents of From and of what is seen, and returns
+// their widths.
+func (s *Sightings) spreads(k int, v *Values, li, lj *[18]float64) (di, dj int) {
+	dim := s.g.Dim
+	spread(li, dim, &lie.Mat3{-1, 0, 0, 0, -1, 0, 0, 0, -1}, s.seen(k, v))
+	rt := v.Poses[s.From[k]].R.T()
+	if s.ofPoints {
+		copy(lj[:], rt[:])
+		if dim == 3 {
+			lj[2], lj[5], lj[8] = 0, 0, 0
+		}
+		return dim, 3
+	}
+	m := rt.Mul(v.Poses[s.To[k]].R)
+	spread(lj, dim, &m, s.Spot[k])
+	return dim, dim
 }
 
 // spread writes m [I, -skew(p)]; in the plane the columns x, y, rz are kept.

@@ -5,6 +5,7 @@ import (
 	"math/rand/v2"
 	"testing"
 
+	"gonum.org/v1/gonum/mat"
 	"pgregory.net/rapid"
 
 	"selvage/internal/lie"
@@ -324,6 +325,92 @@ func TestPlacePoints(t *testing.T) {
 			for _, p := range []int{0, 3} {
 				if d := length(minus(truth[p], g.Values.Points[p])); d > 1e-9 {
 					t.Fatalf("mark %d is off by %g m", p, d)
+				}
+			}
+		}
+	})
+}
+
+// The predicted covariance is J Sigma J' with J by differences and Sigma the joint covariance, and the innovation follows from it.
+func TestPredictedSighting(t *testing.T) {
+	both(t, func(t *testing.T, dim int) {
+		r := random(21)
+		for range 10 {
+			g, _ := fleetOfMarks(r, dim, 8, 4)
+			s, err := NewSolver(g, []int32{3}, sparse.Options{})
+			if err != nil {
+				t.Fatal(err)
+			}
+			sigma, err := s.Covariance()
+			if err != nil {
+				t.Fatal(err)
+			}
+			for _, set := range g.Sets {
+				e, ok := set.(*Sightings)
+				if !ok {
+					continue
+				}
+				for k := range e.From {
+					got := e.Predicted(k, &g.Values, sigma)
+					variables := []int32{e.From[k], e.target(k)}
+					joint, err := s.Joint(variables)
+					if err != nil {
+						t.Fatal(err)
+					}
+					n := dim + g.width(variables[1])
+					J := mat.NewDense(3, n, nil)
+					for c := range n {
+						const h = 1e-6
+						move := func(h float64) [3]float64 {
+							v := Values{Poses: append([]lie.SE3(nil), g.Values.Poses...), Points: append([][3]float64(nil), g.Values.Points...)}
+							switch {
+							case c < dim:
+								v.Poses[variables[0]] = plus(v.Poses[variables[0]], components(dim)[c], h)
+							case !e.ofPoints:
+								v.Poses[variables[1]] = plus(v.Poses[variables[1]], components(dim)[c-dim], h)
+							case dim == 6 || c < dim+2:
+								v.Points[e.To[k]][c-dim] += h
+							}
+							return e.Residual(k, &v)
+						}
+						a, b := move(h), move(-h)
+						for i := range a {
+							J.Set(i, c, math.Remainder(a[i]-b[i], 2*math.Pi)/(2*h))
+						}
+					}
+					var js, want mat.Dense
+					js.Mul(J, mat.NewDense(n, n, joint))
+					want.Mul(&js, J.T())
+					near(t, "predicted covariance", got[:], want.RawMatrix().Data, 1e-5, 1)
+
+					var at []int
+					for i := range 3 {
+						if e.Info(k)[4*i] > 0 {
+							at = append(at, i)
+						}
+					}
+					m, info := mat.NewDense(len(at), len(at), nil), mat.NewDense(len(at), len(at), nil)
+					e.Z[k][at[0]] += 0.3
+					res := mat.NewVecDense(len(at), nil)
+					z := e.Residual(k, &g.Values)
+					for i, a := range at {
+						res.SetVec(i, z[a])
+						for j, b := range at {
+							m.Set(i, j, got[3*a+b])
+							info.Set(i, j, e.Info(k)[3*a+b])
+						}
+					}
+					var own mat.Dense
+					if err := own.Inverse(info); err != nil {
+						t.Fatal(err)
+					}
+					m.Add(m, &own)
+					var x mat.VecDense
+					if err := x.SolveVec(m, res); err != nil {
+						t.Fatal(err)
+					}
+					near(t, "innovation", []float64{e.Innovation(k, &g.Values, sigma)}, []float64{mat.Dot(res, &x)}, 1e-9, 1)
+					e.Z[k][at[0]] -= 0.3
 				}
 			}
 		}
