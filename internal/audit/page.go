@@ -193,11 +193,12 @@ func (a *Audit) failures() []string {
 	if len(failed) == 0 {
 		return nil
 	}
-	out = append(out, fmt.Sprintf("%s %s failed the test: an error of its size would come by chance once in %d.", map[bool]string{true: "Tie", false: "Ties"}[len(failed) == 1], list(failed), int(1/reliability.Alpha)))
-	switch removed := a.Removal; {
-	case len(removed) == len(failed) && len(failed) == 1:
-	case len(removed) > 0:
-		out = append(out, fmt.Sprintf("Taking out %s, and adjusting again after each, leaves none that fails; the rest stood out only with %s.", list(removed), map[bool]string{true: "it", false: "them"}[len(removed) == 1]))
+	out = append(out, fmt.Sprintf("%s %s failed the test, which a sound tie does once in %d.", map[bool]string{true: "Tie", false: "Ties"}[len(failed) == 1], list(failed), int(1/reliability.Alpha)))
+	switch n := len(a.Removal); {
+	case n == removed:
+		out = append(out, fmt.Sprintf("Even with %s taken out one after the other, others fail or may: look at the verdicts before the figures.", list(a.Removal)))
+	case n > 1 || len(failed) > 1:
+		out = append(out, fmt.Sprintf("Taking out %s, and adjusting again after each, leaves none that fails; the rest stood out only with %s.", list(a.Removal), map[bool]string{true: "it", false: "them"}[n == 1]))
 	}
 	for _, id := range a.Removal {
 		for k := range a.Ties {

@@ -90,9 +90,9 @@ func (s *Spread) words() string {
 	case s.Ratio == nil:
 		return what + ": too little checks it to tell the real spread"
 	case *s.Low > 1:
-		return fmt.Sprintf("%s: real spread %.2g times the stated", what, *s.Ratio)
+		return fmt.Sprintf("%s: real spread %s times the stated", what, rough(*s.Ratio))
 	case *s.High < 1:
-		return fmt.Sprintf("%s: real spread only %.2g times the stated", what, *s.Ratio)
+		return fmt.Sprintf("%s: real spread only %s times the stated", what, rough(*s.Ratio))
 	}
 	return what + ": as stated"
 }

@@ -63,3 +63,6 @@ func probability(p *float64, reason string) string {
 	}
 	return fmt.Sprintf("%.4f", *p)
 }
+
+// rough writes a number with two digits.
+func rough(x float64) string { return report.Digits(x, max(math.Abs(x)/10, 1e-9)) }
