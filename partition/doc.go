@@ -23,6 +23,11 @@
 // measurements of very different strength. [Condensed.Interior] goes the other way, from a step of the junctions to the step of all
 // poses, and [Condensed.NullResidual] checks H N = 0.
 //
+// A graph may have points beside poses ([CondensePoints]), such as marks that a robot has seen. Under a common motion with the tangent tau in
+// the frame a point p moves by [I, -skew(p)] tau, and these are its rows of N. The reference of a clique is a pose, and a point in it is
+// read as e_p = R_k0'(p - t_k0) - Rbar_k0'(pbar - tbar_k0). A mark that one robot alone knows is eliminated; one that several know is
+// a separator of each.
+//
 // Elimination and the term for term assembly follow George, "Nested dissection of a regular finite element mesh", SIAM J.
 // Numerical Analysis 10(2), 1973, and Duff and Reid, "The multifrontal solution of indefinite sparse symmetric linear
 // equations", ACM Trans. Mathematical Software 9(3), 1983.

@@ -2,7 +2,11 @@
 // are held, in one least-squares adjustment. It is the reference that the fleet's own answer is compared with.
 //
 // A [Problem] is the survey as a pose graph, with the way back from variables to keyframes. Each island (what measurements and
-// held ties connect) keeps its first keyframe where the front end had it; covariances are relative to that keyframe.
+// held ties connect) keeps its first keyframe where the front end had it; covariances are relative to that keyframe. An island with
+// control points enough stands in the datum instead.
+//
+// Sightings of marks and ties that are less than a pose say nothing of where the frames of two robots stand to each other until
+// several are taken together: [Problem.Begin] finds that out, and [Problem.SolveRobust] leaves out what does not fit.
 package adjust
 
 import (

@@ -249,6 +249,9 @@ func TestYards(t *testing.T) {
 					continue
 				}
 				held := c.plan.controls > 0
+				if front := Pose(y.survey.Robots[0].Keyframes[0].Pose); !held && p.Graph.Values.Poses[p.Anchors[0]] != front {
+					t.Errorf("%s, dimension %d, seed %d: the fixed keyframe has left its place", c.name, dimension, seed)
+				}
 				if got := len(p.Anchors); held != (got == 0) {
 					t.Errorf("%s: %d fixed poses with %d control points", c.name, got, c.plan.controls)
 				}

@@ -80,10 +80,27 @@ func Frames(units int, planar bool, glimpses []Glimpse, o FrameOptions) []Frame 
 			}
 		}
 		if best < 0 {
-			return f.frames
+			return f.relative()
 		}
 		f.grow(&f.found[best], placed)
 	}
+}
+
+// relative counts the frames of each group from its first unit.
+func (f *framing) relative() []Frame {
+	first := make([]int, len(f.frames)) // of each group, by the unit that it was named after so far
+	for u := len(f.frames) - 1; u >= 0; u-- {
+		first[f.frames[u].Group] = u
+	}
+	out := make([]Frame, len(f.frames))
+	for u, x := range f.frames {
+		head := first[x.Group]
+		out[u] = Frame{Group: head, Pose: f.frames[head].Pose.Between(x.Pose), Score: x.Score}
+		if u == head {
+			out[u].Pose = lie.Identity()
+		}
+	}
+	return out
 }
 
 type framing struct {

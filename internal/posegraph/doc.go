@@ -12,6 +12,10 @@
 // method is Gauss-Newton, damped after Levenberg (1944) and Marquardt (1963) only when a step would raise the cost. [Chordal] and
 // [SpanningTree] give starting values from the measurements alone.
 //
+// Beside poses a graph may have points: marks that robots see again, and control points ([PointPriors]), the only factors that tie it
+// to a datum. [Sightings] are measurements that are less than a pose, of points or of other robots: position, range with bearing,
+// or one of the two; [MarkCliques] are condensed factors over poses and points.
+//
 // A planar survey (Dim 3) keeps its poses as rigid motions of space with z = 0 and a rotation about z; its tangents have the three
 // components x, y, rz.
 package posegraph

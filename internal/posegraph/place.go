@@ -7,8 +7,8 @@ import (
 )
 
 // PlacePoints gives the points starting values through the present poses: from the first sighting that tells range and bearing or
-// the position, else from the bearings of two or more views, as the point nearest to their rays. It returns the points that no
-// sighting places, which keep their values.
+// the position, else from the bearings of two or more views, as the point nearest to their rays, else from ranges of four views
+// (three in the plane) that do not stand in line. It returns the points that no sighting places, which keep their values.
 func PlacePoints(g *Graph) (unplaced []int32) {
 	const rank = 1e-3 // of the rays' normal matrix: about two degrees between them
 	n := len(g.Values.Points)
@@ -54,18 +54,72 @@ func PlacePoints(g *Graph) (unplaced []int32) {
 		}
 	}
 	for p := range placed {
-		if placed[p] {
-			continue
+		if !placed[p] {
+			m := &rays[p]
+			scale := (m[0] + m[4] + m[8]) / 2
+			if at, ok := solve3(m, sums[p]); ok && scale > 0 && weakest(m) > rank*scale {
+				g.Values.Points[p], placed[p] = g.flat(at), true
+			}
 		}
-		m := &rays[p]
-		scale := (m[0] + m[4] + m[8]) / 2
-		if at, ok := solve3(m, sums[p]); ok && scale > 0 && weakest(m) > rank*scale {
-			g.Values.Points[p] = g.flat(at)
-		} else {
+	}
+	g.placeByRanges(placed)
+	for p := range placed {
+		if !placed[p] {
 			unplaced = append(unplaced, int32(p))
 		}
 	}
 	return unplaced
+}
+
+// placeByRanges places points that are not yet by ranges alone. Two ranges r, s from c, d say 2 (d - c)'(p - c) = r^2 - s^2 + |d - c|^2,
+// which is linear in p.
+func (g *Graph) placeByRanges(placed []bool) {
+	const rank = 1e-2 // of the matrix of the views' offsets: a tenth as wide as they are long
+	type view struct {
+		at    [3]float64
+		metre float64
+	}
+	first := make([]*view, len(placed))
+	rows := make([]lie.Mat3, len(placed))
+	sums := make([][3]float64, len(placed))
+	for _, set := range g.Sets {
+		s, ok := set.(*Sightings)
+		if !ok || !s.ofPoints || s.sense != Range {
+			continue
+		}
+		for k, p := range s.To {
+			if placed[p] || s.W[k] == 0 {
+				continue
+			}
+			here := view{g.Values.Poses[s.From[k]].Apply(s.Mount[k].T), s.Z[k][0]}
+			if first[p] == nil {
+				first[p] = &here
+				continue
+			}
+			d := minus(here.at, first[p].at)
+			right := (first[p].metre*first[p].metre - here.metre*here.metre + d[0]*d[0] + d[1]*d[1] + d[2]*d[2]) / 2
+			for r := range 3 {
+				for c := range 3 {
+					rows[p][3*r+c] += d[r] * d[c]
+				}
+				sums[p][r] += d[r] * right
+			}
+		}
+	}
+	for p, f := range first {
+		if f == nil {
+			continue
+		}
+		m := &rows[p]
+		scale := m[0] + m[4] + m[8]
+		if g.Dim == 3 {
+			m[8] = scale // no height is sought
+		}
+		if at, ok := solve3(m, sums[p]); ok && weakest(m) > rank*scale {
+			g.Values.Points[p] = g.flat([3]float64{f.at[0] + at[0], f.at[1] + at[1], f.at[2] + at[2]})
+			placed[p] = true
+		}
+	}
 }
 
 // flat drops the height in the plane.

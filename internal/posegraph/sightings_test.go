@@ -298,7 +298,7 @@ func TestControlPoints(t *testing.T) {
 	})
 }
 
-// Bearings from two places meet in the mark; bearings from one place, or ranges alone, place nothing.
+// Bearings from two places meet in the mark; bearings from one place, or one range, place nothing.
 func TestPlacePoints(t *testing.T) {
 	both(t, func(t *testing.T, dim int) {
 		r := random(5)
@@ -413,6 +413,39 @@ func TestPredictedSighting(t *testing.T) {
 					e.Z[k][at[0]] -= 0.3
 				}
 			}
+		}
+	})
+}
+
+// Ranges from views that do not stand in line place a mark.
+func TestPlacePointsByRanges(t *testing.T) {
+	both(t, func(t *testing.T, dim int) {
+		r := random(6)
+		g := New(dim, nil)
+		views := 2 + dim/3
+		for k := range views {
+			x := turned(r, dim, 1, 1)
+			if k < 2 {
+				x.T[k] += 20
+			} else if dim == 6 {
+				x.T[2] += 20 * float64(k-2)
+			}
+			g.Values.Poses = append(g.Values.Poses, x)
+		}
+		truth := [][3]float64{spot(r, dim, 10), spot(r, dim, 10)}
+		g.Values.Points = make([][3]float64, 2)
+		mount, s := turned(r, dim, 1, 1), g.AddSightings(Range)
+		for k := range views {
+			for p, at := range truth {
+				if p == 1 && k == views-1 {
+					continue // one view too few
+				}
+				s.Add(int32(k), int32(p), mount, [3]float64{}, measured(Range, dim, g.Values.Poses[k], mount, at), &lie.Mat3{1})
+			}
+		}
+		un := PlacePoints(g)
+		if d := length(minus(truth[0], g.Values.Points[0])); d > 1e-9 || len(un) != 1 || un[0] != 1 {
+			t.Errorf("off by %g m; without a place: %v", d, un)
 		}
 	})
 }
