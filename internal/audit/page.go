@@ -114,7 +114,7 @@ func (a *Audit) cautions() []string {
 // attention lists what needs a person's eye, the most urgent first.
 func (a *Audit) attention() []string {
 	var out []string
-	const most = 8 // lines of one sort
+	const most = 4 // lines of one sort
 	add := func(all []string, rest string) {
 		if len(all) > most {
 			all = append(all[:most:most], fmt.Sprintf("%d more %s, see the tables.", len(all)-most, rest))

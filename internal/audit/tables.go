@@ -14,7 +14,7 @@ const shown = 150
 
 func (a *Audit) tables() []report.Table {
 	var out []report.Table
-	for _, t := range []report.Table{a.nextTable(), a.tieTable(), a.leftTable(), a.setTable(), a.loopTable(), a.spreadTable()} {
+	for _, t := range []report.Table{a.nextTable(), a.testTable(), a.hiddenTable(), a.leftTable(), a.setTable(), a.loopTable(), a.spreadTable()} {
 		if len(t.Rows) > 0 {
 			out = append(out, t)
 		}
@@ -51,7 +51,35 @@ func (a *Audit) nextTable() report.Table {
 // rank orders ties by need of a person's eye.
 var rank = map[Status]int{Failed: 0, Unchecked: 1, Passed: 2, Contradicts: 3, Fits: 4, Untested: 5}
 
-func (a *Audit) tieTable() report.Table {
+// testTable and hiddenTable are the two halves of tieTable, so that each fits a sheet of paper.
+func (a *Audit) testTable() report.Table {
+	t := a.tieTable().pick(0, 1, 2, 3, 4, 5, 6, 7, 8)
+	t.Caption, t.Note = "Held ties and their tests", ""
+	return cut(t.Table, "ties.csv")
+}
+
+func (a *Audit) hiddenTable() report.Table {
+	t := a.tieTable().pick(0, 3, 9, 10, 11, 12, 13, 14)
+	t.Caption = "Held ties and what could hide in them, weakest first"
+	return cut(t.Table, "ties.csv")
+}
+
+// wide is a table to take columns from.
+type wide struct{ report.Table }
+
+func (w wide) pick(columns ...int) wide {
+	out := w
+	out.Columns, out.Rows = nil, make([][]string, len(w.Rows))
+	for _, c := range columns {
+		out.Columns = append(out.Columns, w.Columns[c])
+		for i, row := range w.Rows {
+			out.Rows[i] = append(out.Rows[i], row[c])
+		}
+	}
+	return out
+}
+
+func (a *Audit) tieTable() wide {
 	t := report.Table{
 		Caption: "Held ties, weakest first",
 		Columns: []report.Column{{Name: "tie"}, {Name: "from"}, {Name: "to"}, {Name: "finding"}, number("residual", "m"), number("residual", "°"), number("largest", "sigmas"),
@@ -102,7 +130,7 @@ func (a *Audit) tieTable() report.Table {
 	if bounded {
 		t.Note += " ≤ marks a bound; the shifts of the ties that could be worst are exact."
 	}
-	return cut(t, "ties.csv")
+	return wide{t}
 }
 
 // fraction writes a redundancy.

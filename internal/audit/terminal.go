@@ -13,29 +13,14 @@ func (a *Audit) Text(w io.Writer) error {
 			return err
 		}
 	}
-	t := a.tieTable()
+	// A terminal is narrow: name, ends, finding, statistic, redundancies, detectable error and shift.
+	t := a.tieTable().pick(0, 1, 2, 3, 7, 9, 10, 11, 13)
 	if len(t.Rows) == 0 {
 		return nil
 	}
-	// A terminal is narrow: name, ends, finding, redundancies, detectable error and shift.
-	short := t
-	short.Columns, short.Rows, short.Note = nil, nil, ""
-	columns := []int{0, 1, 2, 3, 7, 9, 10, 11, 13}
-	for _, c := range columns {
-		short.Columns = append(short.Columns, t.Columns[c])
-	}
-	for i, row := range t.Rows {
-		if i == 20 {
-			break
-		}
-		var cells []string
-		for _, c := range columns {
-			cells = append(cells, row[c])
-		}
-		short.Rows = append(short.Rows, cells)
-	}
+	t.Note, t.Rows = "", t.Rows[:min(len(t.Rows), 20)]
 	fmt.Fprintln(w)
-	return short.Text(w, 0)
+	return t.Text(w, 0)
 }
 
 // JSON writes the audit as audit.json has it.
