@@ -83,7 +83,11 @@ func (a *adjustment) write() error {
 		island := l.number[p.Island[f]]
 		datum = append(datum, survey.ResultDatum{Robot: u.robot, Session: u.session, Joined: island == 0, Island: island, Pose: adjust.Folder(&x)})
 	}
-	note := fmt.Sprintf("adjusted in one piece, %d of %d ties in it; datum %s, held by the first keyframe of each island", a.report.TiesHeld, a.report.Ties, a.survey.Meta.Datum.Name)
+	by := "the first keyframe of each island"
+	if len(p.Anchors) < p.Islands {
+		by = "control points or, in an island that has too few, its first keyframe"
+	}
+	note := fmt.Sprintf("adjusted in one piece, %d of %d ties in it; datum %s, held by %s", a.report.TiesHeld, a.report.Ties, a.survey.Meta.Datum.Name, by)
 	return survey.WriteResults(a.Out, poses, a.verdicts, datum, note)
 }
 
