@@ -40,9 +40,10 @@ type Audit struct {
 	Next       []Candidate `json:"next"`                  // where a further tie would help most, best first
 	Basin      string      `json:"starting_basin"`        // certified or not decided
 
-	plan   report.Plan
-	hidden bool // the plan does not show all ties
-	main   int  // the island that the plan is in
+	plan     report.Plan
+	unclosed bool // no loops were closed: ties that are no whole pose stand in the way
+	hidden   bool // the plan does not show all ties
+	main     int  // the island that the plan is in
 }
 
 // Adjustment says how the one-piece adjustment of the held ties went. T is r' Omega r of all its measurements.

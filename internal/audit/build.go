@@ -202,8 +202,6 @@ func (w *work) solve() (posegraph.Result, error) {
 		return r, w.ctx.Err()
 	case posegraph.Undetermined:
 		return r, fmt.Errorf("%w in some direction: %s, session %d", ErrUndetermined, keyframe(w.p.Keys[r.Weakest]), w.p.Keys[r.Weakest].Session)
-	case posegraph.NothingToAdjust:
-		return r, nil
 	}
 	return r, w.covariance()
 }

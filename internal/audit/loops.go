@@ -1,6 +1,7 @@
 package audit
 
 import (
+	"errors"
 	"math"
 	"slices"
 
@@ -25,7 +26,10 @@ func (w *work) loops() error {
 	if len(closing) == 0 {
 		return nil
 	}
-	if _, err := w.solve(); err != nil {
+	if _, err := w.solve(); errors.Is(err, ErrUndetermined) { // a tie of the tree does not measure all of a pose
+		w.out.unclosed = true
+		return nil
+	} else if err != nil {
 		return err
 	}
 	for _, t := range closing {

@@ -102,6 +102,9 @@ func (a *Audit) cautions() []string {
 	if tested := n[Passed] + n[Failed]; tested > 0 {
 		out = append(out, fmt.Sprintf("Of %s tested about %s would fail by chance alone if all were sound.", count(tested, "tie"), short(reliability.Alpha*float64(tested))))
 	}
+	if a.unclosed {
+		out = append(out, "Loops were not closed: some ties do not measure all of a pose, and one alone does not join two robots.")
+	}
 	if a.hidden {
 		out = append(out, fmt.Sprintf("The plan shows %d ties, those that need an eye and then the weakest; all stand in ties.csv.", drawn))
 	}

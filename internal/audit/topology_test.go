@@ -131,3 +131,40 @@ func TestWrongTie(t *testing.T) {
 		t.Errorf("refused: %+v, to be removed %v", x, a.Removal)
 	}
 }
+
+// Surveys with little in them: keyframes that nothing joins, and one keyframe in all.
+func TestLittle(t *testing.T) {
+	for _, n := range []int{1, 3} {
+		s := &survey.Survey{Meta: survey.Meta{Format: 1, Name: "little", Dimension: 2, Datum: survey.Datum{Name: "d"}}, Robots: []survey.Robot{{ID: "a"}, {ID: "b"}}}
+		for k := range n {
+			s.Robots[0].Keyframes = append(s.Robots[0].Keyframes, survey.Keyframe{ID: int64(k), Pose: survey.Identity()})
+		}
+		a := run(t, s, nil)
+		if len(a.Islands) != n || !a.Adjustment.Converged() || a.Adjustment.DoF != 0 {
+			t.Errorf("%d keyframes: %d islands, %+v", n, len(a.Islands), a.Adjustment)
+		}
+		if err := a.Write(t.TempDir(), "today", "test"); err != nil {
+			t.Error(err)
+		}
+	}
+	if _, err := Run(t.Context(), Input{Survey: &survey.Survey{Meta: survey.Meta{Dimension: 3}}}); err == nil {
+		t.Error("a survey without keyframes was audited")
+	}
+}
+
+// Ties that do not measure a turn: several join two robots, one alone does not.
+func TestTiesWithoutTurn(t *testing.T) {
+	s, verdicts := tracks(2, 0, 100, 200)
+	for k := range s.Ties {
+		s.Ties[k].Cov.Sigma[5] = math.Inf(1)
+	}
+	a := run(t, s, verdicts)
+	for k := range a.Ties {
+		if x := &a.Ties[k]; x.Status != Passed || x.DoF < 1 || x.DoF > 2 || x.RedundancyRotation != nil || x.DetectableRad != nil {
+			t.Errorf("%+v", x)
+		}
+	}
+	if len(a.Loops) != 0 || !a.unclosed {
+		t.Errorf("loops %+v", a.Loops)
+	}
+}
