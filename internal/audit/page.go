@@ -100,7 +100,7 @@ func (a *Audit) cautions() []string {
 		out = append(out, fmt.Sprintf("The figures take the sigmas as stated, and in %s the real spread is larger: errors that could hide there are larger than said here.", count(wide, "class")))
 	}
 	if tested := n[Passed] + n[Failed]; tested > 0 {
-		out = append(out, fmt.Sprintf("Of %s tested about %s would fail by chance alone if all were sound.", count(tested, "tie"), short(reliability.Alpha*float64(tested))))
+		out = append(out, fmt.Sprintf("Of %s tested about %s would fail by chance alone if all were sound.", count(tested, "tie"), rough(reliability.Alpha*float64(tested))))
 	}
 	if a.unclosed {
 		out = append(out, "Loops were not closed: some ties do not measure all of a pose, and one alone does not join two robots.")
@@ -200,7 +200,9 @@ func (a *Audit) failures() []string {
 	switch n := len(a.Removal); {
 	case n == removed:
 		out = append(out, fmt.Sprintf("Even with %s taken out one after the other, others fail or may: look at the verdicts before the figures.", list(a.Removal)))
-	case n > 1 || len(failed) > 1:
+	case n >= len(failed) && n > 1:
+		out = append(out, fmt.Sprintf("They fail each by itself: taking out %s one after the other, and adjusting again after each, leaves none.", list(a.Removal)))
+	case len(failed) > 1:
 		out = append(out, fmt.Sprintf("Taking out %s, and adjusting again after each, leaves none that fails; the rest stood out only with %s.", list(a.Removal), map[bool]string{true: "it", false: "them"}[n == 1]))
 	}
 	for _, id := range a.Removal {
