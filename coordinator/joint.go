@@ -61,7 +61,7 @@ func (c *Coordinator) solve() ([]Publish, error) {
 		case err != nil:
 			return nil, err
 		default:
-			if err := c.weighRulings(j); err != nil {
+			if err := c.weighRulings(j, &w); err != nil {
 				return nil, err
 			}
 			return c.publish(j)
@@ -457,7 +457,8 @@ func (j *joint) covariance() (posegraph.Covariance, error) {
 	return *j.sigma, nil
 }
 
-// giveUp runs graduated non-convexity over the held ties and drops those it decides against.
+// giveUp runs graduated non-convexity over the held ties and drops those it decides against. What a person has ruled held is true:
+// it keeps its weight, and what contradicts it goes.
 func (c *Coordinator) giveUp(j *joint, w *weighed) error {
 	limit := c.limit
 	o := posegraph.DefaultOptions()

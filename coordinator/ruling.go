@@ -2,6 +2,8 @@ package coordinator
 
 import (
 	"fmt"
+	"slices"
+	"unicode/utf8"
 
 	"selvage/internal/lie"
 	"selvage/msgs"
@@ -17,17 +19,19 @@ type Ruling struct {
 // TieName names a tie by the robot that measured it and its id there.
 type TieName struct{ Robot, ID string }
 
+var verdictWord = map[msgs.VerdictKind]string{msgs.Held: "held", msgs.Refused: "refused", msgs.Open: "open"}
+
 // text is how the reason of a verdict begins.
 func (r *Ruling) text() string {
-	verdict := "held"
-	if r.Verdict == msgs.Refused {
-		verdict = "refused"
-	}
-	return "ruled " + verdict + " by " + r.By + ": " + r.Note
+	return "ruled " + verdictWord[r.Verdict] + " by " + r.By + ": " + r.Note
 }
+
+// ruledOut tells whether a tie was ruled refused: it bears witness to nothing.
+func (t *tie) ruledOut() bool { return t.ruled != nil && t.ruled.Verdict == msgs.Refused }
 
 // rule lays the rulings over what the evidence made of the other ties.
 func (c *Coordinator) rule(n *network, w *weighed) {
+	w.believed, w.alone = slices.Clone(w.held), make([]opinion, len(w.held))
 	joined := false
 	for pass := range 2 { // what measures less than a pose cannot join two maps, so it comes second
 		for i := range n.ties {
@@ -46,6 +50,9 @@ func (c *Coordinator) rule(n *network, w *weighed) {
 			case !t.regular && w.island[t.from] != w.island[t.to]:
 				t.judge(c.now, msgs.Open, reason+"; but it measures too little of a pose to join two maps", msgs.Evidence{})
 			default:
+				if t.regular && !c.cfg.HoldAll {
+					w.alone[i] = opinion{verdictWord[t.finding.Verdict], t.finding.Reason, t.finding.Evidence}
+				}
 				t.judge(c.now, msgs.Held, reason, msgs.Evidence{})
 				w.held[i] = true
 				w.join(n, i)
@@ -81,34 +88,66 @@ func (w *weighed) join(n *network, i int) {
 	}
 }
 
-// weighRulings says what the joint solution makes of each tie that was ruled on: what the ruling costs.
-func (c *Coordinator) weighRulings(j *joint) error {
+// weighRulings says what speaks for and against each ruling: what it costs.
+func (c *Coordinator) weighRulings(j *joint, w *weighed) error {
+	given := 0
+	for i, believed := range w.believed {
+		if believed && !w.held[i] && j.n.ties[i].ruled == nil {
+			given++
+		}
+	}
 	for i := range j.n.ties {
 		t := &j.n.ties[i]
 		if t.ruled == nil || t.finding.Verdict == msgs.Open {
 			continue
 		}
-		f := j.factor[i]
-		if f < 0 {
-			if t.regular {
-				t.judge(c.now, msgs.Refused, t.ruled.text()+"; nothing held connects its two robots, so nothing else speaks about it", msgs.Evidence{})
+		reason, e := t.ruled.text(), msgs.Evidence{}
+		switch f := j.factor[i]; {
+		case t.finding.Verdict == msgs.Held:
+			e = msgs.Evidence{Statistic: j.ties.Chi2(f, &j.graph.Values), DoF: c.width(), Limit: c.limit}
+			reason += fmt.Sprintf("; misclosure %.1f in the joint solution, limit %.1f", e.Statistic, e.Limit)
+			if given > 0 {
+				reason += fmt.Sprintf("; ties held by the evidence alone that contradict this solution: %d", given)
 			}
-			continue
-		}
-		chi2 := j.ties.Chi2(f, &j.graph.Values)
-		if t.finding.Verdict == msgs.Refused {
+			if w.alone[i].reason != "" {
+				reason += "; the evidence alone: " + w.alone[i].verdict + ", " + w.alone[i].reason
+			}
+			if x := &w.alone[i].Evidence; x.DoF > 0 { // what the others say, before they gave way to the ruling
+				e.Statistic, e.Places, e.Margin = x.Statistic, x.Places, x.Margin
+			}
+		case f >= 0:
 			sigma, err := j.covariance()
 			if err != nil {
 				return err
 			}
-			chi2 = j.ties.Innovation(f, &j.graph.Values, sigma, &t.cov)
+			e = msgs.Evidence{Statistic: j.ties.Innovation(f, &j.graph.Values, sigma, &t.cov), DoF: c.width(), Limit: c.limit}
+			word := "agrees with"
+			if e.Statistic >= e.Limit {
+				word = "contradicts"
+			}
+			reason += fmt.Sprintf("; it %s the joint solution: misclosure %.1f, limit %.1f", word, e.Statistic, e.Limit)
+		case t.regular:
+			reason += "; nothing held connects its two robots, so nothing else speaks about it"
 		}
-		word := "agrees with"
-		if chi2 >= c.limit {
-			word = "contradicts"
-		}
-		t.judge(c.now, t.finding.Verdict, fmt.Sprintf("%s; it %s the joint solution: misclosure %.1f, limit %.1f", t.ruled.text(), word, chi2, c.limit),
-			msgs.Evidence{Statistic: chi2, DoF: c.width(), Limit: c.limit})
+		t.judge(c.now, t.finding.Verdict, clip(reason), e)
 	}
 	return nil
+}
+
+// opinion is what the evidence alone says of a tie that was ruled held.
+type opinion struct {
+	verdict, reason string
+	msgs.Evidence
+}
+
+// clip cuts a reason to what a verdict carries.
+func clip(s string) string {
+	if len(s) <= msgs.MaxReason {
+		return s
+	}
+	at := msgs.MaxReason - len("...")
+	for !utf8.RuneStart(s[at]) {
+		at--
+	}
+	return s[:at] + "..."
 }

@@ -41,19 +41,27 @@ func finding(t *testing.T, b *base, robot, tie string) Finding {
 	return Finding{}
 }
 
-// A false tie that a person holds stays in the solution and pulls at it; what it costs is told.
+// A false tie that a person holds is true for the fleet: what contradicts it gives way, and what that costs is told.
 func TestRuledHeld(t *testing.T) {
 	free, held := newBase(t, 3, func(c *Config) { c.HoldAll = false }), newBase(t, 3, ruled("r1", "r1-11", msgs.Held, "seen twice"))
-	threeRobots(free, 3)
-	threeRobots(held, 3)
+	threeRobots(free, 40)
+	threeRobots(held, 40)
 	free.tick(31)
 	held.tick(31)
 	if f := finding(t, free, "r1", "r1-11"); f.Verdict != msgs.Refused {
 		t.Fatalf("left to the evidence: %+v", f)
 	}
 	f := finding(t, held, "r1", "r1-11")
-	if f.Verdict != msgs.Held || !strings.HasPrefix(f.Reason, "ruled held by lead: seen twice; it contradicts the joint solution: misclosure ") || !(f.Statistic > f.Limit) || f.DoF != 6 {
+	if f.Verdict != msgs.Held || !strings.HasPrefix(f.Reason, "ruled held by lead: seen twice; misclosure ") ||
+		!strings.Contains(f.Reason, "; the evidence alone: refused, contradicted by the ties held: misclosure ") ||
+		!strings.Contains(f.Reason, "; ties held by the evidence alone that contradict this solution: ") || !(f.Statistic > f.Limit) || f.DoF != 6 {
 		t.Errorf("finding %+v", f)
+	}
+	held.now += 100 * second
+	held.summarise(newTrack("r1", 1, 30, 3, 0)) // another solution, the same verdict
+	held.tick(31)
+	if again := finding(t, held, "r1", "r1-11"); again.SinceNS != f.SinceNS || again.Verdict != msgs.Held {
+		t.Errorf("held since %d, before since %d", again.SinceNS, f.SinceNS)
 	}
 	worst := 0.0
 	for _, robot := range []string{"r2", "r3"} {

@@ -16,12 +16,24 @@ type weighed struct {
 	held   []bool    // per usable tie
 	island []int     // per unit
 	start  []lie.SE3 // per unit; nil with HoldAll
+
+	believed []bool    // per usable tie: held before rulings
+	alone    []opinion // per usable tie: of those ruled held
 }
 
 // weigh decides which ties to believe.
 func (c *Coordinator) weigh(n *network) weighed {
+	before := make([]Finding, len(n.ties))
+	for i := range n.ties {
+		before[i] = n.ties[i].finding
+	}
 	w := c.believe(n)
 	c.rule(n, &w)
+	for i := range n.ties {
+		if t := &n.ties[i]; t.ruled != nil && t.finding.Verdict == before[i].Verdict { // whatever the evidence made of it in between
+			t.finding.SinceNS = before[i].SinceNS
+		}
+	}
 	return w
 }
 
@@ -53,7 +65,7 @@ func (c *Coordinator) believe(n *network) weighed {
 		touched[u] = map[int]int{}
 	}
 	for i := range n.ties {
-		if t := &n.ties[i]; t.regular && t.ruled == nil {
+		if t := &n.ties[i]; t.regular && !t.ruledOut() {
 			touched[t.from][t.fromNode], touched[t.to][t.toNode] = 0, 0
 		}
 	}
@@ -65,7 +77,7 @@ func (c *Coordinator) believe(n *network) weighed {
 	for i := range n.ties {
 		t := &n.ties[i]
 		switch {
-		case t.ruled != nil:
+		case t.ruledOut():
 		case !t.regular:
 			t.judge(c.now, msgs.Open, "measures too little of a pose to be weighed", msgs.Evidence{})
 		case n.loose(i):

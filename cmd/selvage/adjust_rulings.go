@@ -98,23 +98,34 @@ func (a *adjustment) misclosure(t *survey.Tie) (float64, bool) {
 	return b.Chi2(0, &g.Values), true
 }
 
-// showRulings prints a line for each tie that was ruled on.
+// showRulings prints a line for each tie that was ruled on, and one for the ties of a robot or session.
 func (a *adjustment) showRulings(con *console) {
 	const most = 12
 	all := a.report.Rulings
 	if n := a.report.RuledOut; n > 0 {
 		fmt.Fprintf(con.out, "%s of marks %s left out, by robots or sessions that are ruled refused.\n", counted(n, "sighting"), oneOr(n, "is", "are"))
 	}
-	for i, r := range all {
-		if i == most {
-			fmt.Fprintf(con.out, "%d more ties are ruled on: results/verdicts.csv lists them.\n", len(all)-most)
+	single := 0
+	count := map[*survey.Ruling]int{} // ties that one on a robot or session is on
+	for _, r := range a.rulings {
+		if r != nil {
+			count[r]++
+		}
+	}
+	for i := range a.survey.Rulings {
+		if r := &a.survey.Rulings[i]; r.Target != survey.OnTie && count[r] > 0 {
+			fmt.Fprintf(con.out, "%s of %s %s ruled %s by %s: %s.\n", counted(count[r], "tie"), r.On(), oneOr(count[r], "is", "are"), r.Verdict, r.By, r.Note)
+		}
+	}
+	for _, r := range all {
+		if r.On != "tie "+r.Tie {
+			continue
+		}
+		if single++; single > most {
+			fmt.Fprintln(con.out, "More ties are ruled on: results/verdicts.csv lists them.")
 			return
 		}
-		on := ""
-		if r.On != "tie "+r.Tie {
-			on = " (" + r.On + ")"
-		}
-		fmt.Fprintf(con.out, "Tie %s is ruled %s by %s%s: %s.", r.Tie, r.Verdict, r.By, on, r.Note)
+		fmt.Fprintf(con.out, "Tie %s is ruled %s by %s: %s.", r.Tie, r.Verdict, r.By, r.Note)
 		if r.Misclosure != nil {
 			fmt.Fprintf(con.out, " Its misclosure is %.1f over its own sigmas.", *r.Misclosure)
 		}

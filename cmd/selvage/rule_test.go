@@ -55,7 +55,7 @@ func TestRule(t *testing.T) {
 	}
 	text := selvage(t, dir, "adjust", "square", "-o", "other")
 	text.want(t, 0)
-	for _, want := range []string{"Tie cut00001 is ruled refused by second (robot p01): wheel slip. Its misclosure is ", "Tie cut00002 is ruled held by lead: by tape, twice. Its misclosure is "} {
+	for _, want := range []string{"1 tie of robot p01 is ruled refused by second: wheel slip.\n", "Tie cut00002 is ruled held by lead: by tape, twice. Its misclosure is "} {
 		if !strings.Contains(text.stdout, want) {
 			t.Errorf("%q is missing in\n%s", want, text.stdout)
 		}
@@ -76,13 +76,13 @@ func TestRule(t *testing.T) {
 		again.want(t, rehearsed.code)
 	}
 	for _, row := range columns(t, dir, "rehearsed/results/verdicts.csv") {
-		want := map[string]string{"cut00001": "refused ruled refused by second (robot p01): wheel slip; it ", "cut00002": "held ruled held by lead: by tape, twice; it "}[row["tie"]]
+		want := map[string]string{"cut00001": "refused ruled refused by second (robot p01): wheel slip; it ", "cut00002": "held ruled held by lead: by tape, twice; misclosure "}[row["tie"]]
 		if got := row["verdict"] + " " + row["reason"]; !strings.HasPrefix(got, want) {
 			t.Errorf("the rehearsal says %q, want %q", got, want)
 		}
 	}
 	page := read(t, dir, "rehearsed/results/report.html")
-	for _, want := range []string{"Tie cut00002: ruled held by lead: by tape, twice; it ", "1 tie of robot p01 is ruled refused by second: wheel slip; "} {
+	for _, want := range []string{"Tie cut00002: ruled held by lead: by tape, twice; misclosure ", "1 tie of robot p01 is ruled refused by second: wheel slip; "} {
 		if !strings.Contains(page, want) {
 			t.Errorf("the report lacks %q", want)
 		}
