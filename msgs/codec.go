@@ -81,15 +81,22 @@ func (x *Tie) Marshal() ([]byte, error) {
 	if err := x.check(); err != nil {
 		return nil, ofKind(KindTie, err)
 	}
-	info, err := appendFactor(nil, x.Info, x.Dim)
-	if err != nil {
-		return nil, ofKind(KindTie, in(err, "info"))
-	}
-	p := &x.Pose
-	return seal(KindTie, &pb.Tie{
+	m := &pb.Tie{
 		Major: Major, Minor: Minor, Header: packHeader(&x.Header), Id: x.ID, From: packKey(&x.From), To: packKey(&x.To),
-		Dim: uint32(x.Dim), Pose: append(p.T[:len(p.T):len(p.T)], p.Q[:]...), Info: info, Source: x.Source, StampNs: x.StampNS,
-	}, x.Header.Signature, MaxSmall)
+		Dim: uint32(x.Dim), Source: x.Source, StampNs: x.StampNS,
+	}
+	var err error
+	if x.Sight != nil {
+		m.Sight, err = packSight(x.Sight)
+	} else {
+		m.Pose = wholePose(&x.Pose)
+		m.Info, err = appendFactor(nil, x.Info, x.Dim)
+		err = in(err, "info")
+	}
+	if err != nil {
+		return nil, ofKind(KindTie, err)
+	}
+	return seal(KindTie, m, x.Header.Signature, MaxSmall)
 }
 
 // DecodeTie reads a tie. Its pose comes back bit for bit, its information to rounding.
@@ -106,6 +113,11 @@ func DecodeTie(b []byte) (*Tie, error) {
 	case err != nil:
 	case checkDim(x.Dim) != nil:
 		err = checkDim(x.Dim)
+	case m.Sight != nil && len(m.Pose)+len(m.Info) > 0:
+		err = wrong("sight", "a pose beside it", "one of the two")
+	case m.Sight != nil:
+		x.Sight, err = takeSight(m.Sight)
+		err = in(err, "sight")
 	case len(m.Pose) != 7:
 		err = wrong("pose", len(m.Pose), "7 numbers")
 	case len(m.Info) != triangle(x.Dim):
@@ -172,7 +184,7 @@ func (x *Want) Marshal() ([]byte, error) {
 	}
 	m := &pb.Want{
 		Major: Major, Minor: Minor, Fleet: x.Fleet, Robot: x.Robot, Epoch: packEpoch(x.Epoch), Term: x.Term,
-		Safe: x.Safe, Journal: x.Journal[:], PeriodMs: x.PeriodMS,
+		Safe: x.Safe, Journal: x.Journal[:], PeriodMs: x.PeriodMS, Marks: x.Marks,
 	}
 	var lastID, lastStamp int64
 	for i := range x.Keys {
@@ -234,6 +246,9 @@ func (x *Want) takeLists(m *pb.Want) error {
 			k.ID = id
 		}
 		x.Keys[i] = k
+	}
+	if len(m.Marks) > 0 {
+		x.Marks = m.Marks
 	}
 	if len(m.GapSteps)%2 != 0 {
 		return wrong("gaps", len(m.GapSteps), "an even number of steps")

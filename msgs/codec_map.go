@@ -62,9 +62,19 @@ func packPart(p *Part, dim int) (*pb.Part, error) {
 			m.ResolvedOffsets = append(m.ResolvedOffsets, r-j.StampNS)
 		}
 	}
+	m.Points, m.Places = packPoints(p.Points, dim)
+	m.Seen = p.Seen
+	p.packLevels(m)
+	beside := false
+	for i := range p.Cliques {
+		beside = beside || len(p.Cliques[i].Points) > 0
+	}
 	for i := range p.Cliques {
 		c := &p.Cliques[i]
 		m.Cliques = appendNodes(m.Cliques, c.Nodes)
+		if beside {
+			m.CliquePoints = appendNodes(m.CliquePoints, c.Points)
+		}
 		var err error
 		if m.Blocks, err = appendFactor32(m.Blocks, c.H, len(c.B)); err != nil {
 			return nil, at(in(err, "h"), "cliques", i)
@@ -118,18 +128,40 @@ func takePart(p *Part, m *pb.Part, dim int) error {
 		j := &p.Junctions[node]
 		j.Resolved = append(j.Resolved, j.StampNS+m.ResolvedOffsets[i])
 	}
+	var err error
+	if p.Points, err = takePoints(m.Points, m.Places, dim); err != nil {
+		return err
+	}
+	if len(m.Seen) > 0 {
+		p.Seen = m.Seen
+	}
+	if err := p.takeLevels(m); err != nil {
+		return err
+	}
 	return takeCliques(p, m, dim)
 }
 
 // takeCliques looks at every count before it expands the first matrix.
 func takeCliques(p *Part, m *pb.Part, dim int) error {
-	lists, err := splitNodes(m.Cliques, 2)
+	lists, err := splitNodes(m.Cliques, 1)
 	if err != nil {
 		return in(err, "cliques")
 	}
+	points := make([][]int, len(lists))
+	if len(m.CliquePoints) > 0 {
+		if points, err = splitNodes(m.CliquePoints, 0); err != nil {
+			return in(err, "clique_points")
+		}
+		if len(points) != len(lists) {
+			return wrong("clique_points", len(points), "%d lists, one for each clique", len(lists))
+		}
+	}
 	numbers, room := 0, 0
-	for _, l := range lists {
-		d := dim * (len(l) - 1)
+	for i, l := range lists {
+		if len(l) < 2 && len(points[i]) == 0 {
+			return in(wrong("nodes", len(l), "2 to %d of them", MaxCliqueNodes), "cliques")
+		}
+		d := dim*(len(l)-1) + 3*len(points[i])
 		numbers += triangle(d) + d
 		room += d*d + d
 	}
@@ -147,8 +179,8 @@ func takeCliques(p *Part, m *pb.Part, dim int) error {
 		return s
 	}
 	for i, l := range lists {
-		d := dim * (len(l) - 1)
-		c := Clique{Nodes: l, H: take(d * d), B: take(d)}
+		d := dim*(len(l)-1) + 3*len(points[i])
+		c := Clique{Nodes: l, Points: points[i], H: take(d * d), B: take(d)}
 		expand(c.H, from[:triangle(d)], d)
 		from = from[triangle(d):]
 		for k := range c.B {
@@ -188,8 +220,11 @@ func splitNodes(flat []uint32, least int) ([][]int, error) {
 	space := make([]int, len(flat)-lists)
 	for at := 0; at < len(flat); {
 		n := int(flat[at])
-		l := space[:n:n]
-		space = space[n:]
+		var l []int
+		if n > 0 {
+			l = space[:n:n]
+			space = space[n:]
+		}
 		for i := range l {
 			l[i] = int(flat[at+1+i])
 		}
@@ -251,6 +286,7 @@ func packCorrectedPart(p *CorrectedPart, dim int) (*pb.CorrectedPart, error) {
 		}
 		m.Poses = appendPose(m.Poses, &p.Poses[i], dim)
 	}
+	m.Points, m.Places = packPoints(p.Points, dim)
 	for i, nodes := range p.CovNodes {
 		m.Cliques = appendNodes(m.Cliques, nodes)
 		var err error
@@ -291,6 +327,9 @@ func takeCorrectedPart(p *CorrectedPart, m *pb.CorrectedPart, dim int) error {
 		if p.Poses[i], err = takePose(m.Poses[i*dim:], dim); err != nil {
 			return at(err, "poses", i)
 		}
+	}
+	if p.Points, err = takePoints(m.Points, m.Places, dim); err != nil {
+		return err
 	}
 	if p.CovNodes, err = splitNodes(m.Cliques, 1); err != nil {
 		return in(err, "cov_nodes")

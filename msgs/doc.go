@@ -35,9 +35,11 @@
 //     construction.
 //   - Other matrices are the float32 rows of L with L L' = M, and so have no negative eigenvalue whatever was sent. L comes
 //     from the Cholesky factor of the unit-diagonal scaling of M, each row multiplied by its scale.
+//   - A sight is as exact as the pose of a tie; the place of a point is two or three float64. In a matrix a point has three rows in
+//     the plane too, the third with a pivot of its own.
 //   - Ids and stamps are differences to the one before them.
 //
-// A clique of k junctions with d = Dim (k-1) costs 4 (d(d+1)/2 + d) + k + 1 bytes, up to k more when a part has over 128
+// A clique of k junctions and m points with d = Dim (k-1) + 3 m costs 4 (d(d+1)/2 + d) + k + 1 bytes, m + 1 more where points are, up to k more when a part has over 128
 // junctions. A junction costs 8 Dim + 4 bytes and two varints, of which the step of the stamp takes about 5.
 //
 // # Versions

@@ -64,6 +64,18 @@ func examples() []message {
 		Header: unsigned, Version: 1, Dim: 6,
 		Parts: []Part{{Junctions: []Junction{{ID: 1, Pose: high}, {ID: 2, Pose: turned}}, Cliques: []Clique{{Nodes: []int{1, 0}, H: diagonal(1, 4, 9, 16, 25, 36), B: make([]float64, 6)}}}},
 	}
+	marks := Summary{
+		Header: unsigned, Version: 2, Dim: 6,
+		Parts: []Part{{
+			Session: 1, Junctions: []Junction{{ID: 1, Pose: high}, {ID: 2, Pose: turned}},
+			Points: []Point{{Mark: "m1", At: [3]float64{1, 2, 3}}, {Mark: "m3", At: [3]float64{-4, 5, 0.5}}}, Seen: []string{"m0", "m2"},
+			Levels: []Level{{Node: 1, Up: [3]float64{0, 0.6, 0.8}, Sigma: 0.01}},
+			Cliques: []Clique{
+				{Nodes: []int{1, 0}, H: diagonal(1, 4, 9, 16, 25, 36), B: make([]float64, 6)},
+				{Nodes: []int{0}, Points: []int{1, 0}, H: diagonal(1, 4, 9, 16, 25, 36), B: []float64{0, 1, 0, -2, 0, 0.5}},
+			},
+		}},
+	}
 	return []message{
 		{"heartbeat", &Heartbeat{Header: header, NewestNumber: 301, Applied: epoch, SummaryVersion: 9, HighestIncarnation: 1 << 40, State: "sending again", StampNS: -5}, decoder(DecodeHeartbeat)},
 		{"tie", &Tie{
@@ -73,13 +85,21 @@ func examples() []message {
 		{"tie-space", &Tie{
 			Header: unsigned, ID: "t1", From: KeyRef{Robot: "r2"}, To: KeyRef{Robot: "r1", ID: 1}, Pose: high, Info: diagonal(1, 4, 9, 16, 25, 36), Dim: 6,
 		}, decoder(DecodeTie)},
+		{"tie-sight", &Tie{
+			Header: unsigned, ID: "s1", From: KeyRef{Robot: "r1", ByStamp: true, StampNS: 5}, To: KeyRef{Robot: "r2", ByStamp: true, StampNS: 5}, Dim: 3,
+			Sight: &Sight{
+				Sense: RangeBearing, Value: [3]float64{2.5, -0.75}, Info: [9]float64{4, 2, 0, 2, 5, 0, 0, 0, 0},
+				Mount: Pose{T: [3]float64{0.1, 0, 0.4}, Q: [4]float64{0, 0, 0, 1}}, Spot: [3]float64{0, 0.25, 0},
+			},
+		}, decoder(DecodeTie)},
 		{"summary", &summary, decoder(DecodeSummary)},
+		{"summary-marks", &marks, decoder(DecodeSummary)},
 		{"summary-space", &space, decoder(DecodeSummary)},
 		{"summary-unchanged", &Summary{Header: unsigned, Version: 9, Answers: epoch, Unchanged: true, Dim: 6}, decoder(DecodeSummary)},
 		{"want", &Want{
 			Fleet: "site-3", Robot: "r1", Epoch: epoch, Term: 4, Safe: 250, Journal: header.Journal, PeriodMS: 2000, Signature: header.Signature,
 			Keys: []KeyRef{{Robot: "r1", Session: 2, ID: 77}, {Robot: "r1", ByStamp: true, StampNS: 1_700_000_000_000_000_000}, {Robot: "r1", Session: 1, ID: -1 << 63}},
-			Gaps: [][2]uint64{{252, 252}, {254, 1<<64 - 1}},
+			Gaps: [][2]uint64{{252, 252}, {254, 1<<64 - 1}}, Marks: []string{"gate-1", "gate-2"},
 		}, decoder(DecodeWant)},
 		{"correction", &Correction{
 			Fleet: "site-3", Robot: "r1", Epoch: epoch, Term: 4, SummaryVersion: 9, Dim: 3, Signature: header.Signature,
@@ -92,7 +112,9 @@ func examples() []message {
 			},
 		}, decoder(DecodeCorrection)},
 		{"correction-space", &Correction{
-			Fleet: "site-3", Robot: "r1", Dim: 6, Parts: []CorrectedPart{{IDs: []int64{4}, Poses: []Pose{high}, DatumFromSession: high}},
+			Fleet: "site-3", Robot: "r1", Dim: 6, Parts: []CorrectedPart{{
+				IDs: []int64{4}, Poses: []Pose{high}, DatumFromSession: high, Points: []Point{{Mark: "gate-1", At: [3]float64{1, -2, 0.5}}},
+			}},
 		}, decoder(DecodeCorrection)},
 		{"verdict", &Verdict{
 			Fleet: "site-3", Robot: "r1", Tie: "r1.01020304.300", Verdict: Refused, Reason: "contradicts three ties at two places", Epoch: epoch, Term: 4, StampNS: 8,

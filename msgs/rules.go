@@ -15,7 +15,8 @@ const (
 	MaxParts       = 1 << 10 // sessions in a summary or correction
 	MaxJunctions   = 1 << 16 // junctions in a part
 	MaxCliques     = 1 << 17 // cliques in a part
-	MaxCliqueNodes = 128     // nodes in a clique
+	MaxCliqueNodes = 128     // nodes in a clique, and points
+	MaxPoints      = 1 << 14 // points in a part; marks that it has seen, and that a want asks for
 	MaxResolved    = 1 << 16 // resolved stamps in a part
 	MaxKeys        = 1 << 16 // keyframes in a want
 	MaxGaps        = 1 << 14 // gaps in a want
@@ -189,16 +190,22 @@ func (x *Tie) check() error {
 	if err := checkDim(x.Dim); err != nil {
 		return err
 	}
+	if err := checkText("source", x.Source, MaxID); err != nil {
+		return err
+	}
+	if x.Sight != nil {
+		if x.Pose != (Pose{}) || len(x.Info) > 0 {
+			return wrong("sight", "a pose beside it", "one of the two")
+		}
+		return in(x.Sight.check(x.Dim), "sight")
+	}
 	if err := x.Pose.check(x.Dim); err != nil {
 		return err
 	}
 	if len(x.Info) != x.Dim*x.Dim {
 		return wrong("info", len(x.Info), "%d numbers", x.Dim*x.Dim)
 	}
-	if err := checkMatrix("info", x.Info); err != nil {
-		return err
-	}
-	return checkText("source", x.Source, MaxID)
+	return checkMatrix("info", x.Info)
 }
 
 func (x *Verdict) check() error {
@@ -251,6 +258,9 @@ func (x *Want) check() error {
 		if x.Keys[i].Robot != x.Robot {
 			return at(wrong("robot", clip(x.Keys[i].Robot), "%s, whom the want is for", x.Robot), "keys", i)
 		}
+	}
+	if err := checkMarks("marks", x.Marks); err != nil {
+		return err
 	}
 	if err := checkCount("gaps", len(x.Gaps), 0, MaxGaps); err != nil {
 		return err

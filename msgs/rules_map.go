@@ -56,20 +56,30 @@ func (p *Part) check(dim int) error {
 	if err := checkCount("resolved", resolved, 0, MaxResolved); err != nil {
 		return err
 	}
-	seen := make([]int, len(p.Junctions)) // 1 + the last clique that named the junction
+	if err := p.checkSights(dim); err != nil {
+		return err
+	}
+	seen, beside := make([]int, len(p.Junctions)), make([]int, len(p.Points)) // 1 + the last clique that named the junction, the point
 	for i := range p.Cliques {
-		if err := p.Cliques[i].check(dim, i+1, seen); err != nil {
+		if err := p.Cliques[i].check(dim, i+1, seen, beside); err != nil {
 			return at(err, "cliques", i)
 		}
 	}
 	return nil
 }
 
-func (c *Clique) check(dim, mark int, seen []int) error {
-	if err := checkNodes(c.Nodes, 2, mark, seen); err != nil {
+func (c *Clique) check(dim, mark int, seen, beside []int) error {
+	least := 2
+	if len(c.Points) > 0 {
+		least = 1
+	}
+	if err := checkNodes(c.Nodes, least, mark, seen); err != nil {
 		return err
 	}
-	d := dim * (len(c.Nodes) - 1)
+	if err := checkNodes(c.Points, 0, mark, beside); err != nil {
+		return in(err, "points")
+	}
+	d := dim*(len(c.Nodes)-1) + 3*len(c.Points)
 	if len(c.H) != d*d {
 		return wrong("h", len(c.H), "%d numbers", d*d)
 	}
@@ -142,6 +152,9 @@ func (p *CorrectedPart) check(dim int) error {
 		if err := p.Poses[i].check(dim); err != nil {
 			return at(err, "poses", i)
 		}
+	}
+	if err := checkPoints(p.Points, dim); err != nil {
+		return err
 	}
 	if p.placed() {
 		if err := p.DatumFromSession.check(dim); err != nil {

@@ -38,16 +38,39 @@ type KeyRef struct {
 	StampNS int64 // when ByStamp is true
 }
 
-// Tie is one measurement between two robots, or between two sessions: the pose of To in the frame of From.
+// Tie is one measurement between two robots, or between two sessions: the pose of To in the frame of From, or, as a Sight, less
+// than that.
 type Tie struct {
 	Header   Header
 	ID       string // names the tie for good: 1 to 128 visible ASCII characters
 	From, To KeyRef // one of them belongs to the robot of the header
 	Pose     Pose
 	Info     []float64 // Dim x Dim row-major, information in 1/m^2, 1/(m rad), 1/rad^2; positive semidefinite
+	Sight    *Sight    // instead of Pose and Info, which are then empty
 	Dim      int       // 3 in the plane (x, y, rz), 6 in space (x, y, z, rx, ry, rz)
 	Source   string    // what measured it
 	StampNS  int64
+}
+
+// Sense says what a sight measures.
+type Sense uint8
+
+// The senses. A sight has three components: x, y, z in the frame of the sensor, or range, bearing and elevation. What its sense
+// does not measure is zero, and so are z and elevation in the plane.
+const (
+	Position Sense = iota + 1
+	RangeBearing
+	Range
+	Bearing
+)
+
+// Sight is where, or in what direction, a sensor on From has seen a spot on To.
+type Sight struct {
+	Sense Sense
+	Value [3]float64 // metres, radians; the bearing from x forward towards y, the elevation from the x-y plane towards z
+	Info  [9]float64 // 3 x 3 row-major, positive semidefinite; rows and columns of what is not measured are zero
+	Mount Pose       // of the sensor, in the frame of From
+	Spot  [3]float64 // in the frame of To
 }
 
 // Junction is a keyframe that stays in a summary.
@@ -59,18 +82,36 @@ type Junction struct {
 	Resolved []int64 // stamps of a Want that this junction answers
 }
 
-// Clique is a condensed factor over junctions: cost 1/2 e'He + B'e, where e stacks Log of the change of every other node
-// seen from the first. Its information contains no frame.
+// Point is a mark that stays in a summary.
+type Point struct {
+	Mark string     // 1 to 128 visible ASCII characters
+	At   [3]float64 // in the frame of the session, metres; the third is zero in the plane
+}
+
+// Level is what a robot knows of the vertical: up, as a unit vector in the frame of a junction.
+type Level struct {
+	Node  int // index into Part.Junctions
+	Up    [3]float64
+	Sigma float64 // of its direction, radians
+}
+
+// Clique is a condensed factor over junctions and points: cost 1/2 e'He + B'e, where e stacks, of every node but the first, Log of
+// the change of its pose seen from the first, then, of every point, the change of its place seen from the first node. Its
+// information contains no frame.
 type Clique struct {
-	Nodes []int     // indices into Part.Junctions, distinct, the first is the reference
-	H     []float64 // d x d row-major, d = Dim*(len(Nodes)-1), positive semidefinite; float32 factor on the wire
-	B     []float64 // d; float32 on the wire
+	Nodes  []int     // indices into Part.Junctions, distinct, the first is the reference; two or more, or one beside points
+	Points []int     // indices into Part.Points, distinct
+	H      []float64 // d x d row-major, d = Dim*(len(Nodes)-1)+3*len(Points), positive semidefinite; float32 factor on the wire
+	B      []float64 // d; float32 on the wire
 }
 
 // Part is the summary of one session.
 type Part struct {
 	Session   uint32
 	Junctions []Junction // ids ascending
+	Points    []Point    // marks ascending
+	Seen      []string   // marks that the session has seen and that are no points, ascending
+	Levels    []Level    // nodes ascending
 	Cliques   []Clique
 	Cost      float64 // 1/2 r'Wr of the whole session at the poses of this part
 	Keyframes int     // how many keyframes the session has
@@ -92,6 +133,7 @@ type Want struct {
 	Epoch        Epoch
 	Term         uint64
 	Keys         []KeyRef    // keyframes that must be junctions; all of this robot
+	Marks        []string    // marks that must be points wherever they were seen, ascending
 	Gaps         [][2]uint64 // record numbers missing at the base, first and last of each gap, ascending
 	Safe         uint64      // every record up to this one is safe at the base
 	Journal      JournalID   // the journal that Gaps and Safe count in
@@ -105,6 +147,7 @@ type CorrectedPart struct {
 	Joined           bool // tied to the datum the base shows
 	IDs              []int64
 	Poses            []Pose      // one for each id, in the datum of Island
+	Points           []Point     // of the summary, where they lie in that datum; marks ascending
 	DatumFromSession Pose        // the zero Pose when the session is not placed; IDs is empty then
 	Island           string      // names the sessions that share a datum
 	CovNodes         [][]int     // cliques: indices into IDs

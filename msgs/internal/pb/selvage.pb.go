@@ -234,6 +234,83 @@ func (x *KeyRef) GetStampNs() int64 {
 	return 0
 }
 
+// Numbers in three: x, y, z, or range, bearing, elevation.
+type Sight struct {
+	state         protoimpl.MessageState `protogen:"open.v1"`
+	Sense         uint32                 `protobuf:"varint,1,opt,name=sense,proto3" json:"sense,omitempty"`
+	Value         []float64              `protobuf:"fixed64,2,rep,packed,name=value,proto3" json:"value,omitempty"`
+	Info          []float64              `protobuf:"fixed64,3,rep,packed,name=info,proto3" json:"info,omitempty"`   // factor of the information, lower triangle by rows
+	Mount         []float64              `protobuf:"fixed64,4,rep,packed,name=mount,proto3" json:"mount,omitempty"` // x y z, qx qy qz qw
+	Spot          []float64              `protobuf:"fixed64,5,rep,packed,name=spot,proto3" json:"spot,omitempty"`   // x y z, or none for 0 0 0
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *Sight) Reset() {
+	*x = Sight{}
+	mi := &file_selvage_proto_msgTypes[3]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *Sight) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*Sight) ProtoMessage() {}
+
+func (x *Sight) ProtoReflect() protoreflect.Message {
+	mi := &file_selvage_proto_msgTypes[3]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use Sight.ProtoReflect.Descriptor instead.
+func (*Sight) Descriptor() ([]byte, []int) {
+	return file_selvage_proto_rawDescGZIP(), []int{3}
+}
+
+func (x *Sight) GetSense() uint32 {
+	if x != nil {
+		return x.Sense
+	}
+	return 0
+}
+
+func (x *Sight) GetValue() []float64 {
+	if x != nil {
+		return x.Value
+	}
+	return nil
+}
+
+func (x *Sight) GetInfo() []float64 {
+	if x != nil {
+		return x.Info
+	}
+	return nil
+}
+
+func (x *Sight) GetMount() []float64 {
+	if x != nil {
+		return x.Mount
+	}
+	return nil
+}
+
+func (x *Sight) GetSpot() []float64 {
+	if x != nil {
+		return x.Spot
+	}
+	return nil
+}
+
 type Heartbeat struct {
 	state              protoimpl.MessageState `protogen:"open.v1"`
 	Major              uint32                 `protobuf:"varint,1,opt,name=major,proto3" json:"major,omitempty"`
@@ -252,7 +329,7 @@ type Heartbeat struct {
 
 func (x *Heartbeat) Reset() {
 	*x = Heartbeat{}
-	mi := &file_selvage_proto_msgTypes[3]
+	mi := &file_selvage_proto_msgTypes[4]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -264,7 +341,7 @@ func (x *Heartbeat) String() string {
 func (*Heartbeat) ProtoMessage() {}
 
 func (x *Heartbeat) ProtoReflect() protoreflect.Message {
-	mi := &file_selvage_proto_msgTypes[3]
+	mi := &file_selvage_proto_msgTypes[4]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -277,7 +354,7 @@ func (x *Heartbeat) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Heartbeat.ProtoReflect.Descriptor instead.
 func (*Heartbeat) Descriptor() ([]byte, []int) {
-	return file_selvage_proto_rawDescGZIP(), []int{3}
+	return file_selvage_proto_rawDescGZIP(), []int{4}
 }
 
 func (x *Heartbeat) GetMajor() uint32 {
@@ -363,6 +440,7 @@ type Tie struct {
 	Info          []float64              `protobuf:"fixed64,9,rep,packed,name=info,proto3" json:"info,omitempty"` // factor of the information, lower triangle by rows
 	Source        string                 `protobuf:"bytes,10,opt,name=source,proto3" json:"source,omitempty"`
 	StampNs       int64                  `protobuf:"zigzag64,11,opt,name=stamp_ns,json=stampNs,proto3" json:"stamp_ns,omitempty"`
+	Sight         *Sight                 `protobuf:"bytes,12,opt,name=sight,proto3" json:"sight,omitempty"` // instead of pose and info
 	Signature     []byte                 `protobuf:"bytes,100,opt,name=signature,proto3" json:"signature,omitempty"`
 	unknownFields protoimpl.UnknownFields
 	sizeCache     protoimpl.SizeCache
@@ -370,7 +448,7 @@ type Tie struct {
 
 func (x *Tie) Reset() {
 	*x = Tie{}
-	mi := &file_selvage_proto_msgTypes[4]
+	mi := &file_selvage_proto_msgTypes[5]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -382,7 +460,7 @@ func (x *Tie) String() string {
 func (*Tie) ProtoMessage() {}
 
 func (x *Tie) ProtoReflect() protoreflect.Message {
-	mi := &file_selvage_proto_msgTypes[4]
+	mi := &file_selvage_proto_msgTypes[5]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -395,7 +473,7 @@ func (x *Tie) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Tie.ProtoReflect.Descriptor instead.
 func (*Tie) Descriptor() ([]byte, []int) {
-	return file_selvage_proto_rawDescGZIP(), []int{4}
+	return file_selvage_proto_rawDescGZIP(), []int{5}
 }
 
 func (x *Tie) GetMajor() uint32 {
@@ -475,6 +553,13 @@ func (x *Tie) GetStampNs() int64 {
 	return 0
 }
 
+func (x *Tie) GetSight() *Sight {
+	if x != nil {
+		return x.Sight
+	}
+	return nil
+}
+
 func (x *Tie) GetSignature() []byte {
 	if x != nil {
 		return x.Signature
@@ -499,7 +584,7 @@ type Summary struct {
 
 func (x *Summary) Reset() {
 	*x = Summary{}
-	mi := &file_selvage_proto_msgTypes[5]
+	mi := &file_selvage_proto_msgTypes[6]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -511,7 +596,7 @@ func (x *Summary) String() string {
 func (*Summary) ProtoMessage() {}
 
 func (x *Summary) ProtoReflect() protoreflect.Message {
-	mi := &file_selvage_proto_msgTypes[5]
+	mi := &file_selvage_proto_msgTypes[6]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -524,7 +609,7 @@ func (x *Summary) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Summary.ProtoReflect.Descriptor instead.
 func (*Summary) Descriptor() ([]byte, []int) {
-	return file_selvage_proto_rawDescGZIP(), []int{5}
+	return file_selvage_proto_rawDescGZIP(), []int{6}
 }
 
 func (x *Summary) GetMajor() uint32 {
@@ -604,13 +689,19 @@ type Part struct {
 	ResolvedOffsets []int64                `protobuf:"zigzag64,10,rep,packed,name=resolved_offsets,json=resolvedOffsets,proto3" json:"resolved_offsets,omitempty"` // resolved stamp minus the junction's stamp
 	Cliques         []uint32               `protobuf:"varint,11,rep,packed,name=cliques,proto3" json:"cliques,omitempty"`                                          // count, then that many junction indices, again and again
 	Blocks          []float32              `protobuf:"fixed32,12,rep,packed,name=blocks,proto3" json:"blocks,omitempty"`                                           // for each clique: factor of H, lower triangle by rows, then B
+	Points          []string               `protobuf:"bytes,13,rep,name=points,proto3" json:"points,omitempty"`
+	Places          []float64              `protobuf:"fixed64,14,rep,packed,name=places,proto3" json:"places,omitempty"` // two numbers a point in the plane, three in space
+	Seen            []string               `protobuf:"bytes,15,rep,name=seen,proto3" json:"seen,omitempty"`
+	CliquePoints    []uint32               `protobuf:"varint,16,rep,packed,name=clique_points,json=cliquePoints,proto3" json:"clique_points,omitempty"` // as cliques, of points; none when no clique has any
+	LevelNodes      []uint32               `protobuf:"varint,17,rep,packed,name=level_nodes,json=levelNodes,proto3" json:"level_nodes,omitempty"`
+	Levels          []float64              `protobuf:"fixed64,18,rep,packed,name=levels,proto3" json:"levels,omitempty"` // up, in three, and sigma
 	unknownFields   protoimpl.UnknownFields
 	sizeCache       protoimpl.SizeCache
 }
 
 func (x *Part) Reset() {
 	*x = Part{}
-	mi := &file_selvage_proto_msgTypes[6]
+	mi := &file_selvage_proto_msgTypes[7]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -622,7 +713,7 @@ func (x *Part) String() string {
 func (*Part) ProtoMessage() {}
 
 func (x *Part) ProtoReflect() protoreflect.Message {
-	mi := &file_selvage_proto_msgTypes[6]
+	mi := &file_selvage_proto_msgTypes[7]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -635,7 +726,7 @@ func (x *Part) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Part.ProtoReflect.Descriptor instead.
 func (*Part) Descriptor() ([]byte, []int) {
-	return file_selvage_proto_rawDescGZIP(), []int{6}
+	return file_selvage_proto_rawDescGZIP(), []int{7}
 }
 
 func (x *Part) GetSession() uint32 {
@@ -722,6 +813,48 @@ func (x *Part) GetBlocks() []float32 {
 	return nil
 }
 
+func (x *Part) GetPoints() []string {
+	if x != nil {
+		return x.Points
+	}
+	return nil
+}
+
+func (x *Part) GetPlaces() []float64 {
+	if x != nil {
+		return x.Places
+	}
+	return nil
+}
+
+func (x *Part) GetSeen() []string {
+	if x != nil {
+		return x.Seen
+	}
+	return nil
+}
+
+func (x *Part) GetCliquePoints() []uint32 {
+	if x != nil {
+		return x.CliquePoints
+	}
+	return nil
+}
+
+func (x *Part) GetLevelNodes() []uint32 {
+	if x != nil {
+		return x.LevelNodes
+	}
+	return nil
+}
+
+func (x *Part) GetLevels() []float64 {
+	if x != nil {
+		return x.Levels
+	}
+	return nil
+}
+
 type SummaryChunk struct {
 	state         protoimpl.MessageState `protogen:"open.v1"`
 	Major         uint32                 `protobuf:"varint,1,opt,name=major,proto3" json:"major,omitempty"`
@@ -734,7 +867,7 @@ type SummaryChunk struct {
 
 func (x *SummaryChunk) Reset() {
 	*x = SummaryChunk{}
-	mi := &file_selvage_proto_msgTypes[7]
+	mi := &file_selvage_proto_msgTypes[8]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -746,7 +879,7 @@ func (x *SummaryChunk) String() string {
 func (*SummaryChunk) ProtoMessage() {}
 
 func (x *SummaryChunk) ProtoReflect() protoreflect.Message {
-	mi := &file_selvage_proto_msgTypes[7]
+	mi := &file_selvage_proto_msgTypes[8]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -759,7 +892,7 @@ func (x *SummaryChunk) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use SummaryChunk.ProtoReflect.Descriptor instead.
 func (*SummaryChunk) Descriptor() ([]byte, []int) {
-	return file_selvage_proto_rawDescGZIP(), []int{7}
+	return file_selvage_proto_rawDescGZIP(), []int{8}
 }
 
 func (x *SummaryChunk) GetMajor() uint32 {
@@ -805,7 +938,7 @@ type SummaryHead struct {
 
 func (x *SummaryHead) Reset() {
 	*x = SummaryHead{}
-	mi := &file_selvage_proto_msgTypes[8]
+	mi := &file_selvage_proto_msgTypes[9]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -817,7 +950,7 @@ func (x *SummaryHead) String() string {
 func (*SummaryHead) ProtoMessage() {}
 
 func (x *SummaryHead) ProtoReflect() protoreflect.Message {
-	mi := &file_selvage_proto_msgTypes[8]
+	mi := &file_selvage_proto_msgTypes[9]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -830,7 +963,7 @@ func (x *SummaryHead) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use SummaryHead.ProtoReflect.Descriptor instead.
 func (*SummaryHead) Descriptor() ([]byte, []int) {
-	return file_selvage_proto_rawDescGZIP(), []int{8}
+	return file_selvage_proto_rawDescGZIP(), []int{9}
 }
 
 func (x *SummaryHead) GetMajor() uint32 {
@@ -897,6 +1030,7 @@ type Want struct {
 	Safe          uint64                 `protobuf:"varint,11,opt,name=safe,proto3" json:"safe,omitempty"`
 	Journal       []byte                 `protobuf:"bytes,12,opt,name=journal,proto3" json:"journal,omitempty"`
 	PeriodMs      uint32                 `protobuf:"varint,13,opt,name=period_ms,json=periodMs,proto3" json:"period_ms,omitempty"`
+	Marks         []string               `protobuf:"bytes,14,rep,name=marks,proto3" json:"marks,omitempty"`
 	Signature     []byte                 `protobuf:"bytes,100,opt,name=signature,proto3" json:"signature,omitempty"`
 	unknownFields protoimpl.UnknownFields
 	sizeCache     protoimpl.SizeCache
@@ -904,7 +1038,7 @@ type Want struct {
 
 func (x *Want) Reset() {
 	*x = Want{}
-	mi := &file_selvage_proto_msgTypes[9]
+	mi := &file_selvage_proto_msgTypes[10]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -916,7 +1050,7 @@ func (x *Want) String() string {
 func (*Want) ProtoMessage() {}
 
 func (x *Want) ProtoReflect() protoreflect.Message {
-	mi := &file_selvage_proto_msgTypes[9]
+	mi := &file_selvage_proto_msgTypes[10]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -929,7 +1063,7 @@ func (x *Want) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Want.ProtoReflect.Descriptor instead.
 func (*Want) Descriptor() ([]byte, []int) {
-	return file_selvage_proto_rawDescGZIP(), []int{9}
+	return file_selvage_proto_rawDescGZIP(), []int{10}
 }
 
 func (x *Want) GetMajor() uint32 {
@@ -1023,6 +1157,13 @@ func (x *Want) GetPeriodMs() uint32 {
 	return 0
 }
 
+func (x *Want) GetMarks() []string {
+	if x != nil {
+		return x.Marks
+	}
+	return nil
+}
+
 func (x *Want) GetSignature() []byte {
 	if x != nil {
 		return x.Signature
@@ -1048,7 +1189,7 @@ type Correction struct {
 
 func (x *Correction) Reset() {
 	*x = Correction{}
-	mi := &file_selvage_proto_msgTypes[10]
+	mi := &file_selvage_proto_msgTypes[11]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1060,7 +1201,7 @@ func (x *Correction) String() string {
 func (*Correction) ProtoMessage() {}
 
 func (x *Correction) ProtoReflect() protoreflect.Message {
-	mi := &file_selvage_proto_msgTypes[10]
+	mi := &file_selvage_proto_msgTypes[11]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1073,7 +1214,7 @@ func (x *Correction) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Correction.ProtoReflect.Descriptor instead.
 func (*Correction) Descriptor() ([]byte, []int) {
-	return file_selvage_proto_rawDescGZIP(), []int{10}
+	return file_selvage_proto_rawDescGZIP(), []int{11}
 }
 
 func (x *Correction) GetMajor() uint32 {
@@ -1157,13 +1298,15 @@ type CorrectedPart struct {
 	Poses            []float64              `protobuf:"fixed64,7,rep,packed,name=poses,proto3" json:"poses,omitempty"`                          // dim numbers an id
 	Cliques          []uint32               `protobuf:"varint,8,rep,packed,name=cliques,proto3" json:"cliques,omitempty"`                       // count, then that many indices, again and again
 	CovBlocks        []float32              `protobuf:"fixed32,9,rep,packed,name=cov_blocks,json=covBlocks,proto3" json:"cov_blocks,omitempty"` // for each clique: factor of the covariance, lower triangle by rows
+	Points           []string               `protobuf:"bytes,10,rep,name=points,proto3" json:"points,omitempty"`
+	Places           []float64              `protobuf:"fixed64,11,rep,packed,name=places,proto3" json:"places,omitempty"`
 	unknownFields    protoimpl.UnknownFields
 	sizeCache        protoimpl.SizeCache
 }
 
 func (x *CorrectedPart) Reset() {
 	*x = CorrectedPart{}
-	mi := &file_selvage_proto_msgTypes[11]
+	mi := &file_selvage_proto_msgTypes[12]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1175,7 +1318,7 @@ func (x *CorrectedPart) String() string {
 func (*CorrectedPart) ProtoMessage() {}
 
 func (x *CorrectedPart) ProtoReflect() protoreflect.Message {
-	mi := &file_selvage_proto_msgTypes[11]
+	mi := &file_selvage_proto_msgTypes[12]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1188,7 +1331,7 @@ func (x *CorrectedPart) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use CorrectedPart.ProtoReflect.Descriptor instead.
 func (*CorrectedPart) Descriptor() ([]byte, []int) {
-	return file_selvage_proto_rawDescGZIP(), []int{11}
+	return file_selvage_proto_rawDescGZIP(), []int{12}
 }
 
 func (x *CorrectedPart) GetSession() uint32 {
@@ -1254,6 +1397,20 @@ func (x *CorrectedPart) GetCovBlocks() []float32 {
 	return nil
 }
 
+func (x *CorrectedPart) GetPoints() []string {
+	if x != nil {
+		return x.Points
+	}
+	return nil
+}
+
+func (x *CorrectedPart) GetPlaces() []float64 {
+	if x != nil {
+		return x.Places
+	}
+	return nil
+}
+
 type Verdict struct {
 	state         protoimpl.MessageState `protogen:"open.v1"`
 	Major         uint32                 `protobuf:"varint,1,opt,name=major,proto3" json:"major,omitempty"`
@@ -1278,7 +1435,7 @@ type Verdict struct {
 
 func (x *Verdict) Reset() {
 	*x = Verdict{}
-	mi := &file_selvage_proto_msgTypes[12]
+	mi := &file_selvage_proto_msgTypes[13]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1290,7 +1447,7 @@ func (x *Verdict) String() string {
 func (*Verdict) ProtoMessage() {}
 
 func (x *Verdict) ProtoReflect() protoreflect.Message {
-	mi := &file_selvage_proto_msgTypes[12]
+	mi := &file_selvage_proto_msgTypes[13]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1303,7 +1460,7 @@ func (x *Verdict) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Verdict.ProtoReflect.Descriptor instead.
 func (*Verdict) Descriptor() ([]byte, []int) {
-	return file_selvage_proto_rawDescGZIP(), []int{12}
+	return file_selvage_proto_rawDescGZIP(), []int{13}
 }
 
 func (x *Verdict) GetMajor() uint32 {
@@ -1433,7 +1590,7 @@ type Lease struct {
 
 func (x *Lease) Reset() {
 	*x = Lease{}
-	mi := &file_selvage_proto_msgTypes[13]
+	mi := &file_selvage_proto_msgTypes[14]
 	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 	ms.StoreMessageInfo(mi)
 }
@@ -1445,7 +1602,7 @@ func (x *Lease) String() string {
 func (*Lease) ProtoMessage() {}
 
 func (x *Lease) ProtoReflect() protoreflect.Message {
-	mi := &file_selvage_proto_msgTypes[13]
+	mi := &file_selvage_proto_msgTypes[14]
 	if x != nil {
 		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
 		if ms.LoadMessageInfo() == nil {
@@ -1458,7 +1615,7 @@ func (x *Lease) ProtoReflect() protoreflect.Message {
 
 // Deprecated: Use Lease.ProtoReflect.Descriptor instead.
 func (*Lease) Descriptor() ([]byte, []int) {
-	return file_selvage_proto_rawDescGZIP(), []int{13}
+	return file_selvage_proto_rawDescGZIP(), []int{14}
 }
 
 func (x *Lease) GetMajor() uint32 {
@@ -1530,7 +1687,13 @@ const file_selvage_proto_rawDesc = "" +
 	"\asession\x18\x02 \x01(\rR\asession\x12\x19\n" +
 	"\bby_stamp\x18\x03 \x01(\bR\abyStamp\x12\x0e\n" +
 	"\x02id\x18\x04 \x01(\x12R\x02id\x12\x19\n" +
-	"\bstamp_ns\x18\x05 \x01(\x12R\astampNs\"\xde\x02\n" +
+	"\bstamp_ns\x18\x05 \x01(\x12R\astampNs\"q\n" +
+	"\x05Sight\x12\x14\n" +
+	"\x05sense\x18\x01 \x01(\rR\x05sense\x12\x14\n" +
+	"\x05value\x18\x02 \x03(\x01R\x05value\x12\x12\n" +
+	"\x04info\x18\x03 \x03(\x01R\x04info\x12\x14\n" +
+	"\x05mount\x18\x04 \x03(\x01R\x05mount\x12\x12\n" +
+	"\x04spot\x18\x05 \x03(\x01R\x04spot\"\xde\x02\n" +
 	"\tHeartbeat\x12\x14\n" +
 	"\x05major\x18\x01 \x01(\rR\x05major\x12\x14\n" +
 	"\x05minor\x18\x02 \x01(\rR\x05minor\x12*\n" +
@@ -1541,7 +1704,7 @@ const file_selvage_proto_rawDesc = "" +
 	"\x13highest_incarnation\x18\a \x01(\x04R\x12highestIncarnation\x12\x14\n" +
 	"\x05state\x18\b \x01(\tR\x05state\x12\x19\n" +
 	"\bstamp_ns\x18\t \x01(\x12R\astampNs\x12\x1c\n" +
-	"\tsignature\x18d \x01(\fR\tsignature\"\xc4\x02\n" +
+	"\tsignature\x18d \x01(\fR\tsignature\"\xed\x02\n" +
 	"\x03Tie\x12\x14\n" +
 	"\x05major\x18\x01 \x01(\rR\x05major\x12\x14\n" +
 	"\x05minor\x18\x02 \x01(\rR\x05minor\x12*\n" +
@@ -1554,7 +1717,8 @@ const file_selvage_proto_rawDesc = "" +
 	"\x04info\x18\t \x03(\x01R\x04info\x12\x16\n" +
 	"\x06source\x18\n" +
 	" \x01(\tR\x06source\x12\x19\n" +
-	"\bstamp_ns\x18\v \x01(\x12R\astampNs\x12\x1c\n" +
+	"\bstamp_ns\x18\v \x01(\x12R\astampNs\x12'\n" +
+	"\x05sight\x18\f \x01(\v2\x11.selvage.v1.SightR\x05sight\x12\x1c\n" +
 	"\tsignature\x18d \x01(\fR\tsignature\"\x9e\x02\n" +
 	"\aSummary\x12\x14\n" +
 	"\x05major\x18\x01 \x01(\rR\x05major\x12\x14\n" +
@@ -1565,7 +1729,7 @@ const file_selvage_proto_rawDesc = "" +
 	"\tunchanged\x18\x06 \x01(\bR\tunchanged\x12\x10\n" +
 	"\x03dim\x18\a \x01(\rR\x03dim\x12&\n" +
 	"\x05parts\x18\b \x03(\v2\x10.selvage.v1.PartR\x05parts\x12\x1c\n" +
-	"\tsignature\x18d \x01(\fR\tsignature\"\xde\x02\n" +
+	"\tsignature\x18d \x01(\fR\tsignature\"\x80\x04\n" +
 	"\x04Part\x12\x18\n" +
 	"\asession\x18\x01 \x01(\rR\asession\x12\x12\n" +
 	"\x04cost\x18\x02 \x01(\x01R\x04cost\x12\x1c\n" +
@@ -1580,7 +1744,14 @@ const file_selvage_proto_rawDesc = "" +
 	"\x10resolved_offsets\x18\n" +
 	" \x03(\x12R\x0fresolvedOffsets\x12\x18\n" +
 	"\acliques\x18\v \x03(\rR\acliques\x12\x16\n" +
-	"\x06blocks\x18\f \x03(\x02R\x06blocks\"h\n" +
+	"\x06blocks\x18\f \x03(\x02R\x06blocks\x12\x16\n" +
+	"\x06points\x18\r \x03(\tR\x06points\x12\x16\n" +
+	"\x06places\x18\x0e \x03(\x01R\x06places\x12\x12\n" +
+	"\x04seen\x18\x0f \x03(\tR\x04seen\x12#\n" +
+	"\rclique_points\x18\x10 \x03(\rR\fcliquePoints\x12\x1f\n" +
+	"\vlevel_nodes\x18\x11 \x03(\rR\n" +
+	"levelNodes\x12\x16\n" +
+	"\x06levels\x18\x12 \x03(\x01R\x06levels\"h\n" +
 	"\fSummaryChunk\x12\x14\n" +
 	"\x05major\x18\x01 \x01(\rR\x05major\x12\x14\n" +
 	"\x05minor\x18\x02 \x01(\rR\x05minor\x12\x18\n" +
@@ -1593,7 +1764,7 @@ const file_selvage_proto_rawDesc = "" +
 	"\x04slot\x18\x04 \x01(\tR\x04slot\x12\x14\n" +
 	"\x05count\x18\x05 \x01(\rR\x05count\x12\x12\n" +
 	"\x04size\x18\x06 \x01(\x04R\x04size\x12\x16\n" +
-	"\x06sha256\x18\a \x01(\fR\x06sha256\"\x83\x03\n" +
+	"\x06sha256\x18\a \x01(\fR\x06sha256\"\x99\x03\n" +
 	"\x04Want\x12\x14\n" +
 	"\x05major\x18\x01 \x01(\rR\x05major\x12\x14\n" +
 	"\x05minor\x18\x02 \x01(\rR\x05minor\x12\x14\n" +
@@ -1609,7 +1780,8 @@ const file_selvage_proto_rawDesc = "" +
 	" \x03(\x04R\bgapSteps\x12\x12\n" +
 	"\x04safe\x18\v \x01(\x04R\x04safe\x12\x18\n" +
 	"\ajournal\x18\f \x01(\fR\ajournal\x12\x1b\n" +
-	"\tperiod_ms\x18\r \x01(\rR\bperiodMs\x12\x1c\n" +
+	"\tperiod_ms\x18\r \x01(\rR\bperiodMs\x12\x14\n" +
+	"\x05marks\x18\x0e \x03(\tR\x05marks\x12\x1c\n" +
 	"\tsignature\x18d \x01(\fR\tsignature\"\xab\x02\n" +
 	"\n" +
 	"Correction\x12\x14\n" +
@@ -1622,7 +1794,7 @@ const file_selvage_proto_rawDesc = "" +
 	"\x0fsummary_version\x18\a \x01(\x04R\x0esummaryVersion\x12\x10\n" +
 	"\x03dim\x18\b \x01(\rR\x03dim\x12/\n" +
 	"\x05parts\x18\t \x03(\v2\x19.selvage.v1.CorrectedPartR\x05parts\x12\x1c\n" +
-	"\tsignature\x18d \x01(\fR\tsignature\"\x8c\x02\n" +
+	"\tsignature\x18d \x01(\fR\tsignature\"\xbc\x02\n" +
 	"\rCorrectedPart\x12\x18\n" +
 	"\asession\x18\x01 \x01(\rR\asession\x12\x16\n" +
 	"\x06joined\x18\x02 \x01(\bR\x06joined\x12\x16\n" +
@@ -1633,7 +1805,10 @@ const file_selvage_proto_rawDesc = "" +
 	"\x05poses\x18\a \x03(\x01R\x05poses\x12\x18\n" +
 	"\acliques\x18\b \x03(\rR\acliques\x12\x1d\n" +
 	"\n" +
-	"cov_blocks\x18\t \x03(\x02R\tcovBlocks\"\x91\x03\n" +
+	"cov_blocks\x18\t \x03(\x02R\tcovBlocks\x12\x16\n" +
+	"\x06points\x18\n" +
+	" \x03(\tR\x06points\x12\x16\n" +
+	"\x06places\x18\v \x03(\x01R\x06places\"\x91\x03\n" +
 	"\aVerdict\x12\x14\n" +
 	"\x05major\x18\x01 \x01(\rR\x05major\x12\x14\n" +
 	"\x05minor\x18\x02 \x01(\rR\x05minor\x12\x14\n" +
@@ -1673,22 +1848,23 @@ func file_selvage_proto_rawDescGZIP() []byte {
 	return file_selvage_proto_rawDescData
 }
 
-var file_selvage_proto_msgTypes = make([]protoimpl.MessageInfo, 14)
+var file_selvage_proto_msgTypes = make([]protoimpl.MessageInfo, 15)
 var file_selvage_proto_goTypes = []any{
 	(*Header)(nil),        // 0: selvage.v1.Header
 	(*Epoch)(nil),         // 1: selvage.v1.Epoch
 	(*KeyRef)(nil),        // 2: selvage.v1.KeyRef
-	(*Heartbeat)(nil),     // 3: selvage.v1.Heartbeat
-	(*Tie)(nil),           // 4: selvage.v1.Tie
-	(*Summary)(nil),       // 5: selvage.v1.Summary
-	(*Part)(nil),          // 6: selvage.v1.Part
-	(*SummaryChunk)(nil),  // 7: selvage.v1.SummaryChunk
-	(*SummaryHead)(nil),   // 8: selvage.v1.SummaryHead
-	(*Want)(nil),          // 9: selvage.v1.Want
-	(*Correction)(nil),    // 10: selvage.v1.Correction
-	(*CorrectedPart)(nil), // 11: selvage.v1.CorrectedPart
-	(*Verdict)(nil),       // 12: selvage.v1.Verdict
-	(*Lease)(nil),         // 13: selvage.v1.Lease
+	(*Sight)(nil),         // 3: selvage.v1.Sight
+	(*Heartbeat)(nil),     // 4: selvage.v1.Heartbeat
+	(*Tie)(nil),           // 5: selvage.v1.Tie
+	(*Summary)(nil),       // 6: selvage.v1.Summary
+	(*Part)(nil),          // 7: selvage.v1.Part
+	(*SummaryChunk)(nil),  // 8: selvage.v1.SummaryChunk
+	(*SummaryHead)(nil),   // 9: selvage.v1.SummaryHead
+	(*Want)(nil),          // 10: selvage.v1.Want
+	(*Correction)(nil),    // 11: selvage.v1.Correction
+	(*CorrectedPart)(nil), // 12: selvage.v1.CorrectedPart
+	(*Verdict)(nil),       // 13: selvage.v1.Verdict
+	(*Lease)(nil),         // 14: selvage.v1.Lease
 }
 var file_selvage_proto_depIdxs = []int32{
 	0,  // 0: selvage.v1.Heartbeat.header:type_name -> selvage.v1.Header
@@ -1696,18 +1872,19 @@ var file_selvage_proto_depIdxs = []int32{
 	0,  // 2: selvage.v1.Tie.header:type_name -> selvage.v1.Header
 	2,  // 3: selvage.v1.Tie.from:type_name -> selvage.v1.KeyRef
 	2,  // 4: selvage.v1.Tie.to:type_name -> selvage.v1.KeyRef
-	0,  // 5: selvage.v1.Summary.header:type_name -> selvage.v1.Header
-	1,  // 6: selvage.v1.Summary.answers:type_name -> selvage.v1.Epoch
-	6,  // 7: selvage.v1.Summary.parts:type_name -> selvage.v1.Part
-	1,  // 8: selvage.v1.Want.epoch:type_name -> selvage.v1.Epoch
-	1,  // 9: selvage.v1.Correction.epoch:type_name -> selvage.v1.Epoch
-	11, // 10: selvage.v1.Correction.parts:type_name -> selvage.v1.CorrectedPart
-	1,  // 11: selvage.v1.Verdict.epoch:type_name -> selvage.v1.Epoch
-	12, // [12:12] is the sub-list for method output_type
-	12, // [12:12] is the sub-list for method input_type
-	12, // [12:12] is the sub-list for extension type_name
-	12, // [12:12] is the sub-list for extension extendee
-	0,  // [0:12] is the sub-list for field type_name
+	3,  // 5: selvage.v1.Tie.sight:type_name -> selvage.v1.Sight
+	0,  // 6: selvage.v1.Summary.header:type_name -> selvage.v1.Header
+	1,  // 7: selvage.v1.Summary.answers:type_name -> selvage.v1.Epoch
+	7,  // 8: selvage.v1.Summary.parts:type_name -> selvage.v1.Part
+	1,  // 9: selvage.v1.Want.epoch:type_name -> selvage.v1.Epoch
+	1,  // 10: selvage.v1.Correction.epoch:type_name -> selvage.v1.Epoch
+	12, // 11: selvage.v1.Correction.parts:type_name -> selvage.v1.CorrectedPart
+	1,  // 12: selvage.v1.Verdict.epoch:type_name -> selvage.v1.Epoch
+	13, // [13:13] is the sub-list for method output_type
+	13, // [13:13] is the sub-list for method input_type
+	13, // [13:13] is the sub-list for extension type_name
+	13, // [13:13] is the sub-list for extension extendee
+	0,  // [0:13] is the sub-list for field type_name
 }
 
 func init() { file_selvage_proto_init() }
@@ -1721,7 +1898,7 @@ func file_selvage_proto_init() {
 			GoPackagePath: reflect.TypeOf(x{}).PkgPath(),
 			RawDescriptor: unsafe.Slice(unsafe.StringData(file_selvage_proto_rawDesc), len(file_selvage_proto_rawDesc)),
 			NumEnums:      0,
-			NumMessages:   14,
+			NumMessages:   15,
 			NumExtensions: 0,
 			NumServices:   0,
 		},
