@@ -47,6 +47,13 @@
 // Fields 1 and 2 of every message are the major and the minor number of the format. A reader passes over the fields of a
 // newer minor number that it does not know and refuses a newer major number with a VersionError, whose text is for people.
 //
+// # Signatures
+//
+// In a fleet that signs, a robot signs what it publishes and the base what it publishes, [Sign] and [Verify]: Ed25519 over the
+// byte ff, "selvage 1", a zero byte, the subject, a zero byte, and the message without its signature. The signature is field 100,
+// the last of the message. A summary is signed for the subject up.FLEET.ROBOT.summary, also one that goes in chunks, whose
+// chunks and head are signed besides. What was signed for one subject is worth nothing on another.
+//
 // # What is refused
 //
 // Everything that is too large, not finite, of the wrong size, out of order, out of range or named against the rules, with

@@ -17,18 +17,17 @@ const (
 
 const signatureField protowire.Number = 100
 
-// seal turns a message whose fields are checked and filled in into bytes, the signature last.
+// seal turns a message whose fields are checked and filled in into bytes, the signature last. There is always room for one.
 func seal(kind string, m proto.Message, signature []byte, most int) ([]byte, error) {
 	b, err := proto.MarshalOptions{Deterministic: true}.Marshal(m)
 	if err != nil {
 		return nil, &FieldError{Kind: kind, Field: "message", Found: err.Error(), Want: "fields that can be written"}
 	}
-	if len(signature) > 0 {
-		b = protowire.AppendTag(b, signatureField, protowire.BytesType)
-		b = protowire.AppendBytes(b, signature)
+	if len(b) > most-signatureRoom {
+		return nil, ofKind(kind, wrong("message", len(b), "at most %d bytes without a signature", most-signatureRoom))
 	}
-	if len(b) > most {
-		return nil, ofKind(kind, wrong("message", len(b), "at most %d bytes", most))
+	if len(signature) > 0 {
+		b = attach(b, signature)
 	}
 	return b, nil
 }

@@ -23,13 +23,14 @@ var (
 	ground     = []string{"internal/lie", "internal/sparse"}
 	estimation = append([]string{"internal/posegraph", "internal/evidence"}, ground...)
 	cores      = append([]string{"partition", "msgs"}, estimation...) // what a protocol core may build on
-	outside    = []string{"internal/bus", "internal/survey", "internal/report"}
+	outside    = []string{"internal/bus", "internal/keys", "internal/survey", "internal/report"}
 	below      = append(append([]string{"internal/adjust", "agent", "agent/shell", "coordinator", "coordinator/shell"}, outside...), cores...)
 
 	rooms = map[string][]string{
 		"internal/lie":         nil,
 		"internal/sparse":      nil,
 		"internal/bus":         nil,
+		"internal/keys":        nil,
 		"internal/survey":      nil,
 		"internal/report":      nil,
 		"internal/house":       nil,

@@ -2,7 +2,8 @@
 // which rules a reader enforces beyond this file.
 //
 // Fields 1 and 2 of every message that travels on its own are the major and minor number of the format, for ever: they are
-// read before anything else is looked at. Field 100 is a signature over the bytes before it, and is written last.
+// read before anything else is looked at. Field 100 is a signature over the subject and the bytes before it, and is written
+// last; a chunk and a head of a summary may carry one too.
 //
 // Numbers in bulk are packed repeated scalars: a field then costs its tag, its length and 4 or 8 bytes a number. Keyframe
 // ids and stamps cross as differences to the one before them.
