@@ -68,6 +68,7 @@ type Coordinator struct {
 	left     bool                 // the newest solution left something to gain
 	rest     bool                 // the present solution is to leave nothing
 	places   map[unitID]placement // of the newest epoch
+	joint    *joint               // behind it
 	datums   uint64               // counts the datums ever made
 }
 

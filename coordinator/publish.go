@@ -61,7 +61,7 @@ func (c *Coordinator) publish(j *joint) ([]Publish, error) {
 		}
 		m.Parts = append(m.Parts, part)
 	}
-	c.places = places
+	c.places, c.joint = places, j
 
 	var out []Publish
 	var failed error // what one robot makes impossible to write is no loss to the others

@@ -12,6 +12,7 @@ import (
 	"slices"
 	"strings"
 
+	"selvage/coordinator"
 	"selvage/internal/adjust"
 	"selvage/internal/lie"
 	"selvage/internal/report"
@@ -236,7 +237,7 @@ func upper(c []float64) (out [21]float64) {
 
 // Verdicts returns the finding on every tie, in the order of the survey.
 func (r *Run) Verdicts() []survey.ResultVerdict {
-	verdict, measured := r.verdicts(), r.measured()
+	verdict, measured, live := r.verdicts(), r.measured(), r.figures()
 	unknown := math.NaN()
 	var out []survey.ResultVerdict
 	for i := range r.Outing.Survey.Ties {
@@ -261,7 +262,23 @@ func (r *Run) Verdicts() []survey.ResultVerdict {
 		if f.Limit > 0 {
 			v.Threshold = f.Limit
 		}
+		if x, known := live[id]; known && v.Verdict == report.Held {
+			v.Redundancy, v.Detectable = x.Redundancy, x.DetectableM
+		}
 		out = append(out, v)
+	}
+	return out
+}
+
+// figures returns what the coordinator's last solution says of the ties it holds; nothing where it says nothing.
+func (r *Run) figures() map[string]coordinator.Figures {
+	out := map[string]coordinator.Figures{}
+	all, err := r.Coordinator.Figures()
+	if err != nil {
+		return out
+	}
+	for _, f := range all {
+		out[f.ID] = f
 	}
 	return out
 }
