@@ -21,7 +21,7 @@ const module = "selvage/"
 // Rooms, from the ground up: what each may import of the module. A package that is not listed here has to be given its place first.
 var (
 	ground     = []string{"internal/lie", "internal/sparse"}
-	estimation = append([]string{"internal/posegraph", "internal/evidence"}, ground...)
+	estimation = append([]string{"internal/posegraph", "internal/evidence", "internal/reliability"}, ground...)
 	cores      = append([]string{"partition", "msgs"}, estimation...) // what a protocol core may build on
 	outside    = []string{"internal/bus", "internal/keys", "internal/survey", "internal/report"}
 	below      = append(append([]string{"internal/adjust", "agent", "agent/shell", "coordinator", "coordinator/shell"}, outside...), cores...)
@@ -38,7 +38,7 @@ var (
 		"internal/evidence":    {"internal/lie"},
 		"internal/adjust":      append([]string{"internal/survey"}, estimation...),
 		"internal/reliability": nil,
-		"internal/audit":       append([]string{"internal/adjust", "internal/reliability", "internal/survey", "internal/report"}, estimation...),
+		"internal/audit":       append([]string{"internal/adjust", "internal/survey", "internal/report"}, estimation...),
 		"partition":            append([]string{"internal/posegraph"}, ground...),
 		"msgs":                 {"msgs/internal/pb"},
 		"msgs/internal/pb":     nil,
@@ -46,8 +46,8 @@ var (
 		"coordinator":          cores,
 		"agent/shell":          append(append([]string{"agent"}, outside...), cores...),
 		"coordinator/shell":    append(append([]string{"coordinator"}, outside...), cores...),
-		"scenarios":            below,
-		"cmd/selvage":          append([]string{"scenarios", "internal/audit", "internal/reliability"}, below...),
+		"scenarios":            append([]string{"internal/audit"}, below...),
+		"cmd/selvage":          append([]string{"scenarios", "internal/audit"}, below...),
 	}
 )
 
