@@ -267,7 +267,8 @@ func (a *adjustment) optimise() error {
 	}
 	var r posegraph.Result
 	if a.report.Sightings > 0 && !a.AllSightings {
-		r, a.report.SightingsCut = a.problem.SolveRobust(o, func(tie int) bool { return a.rulings[tie] != nil && a.rulings[tie].Verdict == survey.RuledHeld })
+		decided := a.problem.SolveRobust(o, func(tie int) bool { return a.rulings[tie] != nil && a.rulings[tie].Verdict == survey.RuledHeld })
+		r, a.report.SightingsCut = decided.Result, decided.Refused
 	} else {
 		r = a.problem.Solve(o)
 	}

@@ -9,6 +9,7 @@ import (
 	"selvage/internal/evidence"
 	"selvage/internal/lie"
 	"selvage/internal/posegraph"
+	"selvage/internal/robust"
 	"selvage/internal/sparse"
 	"selvage/internal/survey"
 )
@@ -93,7 +94,7 @@ func (p *Problem) rough(fromAll bool) (*posegraph.Solver, error) {
 	}
 	o := posegraph.DefaultOptions()
 	o.Tolerance, o.MaxIterations = 1e-6, 50
-	solveRobust(s, p.Graph, o, fromAll)
+	robust.Decide(p.Graph, s, robust.Options{Adjust: o, FromAll: fromAll})
 	return s, nil
 }
 
@@ -292,7 +293,7 @@ func (p *Problem) FramesOnly(o posegraph.Options) (posegraph.Result, error) {
 	if err != nil {
 		return posegraph.Result{}, err
 	}
-	result, _ := solveRobust(s, g, o, false)
+	result := robust.Decide(g, s, robust.Options{Adjust: o}).Result
 	for v, b := range body {
 		p.Graph.Values.Poses[v] = g.Values.Poses[b].Mul(p.own[v])
 	}

@@ -6,6 +6,7 @@ import (
 	"slices"
 
 	"selvage/internal/posegraph"
+	"selvage/internal/robust"
 	"selvage/internal/sparse"
 )
 
@@ -27,7 +28,7 @@ func (p *Problem) grow() {
 	agree := 0
 	for i := range all {
 		w := &all[i]
-		if w.set.W[w.k] = 0; w.set.Chi2(w.k, &p.Graph.Values) < Cutoffs[max(1, w.set.Freedoms(w.k))] {
+		if w.set.W[w.k] = 0; w.set.Chi2(w.k, &p.Graph.Values) < robust.Limit(w.set.Freedoms(w.k)) {
 			w.set.W[w.k] = 1
 			agree++
 		}
@@ -91,7 +92,7 @@ func admit(all []waiting, g *posegraph.Graph, sigma posegraph.Covariance, least 
 		if some && i >= least && w.spread > 0.5 || math.IsNaN(w.spread) {
 			break
 		}
-		if w.set.Innovation(w.k, &g.Values, sigma) < Cutoffs[max(1, w.set.Freedoms(w.k))] {
+		if w.set.Innovation(w.k, &g.Values, sigma) < robust.Limit(w.set.Freedoms(w.k)) {
 			w.set.W[w.k] = 1
 			some = true
 		}

@@ -357,9 +357,9 @@ func TestRecordedTeam(t *testing.T) {
 		s := recorded(&fleet, c.until, true)
 		alone, _ := offTruth(&fleet, s, solo(t, s), true)
 		p := begun(t, s)
-		res, cut := analysed(t, p).SolveRobust(posegraph.DefaultOptions(), nil)
+		res := analysed(t, p).SolveRobust(posegraph.DefaultOptions(), nil)
 		rms, worst := offTruth(&fleet, s, p, false)
-		t.Logf("%.0f s: alone %.3f m, together %.3f, worst %.3f; %v, %d of %d sightings cut", c.until, alone, rms, worst, res.Stop, cut, len(p.Sights()))
+		t.Logf("%.0f s: alone %.3f m, together %.3f, worst %.3f; %v, %d of %d sightings cut", c.until, alone, rms, worst, res.Stop, res.Refused, len(p.Sights()))
 		if res.Stop != posegraph.Converged || rms > c.together || worst > c.worst {
 			t.Errorf("%.0f s: together %.3f m, worst %.3f, %v; want at most %.2f, %.2f", c.until, rms, worst, res.Stop, c.together, c.worst)
 		}

@@ -60,13 +60,13 @@ func TestSolveRobustKeeps(t *testing.T) {
 		if err := p.Analyse(1); err != nil {
 			t.Fatal(err)
 		}
-		res, cut := p.SolveRobust(posegraph.DefaultOptions(), keep)
+		res := p.SolveRobust(posegraph.DefaultOptions(), keep)
 		if res.Stop != posegraph.Converged {
 			t.Fatalf("ended %v", res.Stop)
 		}
 		for _, e := range p.Sights() {
 			if e.Tie == last {
-				return cut, e.Set.Chi2(e.K, &p.Graph.Values)
+				return res.Refused, e.Set.Chi2(e.K, &p.Graph.Values)
 			}
 		}
 		t.Fatal("the tie is not in the graph")

@@ -21,7 +21,7 @@ const module = "selvage/"
 // Rooms, from the ground up: what each may import of the module. A package that is not listed here has to be given its place first.
 var (
 	ground     = []string{"internal/lie", "internal/sparse"}
-	estimation = append([]string{"internal/posegraph", "internal/evidence", "internal/reliability"}, ground...)
+	estimation = append([]string{"internal/posegraph", "internal/evidence", "internal/robust", "internal/reliability"}, ground...)
 	cores      = append([]string{"partition", "msgs"}, estimation...) // what a protocol core may build on
 	outside    = []string{"internal/bus", "internal/keys", "internal/survey", "internal/report"}
 	below      = append(append([]string{"internal/adjust", "agent", "agent/shell", "coordinator", "coordinator/shell"}, outside...), cores...)
@@ -36,6 +36,7 @@ var (
 		"internal/house":       nil,
 		"internal/posegraph":   ground,
 		"internal/evidence":    {"internal/lie"},
+		"internal/robust":      append([]string{"internal/posegraph", "internal/evidence"}, ground...),
 		"internal/adjust":      append([]string{"internal/survey"}, estimation...),
 		"internal/reliability": nil,
 		"internal/audit":       append([]string{"internal/adjust", "internal/survey", "internal/report"}, estimation...),
@@ -52,7 +53,7 @@ var (
 )
 
 // pure are the packages that give the same effects for the same events on a robot, in a container and in a simulation.
-var pure = []string{"agent", "coordinator", "partition", "msgs", "internal/lie", "internal/sparse", "internal/posegraph", "internal/evidence", "internal/reliability"}
+var pure = []string{"agent", "coordinator", "partition", "msgs", "internal/lie", "internal/sparse", "internal/posegraph", "internal/evidence", "internal/robust", "internal/reliability"}
 
 // Why a pure package may not import a path, or one below it.
 var forbidden = []struct{ path, why string }{
