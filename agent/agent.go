@@ -29,8 +29,11 @@ type Config struct {
 	RetryNS int64
 	// AnswerNS is the same for a summary without a correction; it should exceed the time the base takes between solutions.
 	AnswerNS int64
-	// HoldAll takes every loop closure as true.
+	// HoldAll takes every loop closure and every sighting as true.
 	HoldAll bool
+	// Level is how well the front end knows the vertical, radians: the z axis of a session's frame points up to within this sigma. 0 when
+	// it does not know; without meaning in the plane. The base learns it with the summary.
+	Level float64
 }
 
 const second = int64(1e9)
@@ -53,7 +56,7 @@ const (
 	RawMeasurementBytes = 144
 )
 
-// Event is something that happens to an agent: [Keyframe], [Relative], [Tie], [Message] or [Tick].
+// Event is something that happens to an agent: [Keyframe], [Relative], [Sighting], [Tie], [Message] or [Tick].
 type Event interface{ event() }
 
 // Keyframe is a new keyframe of the front end: its pose in the session's frame as the front end has it.
@@ -73,12 +76,14 @@ type Relative struct {
 	Closure  bool        // a loop closure, which may be false; odometry is taken as it is
 }
 
-// Tie is a measurement of another robot, or of another session, by this one: Z is the pose of To in From.
+// Tie is a measurement of another robot, or of another session, by this one: Z is the pose of To in From, or a sight of a spot on To by
+// a sensor on From. Each end is a keyframe or a moment; a moment of this robot that its odometry has not yet reached is waited for.
 type Tie struct {
 	ID       string // empty: named after the record
 	From, To msgs.KeyRef
 	Z        lie.SE3
 	Info     [36]float64
+	Sight    *Sight // instead of Z and Info, which are then not looked at
 	Source   string
 	StampNS  int64
 }
@@ -146,6 +151,9 @@ func New(cfg Config) *Agent {
 	if cfg.Dim != 2 && cfg.Dim != 3 {
 		panic("agent: dimension 2 or 3")
 	}
+	if !(cfg.Level >= 0 && cfg.Level <= math.Pi) {
+		panic("agent: level is an angle")
+	}
 	return &Agent{cfg: cfg, sentNS: never}
 }
 
@@ -161,6 +169,8 @@ func (a *Agent) Handle(nowNS int64, e Event) ([]Publish, error) {
 		return nil, a.keyframe(nowNS, &e)
 	case Relative:
 		return nil, a.relative(nowNS, &e)
+	case Sighting:
+		return nil, a.sighting(nowNS, &e)
 	case Tie:
 		return a.tie(nowNS, &e)
 	case Message:
@@ -226,12 +236,11 @@ func (a *Agent) tie(nowNS int64, t *Tie) ([]Publish, error) {
 	if own.Robot != a.cfg.Robot {
 		return nil, fmt.Errorf("tie %q between %s and %s: neither is %s", t.ID, t.From.Robot, t.To.Robot, a.cfg.Robot)
 	}
-	s := a.session(own.Session)
-	if own.ByStamp || !s.knows(own.ID) {
+	switch s := a.session(own.Session); {
+	case s == nil:
+		return nil, fmt.Errorf("tie %q: session %d is not known to %s", t.ID, own.Session, a.cfg.Robot)
+	case !own.ByStamp && !s.knows(own.ID):
 		return nil, fmt.Errorf("tie %q: keyframe %d of session %d is not known to %s", t.ID, own.ID, own.Session, a.cfg.Robot)
-	}
-	if err := checkMeasurement(&t.Z, &t.Info, a.cfg.Dim); err != nil {
-		return nil, fmt.Errorf("tie %q: %w", t.ID, err)
 	}
 	number := a.newest + 1
 	id := t.ID
@@ -239,8 +248,19 @@ func (a *Agent) tie(nowNS int64, t *Tie) ([]Publish, error) {
 		id = fmt.Sprintf("%s.%x.%d", a.cfg.Robot, a.cfg.Journal[:4], number)
 	}
 	m := msgs.Tie{
-		Header: a.header(number, own.Session), ID: id, From: t.From, To: t.To, Pose: wirePose(&t.Z, a.cfg.Dim),
-		Info: compact(&t.Info, a.cfg.Dim), Dim: a.width(), Source: t.Source, StampNS: t.StampNS,
+		Header: a.header(number, own.Session), ID: id, From: t.From, To: t.To, Dim: a.width(), Source: t.Source, StampNS: t.StampNS,
+	}
+	if t.Sight != nil {
+		sight, err := t.Sight.checked(a.cfg.Dim)
+		if err != nil {
+			return nil, fmt.Errorf("tie %q: %w", id, err)
+		}
+		m.Sight = sight.wire()
+	} else {
+		if err := checkMeasurement(&t.Z, &t.Info, a.cfg.Dim); err != nil {
+			return nil, fmt.Errorf("tie %q: %w", id, err)
+		}
+		m.Pose, m.Info = wirePose(&t.Z, a.cfg.Dim), compact(&t.Info, a.cfg.Dim)
 	}
 	payload, err := m.Marshal()
 	if err != nil {

@@ -38,24 +38,31 @@ func checkPose(x *lie.SE3, dim int) error {
 	return nil
 }
 
-// checkMeasurement refuses a pose as [checkPose] does, and an information matrix that is not finite, symmetric and positive
-// semidefinite, both to 1e-9 of its unit-diagonal scaling, over the components that the survey has.
+// checkMeasurement refuses a pose as [checkPose] does, and an information matrix as [checkInformation] does, over the components that
+// the survey has.
 func checkMeasurement(z *lie.SE3, info *[36]float64, dim int) error {
 	if err := checkPose(z, dim); err != nil {
 		return err
 	}
+	space := dim == 3
+	return checkInformation(info[:], 6, []bool{true, true, space, space, space, true})
+}
+
+// checkInformation refuses an information matrix n x n that is not finite, symmetric and positive semidefinite, both to 1e-9 of its
+// unit-diagonal scaling, over the components that count.
+func checkInformation(info []float64, n int, counts []bool) error {
 	var l [6][6]float64 // Cholesky factor of the scaled matrix with 1e-9 on its diagonal
-	for i := range 6 {
-		if dim == 2 && i > 1 && i < 5 {
+	for i := range n {
+		if !counts[i] {
 			continue
 		}
 		for j := range i + 1 {
-			if dim == 2 && j > 1 && j < 5 {
+			if !counts[j] {
 				continue
 			}
-			v, scale := info[6*i+j], math.Sqrt(info[7*i])*math.Sqrt(info[7*j])
-			if !(info[7*i] >= 0 && math.Abs(v) <= msgs.MaxMatrix && math.Abs(v-info[6*j+i]) <= 1e-9*scale) {
-				return fmt.Errorf("information %g and %g in row and column %d, %d: expected equal finite numbers, not negative on the diagonal", v, info[6*j+i], i, j)
+			v, scale := info[n*i+j], math.Sqrt(info[(n+1)*i])*math.Sqrt(info[(n+1)*j])
+			if !(info[(n+1)*i] >= 0 && math.Abs(v) <= msgs.MaxMatrix && math.Abs(v-info[n*j+i]) <= 1e-9*scale) {
+				return fmt.Errorf("information %g and %g in row and column %d, %d: expected equal finite numbers, not negative on the diagonal", v, info[n*j+i], i, j)
 			}
 			if scale > 0 {
 				v /= scale

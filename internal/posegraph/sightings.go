@@ -18,8 +18,8 @@ const (
 	Position
 )
 
-// measures tells which components of the residual a sense has.
-func (s Sense) measures(dim int) [3]bool {
+// Measures tells which components of the residual a sense has, among poses of dim numbers, 3 or 6.
+func (s Sense) Measures(dim int) [3]bool {
 	space := dim == 6
 	switch s {
 	case RangeBearing, Position:
@@ -65,7 +65,7 @@ func (g *Graph) AddEncounters(sense Sense) *Sightings {
 // Add appends a sighting with its information matrix, 3 x 3 row-major in the components of the residual; entries of what the sense
 // does not measure are not used.
 func (s *Sightings) Add(from, to int32, mount lie.SE3, spot, z [3]float64, info *lie.Mat3) {
-	m, has := *info, s.sense.measures(s.g.Dim)
+	m, has := *info, s.sense.Measures(s.g.Dim)
 	for r := 0; r < 3; r++ {
 		for c := 0; c < 3; c++ {
 			if !has[r] || !has[c] {
@@ -143,7 +143,7 @@ const nearest = 1e-6
 // evaluate returns the residual of sighting k of something at u in the frame of its pose and, if wanted, its derivative by u.
 func (s *Sightings) evaluate(k int, u [3]float64, derive bool) (r [3]float64, a lie.Mat3) {
 	q := toFrame(&s.Mount[k], u)
-	z, has := &s.Z[k], s.sense.measures(s.g.Dim)
+	z, has := &s.Z[k], s.sense.Measures(s.g.Dim)
 	if s.sense == Position {
 		for i := range r {
 			if has[i] {

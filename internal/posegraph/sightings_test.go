@@ -21,7 +21,7 @@ func measured(sense Sense, dim int, x, mount lie.SE3, p [3]float64) [3]float64 {
 	if sense == Position {
 		z = q
 	}
-	for c, has := range sense.measures(dim) {
+	for c, has := range sense.Measures(dim) {
 		if !has {
 			z[c] = 0
 		}
@@ -59,7 +59,7 @@ func TestSightingAgainstDifferences(t *testing.T) {
 				s, to, seen = g.AddEncounters(sense), 1, g.Values.Poses[1].Apply(on)
 			}
 			z := measured(sense, dim, g.Values.Poses[0], mount, seen)
-			for c, has := range sense.measures(dim) {
+			for c, has := range sense.Measures(dim) {
 				if has {
 					z[c] += 0.5 * (2*r.Float64() - 1)
 				}
