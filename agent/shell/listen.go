@@ -2,7 +2,6 @@ package shell
 
 import (
 	"context"
-	"fmt"
 	"time"
 
 	"selvage/agent"
@@ -21,9 +20,7 @@ func (s *Shell) listen(ctx context.Context) {
 	}
 	stop := s.insist(ctx, func() (func(), error) {
 		return s.link.Consume(ctx, bus.VerdictStream(s.options.Fleet), s.options.Robot, func(subject string, b []byte) error {
-			if subject == s.subject(msgs.KindVerdict) {
-				s.hear(ctx, subject, msgs.KindVerdict, b)
-			}
+			s.hear(ctx, subject, msgs.KindVerdict, b)
 			return ctx.Err()
 		})
 	})
@@ -57,16 +54,19 @@ func (s *Shell) insist(ctx context.Context, start func() (stop func(), err error
 	}
 }
 
-// hear gives the core a message from the base.
+// hear gives the core a message from the base. Since the key of the base is never revoked, no matter when the message was stored.
 func (s *Shell) hear(ctx context.Context, subject, kind string, payload []byte) {
 	s.mu.Lock()
 	s.traffic.Down += len(subject) + len(payload)
 	s.mu.Unlock()
+	if !s.door.Admit(s.now(), subject, 0, payload) {
+		return
+	}
 	var refused error
 	if err := s.call(ctx, func() { refused = s.handle(agent.Message{Kind: kind, Payload: payload}) }); err != nil {
 		return // it stops
 	}
 	if refused != nil {
-		s.options.Warn(fmt.Errorf("%s: %w", subject, refused))
+		s.door.Refuse(s.now(), subject, refused)
 	}
 }

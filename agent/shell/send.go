@@ -28,28 +28,31 @@ func laneOf(p *agent.Publish) lane {
 // send puts one message on the bus.
 func (s *Shell) send(ctx context.Context, to lane, p agent.Publish) error {
 	subject := msgs.UpSubject(s.options.Fleet, s.options.Robot, p.Kind)
-	size := len(subject) + len(p.Payload)
+	payload, err := s.sign(subject, p.Payload)
+	if err != nil {
+		return err
+	}
+	size := len(subject) + len(payload)
 	switch p.Kind {
 	case msgs.KindTie:
-		d, err := msgs.DecodeTie(p.Payload)
+		d, err := msgs.DecodeTie(payload)
 		if err != nil {
 			return err
 		}
 		id := fmt.Sprintf("%s.%s.%x.%d", s.options.Fleet, s.options.Robot, d.Header.Journal, p.Number)
-		if _, err := s.link.Publish(ctx, subject, id, p.Payload); err != nil {
+		if _, err := s.link.Publish(ctx, subject, id, payload); err != nil {
 			return err
 		}
 	case msgs.KindSummary:
-		if len(p.Payload) > msgs.ChunkAbove {
-			var err error
-			if size, err = s.sendChunks(ctx, &p); err != nil {
+		if len(payload) > msgs.ChunkAbove {
+			if size, err = s.sendChunks(ctx, payload, p.Number); err != nil {
 				return err
 			}
-		} else if err := s.link.PublishNewest(ctx, subject, p.Payload); err != nil {
+		} else if err := s.link.PublishNewest(ctx, subject, payload); err != nil {
 			return err
 		}
 	default:
-		if err := s.link.PublishHeartbeat(subject, p.Payload); err != nil {
+		if err := s.link.PublishHeartbeat(subject, payload); err != nil {
 			return err
 		}
 	}
@@ -64,24 +67,37 @@ func (s *Shell) send(ctx context.Context, to lane, p agent.Publish) error {
 	return nil
 }
 
+// sign returns a message with the signature of the robot, in a fleet that signs.
+func (s *Shell) sign(subject string, payload []byte) ([]byte, error) {
+	if s.options.Signer == nil {
+		return payload, nil
+	}
+	return msgs.Sign(subject, payload, s.options.Signer)
+}
+
 // sendChunks publishes a large summary and returns what it took. The slot that the newest head on the bus speaks of stays as it is
 // until there is a head that speaks of the other one.
-func (s *Shell) sendChunks(ctx context.Context, p *agent.Publish) (size int, err error) {
-	chunks, head, err := msgs.Split(p.Payload, p.Number, s.slot)
+func (s *Shell) sendChunks(ctx context.Context, payload []byte, version uint64) (size int, err error) {
+	chunks, head, err := msgs.Split(payload, version, s.slot)
 	if err != nil {
 		return 0, err
 	}
+	publish := func(subject string, b []byte) error {
+		b, err := s.sign(subject, b)
+		if err != nil {
+			return err
+		}
+		size += len(subject) + len(b)
+		return s.link.PublishNewest(ctx, subject, b)
+	}
 	for n, chunk := range chunks {
-		subject := msgs.ChunkSubject(s.options.Fleet, s.options.Robot, s.slot, n)
-		if err := s.link.PublishNewest(ctx, subject, chunk); err != nil {
+		if err := publish(msgs.ChunkSubject(s.options.Fleet, s.options.Robot, s.slot, n), chunk); err != nil {
 			return 0, err
 		}
-		size += len(subject) + len(chunk)
 	}
-	subject := msgs.HeadSubject(s.options.Fleet, s.options.Robot)
-	if err := s.link.PublishNewest(ctx, subject, head); err != nil {
+	if err := publish(msgs.HeadSubject(s.options.Fleet, s.options.Robot), head); err != nil {
 		return 0, err
 	}
 	s.slot = s.slot.Other()
-	return size + len(subject) + len(head), nil
+	return size, nil
 }

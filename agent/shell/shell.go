@@ -8,6 +8,8 @@
 // newer summary or heartbeat takes the place of an older one that is not sent yet, and ties wait side by side. What cannot be sent
 // is sent again when the link is back, and the core itself repeats what stays unanswered.
 //
+// The shell signs what it sends, and the core hears nothing that the base has not signed.
+//
 // A summary of more than 256 kB goes as chunks, one at a time, into two slots in turn, then the head that says which; heartbeats
 // and ties get between.
 package shell
@@ -21,6 +23,7 @@ import (
 
 	"selvage/agent"
 	"selvage/internal/bus"
+	"selvage/internal/door"
 	"selvage/msgs"
 )
 
@@ -32,6 +35,9 @@ type Options struct {
 	Fleet, Robot string        // as in the configuration of the core
 	Tick         time.Duration // how often the core is told the time
 	Warn         func(error)   // told of what was refused and of what could not be sent; called from several goroutines
+
+	Signer   msgs.Signer   // signs what the agent sends; nil in a fleet that does not sign
+	Verifier msgs.Verifier // knows the key of the base; nil in a fleet that does not sign
 }
 
 // Traffic is what crossed the link so far: bytes of payloads and subjects, up what was sent and down what was heard.
@@ -50,6 +56,7 @@ type Shell struct {
 	begin   time.Time
 	calls   chan func()
 	stopped chan struct{}
+	door    *door.Door
 	out     *bus.Outbox[lane, agent.Publish]
 	slot    msgs.Slot // for the next large summary; of the one worker that has it
 
@@ -62,6 +69,7 @@ func New(core *agent.Agent, link *bus.Client, o Options) *Shell {
 	s := &Shell{
 		core: core, link: link, options: o, begin: time.Now(), calls: make(chan func()), stopped: make(chan struct{}), slot: msgs.SlotA,
 	}
+	s.door = door.New(o.Fleet, []string{o.Robot}, o.Verifier, o.Warn)
 	s.out = bus.NewOutbox(s.send, o.Warn)
 	return s
 }
@@ -138,6 +146,9 @@ func (s *Shell) call(ctx context.Context, f func()) error {
 
 // Sent tells whether the outbox is empty.
 func (s *Shell) Sent() bool { return s.out.Empty() }
+
+// Refused returns how many messages were not heard, and why.
+func (s *Shell) Refused() []door.Count { return s.door.Counts() }
 
 // Traffic returns what crossed the link so far.
 func (s *Shell) Traffic() Traffic {

@@ -9,16 +9,17 @@ import (
 
 // Incarnation returns a number above that of every base whose corrections and wants the bus still keeps, for the configuration of
 // the core that is to speak next: robots follow no epoch that is older than one they have applied. The streams must have been made
-// ([bus.Client.Prepare]).
-func Incarnation(ctx context.Context, link *bus.Client, fleet string, robots []string) (uint64, error) {
+// ([bus.Client.Prepare]). What the base did not sign does not count; verifier is nil in a fleet that does not sign.
+func Incarnation(ctx context.Context, link *bus.Client, fleet string, robots []string, verifier msgs.Verifier) (uint64, error) {
 	highest := uint64(0)
 	for _, r := range robots {
 		for _, kind := range [2]string{msgs.KindCorrection, msgs.KindWant} {
-			b, _, err := link.Newest(ctx, bus.CorrectionStream(fleet), msgs.DownSubject(fleet, r, kind))
+			subject := msgs.DownSubject(fleet, r, kind)
+			b, _, err := link.Newest(ctx, bus.CorrectionStream(fleet), subject)
 			if err != nil {
 				return 0, err
 			}
-			if b == nil {
+			if b == nil || verifier != nil && msgs.Verify(subject, 0, b, verifier) != nil {
 				continue
 			}
 			// What cannot be read was not applied by any robot either.

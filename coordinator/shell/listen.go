@@ -27,56 +27,64 @@ func (s *Shell) listen(ctx context.Context, began chan<- error) {
 		pieces := make(map[string]*msgs.Assembler, len(s.options.Robots))
 		for _, r := range s.options.Robots {
 			pieces[r] = &msgs.Assembler{}
-			tie := msgs.UpSubject(s.options.Fleet, r, msgs.KindTie)
-			err := start(s.link.Replay(ctx, bus.TieStream(s.options.Fleet, r), func(subject string, b []byte) {
-				if subject == tie {
-					s.hear(ctx, coordinator.Message{Robot: r, Kind: msgs.KindTie, Payload: b})
+			take := func(kind string) bus.Stored {
+				own := msgs.UpSubject(s.options.Fleet, r, kind)
+				return func(subject string, storedNS int64, b []byte) {
+					switch {
+					case subject != own:
+						s.door.Refuse(s.now(), subject, fmt.Errorf("came as an answer on %s", own))
+					case s.door.Admit(s.now(), subject, storedNS, b):
+						s.hear(ctx, subject, coordinator.Message{Robot: r, Kind: kind, Payload: b})
+					}
 				}
-			}))
+			}
+			err := start(s.link.Replay(ctx, bus.TieStream(s.options.Fleet, r), take(msgs.KindTie)))
 			if err != nil {
 				return err
 			}
-			err = start(s.link.Subscribe(msgs.UpSubject(s.options.Fleet, r, msgs.KindHeartbeat), func(_ string, b []byte) {
-				s.hear(ctx, coordinator.Message{Robot: r, Kind: msgs.KindHeartbeat, Payload: b})
+			beat := take(msgs.KindHeartbeat)
+			err = start(s.link.Subscribe(msgs.UpSubject(s.options.Fleet, r, msgs.KindHeartbeat), func(subject string, b []byte) {
+				beat(subject, s.now(), b)
 			}))
 			if err != nil {
 				return err
 			}
 		}
-		return start(s.link.Replay(ctx, bus.SummaryStream(s.options.Fleet), func(subject string, b []byte) { s.summary(ctx, pieces, subject, b) }))
+		return start(s.link.Replay(ctx, bus.SummaryStream(s.options.Fleet), func(subject string, storedNS int64, b []byte) {
+			if s.door.Admit(s.now(), subject, storedNS, b) {
+				s.summary(ctx, pieces, subject, storedNS, b)
+			}
+		}))
 	}
 	began <- begin()
 	<-ctx.Done()
 }
 
-// summary takes a summary or a piece of one.
-func (s *Shell) summary(ctx context.Context, pieces map[string]*msgs.Assembler, subject string, b []byte) {
+// summary takes a summary or a piece of one. One that was put together must be signed like one that came whole.
+func (s *Shell) summary(ctx context.Context, pieces map[string]*msgs.Assembler, subject string, storedNS int64, b []byte) {
 	at, err := msgs.ParseSubject(subject)
 	if err != nil {
-		s.options.Warn(err)
-		return
-	}
-	if pieces[at.Robot] == nil {
-		s.options.Warn(fmt.Errorf("%s: a robot that is not of the fleet", subject))
+		s.door.Refuse(s.now(), subject, err)
 		return
 	}
 	whole, err := pieces[at.Robot].Accept(at, b)
 	if err != nil {
-		s.options.Warn(fmt.Errorf("%s: %w", subject, err))
+		s.door.Refuse(s.now(), subject, err)
 		return
 	}
-	if whole != nil {
-		s.hear(ctx, coordinator.Message{Robot: at.Robot, Kind: msgs.KindSummary, Payload: whole})
+	own := msgs.UpSubject(at.Fleet, at.Robot, msgs.KindSummary)
+	if whole != nil && (subject == own || s.door.Admit(s.now(), own, storedNS, whole)) {
+		s.hear(ctx, own, coordinator.Message{Robot: at.Robot, Kind: msgs.KindSummary, Payload: whole})
 	}
 }
 
 // hear gives the core a message from a robot.
-func (s *Shell) hear(ctx context.Context, m coordinator.Message) {
+func (s *Shell) hear(ctx context.Context, subject string, m coordinator.Message) {
 	var refused error
 	if err := s.call(ctx, func() { refused = s.core.Message(s.now(), m) }); err != nil {
 		return // it stops
 	}
 	if refused != nil {
-		s.options.Warn(fmt.Errorf("%s of %s: %w", m.Kind, m.Robot, refused))
+		s.door.Refuse(s.now(), subject, refused)
 	}
 }

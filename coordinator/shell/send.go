@@ -30,14 +30,21 @@ func laneOf(p *coordinator.Publish) (lane, error) {
 // send puts one message on the bus.
 func (s *Shell) send(ctx context.Context, to lane, p coordinator.Publish) error {
 	subject := msgs.DownSubject(s.options.Fleet, to.robot, to.kind)
+	payload := p.Payload
+	if s.options.Signer != nil {
+		var err error
+		if payload, err = msgs.Sign(subject, payload, s.options.Signer); err != nil {
+			return err
+		}
+	}
 	if to.kind != msgs.KindVerdict {
-		return s.link.PublishNewest(ctx, subject, p.Payload)
+		return s.link.PublishNewest(ctx, subject, payload)
 	}
 	v, err := msgs.DecodeVerdict(p.Payload)
 	if err != nil {
 		return err
 	}
 	id := fmt.Sprintf("%s.%s.%d.%d.%s", s.options.Fleet, to.robot, v.Epoch.Incarnation, v.Epoch.Number, v.Tie)
-	_, err = s.link.Publish(ctx, subject, id, p.Payload)
+	_, err = s.link.Publish(ctx, subject, id, payload)
 	return err
 }

@@ -10,6 +10,8 @@
 // Ties are read from the beginning of their streams, and of summaries the newest that are kept, each time the shell starts: the
 // streams are the memory of the base, and a coordinator that was killed comes back to what it knew, under a higher [Incarnation].
 // The core drops what it has seen.
+//
+// The shell signs what it sends, and the core hears nothing that its robot has not signed.
 package shell
 
 import (
@@ -22,6 +24,8 @@ import (
 
 	"selvage/coordinator"
 	"selvage/internal/bus"
+	"selvage/internal/door"
+	"selvage/msgs"
 )
 
 // ErrStopped means that the shell does not run any more.
@@ -33,6 +37,9 @@ type Options struct {
 	Robots []string      // whose streams are made and read; others are not heard
 	Tick   time.Duration // how often the core is told the time
 	Warn   func(error)   // told of what was refused and of what could not be sent; called from several goroutines
+
+	Signer   msgs.Signer   // signs what the base sends; nil in a fleet that does not sign
+	Verifier msgs.Verifier // knows the keys of the robots; nil in a fleet that does not sign
 }
 
 // Shell runs one coordinator.
@@ -43,6 +50,7 @@ type Shell struct {
 	begin   time.Time
 	calls   chan func()
 	stopped chan struct{}
+	door    *door.Door
 	out     *bus.Outbox[lane, coordinator.Publish]
 }
 
@@ -52,6 +60,7 @@ func New(core *coordinator.Coordinator, link *bus.Client, o Options) *Shell {
 	s := &Shell{
 		core: core, link: link, options: o, begin: time.Now(), calls: make(chan func()), stopped: make(chan struct{}),
 	}
+	s.door = door.New(o.Fleet, o.Robots, o.Verifier, o.Warn)
 	s.out = bus.NewOutbox(s.send, o.Warn)
 	return s
 }
@@ -125,6 +134,9 @@ func (s *Shell) call(ctx context.Context, f func()) error {
 		return ctx.Err()
 	}
 }
+
+// Refused returns how many messages were not heard, and why.
+func (s *Shell) Refused() []door.Count { return s.door.Counts() }
 
 // Sent tells whether the outbox is empty.
 func (s *Shell) Sent() bool { return s.out.Empty() }

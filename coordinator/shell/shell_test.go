@@ -165,7 +165,7 @@ func TestACoordinatorComesBackToWhatItKnew(t *testing.T) {
 	}
 	next := func(want uint64) {
 		t.Helper()
-		if n, err := Incarnation(deadline(t), base, "f", []string{"r1", "r2"}); n != want || err != nil {
+		if n, err := Incarnation(deadline(t), base, "f", []string{"r1", "r2"}, nil); n != want || err != nil {
 			t.Errorf("incarnation %d, error %v, want %d", n, err, want)
 		}
 	}
@@ -258,7 +258,7 @@ func TestWhatIsWrongIsRefusedAndTold(t *testing.T) {
 		{"up.f.r1.summary", "", "message of r2 of fleet f came as r1", summary(t, "r2", 1, 1)},
 		{"up.f.r1.summary.c.0", "", "up.f.r1.summary.c.0", []byte{1}},
 		{"up.f.r1.summary.head", "", "up.f.r1.summary.head", []byte{1}},
-		{"up.f.r1.tie", "x", "tie of r1", []byte("no tie")},
+		{"up.f.r1.tie", "x", "up.f.r1.tie: tie:", []byte("no tie")},
 	} {
 		publish(t, r1, x.subject, x.id, x.payload)
 		until(t, warnings, "warning of "+x.subject, func(err error) bool { return strings.Contains(err.Error(), x.want) })
@@ -266,7 +266,7 @@ func TestWhatIsWrongIsRefusedAndTold(t *testing.T) {
 	if err := r1.PublishHeartbeat("up.f.r1.hb", []byte("no heartbeat")); err != nil {
 		t.Fatal(err)
 	}
-	until(t, warnings, "warning of a heartbeat", func(err error) bool { return strings.Contains(err.Error(), "hb of r1") })
+	until(t, warnings, "warning of a heartbeat", func(err error) bool { return strings.Contains(err.Error(), "up.f.r1.hb: hb:") })
 	publish(t, r1, "up.f.r1.tie", "y", tie(t, 1)) // and goes on
 	publish(t, r1, "up.f.r1.summary", "", summary(t, "r1", 1, 1))
 	until(t, corrections(t, r1, "r1"), "correction", func(m *msgs.Correction) bool { return m.SummaryVersion == 1 })

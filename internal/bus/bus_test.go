@@ -53,6 +53,15 @@ func inbox() (chan message, Handler) {
 	return c, func(subject string, payload []byte) { c <- message{subject, string(payload)} }
 }
 
+func timed(h Handler) Stored {
+	return func(subject string, storedNS int64, payload []byte) {
+		if ago := time.Since(time.Unix(0, storedNS)); ago < 0 || ago > longest {
+			panic(fmt.Sprintf("%s was stored %v ago", subject, ago))
+		}
+		h(subject, payload)
+	}
+}
+
 func expect(t *testing.T, from <-chan message, want ...message) {
 	t.Helper()
 	for _, w := range want {
@@ -90,7 +99,7 @@ func TestTiesAreKeptOncePerRobot(t *testing.T) {
 
 	got, h := inbox()
 	for _, r := range []string{"r1", "r2"} {
-		stop, err := base.Replay(ctx, TieStream("f", r), h)
+		stop, err := base.Replay(ctx, TieStream("f", r), timed(h))
 		if err != nil {
 			t.Fatal(err)
 		}
@@ -125,7 +134,7 @@ func TestFullStreamRefuses(t *testing.T) {
 		t.Fatal("another robot is kept out:", err)
 	}
 	got, h := inbox()
-	stop, err := base.Replay(ctx, TieStream("f", "r1"), h)
+	stop, err := base.Replay(ctx, TieStream("f", "r1"), timed(h))
 	if err != nil {
 		t.Fatal(err)
 	}
@@ -210,7 +219,7 @@ func TestOnlyTheNewestSummaryIsKept(t *testing.T) {
 		t.Fatalf("%q at %d, %v", payload, sequence, err)
 	}
 	got, h := inbox()
-	stop, err := base.Replay(ctx, SummaryStream("f"), h)
+	stop, err := base.Replay(ctx, SummaryStream("f"), timed(h))
 	if err != nil {
 		t.Fatal(err)
 	}

@@ -14,7 +14,8 @@ import (
 type Handler func(subject string, payload []byte)
 
 // Subscribe hands over what is published on a subject, or a pattern of subjects, from now on. What is published while the
-// link is down is missed. Calling stop ends it, though a call under way may still finish.
+// link is down is missed. Calling stop ends it, though a call under way may still finish. What the server delivers in answer to
+// a request that names such a subject for the reply comes too, under the subject it was stored by: look at it.
 func (c *Client) Subscribe(pattern string, h Handler) (stop func(), err error) {
 	sub, err := c.nc.Subscribe(pattern, func(m *nats.Msg) { h(m.Subject, m.Data) })
 	if err != nil {
@@ -52,13 +53,23 @@ func (c *Client) Consume(ctx context.Context, stream, reader string, take func(s
 	})
 }
 
+// Stored takes one message and the time at which the server stored it, nanoseconds of the server's clock.
+type Stored func(subject string, storedNS int64, payload []byte)
+
 // Replay hands over all that a stream holds, in order, and then what comes. It leaves no trace at the server.
-func (c *Client) Replay(ctx context.Context, stream string, h Handler) (stop func(), err error) {
+func (c *Client) Replay(ctx context.Context, stream string, h Stored) (stop func(), err error) {
 	r, err := c.js.OrderedConsumer(ctx, stream, jetstream.OrderedConsumerConfig{DeliverPolicy: jetstream.DeliverAllPolicy})
 	if err != nil {
 		return nil, fmt.Errorf("bus: replay %s: %w", stream, err)
 	}
-	return c.consume(r, stream, func(m jetstream.Msg) { h(m.Subject(), m.Data()) })
+	return c.consume(r, stream, func(m jetstream.Msg) {
+		about, err := m.Metadata()
+		if err != nil {
+			c.warn(fmt.Errorf("bus: read %s: %w", stream, err))
+			return
+		}
+		h(m.Subject(), about.Timestamp.UnixNano(), m.Data())
+	})
 }
 
 func (c *Client) consume(r jetstream.Consumer, stream string, h func(jetstream.Msg)) (stop func(), err error) {
@@ -109,7 +120,11 @@ func (f *follower) take() (latest *nats.Msg, fetch bool) {
 // come twice, and an older one after a newer: the reader goes by the numbers in it.
 func (c *Client) Follow(stream, subject string, h Handler) (stop func(), err error) {
 	f := &follower{fetch: true, wake: make(chan struct{}, 1)}
-	sub, err := c.nc.Subscribe(subject, func(m *nats.Msg) { f.set(m, false) })
+	sub, err := c.nc.Subscribe(subject, func(m *nats.Msg) {
+		if m.Subject == subject { // a reply can come here under the subject of what it answers
+			f.set(m, false)
+		}
+	})
 	if err != nil {
 		return nil, fmt.Errorf("bus: follow %s: %w", subject, err)
 	}
