@@ -23,7 +23,7 @@ var (
 	ground     = []string{"internal/lie", "internal/sparse"}
 	estimation = append([]string{"internal/posegraph", "internal/evidence", "internal/robust", "internal/reliability"}, ground...)
 	cores      = append([]string{"partition", "msgs"}, estimation...) // what a protocol core may build on
-	outside    = []string{"internal/bus", "internal/keys", "internal/door", "internal/survey", "internal/report"}
+	outside    = []string{"internal/bus", "internal/keys", "internal/journal", "internal/door", "internal/survey", "internal/report"}
 	below      = append(append([]string{"internal/adjust", "agent", "agent/shell", "coordinator", "coordinator/shell"}, outside...), cores...)
 
 	rooms = map[string][]string{
@@ -32,6 +32,7 @@ var (
 		"internal/bus":         nil,
 		"internal/keys":        nil,
 		"internal/door":        {"internal/keys", "msgs"},
+		"internal/journal":     nil,
 		"internal/survey":      nil,
 		"internal/report":      nil,
 		"internal/house":       nil,
