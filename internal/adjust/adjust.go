@@ -38,10 +38,14 @@ type Problem struct {
 	Islands int
 	Points  []Point // the points of the graph, which Begin makes; their variables follow those of Keys
 
+	// Apart keeps the control points out of the adjustment, for [Problem.Place] to use them afterwards. It is set before Begin.
+	Apart bool
+
 	body   []int32   // pose -> what whole relative poses hold together, mostly a session; nil before a start with sightings
 	own    []lie.SE3 // the own map of each body where it was found to stand, before the bodies were adjusted together
 	sights []sighted // sightings of marks and ties that are less than a pose, in the order of the survey
 	marks  []survey.Mark
+	placed []bool // island -> it was placed on its control points; nil before Place
 
 	solver  *posegraph.Solver // nil before the analysis
 	workers int               // that it was made for

@@ -211,7 +211,7 @@ func (p *Problem) priors(g *posegraph.Graph) (anchors []int32, free []bool) {
 	priors := g.AddPointPriors()
 	for k := range p.Points {
 		m := &p.marks[p.Points[k].Mark]
-		if m.Role != survey.ControlPoint {
+		if p.Apart || m.Role != survey.ControlPoint {
 			continue
 		}
 		var info lie.Mat3
@@ -244,17 +244,23 @@ func (p *Problem) toDatum(island int32) error {
 	if !ok {
 		return fmt.Errorf("the control points lie so close or so much in line that they leave the map free to turn")
 	}
-	for v := range g.Values.Poses {
-		if p.Island[v] == island {
-			g.Values.Poses[v] = move.Mul(g.Values.Poses[v])
+	p.move(island, &move)
+	return nil
+}
+
+// move moves an island as a whole.
+func (p *Problem) move(island int32, by *lie.SE3) {
+	v := &p.Graph.Values
+	for i := range v.Poses {
+		if p.Island[i] == island {
+			v.Poses[i] = by.Mul(v.Poses[i])
 		}
 	}
 	for k := range p.Points {
 		if p.Points[k].Island == island {
-			g.Values.Points[k] = move.Apply(g.Values.Points[k])
+			v.Points[k] = by.Apply(v.Points[k])
 		}
 	}
-	return nil
 }
 
 // FramesOnly finds the frames of the robots with their own maps frozen, as [Problem.Begin] made them: the unknowns are one pose for each
