@@ -11,6 +11,7 @@ import (
 	"time"
 
 	"selvage/internal/adjust"
+	"selvage/internal/audit"
 	"selvage/internal/posegraph"
 	"selvage/internal/survey"
 )
@@ -24,11 +25,12 @@ type adjustCmd struct {
 	MaxIterations int     `default:"500" placeholder:"N" help:"Give up after so many steps (default 500)."`
 	AllTies       bool    `help:"Also use ties and loop closures that the survey's verdicts call refused or open, but not ties that were ruled refused."`
 	AllSightings  bool    `help:"Let every sighting count in full, also those that do not fit the others."`
+	Place         string  `enum:",robust" default:"" placeholder:"HOW" help:"robust: keep control points out of the adjustment, then place the whole map on them as one piece, leaving out and naming those that contradict the others (default: control points take part, and hold the datum)."`
 	JSON          bool    `name:"json" help:"Print one JSON object instead of the table."`
 }
 
 func (adjustCmd) Help() string {
-	return `Every keyframe, every measurement and the ties in one least-squares adjustment; poses, covariances and the place of each session's frame go to results/. Ties that results/verdicts.csv calls refused or open stay out, and so do the loop closures that results/closures.csv calls so; what rulings.csv says of a tie comes before that (selvage rule).
+	return `Every keyframe, every measurement and the ties in one least-squares adjustment; poses, covariances and the place of each session's frame go to results/. Marks that marks.csv calls control points hold the datum; check points take no part and show how well the positions came out, in the words of the standard FGDC-STD-007.3-1998. Ties that results/verdicts.csv calls refused or open stay out, and so do the loop closures that results/closures.csv calls so; what rulings.csv says of a tie comes before that (selvage rule).
 
 Example, with the survey that the example of split makes:
 
@@ -53,13 +55,16 @@ type adjustReport struct {
 	SightingsCut int         `json:"sightings_left_out"`
 	RuledOut     int         `json:"sightings_ruled_out"` // of marks, by robots or sessions that were ruled refused
 	Islands      int         `json:"islands"`
-	Start        string      `json:"start"`
-	InitialCost  float64     `json:"initial_cost"`
-	Cost         float64     `json:"cost"`
-	Iterations   int         `json:"iterations"`
-	RefusedSteps int         `json:"refused_steps"`
-	Stop         string      `json:"stop"`
-	Seconds      phaseTimes  `json:"seconds"`
+
+	Positions *audit.Positions `json:"positions,omitempty"` // of marks whose places were surveyed
+
+	Start        string     `json:"start"`
+	InitialCost  float64    `json:"initial_cost"`
+	Cost         float64    `json:"cost"`
+	Iterations   int        `json:"iterations"`
+	RefusedSteps int        `json:"refused_steps"`
+	Stop         string     `json:"stop"`
+	Seconds      phaseTimes `json:"seconds"`
 }
 
 type phaseTimes struct {
@@ -68,6 +73,7 @@ type phaseTimes struct {
 	Start      float64 `json:"start"`
 	Analyse    float64 `json:"analyse"`
 	Optimise   float64 `json:"optimise"`
+	Place      float64 `json:"place"`
 	Covariance float64 `json:"covariance"`
 	Write      float64 `json:"write"`
 }
@@ -121,6 +127,7 @@ func (c *adjustCmd) Run(ctx context.Context, con *console) error {
 		{"finding starting values", &t.Start, a.start},
 		{"analysing", &t.Analyse, func() error { return a.problem.Analyse(c.Workers) }},
 		{"adjusting", &t.Optimise, a.optimise},
+		{"comparing with marks of known place", &t.Place, a.place},
 		{"computing covariances", &t.Covariance, a.covariance},
 	} {
 		a.progress.begin(phase.name)
@@ -237,6 +244,7 @@ func (a *adjustment) build() error {
 	if len(a.problem.Keys) == 0 {
 		return badInput("%s holds no keyframes: there is nothing to adjust", a.Survey)
 	}
+	a.problem.Apart = a.Place != ""
 	sights := a.problem.Sights()
 	a.report.Sightings = len(sights)
 	for i := range a.survey.Robots {
@@ -281,6 +289,22 @@ func (a *adjustment) optimise() error {
 	a.weighRulings()
 	a.report.InitialCost, a.report.Cost = r.InitialCost, r.Cost
 	a.report.Iterations, a.report.RefusedSteps, a.report.Stop = r.Iterations, r.Refused, r.Stop.String()
+	return nil
+}
+
+// place puts the map on its control points if asked to, and compares it with them and with the check points.
+func (a *adjustment) place() error {
+	var placed []adjust.Placed
+	if a.problem.Apart {
+		var err error
+		if placed, err = a.problem.Place(); err != nil {
+			return badInput("%s: the measurements leave a pose free in some direction, so the map cannot be placed (%w); nothing was written", a.Survey, err)
+		}
+		if len(placed) == 0 {
+			return badInput("%s: --place robust, but no control point was seen; nothing was written", a.Survey)
+		}
+	}
+	a.report.Positions = audit.Compare(a.problem, a.survey, placed)
 	return nil
 }
 

@@ -87,6 +87,9 @@ func (a *adjustment) write() error {
 	if len(p.Anchors) < p.Islands {
 		by = "control points or, in an island that has too few, its first keyframe"
 	}
+	if a.problem.Apart {
+		by = "its control points, on which the map was placed as a whole or, in an island that was not, by its first keyframe"
+	}
 	note := fmt.Sprintf("adjusted in one piece, %d of %d ties in it; datum %s, held by %s", a.report.TiesHeld, a.report.Ties, a.survey.Meta.Datum.Name, by)
 	return survey.WriteResults(a.Out, poses, a.verdicts, datum, note)
 }
@@ -121,6 +124,11 @@ func (a *adjustment) show(con *console) error {
 		fmt.Fprintf(con.out, "Robot %s, session %d, falls into parts that no measurement joins.\n", u.robot, u.session)
 	}
 	a.showRulings(con)
+	if r.Positions != nil {
+		for _, line := range r.Positions.Lines() {
+			fmt.Fprintln(con.out, "- "+line)
+		}
+	}
 	t := report.Table{Caption: "The adjustment", Columns: []report.Column{{Name: "figure"}, {Name: "value", Right: true}}}
 	row := func(name, format string, args ...any) {
 		t.Rows = append(t.Rows, []string{name, fmt.Sprintf(format, args...)})
@@ -139,9 +147,15 @@ func (a *adjustment) show(con *console) error {
 	row("steps", "%d (%d refused)", r.Iterations, r.RefusedSteps)
 	row("ended", "%s", r.Stop)
 	s := &r.Seconds
-	row("seconds", "%.3f", s.Read+s.Build+s.Start+s.Analyse+s.Optimise+s.Covariance+s.Write)
+	row("seconds", "%.3f", s.Read+s.Build+s.Start+s.Analyse+s.Optimise+s.Place+s.Covariance+s.Write)
 	if err := con.table(t); err != nil {
 		return err
+	}
+	if r.Positions != nil {
+		fmt.Fprintln(con.out)
+		if err := con.table(r.Positions.Table()); err != nil {
+			return err
+		}
 	}
 	fmt.Fprintf(con.out, "\nResults are in %s.\n%s\n", r.Results, report.Safety)
 	return nil
