@@ -77,7 +77,7 @@ radio:
 func TestBadFiles(t *testing.T) {
 	for _, c := range []struct{ yaml, message string }{
 		{"fleet:\n  robotz: 6\n", "x.yaml:2:3: fleet.robotz: unknown field, expected one of robots, start_spread_s, speed_min_mps, speed_max_mps, keyframe_spacing_m, reach_m"},
-		{"robots: 6\n", "x.yaml:1:1: robots: unknown field, expected one of name, title, seed, duration_s, site, fleet, front_end, ties, false_ties, radio"},
+		{"robots: 6\n", "x.yaml:1:1: robots: unknown field, expected one of name, title, seed, duration_s, site, fleet, front_end, ties, marks, false_ties, radio"},
 		{"fleet:\n  robots: 61\n", "x.yaml:2:11: fleet.robots: found 61, expected 1 to 60"},
 		{"fleet:\n  robots: 2.5\n", `x.yaml:2:11: fleet.robots: found "2.5", expected a whole number`},
 		{"fleet:\n  robots: many\n", `x.yaml:2:11: fleet.robots: found "many", expected a whole number`},
@@ -107,7 +107,7 @@ func TestBadFiles(t *testing.T) {
 		{"duration_s: 28000\nfleet: {robots: 60, keyframe_spacing_m: 0.25}\n", "x.yaml:2:41: fleet.keyframe_spacing_m: makes up to 6720000 keyframes in all, expected at most 1000000"},
 		{"seed: 1\n---\nseed: 2\n", "x.yaml: the file holds 2 documents, expected one"},
 		{strings.Repeat("[", 33), "x.yaml: 33 brackets are open at once, expected at most 32"},
-		{"- 1\n", "x.yaml:1:1: found Sequence, expected fields: name, title, seed, duration_s, site, fleet, front_end, ties, false_ties, radio"},
+		{"- 1\n", "x.yaml:1:1: found Sequence, expected fields: name, title, seed, duration_s, site, fleet, front_end, ties, marks, false_ties, radio"},
 		{"radio: {loss: 0.1\n", "x.yaml:1:8: not YAML: could not find flow mapping end token '}'"},
 	} {
 		_, err := Load([]byte(c.yaml), "x.yaml")

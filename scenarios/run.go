@@ -49,6 +49,9 @@ func Recorded(s *survey.Survey) *Outing {
 		for k := range s.Robots[r].Relatives {
 			o.Feed[r] = append(o.Feed[r], Event{Kind: RelativeEvent, Index: k})
 		}
+		for k := range s.Robots[r].Sightings {
+			o.Feed[r] = append(o.Feed[r], Event{Kind: SightingEvent, Index: k})
+		}
 	}
 	for k := range s.Ties {
 		r := number[s.Ties[k].FromRobot]
@@ -264,16 +267,9 @@ func FrontEnd(s *survey.Survey, robot int, e Event) (agent.Event, error) {
 		info, err := m.Cov.Information(s.Meta.Dimension)
 		return agent.Relative{Session: m.Session, From: m.From, To: m.To, Z: adjust.Pose(m.Pose), Info: info, Closure: m.Kind == survey.Closure}, err
 	case TieEvent:
-		t := &s.Ties[e.Index]
-		if t.Kind != survey.WholePose {
-			return nil, fmt.Errorf("tie %s is of kind %s, expected a pose", t.ID, t.Kind)
-		}
-		info, err := t.Cov.Information(s.Meta.Dimension)
-		return agent.Tie{
-			ID: t.ID, From: msgs.KeyRef{Robot: t.FromRobot, Session: t.FromSession, ID: t.FromKey},
-			To: msgs.KeyRef{Robot: t.ToRobot, Session: t.ToSession, ID: t.ToKey, ByStamp: t.ToByStamp, StampNS: t.ToStampNS},
-			Z:  adjust.Pose(t.Pose), Info: info, Source: t.Source, StampNS: t.StampNS,
-		}, err
+		return tieEvent(s, &s.Ties[e.Index])
+	case SightingEvent:
+		return sightingEvent(s, robot, &s.Robots[robot].Sightings[e.Index])
 	}
 	panic("scenarios: unknown kind of delivery")
 }

@@ -23,6 +23,8 @@ type Scenario struct {
 	FrontEnd FrontEndSpec `yaml:"front_end"`
 	// What robots measure of each other.
 	Ties TiesSpec `yaml:"ties"`
+	// Marks in the site, seen by all robots that pass.
+	Marks MarksSpec `yaml:"marks"`
 	// Ties that are wrong.
 	FalseTies FalseTiesSpec `yaml:"false_ties"`
 	// The radio between the robots and the base.
@@ -137,6 +139,10 @@ type TiesSpec struct {
 	EncounterRange float64 `yaml:"encounter_range_m" unit:"m" range:"[0, 50]"`
 	// Error of such a measurement.
 	Encounter Sigmas `yaml:"encounter"`
+	// What is measured then: the pose of the other robot, or less, of a beacon on it.
+	EncounterKind string `yaml:"encounter_kind" oneof:"pose position range_bearing range bearing"`
+	// Error of such a measurement when it is less than a pose.
+	Sight SightSigmas `yaml:"sight"`
 	// A robot recognises a place where another was earlier when it comes this near to one of its keyframes.
 	RevisitRange float64 `yaml:"revisit_range_m" unit:"m" range:"[0, 20]"`
 	// Error of such a measurement.
@@ -147,6 +153,26 @@ type TiesSpec struct {
 	Spacing float64 `yaml:"spacing_m" unit:"m" range:"[1, 1000]"`
 }
 
+// MarksSpec says which marks (targets, reflectors, tags) are in the site and what robots see of them.
+type MarksSpec struct {
+	// How many there are.
+	Count int `yaml:"count" range:"[0, 1000]"`
+	// How many of them are control points, whose coordinates in the datum are known.
+	Control int `yaml:"control" range:"[0, 1000]"`
+	// How many of the others are check points: known too, and used for nothing but the comparison.
+	Check int `yaml:"check" range:"[0, 1000]"`
+	// Error of each known coordinate.
+	Surveyed float64 `yaml:"surveyed_m" unit:"m" range:"[0.0001, 10]"`
+	// A mark is seen from within this distance, with nothing in between.
+	Range float64 `yaml:"range_m" unit:"m" range:"[0.5, 100]"`
+	// Travel of a robot between two sightings of one mark.
+	Spacing float64 `yaml:"spacing_m" unit:"m" range:"[0.1, 1000]"`
+	// What is measured of a mark.
+	Kind string `yaml:"kind" oneof:"position range_bearing range bearing"`
+	// Error of a sighting.
+	Sight SightSigmas `yaml:"sight"`
+}
+
 // FalseTiesSpec says how many ties are wrong, as shares of ALL ties offered. The shares must not exceed 0.9 together.
 type FalseTiesSpec struct {
 	// Share that joins unrelated places, each tie for itself.
@@ -154,6 +180,8 @@ type FalseTiesSpec struct {
 	// Share that comes in clusters which agree with each other, as places do that look alike. Where the site has no room for
 	// one more cluster, single ones take its place.
 	Clustered float64 `yaml:"clustered" range:"[0, 0.9]"`
+	// Share of the marks seen, and of the robots seen where that is less than a pose, that are taken for another mark or robot.
+	Mistaken float64 `yaml:"mistaken" range:"[0, 0.9]"`
 	// Ties in a cluster.
 	ClusterSize int `yaml:"cluster_size" range:"[2, 20]"`
 	// Travel between the ties of a cluster.
@@ -204,6 +232,14 @@ type Sigmas struct {
 	Rotation float64 `yaml:"rotation_rad" unit:"rad" range:"[0.00001, 1]"`
 }
 
+// SightSigmas are standard deviations of what is measured of a point.
+type SightSigmas struct {
+	// Of a range, and of each coordinate of a position.
+	Range float64 `yaml:"range_m" unit:"m" range:"[0.0001, 10]"`
+	// Of a bearing and an elevation.
+	Angle float64 `yaml:"angle_rad" unit:"rad" range:"[0.00001, 1]"`
+}
+
 // Default returns the scenario that a file is laid over.
 func Default() *Scenario {
 	return &Scenario{
@@ -225,8 +261,9 @@ func Default() *Scenario {
 		Ties: TiesSpec{
 			EncounterRange: 10, Encounter: Sigmas{0.06, 0.008},
 			RevisitRange: 3, Revisit: Sigmas{0.08, 0.009},
-			Recall: 0.8, Spacing: 20,
+			Recall: 0.8, Spacing: 20, EncounterKind: "pose", Sight: SightSigmas{0.05, 0.008},
 		},
+		Marks: MarksSpec{Surveyed: 0.01, Range: 8, Spacing: 4, Kind: "range_bearing", Sight: SightSigmas{0.03, 0.005}},
 		FalseTies: FalseTiesSpec{Independent: 0.1, Clustered: 0.05, ClusterSize: 4, ClusterSpacing: 12},
 		Radio: RadioSpec{
 			Range: 250, Loss: 0.05, Delay: 0.02, Jitter: 0.03, Bandwidth: 20000, Queue: 30,
@@ -259,6 +296,9 @@ func (sc *Scenario) rules(report func(path, message string)) {
 	}
 	if sc.FalseTies.Independent+sc.FalseTies.Clustered > 0.9 {
 		report("false_ties.clustered", "makes more than 0.9 together with independent, expected at most that")
+	}
+	if m := &sc.Marks; m.Control+m.Check > m.Count {
+		report("marks.check", fmt.Sprintf("makes %d known marks together with control, expected at most count, %d", m.Control+m.Check, m.Count))
 	}
 	if s := sc.Site.Store; sc.Site.Kind == "store" && s.Width > s.Pitch-0.4 {
 		report("site.store.width_m", "leaves less than 0.4 m for the racks, expected pitch_m - 0.4 or less")

@@ -3,6 +3,7 @@ package scenarios
 import (
 	"cmp"
 	"fmt"
+	"math/rand/v2"
 	"slices"
 	"strconv"
 
@@ -20,6 +21,9 @@ type World struct {
 
 	// ClosureTrue says for each robot and each of its relative poses whether it is true; only loop closures can be false.
 	ClosureTrue [][]bool
+
+	// SightingTrue says for each robot and each of its sightings of marks whether it is of the mark it names.
+	SightingTrue [][]bool
 
 	// Feed holds for each robot, in the order of Survey.Robots, what its front end delivers, in the order of time.
 	Feed [][]Event
@@ -43,6 +47,8 @@ const (
 	RelativeEvent
 	// TieEvent: Index is a row of Survey.Ties, delivered to the robot that made it, after its keyframe there.
 	TieEvent
+	// SightingEvent: Index is a row of Survey.Robots[robot].Sightings.
+	SightingEvent
 )
 
 // Event is one delivery.
@@ -102,18 +108,27 @@ func Simulate(sc *Scenario, seed uint64) (*World, error) {
 	if err != nil {
 		return nil, fmt.Errorf("scenarios: %w", err)
 	}
-	w.enterTies(sc, all, append(found, wrong...))
+	w.enterTies(sc, all, append(found, wrong...), seed)
+	if sc.Marks.Count > 0 {
+		w.enterMarks(sc, s, all, tracks, seed)
+	}
+	if sc.Marks.Count > 0 || sc.Ties.EncounterKind != "pose" {
+		for i := range sv.Meta.Robots {
+			sv.Meta.Robots[i].Mounting = mountings(sc.Dimension())
+		}
+	}
 	w.feed(sc, all)
 	return w, nil
 }
 
 // enterTies writes the ties into the survey, in the order of their making; nothing in a row tells true from false.
-func (w *World) enterTies(sc *Scenario, all []leg, found []sighting) {
+func (w *World) enterTies(sc *Scenario, all []leg, found []sighting, seed uint64) {
 	made := func(t *sighting) int64 { return all[t.from].track.atNS[t.fromKey] }
 	slices.SortStableFunc(found, func(a, b sighting) int {
 		return cmp.Or(cmp.Compare(made(&a), made(&b)), cmp.Compare(a.from, b.from), cmp.Compare(a.to, b.to), cmp.Compare(a.toKey, b.toKey))
 	})
 	encounter, revisit := sc.Ties.Encounter.cov(sc.Dimension()), sc.Ties.Revisit.cov(sc.Dimension())
+	rng := stream(seed, "sights")
 	for i := range found {
 		t := &found[i]
 		a, b := &all[t.from], &all[t.to]
@@ -126,9 +141,50 @@ func (w *World) enterTies(sc *Scenario, all []leg, found []sighting) {
 		if t.encounter {
 			row.Cov, row.Source = encounter, "encounter"
 		}
+		if kind, less := sightKinds[sc.Ties.EncounterKind]; less && t.encounter {
+			at := &a.track.pose[t.fromKey]
+			row.Kind, row.Pose, row.Cov = kind, survey.Pose{}, survey.Cov{}
+			row.Sight = see(rng, at, spotOf(&b.track.pose[t.toKey], sc.Dimension()), kind, sc.Ties.Sight, sc.Dimension())
+			row.Sight.Target = beaconMount
+			if rng.Float64() < sc.FalseTies.Mistaken {
+				t.true = !mistake(rng, all, t, &row)
+			}
+		}
 		w.Survey.Ties = append(w.Survey.Ties, row)
 		w.TieTrue = append(w.TieTrue, t.true)
 		w.Clustered = append(w.Clustered, t.cluster)
+	}
+}
+
+// mistake takes the robot seen for another one that is out at that time, if there is one.
+func mistake(rng *rand.Rand, all []leg, t *sighting, row *survey.Tie) bool {
+	now := all[t.from].track.atNS[t.fromKey]
+	type candidate struct{ leg, key int }
+	var others []candidate
+	for i := range all {
+		if all[i].robot == all[t.from].robot || all[i].robot == all[t.to].robot {
+			continue
+		}
+		at := all[i].track.atNS
+		if k, _ := slices.BinarySearch(at, now); k > 0 && k < len(at) {
+			others = append(others, candidate{i, k})
+		}
+	}
+	if len(others) == 0 {
+		return false
+	}
+	o := others[rng.IntN(len(others))]
+	row.ToRobot, row.ToSession, row.ToKey = robotID(all[o.leg].robot), all[o.leg].session, int64(o.key)
+	return true
+}
+
+// enterMarks writes the marks and what the robots see of them into the survey.
+func (w *World) enterMarks(sc *Scenario, s *site, all []leg, tracks []*track, seed uint64) {
+	marks := placeMarks(sc, tracks, w.Survey, seed)
+	w.SightingTrue = make([][]bool, len(w.Survey.Robots))
+	for i := range all {
+		l := &all[i]
+		w.SightingTrue[l.robot] = append(w.SightingTrue[l.robot], sightMarks(sc, s, &w.Survey.Robots[l.robot], l, marks, seed)...)
 	}
 }
 
@@ -158,6 +214,12 @@ func (w *World) feed(sc *Scenario, all []leg) {
 		t := &w.Survey.Ties[i]
 		r, _ := robotNumber(t.FromRobot)
 		w.Feed[r] = append(w.Feed[r], Event{t.StampNS + late, TieEvent, i})
+	}
+	for r := range w.Survey.Robots {
+		for i := range w.Survey.Robots[r].Sightings {
+			m := &w.Survey.Robots[r].Sightings[i]
+			w.Feed[r] = append(w.Feed[r], Event{w.tracks[r].atNS[first[r][m.Session-1]+int(m.Key)] + late, SightingEvent, i})
+		}
 	}
 	w.EndNS = seconds(sc.Duration)
 	for _, events := range w.Feed {

@@ -1,0 +1,77 @@
+package scenarios
+
+import (
+	"fmt"
+
+	"selvage/agent"
+	"selvage/internal/adjust"
+	"selvage/internal/lie"
+	"selvage/internal/posegraph"
+	"selvage/internal/survey"
+	"selvage/msgs"
+)
+
+var senses = map[survey.Kind]posegraph.Sense{
+	survey.Position: posegraph.Position, survey.RangeBearing: posegraph.RangeBearing,
+	survey.Range: posegraph.Range, survey.Bearing: posegraph.Bearing,
+}
+
+// sightOf turns what a robot has seen into what its agent takes.
+func sightOf(s *survey.Survey, robot string, kind survey.Kind, x *survey.Sight) (agent.Sight, error) {
+	info, err := x.Information(s.Meta.Dimension)
+	if err != nil {
+		return agent.Sight{}, err
+	}
+	mount, err := mounting(s, robot, x.Sensor)
+	return agent.Sight{Sense: senses[kind], Value: x.Value, Info: info, Mount: mount}, err
+}
+
+// mounting returns the pose of a mounting in base_link of its robot; that of base_link itself has no name.
+func mounting(s *survey.Survey, robot, name string) (lie.SE3, error) {
+	for i := range s.Meta.Robots {
+		if m := &s.Meta.Robots[i]; m.ID == robot {
+			if x, known := m.MountPose(name); known {
+				return adjust.Pose(x), nil
+			}
+		}
+	}
+	if name == "" {
+		return lie.Identity(), nil
+	}
+	return lie.SE3{}, fmt.Errorf("robot %s has no mounting %q", robot, name)
+}
+
+// sightingEvent is a sighting of a mark as its agent takes it.
+func sightingEvent(s *survey.Survey, robot int, m *survey.Sighting) (agent.Event, error) {
+	x, err := sightOf(s, s.Robots[robot].ID, m.Kind, &m.Sight)
+	if err != nil {
+		return nil, fmt.Errorf("sighting of mark %s: %w", m.Mark, err)
+	}
+	return agent.Sighting{Session: m.Session, ID: m.Key, ByStamp: m.ByStamp, StampNS: m.StampNS, Mark: m.Mark, Sight: x}, nil
+}
+
+// tieEvent is a tie as the agent of the robot that made it takes it.
+func tieEvent(s *survey.Survey, t *survey.Tie) (agent.Event, error) {
+	out := agent.Tie{
+		ID:   t.ID,
+		From: msgs.KeyRef{Robot: t.FromRobot, Session: t.FromSession, ID: t.FromKey, ByStamp: t.FromByStamp, StampNS: t.FromStampNS},
+		To:   msgs.KeyRef{Robot: t.ToRobot, Session: t.ToSession, ID: t.ToKey, ByStamp: t.ToByStamp, StampNS: t.ToStampNS},
+		Z:    adjust.Pose(t.Pose), Source: t.Source, StampNS: t.StampNS,
+	}
+	var err error
+	if t.Kind == survey.WholePose {
+		out.Info, err = t.Cov.Information(s.Meta.Dimension)
+		return out, err
+	}
+	x, err := sightOf(s, t.FromRobot, t.Kind, &t.Sight)
+	if err == nil {
+		var target lie.SE3
+		target, err = mounting(s, t.ToRobot, t.Sight.Target)
+		x.Spot = target.T
+	}
+	if err != nil {
+		return nil, fmt.Errorf("tie %s: %w", t.ID, err)
+	}
+	out.Sight, out.Z = &x, lie.Identity()
+	return out, nil
+}
