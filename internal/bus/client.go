@@ -2,9 +2,10 @@ package bus
 
 import (
 	"context"
+	"crypto/tls"
+	"crypto/x509"
 	"fmt"
 	"strconv"
-	"strings"
 	"sync"
 	"time"
 
@@ -17,6 +18,15 @@ type ClientOptions struct {
 	Name      string               // of the robot, or of the base: a single token of a subject
 	Warn      func(error)          // told what goes wrong out of any call, such as a refused permission; may be nil
 	Connected func(connected bool) // told when the link goes and comes; may be nil
+
+	Key   Key            // proves who it is; nil where the server lets everybody in
+	Roots *x509.CertPool // who may have signed the certificate of the server; nil for a connection that anybody can read and change
+}
+
+// Key is the key of a client: an NKey of a user.
+type Key interface {
+	Public() string
+	Sign(challenge []byte) ([]byte, error)
 }
 
 // Client is a connection to the bus. It is safe for use by several goroutines.
@@ -27,13 +37,21 @@ type Client struct {
 
 	mu        sync.Mutex
 	followers map[*follower]struct{}
+	failure   string // the last attempt to connect that was told of
+	failed    time.Time
 }
 
-// Dial makes a client of a server elsewhere. It returns at once, and tries for ever when the server cannot be reached.
-func Dial(url string, o ClientOptions) (*Client, error) { return connect(url, o) }
+// Dial makes a client of a server elsewhere. It returns at once, and tries for ever when the server cannot be reached or does not
+// let it in, which Warn is told.
+func Dial(url string, o ClientOptions) (*Client, error) {
+	if o.Roots == nil {
+		return connect(url, o)
+	}
+	return connect(url, o, nats.Secure(&tls.Config{RootCAs: o.Roots, MinVersion: tls.VersionTLS13}))
+}
 
 func connect(url string, o ClientOptions, more ...nats.Option) (*Client, error) {
-	if o.Name == "" || strings.ContainsAny(o.Name, ".*> \t\r\n") {
+	if !token(o.Name) {
 		return nil, fmt.Errorf("bus: client: found name %q, expected a single token of a subject", o.Name)
 	}
 	if o.Warn == nil {
@@ -44,15 +62,19 @@ func connect(url string, o ClientOptions, more ...nats.Option) (*Client, error) 
 	}
 	c := &Client{warn: o.Warn, followers: map[*follower]struct{}{}}
 	options := append([]nats.Option{
-		nats.Name(o.Name), nats.CustomInboxPrefix("_INBOX_" + o.Name),
+		nats.Name(o.Name), nats.CustomInboxPrefix(answers(o.Name)),
 		nats.MaxReconnects(-1), nats.RetryOnFailedConnect(true), nats.ReconnectBufSize(-1),
 		nats.ReconnectWait(500 * time.Millisecond), nats.ReconnectJitter(100*time.Millisecond, 100*time.Millisecond),
 		nats.PingInterval(5 * time.Second), nats.MaxPingsOutstanding(2), nats.Timeout(3 * time.Second),
 		nats.ErrorHandler(func(_ *nats.Conn, _ *nats.Subscription, err error) { o.Warn(err) }),
 		nats.DisconnectErrHandler(func(*nats.Conn, error) { o.Connected(false) }),
-		nats.ConnectHandler(func(*nats.Conn) { o.Connected(true); c.resume() }),
-		nats.ReconnectHandler(func(*nats.Conn) { o.Connected(true); c.resume() }),
+		nats.ConnectHandler(func(*nats.Conn) { c.connected(); o.Connected(true); c.resume() }),
+		nats.ReconnectHandler(func(*nats.Conn) { c.connected(); o.Connected(true); c.resume() }),
+		nats.ReconnectErrHandler(func(_ *nats.Conn, err error) { c.apart(err) }), nats.IgnoreAuthErrorAbort(),
 	}, more...)
+	if o.Key != nil {
+		options = append(options, nats.Nkey(o.Key.Public(), o.Key.Sign))
+	}
 	nc, err := nats.Connect(url, options...)
 	if err != nil {
 		return nil, fmt.Errorf("bus: %w", err)
@@ -64,6 +86,25 @@ func connect(url string, o ClientOptions, more ...nats.Option) (*Client, error) 
 	}
 	c.nc, c.js = nc, js
 	return c, nil
+}
+
+// apart tells why an attempt to connect failed: the same reason once, and no more often than every ten seconds.
+func (c *Client) apart(err error) {
+	c.mu.Lock()
+	tell := c.failure != err.Error() && time.Since(c.failed) >= 10*time.Second
+	if tell {
+		c.failure, c.failed = err.Error(), time.Now()
+	}
+	c.mu.Unlock()
+	if tell {
+		c.warn(fmt.Errorf("bus: connect: %w", err))
+	}
+}
+
+func (c *Client) connected() {
+	c.mu.Lock()
+	c.failure = ""
+	c.mu.Unlock()
 }
 
 // Close ends the connection. Handlers are not called once it has returned, save for those that run at that moment.

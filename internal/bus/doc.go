@@ -13,6 +13,11 @@
 // Heartbeats are not kept. A robot has a tie stream of its own because message ids are shared by a whole stream: an id that
 // another robot used first would be acknowledged and not stored.
 //
+// # Who may do what
+//
+// A server with an [Access] talks TLS and lets in the base and the robots it is told of, each by its NKey; a robot can publish on its
+// own subjects and read what is for it. Without one everybody in reach may do everything.
+//
 // # What may be relied on
 //
 // A message whose Publish returned nil is with the server's operating system. It outlives the death of the server's

@@ -1,6 +1,8 @@
 package bus
 
 import (
+	"cmp"
+	"crypto/tls"
 	"errors"
 	"fmt"
 	"net"
@@ -25,12 +27,18 @@ type Options struct {
 	Listen   string            // host:port to listen on, port 0 for any; "" lets only this process in
 	StoreDir string            // folder of the streams, made when missing; required
 	Warn     func(text string) // told what the server warns of; may be nil
+
+	Access      *Access // who may do what, over TLS; nil lets everybody do everything, which is for rehearsals and closed networks
+	Store       int64   // bytes that all streams may take; 0 for 4 GiB
+	Connections int     // at once; 0 for 1000
 }
 
 // Server is a NATS server in this process.
 type Server struct {
-	nats *server.Server
-	lock *os.File
+	nats    *server.Server
+	lock    *os.File
+	options Options
+	tls     *tls.Config
 }
 
 // Start runs a server until Close.
@@ -38,23 +46,13 @@ func Start(o Options) (*Server, error) {
 	if o.StoreDir == "" {
 		return nil, errors.New("bus: no folder for the store was given")
 	}
-	so := &server.Options{
-		ServerName: "base", NoSigs: true, DisableJetStreamBanner: true, MaxPayload: maxPayload,
-		JetStream: true, StoreDir: o.StoreDir, JetStreamMaxStore: storeLimit, JetStreamMaxMemory: 64 << 20, SyncInterval: time.Second,
-		PingInterval: 5 * time.Second, MaxPingsOut: 2, DontListen: o.Listen == "", NoLog: true,
+	var secure *tls.Config
+	if o.Access != nil {
+		secure = &tls.Config{Certificates: []tls.Certificate{o.Access.Certificate}, MinVersion: tls.VersionTLS13}
 	}
-	if o.Listen != "" {
-		host, port, err := net.SplitHostPort(o.Listen)
-		if err != nil {
-			return nil, fmt.Errorf("bus: listen: %w", err)
-		}
-		so.Host = host
-		if so.Port, err = strconv.Atoi(port); err != nil || so.Port < 0 || so.Port > 65535 {
-			return nil, fmt.Errorf("bus: listen: found port %q, expected 0 to 65535", port)
-		}
-		if so.Port == 0 {
-			so.Port = server.RANDOM_PORT
-		}
+	so, err := o.server(secure)
+	if err != nil {
+		return nil, err
 	}
 	lock, err := lockStore(o.StoreDir)
 	if err != nil {
@@ -68,13 +66,46 @@ func Start(o Options) (*Server, error) {
 	if o.Warn != nil {
 		ns.SetLoggerV2(warner{o.Warn}, false, false, false)
 	}
-	s := &Server{nats: ns, lock: lock}
+	s := &Server{nats: ns, lock: lock, options: o, tls: secure}
 	ns.Start()
 	if !ns.ReadyForConnections(10 * time.Second) {
 		s.Close()
 		return nil, errors.New("bus: the server did not come up within 10 s")
 	}
 	return s, nil
+}
+
+// server writes the options as the library wants them.
+func (o *Options) server(secure *tls.Config) (*server.Options, error) {
+	so := &server.Options{
+		ServerName: "base", NoSigs: true, DisableJetStreamBanner: true, MaxPayload: maxPayload,
+		JetStream: true, StoreDir: o.StoreDir, JetStreamMaxStore: cmp.Or(o.Store, storeLimit), JetStreamMaxMemory: 64 << 20, SyncInterval: time.Second,
+		PingInterval: 5 * time.Second, MaxPingsOut: 2, MaxConn: cmp.Or(o.Connections, 1000), DontListen: o.Listen == "", NoLog: true,
+	}
+	if a := o.Access; a != nil {
+		if err := a.check(); err != nil {
+			return nil, err
+		}
+		if len(a.Certificate.Certificate) == 0 && o.Listen != "" {
+			return nil, errors.New("bus: no certificate of the server was given")
+		}
+		so.Nkeys, so.TLSConfig = a.users(), secure
+	}
+	if o.Listen == "" {
+		return so, nil
+	}
+	host, port, err := net.SplitHostPort(o.Listen)
+	if err != nil {
+		return nil, fmt.Errorf("bus: listen: %w", err)
+	}
+	so.Host = host
+	if so.Port, err = strconv.Atoi(port); err != nil || so.Port < 0 || so.Port > 65535 {
+		return nil, fmt.Errorf("bus: listen: found port %q, expected 0 to 65535", port)
+	}
+	if so.Port == 0 {
+		so.Port = server.RANDOM_PORT
+	}
+	return so, nil
 }
 
 // lockStore keeps others off the folder while the file is open. The server itself would share it and lose data.
@@ -98,13 +129,17 @@ func lockStore(dir string) (*os.File, error) {
 
 // URL is where a client outside this process connects, "" when none can.
 func (s *Server) URL() string {
+	scheme := "nats://"
+	if s.tls != nil {
+		scheme = "tls://"
+	}
 	if a, ok := s.nats.Addr().(*net.TCPAddr); ok && a != nil {
-		return "nats://" + a.String()
+		return scheme + a.String()
 	}
 	return ""
 }
 
-// Connect makes a client in the process of the server.
+// Connect makes a client in the process of the server. It needs a key like any other, but no certificates.
 func (s *Server) Connect(o ClientOptions) (*Client, error) {
 	return connect("", o, nats.InProcessServer(s.nats))
 }

@@ -11,7 +11,7 @@ import (
 // Quotas in bytes. The server sets the whole quota of a stream aside, so that storeLimit holds the three streams of a fleet
 // and the tie streams of 176 robots; 16 MiB are some 40 000 ties.
 const (
-	storeLimit   = 4 << 30
+	storeLimit   = int64(4 << 30)
 	tieQuota     = 16 << 20
 	newestQuota  = 512 << 20
 	verdictQuota = 256 << 20
