@@ -15,6 +15,7 @@
 //	down.FLEET.ROBOT.corr             Correction  newest kept
 //	down.FLEET.ROBOT.verdict          Verdict     all kept
 //	down.FLEET._lease                 Lease       newest kept
+//	rule.FLEET                        Ruling      all kept; from a person's tool
 //
 // A summary is always whole: it refers to no older one. Of a summary in one message and a summary in chunks the one with
 // the higher version counts.

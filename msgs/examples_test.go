@@ -121,6 +121,11 @@ func examples() []message {
 			Evidence: Evidence{Statistic: 210.5, DoF: 6, Limit: 22.458, Places: 2, Margin: -31.25}, Signature: header.Signature,
 		}, decoder(DecodeVerdict)},
 		{"lease", &Lease{Fleet: "site-3", Holder: "base-1", Term: 4, Incarnation: 1 << 40, Signature: header.Signature}, decoder(DecodeLease)},
+		{"ruling", &Ruling{
+			Fleet: "site-3", Target: OnTie, Robot: "r1", Tie: "r1.01020304.300", Verdict: Refused, By: "lead", Note: "seen through a fence", StampNS: 1_700_000_000_123_456_789,
+			Signature: header.Signature,
+		}, decoder(DecodeRuling)},
+		{"ruling-session", &Ruling{Fleet: "site-3", Target: OnSession, Robot: "r1", Session: 7, Verdict: Open, By: "a", Note: "measured by tape: « 0,5 m »"}, decoder(DecodeRuling)},
 	}
 }
 

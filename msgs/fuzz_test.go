@@ -46,6 +46,7 @@ func FuzzDecodeWant(f *testing.F)       { fuzz(f, DecodeWant) }
 func FuzzDecodeCorrection(f *testing.F) { fuzz(f, DecodeCorrection) }
 func FuzzDecodeVerdict(f *testing.F)    { fuzz(f, DecodeVerdict) }
 func FuzzDecodeLease(f *testing.F)      { fuzz(f, DecodeLease) }
+func FuzzDecodeRuling(f *testing.F)     { fuzz(f, DecodeRuling) }
 
 func FuzzParseSubject(f *testing.F) {
 	for _, s := range subjects {

@@ -11,6 +11,7 @@ const (
 	MaxName        = 32      // characters of the name of a fleet or robot
 	MaxID          = 128     // characters of the id of a tie, of a holder, a source or an island
 	MaxReason      = 512     // bytes of the reason of a verdict
+	MaxNote        = 256     // bytes of the note of a ruling
 	MaxState       = 64      // bytes of the state of a heartbeat
 	MaxParts       = 1 << 10 // sessions in a summary or correction
 	MaxJunctions   = 1 << 16 // junctions in a part
@@ -24,7 +25,7 @@ const (
 	MaxMetres      = 1e9     // any coordinate, and the length of a track
 	MaxMatrix      = 1e70    // any number of an information or covariance matrix
 
-	MaxSmall      = 1 << 14           // bytes of a heartbeat, tie, verdict, lease or head
+	MaxSmall      = 1 << 14           // bytes of a heartbeat, tie, verdict, ruling, lease or head
 	MaxWant       = 1 << 21           // bytes of a want
 	MaxSummary    = 8 << 20           // bytes of a summary
 	MaxCorrection = 8<<20 - ChunkSize // bytes of a correction, which must pass through the bus in one piece

@@ -44,6 +44,8 @@ func subjectOf(kind string) string {
 		return UpSubject("site-3", "r1", kind)
 	case KindLease:
 		return LeaseSubject("site-3")
+	case KindRule:
+		return RuleSubject("site-3")
 	}
 	return DownSubject("site-3", "r1", kind)
 }
@@ -64,7 +66,7 @@ func unsigned(t interface{ Fatal(...any) }, m *message) (kind string, body []byt
 	if err != nil {
 		t.Fatal(err)
 	}
-	kinds := map[string]string{"heartbeat": KindHeartbeat, "correction": KindCorrection}
+	kinds := map[string]string{"heartbeat": KindHeartbeat, "correction": KindCorrection, "ruling": KindRule}
 	kind, _, _ = strings.Cut(m.name, "-")
 	if kinds[kind] != "" {
 		kind = kinds[kind]
@@ -105,7 +107,7 @@ func TestSignedMessages(t *testing.T) {
 			t.Errorf("%s: signed twice", m.name)
 		}
 	}
-	for _, kind := range []string{KindHeartbeat, KindTie, KindSummary, KindWant, KindCorrection, KindVerdict, KindLease} {
+	for _, kind := range []string{KindHeartbeat, KindTie, KindSummary, KindWant, KindCorrection, KindVerdict, KindLease, KindRule} {
 		if !kinds[kind] {
 			t.Errorf("no example of %s", kind)
 		}

@@ -15,6 +15,7 @@ const (
 	KindCorrection = "corr"
 	KindVerdict    = "verdict"
 	KindLease      = "lease"
+	KindRule       = "rule"
 )
 
 // UpSubject is where a robot publishes a kind of message.
@@ -25,6 +26,9 @@ func DownSubject(fleet, robot, kind string) string { return "down." + fleet + ".
 
 // LeaseSubject is where the coordinator that speaks for a fleet says so.
 func LeaseSubject(fleet string) string { return "down." + fleet + "._lease" }
+
+// RuleSubject is where what a person has decided goes.
+func RuleSubject(fleet string) string { return KindRule + "." + fleet }
 
 // ChunkSubject is where chunk n of a large summary goes.
 func ChunkSubject(fleet, robot string, slot Slot, n int) string {
@@ -54,8 +58,14 @@ func ParseSubject(s string) (Subject, error) {
 	bad := func(found, want string) (Subject, error) {
 		return Subject{}, &FieldError{Kind: "subject", Field: clip(s), Found: clip(found), Want: want}
 	}
+	if len(t) == 2 && t[0] == KindRule {
+		if !validName(t[1]) {
+			return bad("fleet "+t[1], nameRule)
+		}
+		return Subject{Fleet: t[1], Kind: KindRule}, nil
+	}
 	if len(t) < 3 || t[0] != "up" && t[0] != "down" {
-		return bad(fmt.Sprintf("%d parts", len(t)), "up.FLEET.ROBOT.KIND or down.FLEET.ROBOT.KIND")
+		return bad(fmt.Sprintf("%d parts", len(t)), "up.FLEET.ROBOT.KIND, down.FLEET.ROBOT.KIND or rule.FLEET")
 	}
 	sub := Subject{Up: t[0] == "up", Fleet: t[1]}
 	if !validName(sub.Fleet) {

@@ -1668,6 +1668,138 @@ func (x *Lease) GetSignature() []byte {
 	return nil
 }
 
+type Ruling struct {
+	state         protoimpl.MessageState `protogen:"open.v1"`
+	Major         uint32                 `protobuf:"varint,1,opt,name=major,proto3" json:"major,omitempty"`
+	Minor         uint32                 `protobuf:"varint,2,opt,name=minor,proto3" json:"minor,omitempty"`
+	Fleet         string                 `protobuf:"bytes,3,opt,name=fleet,proto3" json:"fleet,omitempty"`
+	Target        uint32                 `protobuf:"varint,4,opt,name=target,proto3" json:"target,omitempty"` // 1 a tie, 2 a robot, 3 a session
+	Robot         string                 `protobuf:"bytes,5,opt,name=robot,proto3" json:"robot,omitempty"`
+	Session       uint32                 `protobuf:"varint,6,opt,name=session,proto3" json:"session,omitempty"`
+	Tie           string                 `protobuf:"bytes,7,opt,name=tie,proto3" json:"tie,omitempty"`
+	Verdict       uint32                 `protobuf:"varint,8,opt,name=verdict,proto3" json:"verdict,omitempty"` // 1 held, 2 refused, 3 left to the evidence
+	By            string                 `protobuf:"bytes,9,opt,name=by,proto3" json:"by,omitempty"`
+	Note          string                 `protobuf:"bytes,10,opt,name=note,proto3" json:"note,omitempty"`
+	StampNs       int64                  `protobuf:"zigzag64,11,opt,name=stamp_ns,json=stampNs,proto3" json:"stamp_ns,omitempty"`
+	Signature     []byte                 `protobuf:"bytes,100,opt,name=signature,proto3" json:"signature,omitempty"`
+	unknownFields protoimpl.UnknownFields
+	sizeCache     protoimpl.SizeCache
+}
+
+func (x *Ruling) Reset() {
+	*x = Ruling{}
+	mi := &file_selvage_proto_msgTypes[15]
+	ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+	ms.StoreMessageInfo(mi)
+}
+
+func (x *Ruling) String() string {
+	return protoimpl.X.MessageStringOf(x)
+}
+
+func (*Ruling) ProtoMessage() {}
+
+func (x *Ruling) ProtoReflect() protoreflect.Message {
+	mi := &file_selvage_proto_msgTypes[15]
+	if x != nil {
+		ms := protoimpl.X.MessageStateOf(protoimpl.Pointer(x))
+		if ms.LoadMessageInfo() == nil {
+			ms.StoreMessageInfo(mi)
+		}
+		return ms
+	}
+	return mi.MessageOf(x)
+}
+
+// Deprecated: Use Ruling.ProtoReflect.Descriptor instead.
+func (*Ruling) Descriptor() ([]byte, []int) {
+	return file_selvage_proto_rawDescGZIP(), []int{15}
+}
+
+func (x *Ruling) GetMajor() uint32 {
+	if x != nil {
+		return x.Major
+	}
+	return 0
+}
+
+func (x *Ruling) GetMinor() uint32 {
+	if x != nil {
+		return x.Minor
+	}
+	return 0
+}
+
+func (x *Ruling) GetFleet() string {
+	if x != nil {
+		return x.Fleet
+	}
+	return ""
+}
+
+func (x *Ruling) GetTarget() uint32 {
+	if x != nil {
+		return x.Target
+	}
+	return 0
+}
+
+func (x *Ruling) GetRobot() string {
+	if x != nil {
+		return x.Robot
+	}
+	return ""
+}
+
+func (x *Ruling) GetSession() uint32 {
+	if x != nil {
+		return x.Session
+	}
+	return 0
+}
+
+func (x *Ruling) GetTie() string {
+	if x != nil {
+		return x.Tie
+	}
+	return ""
+}
+
+func (x *Ruling) GetVerdict() uint32 {
+	if x != nil {
+		return x.Verdict
+	}
+	return 0
+}
+
+func (x *Ruling) GetBy() string {
+	if x != nil {
+		return x.By
+	}
+	return ""
+}
+
+func (x *Ruling) GetNote() string {
+	if x != nil {
+		return x.Note
+	}
+	return ""
+}
+
+func (x *Ruling) GetStampNs() int64 {
+	if x != nil {
+		return x.StampNs
+	}
+	return 0
+}
+
+func (x *Ruling) GetSignature() []byte {
+	if x != nil {
+		return x.Signature
+	}
+	return nil
+}
+
 var File_selvage_proto protoreflect.FileDescriptor
 
 const file_selvage_proto_rawDesc = "" +
@@ -1835,6 +1967,20 @@ const file_selvage_proto_rawDesc = "" +
 	"\x06holder\x18\x04 \x01(\tR\x06holder\x12\x12\n" +
 	"\x04term\x18\x05 \x01(\x04R\x04term\x12 \n" +
 	"\vincarnation\x18\x06 \x01(\x04R\vincarnation\x12\x1c\n" +
+	"\tsignature\x18d \x01(\fR\tsignature\"\x9b\x02\n" +
+	"\x06Ruling\x12\x14\n" +
+	"\x05major\x18\x01 \x01(\rR\x05major\x12\x14\n" +
+	"\x05minor\x18\x02 \x01(\rR\x05minor\x12\x14\n" +
+	"\x05fleet\x18\x03 \x01(\tR\x05fleet\x12\x16\n" +
+	"\x06target\x18\x04 \x01(\rR\x06target\x12\x14\n" +
+	"\x05robot\x18\x05 \x01(\tR\x05robot\x12\x18\n" +
+	"\asession\x18\x06 \x01(\rR\asession\x12\x10\n" +
+	"\x03tie\x18\a \x01(\tR\x03tie\x12\x18\n" +
+	"\averdict\x18\b \x01(\rR\averdict\x12\x0e\n" +
+	"\x02by\x18\t \x01(\tR\x02by\x12\x12\n" +
+	"\x04note\x18\n" +
+	" \x01(\tR\x04note\x12\x19\n" +
+	"\bstamp_ns\x18\v \x01(\x12R\astampNs\x12\x1c\n" +
 	"\tsignature\x18d \x01(\fR\tsignatureB\x1aZ\x18selvage/msgs/internal/pbb\x06proto3"
 
 var (
@@ -1849,7 +1995,7 @@ func file_selvage_proto_rawDescGZIP() []byte {
 	return file_selvage_proto_rawDescData
 }
 
-var file_selvage_proto_msgTypes = make([]protoimpl.MessageInfo, 15)
+var file_selvage_proto_msgTypes = make([]protoimpl.MessageInfo, 16)
 var file_selvage_proto_goTypes = []any{
 	(*Header)(nil),        // 0: selvage.v1.Header
 	(*Epoch)(nil),         // 1: selvage.v1.Epoch
@@ -1866,6 +2012,7 @@ var file_selvage_proto_goTypes = []any{
 	(*CorrectedPart)(nil), // 12: selvage.v1.CorrectedPart
 	(*Verdict)(nil),       // 13: selvage.v1.Verdict
 	(*Lease)(nil),         // 14: selvage.v1.Lease
+	(*Ruling)(nil),        // 15: selvage.v1.Ruling
 }
 var file_selvage_proto_depIdxs = []int32{
 	0,  // 0: selvage.v1.Heartbeat.header:type_name -> selvage.v1.Header
@@ -1899,7 +2046,7 @@ func file_selvage_proto_init() {
 			GoPackagePath: reflect.TypeOf(x{}).PkgPath(),
 			RawDescriptor: unsafe.Slice(unsafe.StringData(file_selvage_proto_rawDesc), len(file_selvage_proto_rawDesc)),
 			NumEnums:      0,
-			NumMessages:   15,
+			NumMessages:   16,
 			NumExtensions: 0,
 			NumServices:   0,
 		},
