@@ -78,7 +78,7 @@ func (b *body) conclude(f *fleet, w weighed) Result {
 			continue
 		}
 		if q := b.crossing(t, a); q.ways > 0 && q.squared >= b.refusal(&q) {
-			x.Verdict, x.Statistic = Open, q.squared
+			x.Verdict, x.Statistic, x.Limit = Open, q.squared, b.refusal(&q)
 			x.Reason = fmt.Sprintf("agrees with the ties between %s, but a way through other robots contradicts these: misclosure %.1f, bound %.1f",
 				b.names(l), q.squared, b.refusal(&q))
 		}
@@ -106,12 +106,12 @@ func (b *body) find(x *Finding, l *link, p *prediction, tight float64) {
 		x.Reason = fmt.Sprintf("nothing but ties of the same place speaks about it; a tie between %s at another place would settle it", b.names(l))
 		return
 	}
-	x.Statistic, x.DoF = p.squared, b.dof
+	x.Statistic, x.DoF, x.Limit = p.squared, b.dof, b.gate
 	refuse := b.refusal(p)
 	loose := p.share >= min(tight, b.o.Accidents)
 	switch {
 	case p.squared >= refuse:
-		x.Verdict = Refused
+		x.Verdict, x.Limit = Refused, refuse
 		x.Reason = fmt.Sprintf("contradicted by the ties held: misclosure %.1f, bound %.1f, by %d ways around", p.squared, refuse, p.ways)
 	case p.squared >= b.gate:
 		x.Reason = fmt.Sprintf("fits the ties held badly: misclosure %.1f, bound %.1f", p.squared, b.gate)

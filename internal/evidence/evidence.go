@@ -107,10 +107,11 @@ type Finding struct {
 	// Reason says in plain words what speaks for or against the tie, or what would settle it.
 	Reason string
 
-	// Statistic is the squared Mahalanobis distance of the misclosure that decided, with DoF degrees of freedom; both are 0
-	// when no loop was tested.
+	// Statistic is the squared Mahalanobis distance of the misclosure that decided, with DoF degrees of freedom, and Limit the bound
+	// it was held against: from there on it speaks against the tie. All are 0 when no loop was tested.
 	Statistic float64
 	DoF       int
+	Limit     float64
 
 	// Hypothesis is the index in Result.Hypotheses of the set the tie belongs to, -1 if none.
 	Hypothesis int
