@@ -17,14 +17,13 @@ import (
 // Config is fixed for the life of a coordinator.
 type Config struct {
 	Fleet       string
-	Dim         int                // of the survey: 2 or 3
-	Incarnation uint64             // of the base's store
-	Term        uint64             // of the lease under which it speaks
-	SolveNS     int64              // least time between two solutions, nanoseconds
-	PromptNS    int64              // the same once every robot has answered the last solution and nothing is missing
-	RetryNS     int64              // first waiting time before something unanswered is sent again; it doubles up to sixteen times
-	HoldAll     bool               // take every tie as true
-	Rulings     map[TieName]Ruling // what a person has decided
+	Dim         int    // of the survey: 2 or 3
+	Incarnation uint64 // of the base's store
+	Term        uint64 // of the lease under which it speaks
+	SolveNS     int64  // least time between two solutions, nanoseconds
+	PromptNS    int64  // the same once every robot has answered the last solution and nothing is missing
+	RetryNS     int64  // first waiting time before something unanswered is sent again; it doubles up to sixteen times
+	HoldAll     bool   // take every tie as true
 	Evidence    evidence.Options
 }
 
@@ -38,9 +37,9 @@ func DefaultConfig(fleet string, dim int) Config {
 	}
 }
 
-// Message is a message from a robot, with the kind and robot of its subject.
+// Message is a message from a robot, or a ruling from a person, with the kind and robot of its subject.
 type Message struct {
-	Robot   string
+	Robot   string // empty for a ruling
 	Kind    string
 	Payload []byte
 }
@@ -57,8 +56,10 @@ type Coordinator struct {
 	cfg      Config
 	limit    float64 // chi-square beyond which a tie contradicts the joint solution
 	robots   map[string]*robot
-	ties     map[tieID]*tie
+	ties     map[TieName]*tie
 	order    []*tie // as they came
+	turns    int    // changes in the histories of all ties, but for the first of each
+	rulings  map[subject]*msgs.Ruling
 	epoch    uint64
 	now      int64
 	solved   int64  // time of the newest solution
@@ -72,8 +73,8 @@ type Coordinator struct {
 	datums   uint64               // counts the datums ever made
 }
 
-// tieID names a tie: what a robot calls it concerns no other robot.
-type tieID struct{ robot, id string }
+// TieName names a tie by the robot that measured it and its id there: what a robot calls it concerns no other robot.
+type TieName struct{ Robot, ID string }
 
 // unitID names a session of a robot.
 type unitID struct {
@@ -150,8 +151,9 @@ type tie struct {
 	cov     [36]float64
 	regular bool // the information has full rank
 	finding Finding
-	told    msgs.VerdictKind
-	ruled   *Ruling // nil: it is left to the evidence
+	history []Change
+	ruled   *msgs.Ruling // nil: it is left to the evidence
+	told    *msgs.Ruling // the same when the last change was recorded
 }
 
 // Finding is the present verdict on a tie.
@@ -162,7 +164,7 @@ type Finding struct {
 	Verdict msgs.VerdictKind
 	Reason  string
 	msgs.Evidence
-	SinceNS int64 // when the verdict last changed
+	SinceNS int64 // when the verdict last changed; before the first solution: when the tie came
 }
 
 // New returns a coordinator that has heard nothing yet.
@@ -171,10 +173,10 @@ func New(cfg Config) *Coordinator {
 		panic("coordinator: dimension 2 or 3")
 	}
 	limit := distuv.ChiSquared{K: float64(3 * (cfg.Dim - 1))}.Quantile(acceptance)
-	return &Coordinator{cfg: cfg, limit: limit, robots: map[string]*robot{}, ties: map[tieID]*tie{}, places: map[unitID]placement{}}
+	return &Coordinator{cfg: cfg, limit: limit, robots: map[string]*robot{}, ties: map[TieName]*tie{}, rulings: map[subject]*msgs.Ruling{}, places: map[unitID]placement{}}
 }
 
-// Message takes a message from a robot at the time nowNS. An error says why it was refused; nothing has changed then. Old and
+// Message takes a message from a robot, or a ruling, at the time nowNS. An error says why it was refused; nothing has changed then. Old and
 // repeated messages are no error and change nothing.
 func (c *Coordinator) Message(nowNS int64, m Message) error {
 	c.now = max(c.now, nowNS)
@@ -206,8 +208,14 @@ func (c *Coordinator) Message(nowNS int64, m Message) error {
 			return err
 		}
 		return c.takeHeartbeat(h)
+	case msgs.KindRule:
+		r, err := msgs.DecodeRuling(m.Payload)
+		if err != nil {
+			return err
+		}
+		return c.Rule(nowNS, *r)
 	}
-	return fmt.Errorf("message of kind %q from %s: expected tie, summary or hb", m.Kind, m.Robot)
+	return fmt.Errorf("message of kind %q from %s: expected tie, summary, hb or rule", m.Kind, m.Robot)
 }
 
 func (c *Coordinator) from(h *msgs.Header, robot string) error {
@@ -263,16 +271,14 @@ func (c *Coordinator) takeTie(m *msgs.Tie) error {
 		r.wantBusy = true // it sends again because it has not heard that the record is safe
 		return nil
 	}
-	id := tieID{r.name, m.ID}
+	id := TieName{r.name, m.ID}
 	if c.ties[id] != nil {
 		return nil
 	}
 	t := &tie{msg: m, z: lie.FromQuat(m.Pose.T, m.Pose.Q), info: widen(m.Info, c.cfg.Dim)}
 	t.cov, t.regular = invert(&t.info, c.cfg.Dim)
 	t.finding = Finding{Tie: m.ID, From: m.From, To: m.To, Verdict: msgs.Open, Reason: "not yet weighed", SinceNS: c.now}
-	if r, ruled := c.cfg.Rulings[TieName{r.name, m.ID}]; ruled {
-		t.ruled = &r
-	}
+	t.ruled = c.rulingOn(m)
 	c.ties[id] = t
 	c.order = append(c.order, t)
 	c.dirty = true

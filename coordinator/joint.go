@@ -144,7 +144,7 @@ func (c *Coordinator) pose(n *network, w *weighed) (*joint, error) {
 		j.factor[i] = -1
 		if w.island[t.from] != w.island[t.to] {
 			if t.finding.Verdict == msgs.Refused && t.ruled == nil {
-				t.judge(c.now, msgs.Open, "nothing held connects its two robots", t.finding.Evidence)
+				t.judge(msgs.Open, "nothing held connects its two robots", t.finding.Evidence)
 			}
 			continue
 		}
@@ -497,7 +497,7 @@ func (c *Coordinator) giveUp(j *joint, w *weighed) error {
 			j.ties.W[j.factor[i]] = 1
 			continue
 		}
-		j.n.ties[i].judge(c.now, msgs.Refused, fmt.Sprintf("contradicts the joint solution: misclosure %.1f, limit %.1f", squared[k], limit),
+		j.n.ties[i].judge(msgs.Refused, fmt.Sprintf("contradicts the joint solution: misclosure %.1f, limit %.1f", squared[k], limit),
 			msgs.Evidence{Statistic: squared[k], DoF: c.width(), Limit: limit})
 	}
 	return j.keepTogether(w)
@@ -538,11 +538,11 @@ func (c *Coordinator) test(j *joint, w *weighed) (readmitted bool, err error) {
 		if chi2 < limit {
 			w.held[i] = true
 			j.ties.W[j.factor[i]] = 1
-			j.n.ties[i].judge(c.now, msgs.Held, fmt.Sprintf("agrees with what the other ties predict: misclosure %.1f, limit %.1f", chi2, limit), e)
+			j.n.ties[i].judge(msgs.Held, fmt.Sprintf("agrees with what the other ties predict: misclosure %.1f, limit %.1f", chi2, limit), e)
 			readmitted = true
 			continue
 		}
-		j.n.ties[i].judge(c.now, msgs.Refused, fmt.Sprintf("contradicts what the other ties predict: misclosure %.1f, limit %.1f", chi2, limit), e)
+		j.n.ties[i].judge(msgs.Refused, fmt.Sprintf("contradicts what the other ties predict: misclosure %.1f, limit %.1f", chi2, limit), e)
 	}
 	return readmitted, nil
 }

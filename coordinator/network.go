@@ -93,11 +93,11 @@ func (c *Coordinator) layout() *network {
 		}
 		switch {
 		case missing != "":
-			t.judge(c.now, msgs.Open, "waiting for the separator of "+missing, msgs.Evidence{})
+			t.judge(msgs.Open, "waiting for the separator of "+missing, msgs.Evidence{})
 		case apart != "":
-			t.judge(c.now, msgs.Open, "touches a part of the map of "+apart+" that is not connected with the rest of it", msgs.Evidence{})
+			t.judge(msgs.Open, "touches a part of the map of "+apart+" that is not connected with the rest of it", msgs.Evidence{})
 		case u.from == u.to:
-			t.judge(c.now, msgs.Open, "both ends lie in one session: a loop closure belongs to its robot", msgs.Evidence{})
+			t.judge(msgs.Open, "both ends lie in one session: a loop closure belongs to its robot", msgs.Evidence{})
 		default:
 			n.ties = append(n.ties, u)
 		}
@@ -105,12 +105,9 @@ func (c *Coordinator) layout() *network {
 	return n
 }
 
-// judge sets the verdict and keeps the time when it changed.
-func (t *tie) judge(now int64, v msgs.VerdictKind, reason string, e msgs.Evidence) {
-	if t.finding.Verdict != v {
-		t.finding.SinceNS = now
-	}
-	t.finding.Verdict, t.finding.Reason, t.finding.Evidence = v, reason, e
+// judge sets the verdict; what becomes of it in the end is recorded with the solution (Coordinator.record).
+func (t *tie) judge(v msgs.VerdictKind, reason string, e msgs.Evidence) {
+	t.finding.Verdict, t.finding.Reason, t.finding.Evidence = v, clip(reason), e
 }
 
 func newUnitModel(dim int, p *msgs.Part) *unitModel {

@@ -9,7 +9,7 @@ import (
 )
 
 // publish makes the solution the newest epoch: a correction to every robot with a summary, a verdict for every tie whose verdict
-// changed.
+// or ruling changed.
 func (c *Coordinator) publish(j *joint) ([]Publish, error) {
 	sigma, err := j.covariance()
 	if err != nil {
@@ -80,11 +80,10 @@ func (c *Coordinator) publish(j *joint) ([]Publish, error) {
 		out = append(out, Publish{r.name, msgs.KindCorrection, payload})
 	}
 	for _, t := range c.order {
-		f := &t.finding
-		if t.told == f.Verdict {
+		if !c.record(t) {
 			continue
 		}
-		t.told = f.Verdict
+		f := &t.finding
 		v := msgs.Verdict{
 			Fleet: c.cfg.Fleet, Robot: t.msg.Header.Robot, Tie: t.msg.ID, Verdict: f.Verdict, Reason: f.Reason, Evidence: f.Evidence,
 			Epoch: c.Epoch(), Term: c.cfg.Term, StampNS: c.now,

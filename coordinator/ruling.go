@@ -9,28 +9,89 @@ import (
 	"selvage/msgs"
 )
 
-// Ruling is what a person has decided on a tie: it comes before all evidence.
-type Ruling struct {
-	Verdict msgs.VerdictKind // Held: never given up; Refused: never takes part
-	By      string           // who has decided
-	Note    string           // why
+// subject is what a ruling is on.
+type subject struct {
+	target  msgs.Target
+	robot   string
+	session uint32
+	tie     string
 }
 
-// TieName names a tie by the robot that measured it and its id there.
-type TieName struct{ Robot, ID string }
+// maxRulings bounds what people can make the base remember.
+const maxRulings = 1 << 18
 
-var verdictWord = map[msgs.VerdictKind]string{msgs.Held: "held", msgs.Refused: "refused", msgs.Open: "open"}
+// Rule takes what a person has decided at the time nowNS; the next solution follows it. The last ruling on a tie, robot or session
+// counts, and msgs.Open withdraws it. A tie is ruled on by itself, else with a session, else with a robot at one of its ends; where
+// the two ends are ruled differently, it is refused. A ruling on what has not come yet waits for it. An error says why a ruling
+// was not taken; nothing has changed then.
+func (c *Coordinator) Rule(nowNS int64, r msgs.Ruling) error {
+	c.now = max(c.now, nowNS)
+	if err := r.Check(); err != nil {
+		return err
+	}
+	if r.Fleet != c.cfg.Fleet {
+		return fmt.Errorf("ruling for fleet %s came to fleet %s", r.Fleet, c.cfg.Fleet)
+	}
+	on := subject{r.Target, r.Robot, r.Session, r.Tie}
+	was := c.rulings[on]
+	switch {
+	case r.Verdict == msgs.Open:
+		delete(c.rulings, on)
+	case was == nil && len(c.rulings) == maxRulings:
+		return fmt.Errorf("ruling on %s: %d others stand, which are the most", r.On(), maxRulings)
+	case was != nil && was.Verdict == r.Verdict && was.By == r.By && was.Note == r.Note:
+		return nil // said again
+	default:
+		c.rulings[on] = &r
+	}
+	changed := false
+	for _, t := range c.order {
+		if ruled := c.rulingOn(t.msg); ruled != t.ruled {
+			t.ruled, changed = ruled, true
+		}
+	}
+	if changed {
+		c.dirty = true
+		c.revision++
+	}
+	return nil
+}
 
-// text is how the reason of a verdict begins.
-func (r *Ruling) text() string {
-	return "ruled " + verdictWord[r.Verdict] + " by " + r.By + ": " + r.Note
+// rulingOn returns the ruling that counts for a tie, nil for none.
+func (c *Coordinator) rulingOn(t *msgs.Tie) *msgs.Ruling {
+	if len(c.rulings) == 0 {
+		return nil
+	}
+	if r := c.rulings[subject{target: msgs.OnTie, robot: t.Header.Robot, tie: t.ID}]; r != nil {
+		return r
+	}
+	end := func(k *msgs.KeyRef) *msgs.Ruling {
+		if r := c.rulings[subject{target: msgs.OnSession, robot: k.Robot, session: k.Session}]; r != nil {
+			return r
+		}
+		return c.rulings[subject{target: msgs.OnRobot, robot: k.Robot}]
+	}
+	near, far := end(&t.From), end(&t.To)
+	if near == nil || far != nil && far.Verdict == msgs.Refused {
+		return far
+	}
+	return near
+}
+
+// ruledText is how the reason of a verdict begins.
+func ruledText(r *msgs.Ruling) string {
+	by := r.By
+	if r.Target != msgs.OnTie {
+		by += " (" + r.On() + ")"
+	}
+	return "ruled " + r.Verdict.String() + " by " + by + ": " + r.Note
 }
 
 // ruledOut tells whether a tie was ruled refused: it bears witness to nothing.
 func (t *tie) ruledOut() bool { return t.ruled != nil && t.ruled.Verdict == msgs.Refused }
 
-// rule lays the rulings over what the evidence made of the other ties.
-func (c *Coordinator) rule(n *network, w *weighed) {
+// overrule lays the rulings over what the evidence made of the other ties.
+func (c *Coordinator) overrule(n *network, w *weighed) {
 	w.believed, w.alone = slices.Clone(w.held), make([]opinion, len(w.held))
 	joined := false
 	for pass := range 2 { // what measures less than a pose cannot join two maps, so it comes second
@@ -39,21 +100,21 @@ func (c *Coordinator) rule(n *network, w *weighed) {
 			if t.ruled == nil || t.regular != (pass == 0) {
 				continue
 			}
-			reason := t.ruled.text()
+			reason := ruledText(t.ruled)
 			switch {
 			case t.ruled.Verdict == msgs.Refused:
-				t.judge(c.now, msgs.Refused, reason, msgs.Evidence{})
+				t.judge(msgs.Refused, reason, msgs.Evidence{})
 			case n.loose(i):
-				t.judge(c.now, msgs.Open, reason+"; but "+looseReason, msgs.Evidence{})
+				t.judge(msgs.Open, reason+"; but "+looseReason, msgs.Evidence{})
 			case t.wild():
-				t.judge(c.now, msgs.Open, reason+"; but it claims more than can be measured", msgs.Evidence{})
+				t.judge(msgs.Open, reason+"; but it claims more than can be measured", msgs.Evidence{})
 			case !t.regular && w.island[t.from] != w.island[t.to]:
-				t.judge(c.now, msgs.Open, reason+"; but it measures too little of a pose to join two maps", msgs.Evidence{})
+				t.judge(msgs.Open, reason+"; but it measures too little of a pose to join two maps", msgs.Evidence{})
 			default:
 				if t.regular && !c.cfg.HoldAll {
-					w.alone[i] = opinion{verdictWord[t.finding.Verdict], t.finding.Reason, t.finding.Evidence}
+					w.alone[i] = opinion{t.finding.Verdict.String(), t.finding.Reason, t.finding.Evidence}
 				}
-				t.judge(c.now, msgs.Held, reason, msgs.Evidence{})
+				t.judge(msgs.Held, reason, msgs.Evidence{})
 				w.held[i] = true
 				w.join(n, i)
 				joined = true
@@ -101,7 +162,7 @@ func (c *Coordinator) weighRulings(j *joint, w *weighed) error {
 		if t.ruled == nil || t.finding.Verdict == msgs.Open {
 			continue
 		}
-		reason, e := t.ruled.text(), msgs.Evidence{}
+		reason, e := ruledText(t.ruled), msgs.Evidence{}
 		switch f := j.factor[i]; {
 		case t.finding.Verdict == msgs.Held:
 			e = msgs.Evidence{Statistic: j.ties.Chi2(f, &j.graph.Values), DoF: c.width(), Limit: c.limit}
@@ -113,7 +174,7 @@ func (c *Coordinator) weighRulings(j *joint, w *weighed) error {
 				reason += "; the evidence alone: " + w.alone[i].verdict + ", " + w.alone[i].reason
 			}
 			if x := &w.alone[i].Evidence; x.DoF > 0 { // what the others say, before they gave way to the ruling
-				e.Statistic, e.Places, e.Margin = x.Statistic, x.Places, x.Margin
+				e.Statistic, e.Limit, e.Places, e.Margin = x.Statistic, x.Limit, x.Places, x.Margin
 			}
 		case f >= 0:
 			sigma, err := j.covariance()
@@ -129,7 +190,7 @@ func (c *Coordinator) weighRulings(j *joint, w *weighed) error {
 		case t.regular:
 			reason += "; nothing held connects its two robots, so nothing else speaks about it"
 		}
-		t.judge(c.now, t.finding.Verdict, clip(reason), e)
+		t.judge(t.finding.Verdict, reason, e)
 	}
 	return nil
 }

@@ -7,12 +7,13 @@ import (
 	"selvage/msgs"
 )
 
-// ruled returns a change of settings that rules on one tie.
-func ruled(robot, id string, v msgs.VerdictKind, note string) func(c *Config) {
-	return func(c *Config) {
-		c.HoldAll = false
-		c.Rulings = map[TieName]Ruling{{robot, id}: {Verdict: v, By: "lead", Note: note}}
-	}
+// judging leaves the ties to the evidence.
+func judging(c *Config) { c.HoldAll = false }
+
+// rule has a person rule on one tie.
+func (b *base) rule(robot, id string, v msgs.VerdictKind, note string) {
+	b.t.Helper()
+	b.hear("", msgs.KindRule, &msgs.Ruling{Fleet: "fleet", Target: msgs.OnTie, Robot: robot, Tie: id, Verdict: v, By: "lead", Note: note})
 }
 
 // threeRobots lets three robots meet in thirty places, with a tie of r1 at the end, number 11, that is off sideways.
@@ -43,7 +44,8 @@ func finding(t *testing.T, b *base, robot, tie string) Finding {
 
 // A false tie that a person holds is true for the fleet: what contradicts it gives way, and what that costs is told.
 func TestRuledHeld(t *testing.T) {
-	free, held := newBase(t, 3, func(c *Config) { c.HoldAll = false }), newBase(t, 3, ruled("r1", "r1-11", msgs.Held, "seen twice"))
+	free, held := newBase(t, 3, judging), newBase(t, 3, judging)
+	held.rule("r1", "r1-11", msgs.Held, "seen twice")
 	threeRobots(free, 40)
 	threeRobots(held, 40)
 	free.tick(31)
@@ -78,20 +80,16 @@ func TestRuledHeld(t *testing.T) {
 // A true tie that a person refuses takes no part: the map is that without it, and it is told that it agrees with it.
 func TestRuledRefused(t *testing.T) {
 	for _, holdAll := range []bool{false, true} {
-		refused := newBase(t, 3, func(c *Config) {
-			ruled("r1", "r1-11", msgs.Refused, "behind glass")(c)
-			c.HoldAll = holdAll
-		})
+		refused := newBase(t, 3, func(c *Config) { c.HoldAll = holdAll })
+		refused.rule("r1", "r1-11", msgs.Refused, "behind glass")
 		threeRobots(refused, 0.2)
 		refused.tick(31)
 		f := finding(t, refused, "r1", "r1-11")
 		if f.Verdict != msgs.Refused || !strings.HasPrefix(f.Reason, "ruled refused by lead: behind glass; it agrees with the joint solution: misclosure ") || !(f.Statistic < f.Limit) || f.Statistic == 0 {
 			t.Errorf("hold all %v: finding %+v", holdAll, f)
 		}
-		other := newBase(t, 3, func(c *Config) {
-			ruled("r1", "r1-11", msgs.Refused, "behind glass")(c)
-			c.HoldAll = holdAll
-		})
+		other := newBase(t, 3, func(c *Config) { c.HoldAll = holdAll })
+		other.rule("r1", "r1-11", msgs.Refused, "behind glass")
 		threeRobots(other, 20)
 		other.tick(31)
 		if f := finding(t, other, "r1", "r1-11"); f.Verdict != msgs.Refused || !strings.Contains(f.Reason, "; it contradicts the joint solution: ") {
@@ -110,8 +108,9 @@ func TestRuledRefused(t *testing.T) {
 
 // One tie is not enough evidence to join two maps, but a person's word is; the other ties between them are then tested against it.
 func TestRulingJoins(t *testing.T) {
-	run := func(with func(c *Config)) *base {
-		b := newBase(t, 2, with)
+	run := func(ruled func(b *base)) *base {
+		b := newBase(t, 2, judging)
+		ruled(b)
 		x, y := newTrack("r1", 1, 10, 2, 1), newTrack("r2", 1, 10, 2, 2)
 		b.summarise(x)
 		b.summarise(y)
@@ -120,23 +119,23 @@ func TestRulingJoins(t *testing.T) {
 		b.tick(31)
 		return b
 	}
-	b := run(func(c *Config) { c.HoldAll = false })
+	b := run(func(b *base) {})
 	if f := finding(t, b, "r1", "r1-1"); f.Verdict != msgs.Open || placed(t, b, "r2").Joined {
 		t.Fatalf("without a ruling: %+v", f)
 	}
-	b = run(ruled("r1", "r1-1", msgs.Held, "by tape"))
+	b = run(func(b *base) { b.rule("r1", "r1-1", msgs.Held, "by tape") })
 	if f := finding(t, b, "r1", "r1-1"); f.Verdict != msgs.Held || !placed(t, b, "r2").Joined {
 		t.Errorf("with a ruling: %+v", f)
 	}
 	if f := finding(t, b, "r1", "r1-2"); f.Verdict != msgs.Refused || !strings.HasPrefix(f.Reason, "contradicts what the other ties predict") {
 		t.Errorf("the tie that contradicts it: %+v", f)
 	}
-	b = run(ruled("r1", "r1-1", msgs.Refused, "by tape"))
+	b = run(func(b *base) { b.rule("r1", "r1-1", msgs.Refused, "by tape") })
 	if f := finding(t, b, "r1", "r1-1"); f.Verdict != msgs.Refused || placed(t, b, "r2").Joined ||
 		f.Reason != "ruled refused by lead: by tape; nothing held connects its two robots, so nothing else speaks about it" {
 		t.Errorf("refused: %+v", f)
 	}
-	b = run(ruled("r2", "r1-1", msgs.Held, "of another robot"))
+	b = run(func(b *base) { b.rule("r2", "r1-1", msgs.Held, "of another robot") })
 	if f := finding(t, b, "r1", "r1-1"); f.Verdict != msgs.Open {
 		t.Errorf("a ruling on a tie of another robot: %+v", f)
 	}

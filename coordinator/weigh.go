@@ -23,17 +23,8 @@ type weighed struct {
 
 // weigh decides which ties to believe.
 func (c *Coordinator) weigh(n *network) weighed {
-	before := make([]Finding, len(n.ties))
-	for i := range n.ties {
-		before[i] = n.ties[i].finding
-	}
 	w := c.believe(n)
-	c.rule(n, &w)
-	for i := range n.ties {
-		if t := &n.ties[i]; t.ruled != nil && t.finding.Verdict == before[i].Verdict { // whatever the evidence made of it in between
-			t.finding.SinceNS = before[i].SinceNS
-		}
-	}
+	c.overrule(n, &w)
 	return w
 }
 
@@ -46,15 +37,15 @@ func (c *Coordinator) believe(n *network) weighed {
 				continue
 			}
 			if n.loose(i) {
-				n.ties[i].judge(c.now, msgs.Open, looseReason, msgs.Evidence{})
+				n.ties[i].judge(msgs.Open, looseReason, msgs.Evidence{})
 				continue
 			}
 			if n.ties[i].wild() {
-				n.ties[i].judge(c.now, msgs.Open, "claims more than can be measured", msgs.Evidence{})
+				n.ties[i].judge(msgs.Open, "claims more than can be measured", msgs.Evidence{})
 				continue
 			}
 			w.held[i] = true
-			n.ties[i].judge(c.now, msgs.Held, "taken as true on request", msgs.Evidence{})
+			n.ties[i].judge(msgs.Held, "taken as true on request", msgs.Evidence{})
 		}
 		w.island = n.islands(w.held)
 		return w
@@ -79,9 +70,9 @@ func (c *Coordinator) believe(n *network) weighed {
 		switch {
 		case t.ruledOut():
 		case !t.regular:
-			t.judge(c.now, msgs.Open, "measures too little of a pose to be weighed", msgs.Evidence{})
+			t.judge(msgs.Open, "measures too little of a pose to be weighed", msgs.Evidence{})
 		case n.loose(i):
-			t.judge(c.now, msgs.Open, looseReason, msgs.Evidence{})
+			t.judge(msgs.Open, looseReason, msgs.Evidence{})
 		default:
 			judged = append(judged, i)
 		}
@@ -98,7 +89,7 @@ func (c *Coordinator) believe(n *network) weighed {
 	w := weighed{held: make([]bool, len(n.ties)), island: r.Island, start: r.DatumFromUnit}
 	for k, i := range judged {
 		f := &r.Ties[k]
-		e := msgs.Evidence{Statistic: f.Statistic, DoF: f.DoF, Places: f.Places, Margin: float64(f.Margin)}
+		e := msgs.Evidence{Statistic: f.Statistic, DoF: f.DoF, Limit: f.Limit, Places: f.Places, Margin: float64(f.Margin)}
 		verdict := msgs.Open
 		switch f.Verdict {
 		case evidence.Held:
@@ -107,7 +98,7 @@ func (c *Coordinator) believe(n *network) weighed {
 		case evidence.Refused:
 			verdict = msgs.Refused
 		}
-		n.ties[i].judge(c.now, verdict, f.Reason, e)
+		n.ties[i].judge(verdict, f.Reason, e)
 	}
 	return w
 }

@@ -8,23 +8,29 @@ import (
 	"selvage/msgs"
 )
 
-// rulings returns what a person has decided on the ties of a survey, as the coordinator takes it.
-func rulings(s *survey.Survey) map[coordinator.TieName]coordinator.Ruling {
-	out := map[coordinator.TieName]coordinator.Ruling{}
-	for i, r := range s.TieRulings() {
-		if r == nil {
-			continue
-		}
-		ruling := coordinator.Ruling{Verdict: msgs.Held, By: r.By, Note: r.Note}
-		if r.Verdict == survey.RuledRefused {
-			ruling.Verdict = msgs.Refused
-		}
-		if r.Target != survey.OnTie {
-			ruling.By += " (" + r.On() + ")"
-		}
-		out[coordinator.TieName{Robot: s.Ties[i].FromRobot, ID: s.Ties[i].ID}] = ruling
+// rule gives the coordinator what a person has decided before the outing, line by line.
+func rule(c *coordinator.Coordinator, s *survey.Survey) error {
+	robot := make(map[string]string, len(s.Ties)) // that measured a tie
+	for i := range s.Ties {
+		robot[s.Ties[i].ID] = s.Ties[i].FromRobot
 	}
-	return out
+	verdict := map[survey.RulingVerdict]msgs.VerdictKind{survey.RuledFree: msgs.Open, survey.RuledHeld: msgs.Held, survey.RuledRefused: msgs.Refused}
+	for i := range s.Rulings {
+		r := &s.Rulings[i]
+		m := msgs.Ruling{Fleet: fleetName, Robot: r.Name, Session: r.Session, Verdict: verdict[r.Verdict], By: r.By, Note: r.Note, StampNS: r.Time.UnixNano()}
+		switch r.Target {
+		case survey.OnTie:
+			m.Target, m.Robot, m.Tie = msgs.OnTie, robot[r.Name], r.Name
+		case survey.OnRobot:
+			m.Target = msgs.OnRobot
+		case survey.OnSession:
+			m.Target = msgs.OnSession
+		}
+		if err := c.Rule(0, m); err != nil {
+			return fmt.Errorf("rulings.csv, ruling %d: %w", i+1, err)
+		}
+	}
+	return nil
 }
 
 // ruled lists what a person has decided and what it costs: a ruling on a tie by itself, one on a robot or session with all its ties.

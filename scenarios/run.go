@@ -157,8 +157,11 @@ func Virtual(ctx context.Context, o *Outing, set Settings) (*Run, error) {
 	r.track = newTruthIndex(o.Survey)
 	dim := o.Survey.Meta.Dimension
 	config := coordinator.DefaultConfig(fleetName, dim)
-	config.HoldAll, config.Rulings = set.HoldAll, rulings(o.Survey)
+	config.HoldAll = set.HoldAll
 	r.Coordinator = coordinator.New(config)
+	if err := rule(r.Coordinator, o.Survey); err != nil {
+		return nil, err
+	}
 	for i := range o.Survey.Robots {
 		id := o.Survey.Robots[i].ID
 		r.number[id] = i

@@ -101,9 +101,12 @@ func (r *busRun) run(ctx context.Context, server *bus.Server, set Settings) (err
 
 	dim := r.Outing.Survey.Meta.Dimension
 	config := coordinator.DefaultConfig(fleetName, dim)
-	config.HoldAll, config.Rulings = set.HoldAll, rulings(r.Outing.Survey)
+	config.HoldAll = set.HoldAll
 	config.SolveNS, config.PromptNS, config.RetryNS = busSolveNS, busPromptNS, busRetryNS
 	r.Coordinator = coordinator.New(config)
+	if err := rule(r.Coordinator, r.Outing.Survey); err != nil {
+		return err
+	}
 	var names []string
 	for i := range r.Outing.Survey.Robots {
 		names = append(names, r.Outing.Survey.Robots[i].ID)
