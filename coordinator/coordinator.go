@@ -5,6 +5,7 @@ import (
 	"errors"
 	"fmt"
 	"maps"
+	"math"
 	"slices"
 
 	"selvage/internal/evidence"
@@ -24,6 +25,7 @@ type Config struct {
 	PromptNS    int64  // the same once every robot has answered the last solution and nothing is missing
 	RetryNS     int64  // first waiting time before something unanswered is sent again; it doubles up to sixteen times
 	HoldAll     bool   // take every tie as true
+	Marks       []Mark // whose coordinates are known
 	Evidence    evidence.Options
 }
 
@@ -56,6 +58,7 @@ type Coordinator struct {
 	cfg      Config
 	limit    float64 // chi-square beyond which a tie contradicts the joint solution
 	robots   map[string]*robot
+	marks    map[string]*Mark
 	ties     map[TieName]*tie
 	order    []*tie // as they came
 	turns    int    // changes in the histories of all ties, but for the first of each
@@ -99,6 +102,7 @@ type placement struct {
 	datum  lie.SE3 // datum_from_session
 	ids    []int64
 	poses  []lie.SE3 // of the junctions, in the datum
+	points []msgs.Point
 }
 
 // island is a datum: its birth number and the junction that carries it.
@@ -107,9 +111,17 @@ type island struct {
 	anchor unitID
 	key    int64
 	pose   lie.SE3 // of that junction, for as long as the datum lives
+
+	control bool // no junction carries it: control marks hold it
 }
 
+// controlBorn is the birth number of the datum of the control marks.
+const controlBorn = math.MaxUint64
+
 func (i *island) name() string {
+	if i.control {
+		return "control"
+	}
 	return fmt.Sprintf("%s.%d.%d", i.anchor.robot, i.anchor.session, i.key)
 }
 
@@ -132,6 +144,9 @@ type robot struct {
 
 	missing   []msgs.KeyRef // keyframes wanted, as of revision missingAt
 	missingAt uint64
+	marks     []string // wanted as points
+	unplaced  int      // of these, those that are none yet
+	marksAt   uint64
 
 	used     uint64 // version in the newest epoch
 	corr     []byte
@@ -149,7 +164,8 @@ type tie struct {
 	z       lie.SE3
 	info    [36]float64
 	cov     [36]float64
-	regular bool // the information has full rank
+	regular bool   // the information has full rank
+	sight   *sight // instead of z, info and cov, for a tie that is less than a pose
 	finding Finding
 	history []Change
 	ruled   *msgs.Ruling // nil: it is left to the evidence
@@ -172,8 +188,16 @@ func New(cfg Config) *Coordinator {
 	if cfg.Dim != 2 && cfg.Dim != 3 {
 		panic("coordinator: dimension 2 or 3")
 	}
+	cfg.check()
 	limit := distuv.ChiSquared{K: float64(3 * (cfg.Dim - 1))}.Quantile(acceptance)
-	return &Coordinator{cfg: cfg, limit: limit, robots: map[string]*robot{}, ties: map[TieName]*tie{}, rulings: map[subject]*msgs.Ruling{}, places: map[unitID]placement{}}
+	c := &Coordinator{
+		cfg: cfg, limit: limit, robots: map[string]*robot{}, marks: map[string]*Mark{}, ties: map[TieName]*tie{},
+		rulings: map[subject]*msgs.Ruling{}, places: map[unitID]placement{},
+	}
+	for i := range cfg.Marks {
+		c.marks[cfg.Marks[i].Name] = &cfg.Marks[i]
+	}
+	return c
 }
 
 // Message takes a message from a robot, or a ruling, at the time nowNS. An error says why it was refused; nothing has changed then. Old and
@@ -275,8 +299,13 @@ func (c *Coordinator) takeTie(m *msgs.Tie) error {
 	if c.ties[id] != nil {
 		return nil
 	}
-	t := &tie{msg: m, z: lie.FromQuat(m.Pose.T, m.Pose.Q), info: widen(m.Info, c.cfg.Dim)}
-	t.cov, t.regular = invert(&t.info, c.cfg.Dim)
+	t := &tie{msg: m}
+	if m.Sight != nil {
+		t.sight = newSight(m.Sight)
+	} else {
+		t.z, t.info = lie.FromQuat(m.Pose.T, m.Pose.Q), widen(m.Info, c.cfg.Dim)
+		t.cov, t.regular = invert(&t.info, c.cfg.Dim)
+	}
 	t.finding = Finding{Tie: m.ID, From: m.From, To: m.To, Verdict: msgs.Open, Reason: "not yet weighed", SinceNS: c.now}
 	t.ruled = c.rulingOn(m)
 	c.ties[id] = t
@@ -394,7 +423,7 @@ func (c *Coordinator) due() bool {
 // complete tells whether no robot is expected to send anything: a solution now would not be overtaken by what is on its way.
 func (c *Coordinator) complete() bool {
 	for _, r := range c.robots {
-		if r.current.gappy() || len(c.missing(r)) > 0 {
+		if r.current.gappy() || len(c.missing(r)) > 0 || c.markless(r) {
 			return false
 		}
 		if s := r.summary; s != nil && (r.version != s.Version || r.used != 0 && r.applied != c.Epoch()) {

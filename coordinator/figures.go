@@ -32,7 +32,7 @@ func (c *Coordinator) Figures() ([]Figures, error) {
 	bridge := j.bridges()
 	var out []Figures
 	for i := range j.n.ties {
-		if f := j.factor[i]; f >= 0 && j.ties.W[f] > 0 {
+		if f := j.factor[i]; f >= 0 && j.weight(i) > 0 && j.n.ties[i].sight == nil {
 			out = append(out, j.figures(i, bridge[i], sigma))
 		}
 	}
@@ -45,7 +45,7 @@ func (j *joint) bridges() map[int]bool {
 	var edges [][2]int32
 	var tie []int
 	for i := range j.n.ties {
-		if f := j.factor[i]; f >= 0 && j.ties.W[f] > 0 {
+		if f := j.factor[i]; f >= 0 && j.weight(i) > 0 {
 			edges = append(edges, [2]int32{int32(j.n.ties[i].from), int32(j.n.ties[i].to)})
 			tie = append(tie, i)
 		}

@@ -19,13 +19,18 @@ type joint struct {
 	graph   *posegraph.Graph
 	cliques *posegraph.Cliques
 	ties    *posegraph.Between
-	factor  []int // usable tie -> factor, -1 when it has no say here
-	solver  *posegraph.Solver
-	anchors []int32
-	islands []island              // per number of weighed.island; born 0 for units that stand alone
-	member  []int                 // unit -> island number
-	start   []lie.SE3             // values it began with
-	sigma   *posegraph.Covariance // at the present values, on demand
+	sights  [posegraph.Position + 1]*posegraph.Sightings // of robots, by sense; nil for those that have none
+	marks   *posegraph.MarkCliques                       // nil without marks
+	factor  []int                                        // usable tie -> factor of its batch, -1 when it has no say here
+
+	points   []point
+	pointsOf [][]int32 // unit -> its points
+	solver   *posegraph.Solver
+	anchors  []int32
+	islands  []island              // per number of weighed.island; born 0 for units that stand alone
+	member   []int                 // unit -> island number
+	start    posegraph.Values      // values it began with
+	sigma    *posegraph.Covariance // at the present values, on demand
 }
 
 // acceptance is the probability with which a true tie stays below the limit of the tests on the joint solution.
@@ -57,7 +62,7 @@ func (c *Coordinator) solve() ([]Publish, error) {
 			n.blame(loose)
 			w = c.weigh(n)
 		case errors.Is(err, errParted): // each time with fewer ties held
-			w.island = n.islands(w.held)
+			w.island = w.islands(n)
 		case err != nil:
 			return nil, err
 		default:
@@ -70,7 +75,18 @@ func (c *Coordinator) solve() ([]Publish, error) {
 }
 
 // looseError: a summary leaves one of its junctions free.
-type looseError struct{ variable int32 }
+type looseError struct {
+	variable int32
+	unit     int // that it belongs to
+}
+
+// freed says that a variable is left free.
+func (j *joint) freed(variable int32) *looseError {
+	if k := int(variable) - len(j.graph.Values.Poses); k >= 0 {
+		return &looseError{variable, j.points[k].units[0]}
+	}
+	return &looseError{variable, j.n.unitOf(variable)}
+}
 
 func (e *looseError) Error() string {
 	return fmt.Sprintf("joint solution: junction %d of the network is left free by its summary", e.variable)
@@ -82,7 +98,7 @@ func (j *joint) loose(err error) error {
 	if !errors.As(err, &bad) {
 		return err
 	}
-	fixed := make([]bool, len(j.graph.Values.Poses))
+	fixed := make([]bool, j.graph.Variables())
 	for _, v := range j.anchors {
 		fixed[v] = true
 	}
@@ -92,7 +108,7 @@ func (j *joint) loose(err error) error {
 			row++
 		}
 		if row == bad.Block {
-			return &looseError{int32(v)}
+			return j.freed(int32(v))
 		}
 	}
 	return err
@@ -107,14 +123,13 @@ func (n *network) blame(loose *looseError) {
 		}
 	}
 	if !found {
-		n.units[n.unitOf(loose.variable)].model.err = loose
+		n.units[loose.unit].model.err = loose
 	}
 }
 
 // sound tells whether the summary of u determines its junctions by itself, each part for itself.
 func (u *unit) sound(dim int) bool {
-	g := posegraph.New(dim, slices.Clone(u.model.poses))
-	u.cliques(g.AddCliques(), 0)
+	g := u.alone(dim)
 	solver, err := posegraph.NewSolver(g, g.Anchors(), sparse.Options{})
 	if err != nil {
 		return false
@@ -136,8 +151,15 @@ func (c *Coordinator) pose(n *network, w *weighed) (*joint, error) {
 	for _, m := range w.island {
 		size[m]++
 	}
+	j.addPoints(w)
+	if len(j.points) > 0 {
+		j.marks = j.graph.AddMarkCliques()
+	}
 	for u := range n.units {
 		n.units[u].cliques(j.cliques, n.units[u].base)
+		if j.marks != nil {
+			addMarkCliques(n.units[u].part, n.units[u].model.poses, j.marks, n.units[u].base, j.pointsOf[u])
+		}
 	}
 	for i := range n.ties {
 		t := &n.ties[i]
@@ -146,32 +168,41 @@ func (c *Coordinator) pose(n *network, w *weighed) (*joint, error) {
 			if t.finding.Verdict == msgs.Refused && t.ruled == nil {
 				t.judge(msgs.Open, "nothing held connects its two robots", t.finding.Evidence)
 			}
+			if t.sight != nil && w.held[i] { // its island fell apart
+				w.held[i] = false
+				t.judge(msgs.Open, t.sight.alone(), t.finding.Evidence)
+			}
 			continue
 		}
-		if !w.held[i] && !t.regular { // no test of fewer components than a pose has
+		if t.sight != nil && (t.wild() || n.loose(i) || t.ruledOut()) {
+			continue
+		}
+		if !w.held[i] && !t.regular && t.sight == nil { // no test of fewer components than a pose has
 			continue
 		}
 		if !w.held[i] && t.finding.Verdict == msgs.Refused && t.finding.Statistic > hopeless*c.limit {
 			continue
 		}
-		j.factor[i] = j.ties.Len()
-		j.ties.Add(n.units[t.from].base+int32(t.fromNode), n.units[t.to].base+int32(t.toNode), t.z, &t.info)
+		j.add(i, n.units[t.from].base+int32(t.fromNode), n.units[t.to].base+int32(t.toNode))
 		if !w.held[i] {
-			j.ties.W[j.factor[i]] = 0
+			j.setWeight(i, 0)
 		}
 	}
+	c.addControl(j, w)
 	c.chooseDatums(j, w, size)
 	j.anchorStrays()
-	best, bestCost := []lie.SE3(nil), math.Inf(1)
+	best, bestCost := posegraph.Values{}, math.Inf(1)
 	for _, candidate := range []func(*joint, *weighed) bool{c.startFromLast, startFromEvidence, c.startFromTies} {
 		if !candidate(j, w) {
 			continue
 		}
-		if cost := j.graph.Cost(); best == nil || cost < bestCost {
-			best, bestCost = append(best[:0], j.graph.Values.Poses...), cost
+		j.placePoints()
+		if cost := j.graph.Cost(); best.Poses == nil || cost < bestCost {
+			best.Poses, best.Points = append(best.Poses[:0], j.graph.Values.Poses...), append(best.Points[:0], j.graph.Values.Points...)
+			bestCost = cost
 		}
 	}
-	copy(j.graph.Values.Poses, best)
+	j.put(&best)
 	j.start = best
 	var err error
 	j.solver, err = posegraph.NewSolver(j.graph, j.anchors, sparse.Options{})
@@ -191,12 +222,16 @@ func (c *Coordinator) chooseDatums(j *joint, w *weighed, size map[int]int) {
 		number[j.n.units[u].id] = u
 		m := w.island[u]
 		p, placed := c.places[j.n.units[u].id]
-		if size[m] > 1 && placed && p.joined && (j.islands[m].born == 0 || p.island.born < j.islands[m].born) {
+		if size[m] > 1 && placed && p.joined && !p.island.control && (j.islands[m].born == 0 || p.island.born < j.islands[m].born) {
 			j.islands[m] = p.island
 		}
 	}
 	for m := range j.islands {
 		u := &j.n.units[lowest[m]]
+		if m == w.control {
+			j.islands[m] = island{born: controlBorn, control: true}
+			continue
+		}
 		if size[m] < 2 {
 			continue
 		}
@@ -220,9 +255,12 @@ func (c *Coordinator) chooseDatums(j *joint, w *weighed, size map[int]int) {
 		j.anchors = append(j.anchors, u.base+int32(node))
 	}
 	for u := range j.n.units {
-		if size[w.island[u]] < 2 {
+		if size[w.island[u]] < 2 && w.island[u] != w.control {
 			for k := range j.n.units[u].part.Junctions {
 				j.anchors = append(j.anchors, j.n.units[u].base+int32(k))
+			}
+			for _, k := range j.pointsOf[u] {
+				j.anchors = append(j.anchors, j.graph.Point(k))
 			}
 		}
 	}
@@ -246,10 +284,9 @@ func (j *joint) anchorStrays() {
 	for _, v := range j.anchors {
 		held[component[v]] = true
 	}
-	for v, k := range component {
-		if !held[k] {
-			held[k] = true
-			j.anchors = append(j.anchors, int32(v))
+	for _, v := range j.graph.Anchors() { // none where control marks hold it
+		if !held[component[v]] {
+			j.anchors = append(j.anchors, v)
 		}
 	}
 }
@@ -343,6 +380,9 @@ func startFromEvidence(j *joint, w *weighed) bool {
 
 // startFromTies starts from the chordal solution over ties and the relative poses within the cliques.
 func (c *Coordinator) startFromTies(j *joint, w *weighed) bool {
+	if len(w.meetings) > 0 { // ties and maps alone do not connect the islands
+		return false
+	}
 	for u := range j.n.units {
 		j.place(u, lie.Identity())
 	}
@@ -354,7 +394,7 @@ func (c *Coordinator) startFromTies(j *joint, w *weighed) bool {
 		unit := &j.n.units[u]
 		for i := range unit.part.Cliques {
 			q := &unit.part.Cliques[i]
-			m := d * (len(q.Nodes) - 1)
+			m := len(q.B)
 			for k := 1; k < len(q.Nodes); k++ {
 				block := make([]float64, d*d)
 				for r := 0; r < d; r++ {
@@ -368,7 +408,7 @@ func (c *Coordinator) startFromTies(j *joint, w *weighed) bool {
 	}
 	for i := range j.n.ties {
 		t := &j.n.ties[i]
-		if j.factor[i] < 0 || !w.held[i] {
+		if j.factor[i] < 0 || !w.held[i] || t.sight != nil {
 			continue
 		}
 		b.Add(j.n.units[t.from].base+int32(t.fromNode), j.n.units[t.to].base+int32(t.toNode), t.z, &t.info)
@@ -383,7 +423,7 @@ func (c *Coordinator) startFromTies(j *joint, w *weighed) bool {
 // settle solves the joint problem. Unless all ties are held, ties that stand out are given up by graduated non-convexity, all
 // others within an island are tested against the prediction of those held, and those that pass are taken back.
 func (c *Coordinator) settle(j *joint, w *weighed) error {
-	if c.cfg.HoldAll || len(j.anchors) == len(j.graph.Values.Poses) {
+	if c.cfg.HoldAll || len(j.anchors) == j.graph.Variables() {
 		return c.finish(j)
 	}
 	for round := 0; round < 2; round++ {
@@ -418,15 +458,15 @@ const nearEnough = 0.05
 func (c *Coordinator) finish(j *joint) error {
 	j.sigma = nil
 	if !c.rest {
-		at := slices.Clone(j.graph.Values.Poses)
-		copy(j.graph.Values.Poses, j.start)
+		at := posegraph.Values{Poses: slices.Clone(j.graph.Values.Poses), Points: slices.Clone(j.graph.Values.Points)}
+		j.put(&j.start)
 		if _, taken := j.solver.Step(nearEnough * max(j.graph.Cost(), 1)); taken {
 			cost, gradient := j.solver.Linearise()
 			left, err := j.solver.Decrease(gradient)
 			c.left = left > converged*max(cost, 1)
 			return j.loose(err)
 		}
-		copy(j.graph.Values.Poses, at)
+		j.put(&at)
 	}
 	c.left = false
 	o := posegraph.DefaultOptions()
@@ -437,10 +477,16 @@ func (c *Coordinator) finish(j *joint) error {
 // converged is the share of F (or of 1, when F is smaller) that a solution may leave to gain.
 const converged = 1e-12
 
+// put sets the values.
+func (j *joint) put(v *posegraph.Values) {
+	copy(j.graph.Values.Poses, v.Poses)
+	copy(j.graph.Values.Points, v.Points)
+}
+
 func (j *joint) optimise(o posegraph.Options) error {
 	r := j.solver.Optimise(o)
 	if r.Stop == posegraph.Undetermined {
-		return &looseError{max(r.Weakest, 0)}
+		return j.freed(max(r.Weakest, 0))
 	}
 	return nil
 }
@@ -469,10 +515,16 @@ func (c *Coordinator) giveUp(j *joint, w *weighed) error {
 			active = append(active, i)
 		}
 	}
-	squared, weights := make([]float64, len(active)), make([]float64, len(active))
+	squared, weights := make([]float64, len(active)), make([]float64, len(active)) // the squares in shares of the limit of a whole pose
+	whole := func(i int) float64 {
+		if s := j.n.ties[i].sight; s != nil {
+			return limit / s.limit()
+		}
+		return 1
+	}
 	measure := func() {
 		for k, i := range active {
-			squared[k] = j.ties.Chi2(j.factor[i], &j.graph.Values)
+			squared[k] = j.chi2(i) * whole(i)
 		}
 	}
 	if err := j.optimise(o); err != nil {
@@ -483,7 +535,7 @@ func (c *Coordinator) giveUp(j *joint, w *weighed) error {
 	for decided := !needed; !decided; {
 		decided = schedule.Next(weights, squared)
 		for k, i := range active {
-			j.ties.W[j.factor[i]] = weights[k]
+			j.setWeight(i, weights[k])
 		}
 		if err := j.optimise(o); err != nil {
 			return err
@@ -492,20 +544,21 @@ func (c *Coordinator) giveUp(j *joint, w *weighed) error {
 	}
 	for k, i := range active {
 		w.held[i] = !needed || weights[k] == 1
-		j.ties.W[j.factor[i]] = 0
+		j.setWeight(i, 0)
 		if w.held[i] {
-			j.ties.W[j.factor[i]] = 1
+			j.setWeight(i, 1)
 			continue
 		}
-		j.n.ties[i].judge(msgs.Refused, fmt.Sprintf("contradicts the joint solution: misclosure %.1f, limit %.1f", squared[k], limit),
-			msgs.Evidence{Statistic: squared[k], DoF: c.width(), Limit: limit})
+		e := msgs.Evidence{Statistic: squared[k] / whole(i)}
+		e.Limit, e.DoF = c.limitOf(j.n.ties[i].tie)
+		j.n.ties[i].judge(msgs.Refused, fmt.Sprintf("contradicts the joint solution: misclosure %.1f, limit %.1f", e.Statistic, e.Limit), e)
 	}
 	return j.keepTogether(w)
 }
 
 // keepTogether checks that the held ties still connect every island.
 func (j *joint) keepTogether(w *weighed) error {
-	now := j.n.islands(w.held)
+	now := w.islands(j.n)
 	for u := range now {
 		for v := range now {
 			if w.island[u] == w.island[v] && now[u] != now[v] {
@@ -518,7 +571,6 @@ func (j *joint) keepTogether(w *weighed) error {
 
 // test compares every tie of an island that is not held with what the others predict, and holds those that agree.
 func (c *Coordinator) test(j *joint, w *weighed) (readmitted bool, err error) {
-	limit := c.limit
 	var idle []int
 	for i := range j.n.ties {
 		if j.factor[i] >= 0 && !w.held[i] && j.n.ties[i].ruled == nil {
@@ -533,11 +585,12 @@ func (c *Coordinator) test(j *joint, w *weighed) (readmitted bool, err error) {
 		return false, err
 	}
 	for _, i := range idle {
-		chi2 := j.ties.Innovation(j.factor[i], &j.graph.Values, sigma, &j.n.ties[i].cov)
-		e := msgs.Evidence{Statistic: chi2, DoF: c.width(), Limit: limit}
+		chi2 := j.innovation(i, sigma)
+		limit, dof := c.limitOf(j.n.ties[i].tie)
+		e := msgs.Evidence{Statistic: chi2, DoF: dof, Limit: limit}
 		if chi2 < limit {
 			w.held[i] = true
-			j.ties.W[j.factor[i]] = 1
+			j.setWeight(i, 1)
 			j.n.ties[i].judge(msgs.Held, fmt.Sprintf("agrees with what the other ties predict: misclosure %.1f, limit %.1f", chi2, limit), e)
 			readmitted = true
 			continue

@@ -16,6 +16,8 @@ type network struct {
 	dim   int // of a pose: 3 in the plane, 6 in space
 	units []unit
 	ties  []usable
+
+	partial bool // there are ties that are less than a pose, or marks
 }
 
 // unit is one session with a summary. Its junctions are the variables base, base+1, ...
@@ -37,12 +39,14 @@ type usable struct {
 // unitModel is what a part of a summary says, decoded once for each summary.
 type unitModel struct {
 	poses []lie.SE3               // session_from_junction
-	part  []int32                 // junction -> connected part of the summary
+	part  []int32                 // junction, then point -> connected part of the summary
 	main  int32                   // the part with the most junctions
 	nodes []int                   // junctions that joint covers, ascending
 	joint []float64               // their joint covariance, on demand
 	pairs map[[2]int]*[36]float64 // covariances of relative poses already asked for
 	err   error                   // the part does not determine its own shape
+
+	spread []float64 // variances of the places of junctions and points, on demand
 }
 
 // layout collects the network. Ties with a missing end are left open with that said.
@@ -66,6 +70,7 @@ func (c *Coordinator) layout() *network {
 			number[id] = len(n.units)
 			n.units = append(n.units, unit{id, r, part, r.units[p], base})
 			base += int32(len(part.Junctions))
+			n.partial = n.partial || len(part.Points) > 0
 		}
 	}
 	for _, t := range c.order {
@@ -100,6 +105,7 @@ func (c *Coordinator) layout() *network {
 			t.judge(msgs.Open, "both ends lie in one session: a loop closure belongs to its robot", msgs.Evidence{})
 		default:
 			n.ties = append(n.ties, u)
+			n.partial = n.partial || t.sight != nil
 		}
 	}
 	return n
@@ -115,12 +121,11 @@ func newUnitModel(dim int, p *msgs.Part) *unitModel {
 	for i := range p.Junctions {
 		m.poses[i] = lie.FromQuat(p.Junctions[i].Pose.T, p.Junctions[i].Pose.Q)
 	}
-	g := posegraph.New(dim, m.poses)
-	addCliques(p, m.poses, g.AddCliques(), 0)
+	g := (&unit{part: p, model: m}).alone(dim)
 	var count int
 	m.part, count = g.Components()
 	size := make([]int, count)
-	for _, k := range m.part {
+	for _, k := range m.part[:len(m.poses)] {
 		size[k]++
 	}
 	for k := range size {
@@ -131,10 +136,10 @@ func newUnitModel(dim int, p *msgs.Part) *unitModel {
 	return m
 }
 
-// inMain tells whether a junction belongs to the main part.
+// inMain tells whether a junction, or a point numbered after the junctions, belongs to the main part.
 func (m *unitModel) inMain(junction int) bool { return m.part[junction] == m.main }
 
-// cliques adds the factors of u to a batch, its junctions being variables from base on.
+// cliques adds the factors of u over poses alone to a batch, its junctions being variables from base on.
 func (u *unit) cliques(to *posegraph.Cliques, base int32) {
 	addCliques(u.part, u.model.poses, to, base)
 }
@@ -142,6 +147,9 @@ func (u *unit) cliques(to *posegraph.Cliques, base int32) {
 func addCliques(p *msgs.Part, poses []lie.SE3, to *posegraph.Cliques, base int32) {
 	for i := range p.Cliques {
 		c := &p.Cliques[i]
+		if len(c.Points) > 0 {
+			continue
+		}
 		nodes, at := make([]int32, len(c.Nodes)), make([]lie.SE3, len(c.Nodes))
 		for k, v := range c.Nodes {
 			nodes[k], at[k] = base+int32(v), poses[v]
@@ -168,8 +176,7 @@ func (u *unit) prepare(dim int, nodes []int) {
 	if slices.Equal(m.nodes, nodes) {
 		return
 	}
-	g := posegraph.New(dim, append([]lie.SE3(nil), m.poses...))
-	u.cliques(g.AddCliques(), 0)
+	g := u.alone(dim)
 	anchors := g.Anchors()
 	solver, err := posegraph.NewSolver(g, anchors, sparse.Options{})
 	if err != nil {

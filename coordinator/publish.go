@@ -18,7 +18,7 @@ func (c *Coordinator) publish(j *joint) ([]Publish, error) {
 	c.epoch++
 	places := make(map[unitID]placement, len(j.n.units))
 	corrections := map[*robot]*msgs.Correction{}
-	clique := 0
+	clique, marked := 0, 0 // those over poses alone, those with marks
 	for u := range j.n.units {
 		unit := &j.n.units[u]
 		r := unit.robot
@@ -32,7 +32,13 @@ func (c *Coordinator) publish(j *joint) ([]Publish, error) {
 		i := j.islands[j.member[u]]
 		part := msgs.CorrectedPart{Session: unit.id.session}
 		if i.born == 0 {
-			clique += len(unit.part.Cliques)
+			for q := range unit.part.Cliques {
+				if len(unit.part.Cliques[q].Points) > 0 {
+					marked++
+				} else {
+					clique++
+				}
+			}
 			places[unit.id] = placement{datum: lie.Identity()}
 			m.Parts = append(m.Parts, part)
 			continue
@@ -51,11 +57,20 @@ func (c *Coordinator) publish(j *joint) ([]Publish, error) {
 			p.poses = append(p.poses, x)
 			part.Poses = append(part.Poses, wirePose(&x, c.cfg.Dim))
 		}
+		for k, v := range j.pointsOf[u] {
+			p.points = append(p.points, msgs.Point{Mark: unit.part.Points[k].Mark, At: j.graph.Values.Points[v]})
+		}
+		part.Points = p.points
 		places[unit.id] = p
 		part.Joined, part.IDs, part.Island = true, p.ids, i.name()
 		part.DatumFromSession = wirePose(&p.datum, c.cfg.Dim)
 		for q := range unit.part.Cliques {
 			part.CovNodes = append(part.CovNodes, unit.part.Cliques[q].Nodes)
+			if len(unit.part.Cliques[q].Points) > 0 {
+				part.Cov = append(part.Cov, j.marks.Joint(marked, sigma))
+				marked++
+				continue
+			}
 			part.Cov = append(part.Cov, j.cliques.Joint(clique, sigma))
 			clique++
 		}
@@ -125,8 +140,9 @@ type Placed struct {
 	Joined           bool
 	Island           string // names the datum; empty when not joined
 	DatumFromSession lie.SE3
-	IDs              []int64   // junctions
-	Poses            []lie.SE3 // datum_from_junction
+	IDs              []int64      // junctions
+	Poses            []lie.SE3    // datum_from_junction
+	Points           []msgs.Point // marks that it knows, in the datum
 }
 
 // Map returns the newest epoch, units by robot and session. Its slices belong to the coordinator.
@@ -142,7 +158,7 @@ func (c *Coordinator) Map() []Placed {
 			if !ok {
 				continue
 			}
-			m := Placed{Robot: id.robot, Session: id.session, Joined: p.joined, DatumFromSession: p.datum, IDs: p.ids, Poses: p.poses}
+			m := Placed{Robot: id.robot, Session: id.session, Joined: p.joined, DatumFromSession: p.datum, IDs: p.ids, Poses: p.poses, Points: p.points}
 			if p.joined {
 				m.Island = p.island.name()
 			}

@@ -95,6 +95,15 @@ func (c *Coordinator) overrule(n *network, w *weighed) {
 	w.believed, w.alone = slices.Clone(w.held), make([]opinion, len(w.held))
 	joined := false
 	for pass := range 2 { // what measures less than a pose cannot join two maps, so it comes second
+		if pass == 1 {
+			if joined {
+				w.island = n.islands(w.held)
+			}
+			c.align(n, w)
+			if c.cfg.HoldAll {
+				c.holdSights(n, w)
+			}
+		}
 		for i := range n.ties {
 			t := &n.ties[i]
 			if t.ruled == nil || t.regular != (pass == 0) {
@@ -122,7 +131,7 @@ func (c *Coordinator) overrule(n *network, w *weighed) {
 		}
 	}
 	if joined {
-		w.island = n.islands(w.held)
+		w.island = w.islands(n)
 	}
 }
 
@@ -165,7 +174,8 @@ func (c *Coordinator) weighRulings(j *joint, w *weighed) error {
 		reason, e := ruledText(t.ruled), msgs.Evidence{}
 		switch f := j.factor[i]; {
 		case t.finding.Verdict == msgs.Held:
-			e = msgs.Evidence{Statistic: j.ties.Chi2(f, &j.graph.Values), DoF: c.width(), Limit: c.limit}
+			e = msgs.Evidence{Statistic: j.chi2(i)}
+			e.Limit, e.DoF = c.limitOf(t.tie)
 			reason += fmt.Sprintf("; misclosure %.1f in the joint solution, limit %.1f", e.Statistic, e.Limit)
 			if given > 0 {
 				reason += fmt.Sprintf("; ties held by the evidence alone that contradict this solution: %d", given)
@@ -181,7 +191,8 @@ func (c *Coordinator) weighRulings(j *joint, w *weighed) error {
 			if err != nil {
 				return err
 			}
-			e = msgs.Evidence{Statistic: j.ties.Innovation(f, &j.graph.Values, sigma, &t.cov), DoF: c.width(), Limit: c.limit}
+			e = msgs.Evidence{Statistic: j.innovation(i, sigma)}
+			e.Limit, e.DoF = c.limitOf(t.tie)
 			word := "agrees with"
 			if e.Statistic >= e.Limit {
 				word = "contradicts"

@@ -17,6 +17,10 @@ type weighed struct {
 	island []int     // per unit
 	start  []lie.SE3 // per unit; nil with HoldAll
 
+	meetings []meeting      // that join units beside whole poses
+	control  int            // the island that control marks hold, -1 for none
+	apart    map[known]bool // marks that are others than those of their island
+
 	believed []bool    // per usable tie: held before rulings
 	alone    []opinion // per usable tie: of those ruled held
 }
@@ -31,9 +35,9 @@ func (c *Coordinator) weigh(n *network) weighed {
 // believe decides on the ties that nobody has ruled on.
 func (c *Coordinator) believe(n *network) weighed {
 	if c.cfg.HoldAll {
-		w := weighed{held: make([]bool, len(n.ties))}
+		w := weighed{held: make([]bool, len(n.ties)), control: -1}
 		for i := range n.ties {
-			if n.ties[i].ruled != nil {
+			if n.ties[i].ruled != nil || n.ties[i].sight != nil {
 				continue
 			}
 			if n.loose(i) {
@@ -69,6 +73,7 @@ func (c *Coordinator) believe(n *network) weighed {
 		t := &n.ties[i]
 		switch {
 		case t.ruledOut():
+		case t.sight != nil: // see align
 		case !t.regular:
 			t.judge(msgs.Open, "measures too little of a pose to be weighed", msgs.Evidence{})
 		case n.loose(i):
@@ -86,7 +91,7 @@ func (c *Coordinator) believe(n *network) weighed {
 		}
 	}
 	r := evidence.Decide(units, ties, c.cfg.Evidence)
-	w := weighed{held: make([]bool, len(n.ties)), island: r.Island, start: r.DatumFromUnit}
+	w := weighed{held: make([]bool, len(n.ties)), control: -1, island: r.Island, start: r.DatumFromUnit}
 	for k, i := range judged {
 		f := &r.Ties[k]
 		e := msgs.Evidence{Statistic: f.Statistic, DoF: f.DoF, Limit: f.Limit, Places: f.Places, Margin: float64(f.Margin)}
@@ -112,6 +117,9 @@ func (n *network) loose(i int) bool {
 
 // wild tells whether a tie claims more information than [strongest].
 func (t *tie) wild() bool {
+	if t.sight != nil {
+		return !t.sight.sound || t.sight.dof == 0
+	}
 	for i := range 6 {
 		if t.info[7*i] > strongest {
 			return true
@@ -146,7 +154,7 @@ func (u *unit) evidence(width int, node map[int]int) evidence.Unit {
 	return e
 }
 
-// islands numbers the sets of units that held ties connect, in the order of their lowest unit.
+// islands numbers the sets of units that held ties of whole poses connect, in the order of their lowest unit.
 func (n *network) islands(held []bool) []int {
 	parent := make([]int, len(n.units))
 	for i := range parent {
@@ -159,7 +167,7 @@ func (n *network) islands(held []bool) []int {
 		return i
 	}
 	for i := range n.ties {
-		if !held[i] {
+		if !held[i] || n.ties[i].sight != nil {
 			continue
 		}
 		a, b := find(n.ties[i].from), find(n.ties[i].to)

@@ -15,6 +15,8 @@ type Glimpse struct {
 	InA, InB [3]float64 // the spot, m; z is zero in the plane
 	Sigma    float64    // of its difference once the frames are aligned, m
 	Drift    float64    // variance that the places of both units had by then in their own frames, m^2
+	Named    bool       // a mark that both know by its name; see [Meet]
+	Meeting  int        // of glimpses that are not named: those with one number may be with another robot than was thought, all of them
 }
 
 // FrameOptions steer [Frames].
@@ -55,13 +57,24 @@ const (
 // another, the unit joins whose best hypothesis has most votes among the glimpses with all units of the group, so that a
 // hypothesis which contradicts a third robot loses. Units that nothing places are groups of their own.
 func Frames(units int, planar bool, glimpses []Glimpse, o FrameOptions) []Frame {
-	f := framing{planar: planar, o: o, of: map[[2]int][]Glimpse{}, frames: make([]Frame, units)}
+	f := newFraming(units, planar, glimpses, o)
+	return f.find()
+}
+
+func newFraming(units int, planar bool, glimpses []Glimpse, o FrameOptions) *framing {
+	f := &framing{planar: planar, o: o, most: mostGlimpses, mostInSpace: mostInSpace, of: map[[2]int][]Glimpse{}, frames: make([]Frame, units)}
 	for _, g := range glimpses {
 		if g.A > g.B {
 			g.A, g.B, g.InA, g.InB = g.B, g.A, g.InB, g.InA
 		}
 		f.of[[2]int{g.A, g.B}] = append(f.of[[2]int{g.A, g.B}], g)
 	}
+	return f
+}
+
+// find does the work of [Frames].
+func (f *framing) find() []Frame {
+	units := len(f.frames)
 	for a := range units {
 		for b := a + 1; b < units; b++ {
 			f.found = append(f.found, f.pair(a, b)...)
@@ -105,7 +118,11 @@ func (f *framing) relative() []Frame {
 
 type framing struct {
 	planar bool
+	level  []bool // units whose z axis points up; nil for none
 	o      FrameOptions
+
+	most, mostInSpace int // glimpses of a pair that hypotheses are made from, evenly chosen
+
 	of     map[[2]int][]Glimpse
 	found  []relation
 	frames []Frame
@@ -182,9 +199,10 @@ func squaredDistance(a, b [3]float64) float64 {
 // pair returns the hypotheses with most votes of two units, different from each other.
 func (f *framing) pair(a, b int) (best []relation) {
 	all := f.of[[2]int{a, b}]
-	most := mostGlimpses
-	if !f.planar {
-		most = mostInSpace
+	flat := f.flat(a, b)
+	most := f.most
+	if !flat {
+		most = f.mostInSpace
 	}
 	step := max(1, (len(all)+most-1)/most)
 	try := func(set ...*Glimpse) {
@@ -194,7 +212,7 @@ func (f *framing) pair(a, b int) (best []relation) {
 			from[i], to[i] = g.InB, g.InA
 			at += g.Drift / float64(len(set))
 		}
-		pose, ok := lie.FitPoints(f.planar, from[:len(set)], to[:len(set)], nil)
+		pose, ok := lie.FitPoints(flat, from[:len(set)], to[:len(set)], nil)
 		if !ok {
 			return
 		}
@@ -208,7 +226,7 @@ func (f *framing) pair(a, b int) (best []relation) {
 			if !f.apart(&all[i], &all[j]) {
 				continue
 			}
-			if f.planar {
+			if flat {
 				try(&all[i], &all[j])
 				continue
 			}
@@ -229,6 +247,9 @@ func (f *framing) pair(a, b int) (best []relation) {
 	slices.SortStableFunc(best, func(x, y relation) int { return cmp.Compare(y.score, x.score) })
 	return best
 }
+
+// flat tells whether the frames of two units differ by no more than a turn about z and a shift.
+func (f *framing) flat(a, b int) bool { return f.planar || f.level != nil && f.level[a] && f.level[b] }
 
 // apart tells whether two glimpses lie far enough apart, in both frames equally, for the direction between them to come out to
 // about a third of a radian.
@@ -271,7 +292,7 @@ func (f *framing) refine(h *relation) lie.SE3 {
 			from, to, weights = append(from, g.InB), append(to, g.InA), append(weights, 1/v)
 		}
 	}
-	if pose, ok := lie.FitPoints(f.planar, from, to, weights); ok {
+	if pose, ok := lie.FitPoints(f.flat(h.a, h.b), from, to, weights); ok {
 		return pose
 	}
 	return h.pose

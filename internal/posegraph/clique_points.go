@@ -251,3 +251,27 @@ func (c *MarkCliques) add(q *markClique, a *Assembly) {
 		r, at = r+w, at+w*w
 	}
 }
+
+// Joint returns the joint covariance of the poses of clique k, (Dim times their number)^2 row-major.
+func (c *MarkCliques) Joint(k int, sigma Covariance) []float64 {
+	q, d := &c.list[k], c.g.Dim
+	all := len(q.poses) + len(q.points)
+	n := d * len(q.poses)
+	out := make([]float64, n*n)
+	var block [36]float64
+	for a, v := range q.poses {
+		if m := sigma.Of(v); m != nil {
+			put(out, n, d*a, d*a, m, d)
+		}
+		for b := a + 1; b < len(q.poses); b++ {
+			sigma.Across(q.slots[pair(a, b, all)], block[:])
+			put(out, n, d*a, d*b, block[:], d)
+			for i := range d {
+				for j := range d {
+					out[(d*b+j)*n+d*a+i] = block[i*d+j]
+				}
+			}
+		}
+	}
+	return out
+}

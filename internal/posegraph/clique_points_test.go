@@ -80,3 +80,32 @@ func TestMarkCliqueAgainstDifferences(t *testing.T) {
 		})
 	})
 }
+
+// The joint covariance of the poses of a clique with points is that of the solver.
+func TestMarkCliqueJoint(t *testing.T) {
+	both(t, func(t *testing.T, dim int) {
+		r := random(5)
+		g := New(dim, []lie.SE3{turned(r, dim, 10, 1), turned(r, dim, 10, 1), turned(r, dim, 10, 1)})
+		g.Values.Points = [][3]float64{spot(r, dim, 5), spot(r, dim, 5)}
+		set := g.AddMarkCliques()
+		n, m := 2*dim+6, 2*dim
+		h := positive(r, n)
+		for i := range n * n {
+			if height := func(k int) bool { return dim == 3 && k >= m && (k-m)%3 == 2 }; height(i/n) || height(i%n) {
+				h[i] = 0
+			}
+		}
+		set.Add([]int32{2, 0, 1}, []lie.SE3{g.Values.Poses[2], g.Values.Poses[0], g.Values.Poses[1]}, []int32{1, 0},
+			[][3]float64{g.Values.Points[1], g.Values.Points[0]}, h, make([]float64, n))
+		s := solver(t, g, []int32{0})
+		want, err := s.Joint([]int32{2, 0, 1})
+		if err != nil {
+			t.Fatal(err)
+		}
+		sigma, err := s.Covariance()
+		if err != nil {
+			t.Fatal(err)
+		}
+		near(t, "joint covariance", set.Joint(0, sigma), want, 1e-9, 1)
+	})
+}
