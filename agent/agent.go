@@ -131,6 +131,7 @@ type Agent struct {
 	relinear  bool  // the newest correction makes it worth condensing again
 
 	applied     msgs.Epoch
+	floor       msgs.Epoch // of the newest correction before a restart
 	term        uint64
 	incarnation uint64
 	beatNS      int64

@@ -28,7 +28,7 @@ func (a *Agent) correct(c *msgs.Correction) error {
 	if c.SummaryVersion >= a.version {
 		a.answered = true
 	}
-	if c.Epoch.Compare(a.applied) <= 0 {
+	if c.Epoch.Compare(a.applied) <= 0 || c.Epoch.Compare(a.floor) < 0 {
 		return nil
 	}
 	a.applied = c.Epoch
