@@ -41,7 +41,8 @@ var (
 		"internal/robust":      append([]string{"internal/posegraph", "internal/evidence"}, ground...),
 		"internal/adjust":      append([]string{"internal/survey"}, estimation...),
 		"internal/reliability": nil,
-		"internal/audit":       append([]string{"internal/adjust", "internal/survey", "internal/report"}, estimation...),
+		"internal/certificate": append([]string{"internal/posegraph"}, ground...),
+		"internal/audit":       append([]string{"internal/adjust", "internal/certificate", "internal/survey", "internal/report"}, estimation...),
 		"partition":            append([]string{"internal/posegraph"}, ground...),
 		"msgs":                 {"msgs/internal/pb"},
 		"msgs/internal/pb":     nil,
@@ -56,7 +57,7 @@ var (
 )
 
 // pure are the packages that give the same effects for the same events on a robot, in a container and in a simulation.
-var pure = []string{"agent", "coordinator", "partition", "msgs", "internal/lie", "internal/sparse", "internal/posegraph", "internal/evidence", "internal/robust", "internal/reliability"}
+var pure = []string{"agent", "coordinator", "partition", "msgs", "internal/lie", "internal/sparse", "internal/posegraph", "internal/evidence", "internal/robust", "internal/reliability", "internal/certificate"}
 
 // Why a pure package may not import a path, or one below it.
 var forbidden = []struct{ path, why string }{
