@@ -18,14 +18,16 @@ import (
 // Config is fixed for the life of a coordinator.
 type Config struct {
 	Fleet       string
-	Dim         int    // of the survey: 2 or 3
-	Incarnation uint64 // of the base's store
-	Term        uint64 // of the lease under which it speaks
-	SolveNS     int64  // least time between two solutions, nanoseconds
-	PromptNS    int64  // the same once every robot has answered the last solution and nothing is missing
-	RetryNS     int64  // first waiting time before something unanswered is sent again; it doubles up to sixteen times
-	HoldAll     bool   // take every tie as true
-	Marks       []Mark // whose coordinates are known
+	Dim         int                  // of the survey: 2 or 3
+	Incarnation uint64               // of the base's store
+	Epoch       uint64               // number of the newest solution that an earlier coordinator made on that store
+	History     map[TieName][]Change // what earlier ones found of ties
+	Term        uint64               // of the lease under which it speaks
+	SolveNS     int64                // least time between two solutions, nanoseconds
+	PromptNS    int64                // the same once every robot has answered the last solution and nothing is missing
+	RetryNS     int64                // first waiting time before something unanswered is sent again; it doubles up to sixteen times
+	HoldAll     bool                 // take every tie as true
+	Marks       []Mark               // whose coordinates are known
 	Evidence    evidence.Options
 }
 
@@ -191,7 +193,7 @@ func New(cfg Config) *Coordinator {
 	cfg.check()
 	limit := distuv.ChiSquared{K: float64(3 * (cfg.Dim - 1))}.Quantile(acceptance)
 	c := &Coordinator{
-		cfg: cfg, limit: limit, robots: map[string]*robot{}, marks: map[string]*Mark{}, ties: map[TieName]*tie{},
+		cfg: cfg, limit: limit, epoch: cfg.Epoch, robots: map[string]*robot{}, marks: map[string]*Mark{}, ties: map[TieName]*tie{},
 		rulings: map[subject]*msgs.Ruling{}, places: map[unitID]placement{},
 	}
 	for i := range cfg.Marks {
@@ -308,6 +310,7 @@ func (c *Coordinator) takeTie(m *msgs.Tie) error {
 	}
 	t.finding = Finding{Tie: m.ID, From: m.From, To: m.To, Verdict: msgs.Open, Reason: "not yet weighed", SinceNS: c.now}
 	t.ruled = c.rulingOn(m)
+	t.history = c.cfg.History[id]
 	c.ties[id] = t
 	c.order = append(c.order, t)
 	c.dirty = true
@@ -375,9 +378,15 @@ func (c *Coordinator) takeHeartbeat(h *msgs.Heartbeat) error {
 	if r == nil {
 		return fmt.Errorf("heartbeat of %s: more than %d robots", h.Header.Robot, maxRobots)
 	}
+	if h.HighestIncarnation == math.MaxUint64 {
+		return fmt.Errorf("heartbeat of %s: incarnation %d, expected one that another can follow", r.name, h.HighestIncarnation)
+	}
 	l, err := r.journalOf(&h.Header)
 	if err != nil {
 		return err
+	}
+	if h.HighestIncarnation > c.cfg.Incarnation { // this store is newer than one that the robot has heard of, and must say so
+		c.cfg.Incarnation, c.epoch, c.dirty = h.HighestIncarnation+1, 0, true
 	}
 	r.turnTo(l)
 	r.heard = true

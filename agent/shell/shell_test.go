@@ -121,7 +121,7 @@ func until[T any](t *testing.T, from <-chan T, what string, ok func(T) bool) T {
 func ties(t *testing.T, base *bus.Client) <-chan *msgs.Tie {
 	t.Helper()
 	out := make(chan *msgs.Tie, 1000)
-	stop, err := base.Replay(deadline(t), bus.TieStream("f", "r1"), func(_ string, _ int64, b []byte) {
+	stop, _, err := base.Replay(deadline(t), bus.TieStream("f", "r1"), func(_ string, _ int64, b []byte) {
 		m, err := msgs.DecodeTie(b)
 		if err != nil {
 			t.Error(err)
@@ -249,7 +249,7 @@ func TestLargeSummariesGoInChunks(t *testing.T) {
 	s, _ := run(t, link)
 	var pieces msgs.Assembler
 	whole := make(chan []byte, 10)
-	stop, err := base.Replay(ctx, bus.SummaryStream("f"), func(subject string, _ int64, b []byte) {
+	stop, _, err := base.Replay(ctx, bus.SummaryStream("f"), func(subject string, _ int64, b []byte) {
 		at, err := msgs.ParseSubject(subject)
 		if err != nil {
 			t.Error(err)

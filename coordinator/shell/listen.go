@@ -9,9 +9,10 @@ import (
 	"selvage/msgs"
 )
 
-// listen hears what the robots say until ctx ends. It tells began whether it could start.
+// listen hears what the robots say until ctx ends. It tells began when it has heard all that the streams held, or why it could not.
 func (s *Shell) listen(ctx context.Context, began chan<- error) {
 	var stops []func()
+	var held []<-chan struct{}
 	defer func() {
 		for _, stop := range stops {
 			stop()
@@ -22,6 +23,11 @@ func (s *Shell) listen(ctx context.Context, began chan<- error) {
 			stops = append(stops, stop)
 		}
 		return err
+	}
+	replay := func(stream string, h bus.Stored) error {
+		stop, caught, err := s.link.Replay(ctx, stream, h)
+		held = append(held, caught)
+		return start(stop, err)
 	}
 	begin := func() error {
 		pieces := make(map[string]*msgs.Assembler, len(s.options.Robots))
@@ -38,7 +44,7 @@ func (s *Shell) listen(ctx context.Context, began chan<- error) {
 					}
 				}
 			}
-			err := start(s.link.Replay(ctx, bus.TieStream(s.options.Fleet, r), take(msgs.KindTie)))
+			err := replay(bus.TieStream(s.options.Fleet, r), take(msgs.KindTie))
 			if err != nil {
 				return err
 			}
@@ -50,13 +56,21 @@ func (s *Shell) listen(ctx context.Context, began chan<- error) {
 				return err
 			}
 		}
-		return start(s.link.Replay(ctx, bus.SummaryStream(s.options.Fleet), func(subject string, storedNS int64, b []byte) {
+		return replay(bus.SummaryStream(s.options.Fleet), func(subject string, storedNS int64, b []byte) {
 			if s.door.Admit(s.now(), subject, storedNS, b) {
 				s.summary(ctx, pieces, subject, storedNS, b)
 			}
-		}))
+		})
 	}
-	began <- begin()
+	err := begin()
+	for i := 0; err == nil && i < len(held); i++ {
+		select {
+		case <-held[i]:
+		case <-ctx.Done():
+			err = ctx.Err()
+		}
+	}
+	began <- err
 	<-ctx.Done()
 }
 

@@ -38,6 +38,9 @@ func (s *Shell) send(ctx context.Context, to lane, p coordinator.Publish) error 
 		}
 	}
 	if to.kind != msgs.KindVerdict {
+		if s.options.Lease != nil {
+			return s.options.Lease.PublishNewest(ctx, subject, payload)
+		}
 		return s.link.PublishNewest(ctx, subject, payload)
 	}
 	v, err := msgs.DecodeVerdict(p.Payload)

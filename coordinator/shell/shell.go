@@ -8,8 +8,10 @@
 // newer correction, want or verdict takes the place of an older one of the same robot or tie that is not sent yet.
 //
 // Ties are read from the beginning of their streams, and of summaries the newest that are kept, each time the shell starts: the
-// streams are the memory of the base, and a coordinator that was killed comes back to what it knew, under a higher [Incarnation].
-// The core drops what it has seen.
+// streams are the memory of the base, and a coordinator that was killed comes back to what it knew. The core drops what it has seen.
+//
+// [Lead] runs one shell after another: it waits for the lease of the fleet, speaks while that lasts, and waits again. What a
+// coordinator sends after it has lost the lease is refused by the server, and what a robot has from a later term is never replaced.
 //
 // The shell signs what it sends, and the core hears nothing that its robot has not signed.
 package shell
@@ -37,6 +39,8 @@ type Options struct {
 	Robots []string      // whose streams are made and read; others are not heard
 	Tick   time.Duration // how often the core is told the time
 	Warn   func(error)   // told of what was refused and of what could not be sent; called from several goroutines
+
+	Lease *bus.Lease // under which it publishes; nil where nobody else can speak for the fleet
 
 	Signer   msgs.Signer   // signs what the base sends; nil in a fleet that does not sign
 	Verifier msgs.Verifier // knows the keys of the robots; nil in a fleet that does not sign
@@ -79,19 +83,21 @@ func (s *Shell) Run(ctx context.Context) error {
 	began := make(chan error, 1)
 	wait.Go(func() { s.out.Run(ctx, workers) })
 	wait.Go(func() { s.listen(ctx, began) })
-	tick := time.NewTicker(s.options.Tick)
-	defer tick.Stop()
+	ticker := time.NewTicker(s.options.Tick)
+	defer ticker.Stop()
+	var tick <-chan time.Time // nil until the core knows what the streams hold: a solution of half of it would be worse than the last one
 	for {
 		select {
 		case <-ctx.Done():
 			return nil
 		case err := <-began:
-			if err != nil {
+			if err != nil && ctx.Err() == nil {
 				return err
 			}
+			tick = ticker.C
 		case call := <-s.calls:
 			call()
-		case <-tick.C:
+		case <-tick:
 			s.tick()
 		}
 	}

@@ -4,7 +4,6 @@ import (
 	"context"
 	"errors"
 	"fmt"
-	"math"
 	"strings"
 	"testing"
 	"time"
@@ -155,68 +154,6 @@ func until[T any](t *testing.T, from <-chan T, what string, ok func(T) bool) T {
 }
 
 func joined(m *msgs.Correction) bool { return m.Parts[0].Joined }
-
-// TestACoordinatorComesBackToWhatItKnew joins two robots, stops the coordinator and starts another one on the same store.
-func TestACoordinatorComesBackToWhatItKnew(t *testing.T) {
-	server := serve(t)
-	base, r1, r2 := connect(t, server, "base"), connect(t, server, "r1"), connect(t, server, "r2")
-	if err := base.Prepare(deadline(t), "f", "r1", "r2"); err != nil {
-		t.Fatal(err)
-	}
-	next := func(want uint64) {
-		t.Helper()
-		if n, err := Incarnation(deadline(t), base, "f", []string{"r1", "r2"}, nil); n != want || err != nil {
-			t.Errorf("incarnation %d, error %v, want %d", n, err, want)
-		}
-	}
-	next(1)
-	_, _, stop := run(t, base, 1)
-	publish(t, r1, "up.f.r1.tie", "a", tie(t, 1))
-	publish(t, r1, "up.f.r1.summary", "", summary(t, "r1", 1, 3))
-	publish(t, r2, "up.f.r2.summary", "", summary(t, "r2", 1, 2))
-	told := corrections(t, r2, "r2")
-	m := until(t, told, "correction that joins r2", joined)
-	if at := m.Parts[0].DatumFromSession.T; math.Abs(at[0])+math.Abs(at[1]-2)+math.Abs(at[2]) > 1e-12 {
-		t.Errorf("r2 stands at %v, want 0, 2, 0", at)
-	}
-	verdicts := make(chan *msgs.Verdict, 100)
-	end, err := r1.Consume(deadline(t), bus.VerdictStream("f"), "r1", func(_ string, b []byte) error {
-		v, err := msgs.DecodeVerdict(b)
-		if err == nil {
-			verdicts <- v
-		}
-		return nil
-	})
-	if err != nil {
-		t.Fatal(err)
-	}
-	defer end()
-	if v := until(t, verdicts, "verdict", func(v *msgs.Verdict) bool { return v.Verdict == msgs.Held }); v.Tie != "tie1" {
-		t.Errorf("verdict on %s", v.Tie)
-	}
-	stop()
-
-	publish(t, r1, "up.f.r1.tie", "b", tie(t, 2)) // while nobody listens
-	publish(t, r2, "up.f.r2.summary", "", summary(t, "r2", 2, 4))
-	next(2)
-	s, _, stop := run(t, base, 2)
-	defer stop()
-	m = until(t, told, "correction of the new coordinator", func(m *msgs.Correction) bool {
-		return m.Epoch.Incarnation == 2 && joined(m) && m.SummaryVersion == 2
-	})
-	if len(m.Parts[0].IDs) != 4 {
-		t.Errorf("correction of %d junctions, want 4", len(m.Parts[0].IDs))
-	}
-	until(t, verdicts, "verdict on the second tie", func(v *msgs.Verdict) bool { return v.Tie == "tie2" && v.Epoch.Incarnation == 2 })
-	err = s.Do(deadline(t), func(c *coordinator.Coordinator) {
-		if f := c.Findings(); len(f) != 2 || f[0].Tie != "tie1" || f[1].Tie != "tie2" {
-			t.Errorf("ties %+v", f)
-		}
-	})
-	if err != nil {
-		t.Error(err)
-	}
-}
 
 // TestLargeSummariesArePutTogether publishes one in chunks, out of order, while an older one stands whole.
 func TestLargeSummariesArePutTogether(t *testing.T) {

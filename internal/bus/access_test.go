@@ -310,7 +310,7 @@ func TestReplySubjectsCarryNoTextOfTheRobot(t *testing.T) {
 			stream = TieStream("f", "r2")
 		}
 		landed, h := inbox()
-		stop, err := g.link.Replay(ctx, stream, func(at string, _ int64, b []byte) {
+		stop, _, err := g.link.Replay(ctx, stream, func(at string, _ int64, b []byte) {
 			if at == subject {
 				h(at, b)
 			}

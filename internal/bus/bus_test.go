@@ -1,6 +1,7 @@
 package bus
 
 import (
+	"bytes"
 	"context"
 	"errors"
 	"fmt"
@@ -99,7 +100,7 @@ func TestTiesAreKeptOncePerRobot(t *testing.T) {
 
 	got, h := inbox()
 	for _, r := range []string{"r1", "r2"} {
-		stop, err := base.Replay(ctx, TieStream("f", r), timed(h))
+		stop, _, err := base.Replay(ctx, TieStream("f", r), timed(h))
 		if err != nil {
 			t.Fatal(err)
 		}
@@ -134,7 +135,7 @@ func TestFullStreamRefuses(t *testing.T) {
 		t.Fatal("another robot is kept out:", err)
 	}
 	got, h := inbox()
-	stop, err := base.Replay(ctx, TieStream("f", "r1"), timed(h))
+	stop, _, err := base.Replay(ctx, TieStream("f", "r1"), timed(h))
 	if err != nil {
 		t.Fatal(err)
 	}
@@ -219,7 +220,7 @@ func TestOnlyTheNewestSummaryIsKept(t *testing.T) {
 		t.Fatalf("%q at %d, %v", payload, sequence, err)
 	}
 	got, h := inbox()
-	stop, err := base.Replay(ctx, SummaryStream("f"), timed(h))
+	stop, _, err := base.Replay(ctx, SummaryStream("f"), timed(h))
 	if err != nil {
 		t.Fatal(err)
 	}
@@ -442,11 +443,15 @@ func TestLease(t *testing.T) {
 		t.Fatal(err)
 	}
 	const lease, corr = "down.f._lease", "down.f.r1.corr"
-	first, err := one.TakeLease(ctx, "f", lease, []byte("one"), time.Second)
+	valid := func(b []byte) bool { return !bytes.HasPrefix(b, []byte("rubbish")) }
+	if err := two.PublishNewest(ctx, lease, []byte("rubbish before anybody has it")); err != nil {
+		t.Fatal(err)
+	}
+	first, err := one.TakeLease(ctx, "f", lease, []byte("one"), time.Second, valid)
 	if err != nil {
 		t.Fatal(err)
 	}
-	if _, err := two.TakeLease(ctx, "f", lease, []byte("two"), time.Second); !errors.Is(err, ErrLeaseHeld) {
+	if _, err := two.TakeLease(ctx, "f", lease, []byte("two"), time.Second, valid); !errors.Is(err, ErrLeaseHeld) {
 		t.Fatal("taken twice:", err)
 	}
 	for range 3 {
@@ -455,6 +460,22 @@ func TestLease(t *testing.T) {
 		}
 		if err := first.PublishNewest(ctx, corr, []byte("from one")); err != nil {
 			t.Fatal(err)
+		}
+	}
+
+	// What somebody else has put there does not take it away.
+	for _, what := range []func() error{
+		func() error { return first.Renew(ctx, []byte("one")) },
+		func() error { return first.PublishNewest(ctx, corr, []byte("from one")) },
+	} {
+		if err := two.PublishNewest(ctx, lease, []byte("rubbish")); err != nil {
+			t.Fatal(err)
+		}
+		if _, err := two.TakeLease(ctx, "f", lease, []byte("one"), time.Second, func([]byte) bool { return true }); !errors.Is(err, ErrLeaseHeld) {
+			t.Fatal("taken from under a message that counts:", err)
+		}
+		if err := what(); err != nil {
+			t.Fatal("rubbish in the way:", err)
 		}
 	}
 
@@ -470,7 +491,7 @@ func TestLease(t *testing.T) {
 	// The first holder pauses, the second has it once it has run out.
 	var second *Lease
 	for second == nil {
-		second, err = two.TakeLease(ctx, "f", lease, []byte("two"), time.Second)
+		second, err = two.TakeLease(ctx, "f", lease, []byte("two"), time.Second, valid)
 		if err != nil && !errors.Is(err, ErrLeaseHeld) {
 			t.Fatal(err)
 		}

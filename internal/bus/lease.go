@@ -23,11 +23,12 @@ const wrongSequence jetstream.ErrorCode = 10071
 
 // Lease is the right of one coordinator to speak for a fleet. It is a message that runs out: as long as it is the newest of
 // its subject, what the holder publishes through it is stored, and afterwards refused by the server, however late the
-// holder notices.
+// holder notices. A message that is not valid gives nobody the lease: it is overwritten.
 type Lease struct {
 	client          *Client
 	stream, subject string
 	ttl             time.Duration
+	valid           func(payload []byte) bool
 
 	mu       sync.Mutex // one publish at a time, since a renewal changes the sequence that the others name
 	sequence uint64
@@ -36,10 +37,11 @@ type Lease struct {
 }
 
 // TakeLease takes the lease on a subject of a fleet's correction stream, for ttl, at least a second, from now and from each
-// renewal.
-func (c *Client) TakeLease(ctx context.Context, fleet, subject string, payload []byte, ttl time.Duration) (*Lease, error) {
-	l := &Lease{client: c, stream: CorrectionStream(fleet), subject: subject, ttl: ttl}
-	err := l.put(ctx, payload)
+// renewal. Valid tells whether a message of the lease is by somebody who may hold it: the server puts replies on any subject that a
+// client names, so what is there may be rubbish.
+func (c *Client) TakeLease(ctx context.Context, fleet, subject string, payload []byte, ttl time.Duration, valid func(payload []byte) bool) (*Lease, error) {
+	l := &Lease{client: c, stream: CorrectionStream(fleet), subject: subject, ttl: ttl, valid: valid}
+	err := l.overRubbish(ctx, func() error { return l.put(ctx, payload) })
 	if errors.Is(err, ErrLeaseLost) {
 		return nil, ErrLeaseHeld
 	}
@@ -56,7 +58,7 @@ func (l *Lease) Renew(ctx context.Context, payload []byte) error {
 	if err := l.settle(ctx); err != nil {
 		return err
 	}
-	return l.put(ctx, payload)
+	return l.overRubbish(ctx, func() error { return l.put(ctx, payload) })
 }
 
 // PublishNewest is Client.PublishNewest as long as the lease lasts, and ErrLeaseLost afterwards. The subject must be in the
@@ -67,8 +69,25 @@ func (l *Lease) PublishNewest(ctx context.Context, subject string, payload []byt
 	if err := l.settle(ctx); err != nil {
 		return err
 	}
-	_, err := l.client.publish(ctx, subject, payload, jetstream.WithExpectLastSequenceForSubject(l.sequence, l.subject))
-	return lost(err)
+	return l.overRubbish(ctx, func() error {
+		_, err := l.client.publish(ctx, subject, payload, jetstream.WithExpectLastSequenceForSubject(l.sequence, l.subject))
+		return lost(err)
+	})
+}
+
+// overRubbish does something that needs the lease, and once more when a message that is not valid was in the way: what was put there
+// becomes the message that the lease goes on from.
+func (l *Lease) overRubbish(ctx context.Context, do func() error) error {
+	err := do()
+	if !errors.Is(err, ErrLeaseLost) {
+		return err
+	}
+	payload, sequence, newest := l.client.Newest(ctx, l.stream, l.subject)
+	if newest != nil || payload == nil || l.valid(payload) {
+		return err
+	}
+	l.sequence = sequence
+	return do()
 }
 
 // put stores the message of the lease after the one with the sequence known.
@@ -91,7 +110,7 @@ func (l *Lease) settle(ctx context.Context) error {
 	if err != nil {
 		return err
 	}
-	if sequence != l.sequence && !bytes.Equal(payload, l.payload) {
+	if sequence != l.sequence && !bytes.Equal(payload, l.payload) && (payload == nil || l.valid(payload)) {
 		return fmt.Errorf("bus: %s: %w", l.subject, ErrLeaseLost)
 	}
 	l.sequence, l.unsure = sequence, false

@@ -56,20 +56,42 @@ func (c *Client) Consume(ctx context.Context, stream, reader string, take func(s
 // Stored takes one message and the time at which the server stored it, nanoseconds of the server's clock.
 type Stored func(subject string, storedNS int64, payload []byte)
 
-// Replay hands over all that a stream holds, in order, and then what comes. It leaves no trace at the server.
-func (c *Client) Replay(ctx context.Context, stream string, h Stored) (stop func(), err error) {
-	r, err := c.js.OrderedConsumer(ctx, stream, jetstream.OrderedConsumerConfig{DeliverPolicy: jetstream.DeliverAllPolicy})
-	if err != nil {
-		return nil, fmt.Errorf("bus: replay %s: %w", stream, err)
+// Replay hands over all that a stream holds, in order, and then what comes. Caught is closed when all has been handed over that the
+// stream held at the beginning. It leaves no trace at the server.
+func (c *Client) Replay(ctx context.Context, stream string, h Stored) (stop func(), caught <-chan struct{}, err error) {
+	fail := func(err error) (func(), <-chan struct{}, error) {
+		return nil, nil, fmt.Errorf("bus: replay %s: %w", stream, err)
 	}
-	return c.consume(r, stream, func(m jetstream.Msg) {
+	s, err := c.js.Stream(ctx, stream)
+	if err != nil {
+		return fail(err)
+	}
+	r, err := s.OrderedConsumer(ctx, jetstream.OrderedConsumerConfig{DeliverPolicy: jetstream.DeliverAllPolicy})
+	if err != nil {
+		return fail(err)
+	}
+	done := make(chan struct{})
+	last := s.CachedInfo().State.LastSeq
+	if s.CachedInfo().State.Msgs == 0 {
+		last = 0
+	}
+	behind := last > 0
+	if !behind {
+		close(done)
+	}
+	stop, err = c.consume(r, stream, func(m jetstream.Msg) {
 		about, err := m.Metadata()
 		if err != nil {
 			c.warn(fmt.Errorf("bus: read %s: %w", stream, err))
 			return
 		}
 		h(m.Subject(), about.Timestamp.UnixNano(), m.Data())
+		if behind && about.Sequence.Stream >= last { // where the newest alone is kept, the last of the beginning may be gone
+			behind = false
+			close(done)
+		}
 	})
+	return stop, done, err
 }
 
 func (c *Client) consume(r jetstream.Consumer, stream string, h func(jetstream.Msg)) (stop func(), err error) {
