@@ -15,6 +15,7 @@ import (
 type auditCmd struct {
 	Survey  string `arg:"" help:"Folder of the survey."`
 	Out     string `short:"o" placeholder:"FOLDER" help:"Put results/ into this folder instead of the survey's own."`
+	Place   string `enum:",robust" default:"" placeholder:"HOW" help:"robust: keep control points out of the adjustment, then place the whole map on them as one piece, leaving out and naming those that contradict the others (default: control points take part, and hold the datum)."`
 	HoldAll bool   `help:"Take every tie as true, whatever its verdict."`
 	JSON    bool   `name:"json" help:"Print audit.json instead of the findings."`
 }
@@ -51,7 +52,7 @@ func (c *auditCmd) Run(ctx context.Context, con *console) error {
 	if err := s.PosesOnly(); err != nil {
 		return badInput("%s cannot be audited: %w", c.Survey, err)
 	}
-	in := audit.Input{Survey: s, Progress: p.begin}
+	in := audit.Input{Survey: s, Place: c.Place != "", Progress: p.begin}
 	if in.Verdicts, in.Decided, err = c.verdicts(ctx, s, p); err != nil {
 		return err
 	}

@@ -14,6 +14,7 @@ type Input struct {
 	Survey   *survey.Survey
 	Verdicts []survey.ResultVerdict // on the ties of the survey, at most one each; ties without one are open
 	Decided  string                 // who decided on the ties, as it is to be printed: "the coordinator, as results/verdicts.csv has it"
+	Place    bool                   // control points take no part in the adjustment: the map is placed on them afterwards, as a whole
 	Progress func(phase string)     // is told what begins; may be nil
 }
 
@@ -39,6 +40,8 @@ type Audit struct {
 	Arrived    bool        `json:"real_spread_converged"` // of the iteration that estimates it
 	Next       []Candidate `json:"next"`                  // where a further tie would help most, best first
 	Basin      string      `json:"starting_basin"`        // certified or not decided
+	BasinTest  BasinTest   `json:"starting_basin_test"`
+	Positions  *Positions  `json:"positions,omitempty"` // of marks whose places were surveyed
 
 	plan     report.Plan
 	unclosed bool // no loops were closed: ties that are no whole pose stand in the way
@@ -203,6 +206,8 @@ func Run(ctx context.Context, in Input) (*Audit, error) {
 	}{
 		{"building the pose graph", w.build},
 		{"adjusting in one piece", w.adjust},
+		{"comparing with marks of known place", w.positions},
+		{"certifying the starting basin", w.basin},
 		{"searching bridges and places", w.search},
 		{"testing every tie", w.test},
 		{"following undetected errors through the map", w.effects},

@@ -68,6 +68,7 @@ func (w *work) build() error {
 	if err != nil {
 		return err
 	}
+	w.p.Apart = w.in.Place
 	w.b, w.d = w.p.Factors, w.p.Graph.Dim
 	w.out.Keyframes = len(w.p.Keys)
 	for k, f := range w.p.Tie {

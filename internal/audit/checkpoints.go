@@ -61,6 +61,22 @@ type Claimed struct {
 	Claimed bool   `json:"claimed"`
 }
 
+// positions places the map on its control points if asked to, and compares it with all marks of known place.
+func (w *work) positions() error {
+	var placed []adjust.Placed
+	if w.in.Place {
+		var err error
+		if placed, err = w.p.Place(); err != nil {
+			return fmt.Errorf("%w in some direction (%w)", ErrUndetermined, err)
+		}
+		if err := w.covariance(); err != nil {
+			return err
+		}
+	}
+	w.out.Positions = Compare(w.p, w.s, placed)
+	return nil
+}
+
 // Compare compares the map of a problem that has been solved with the marks of known place; placed is what [adjust.Problem.Place]
 // returned, nil where it was not called. It returns nil when no such mark was seen.
 func Compare(p *adjust.Problem, s *survey.Survey, placed []adjust.Placed) *Positions {

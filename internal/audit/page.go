@@ -108,8 +108,8 @@ func (a *Audit) cautions() []string {
 	if a.hidden {
 		out = append(out, fmt.Sprintf("The plan shows %d ties, those that need an eye and then the weakest; all stand in ties.csv.", drawn))
 	}
-	if a.Basin == "not decided" {
-		out = append(out, "Whether another starting point would lead to a better map was not decided.")
+	if a.Basin == notDecided {
+		out = append(out, a.basinLine())
 	}
 	return out
 }
@@ -123,6 +123,9 @@ func (a *Audit) attention() []string {
 			all = append(all[:most:most], fmt.Sprintf("%d more %s, see the tables.", len(all)-most, rest))
 		}
 		out = append(out, all...)
+	}
+	if a.Positions != nil {
+		out = append(out, a.Positions.Lines()...)
 	}
 	out = append(out, a.failures()...)
 	var places []string
@@ -288,6 +291,7 @@ func (a *Audit) method() []string {
 		"Bridges, places and sets come from the graph, not from numbers: a bridge lies on no loop; measurements that lie on the very same loops cannot be told apart (Pritchard and Thurimella 2011). Ties within the distance at which two count as two witnesses share a place.",
 		"Loops: the ties of a spanning tree are kept, and every other held tie is compared with the map of the tree, each robot's own closures included. Sigmas: root mean square over the components.",
 		"Real spread: variance components from residuals and redundancies, repeated until they stay (Helmert's estimate as simplified by Förstner 1979), with 95 % bounds from chi-square on the redundancy.",
+		a.basinMethod(),
 		"All figures are of first order at the solution and conditional on the verdicts.",
 	}
 }

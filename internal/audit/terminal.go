@@ -8,7 +8,7 @@ import (
 
 // Text writes what needs a person's eye and the table of the weakest ties for a terminal.
 func (a *Audit) Text(w io.Writer) error {
-	for _, line := range a.attention() {
+	for _, line := range append(a.attention(), a.basinLine()) {
 		if _, err := fmt.Fprintln(w, "- "+line); err != nil {
 			return err
 		}
