@@ -63,7 +63,7 @@ func (s *Shell) hear(ctx context.Context, subject, kind string, payload []byte) 
 		return
 	}
 	var refused error
-	if err := s.call(ctx, func() { refused = s.handle(agent.Message{Kind: kind, Payload: payload}) }); err != nil {
+	if err := s.call(ctx, func() { _, refused = s.handle(agent.Message{Kind: kind, Payload: payload}) }); err != nil {
 		return // it stops
 	}
 	if refused != nil {

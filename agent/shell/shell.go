@@ -1,12 +1,15 @@
 // Package shell runs the core of an agent on a robot: it owns the bus, the clock and the goroutines that the core knows nothing
 // of.
 //
-//	front end --Measure--> owner goroutine --effects--> outbox --> bus
+//	front end --Measure--> owner goroutine --effects--> journal --> outbox --> bus
 //	bus --want, correction, verdict--^   ^--ticker
 //
 // One goroutine, the owner, touches the core. It never waits for the bus: what the core publishes goes into an outbox, where a
 // newer summary or heartbeat takes the place of an older one that is not sent yet, and ties wait side by side. What cannot be sent
 // is sent again when the link is back, and the core itself repeats what stays unanswered.
+//
+// With a [record.Store] what the front end tells is kept: nothing leaves the robot before the disk has what it came of, and what
+// was measured counts as taken when it is durable. One wait for the disk serves all that came meanwhile.
 //
 // The shell signs what it sends, and the core hears nothing that the base has not signed.
 //
@@ -22,6 +25,7 @@ import (
 	"time"
 
 	"selvage/agent"
+	"selvage/agent/record"
 	"selvage/internal/bus"
 	"selvage/internal/door"
 	"selvage/msgs"
@@ -34,6 +38,7 @@ var ErrStopped = errors.New("the agent has stopped")
 type Options struct {
 	Fleet, Robot string        // as in the configuration of the core
 	Tick         time.Duration // how often the core is told the time
+	Store        *record.Store // keeps what the front end tells; the shell's until Run has returned; nil for an agent without a disk
 	Warn         func(error)   // told of what was refused and of what could not be sent; called from several goroutines
 
 	Signer   msgs.Signer   // signs what the agent sends; nil in a fleet that does not sign
@@ -58,6 +63,7 @@ type Shell struct {
 	stopped chan struct{}
 	door    *door.Door
 	out     *bus.Outbox[lane, agent.Publish]
+	keeper  *keeper   // nil without a store
 	slot    msgs.Slot // for the next large summary; of the one worker that has it
 
 	mu      sync.Mutex
@@ -71,6 +77,9 @@ func New(core *agent.Agent, link *bus.Client, o Options) *Shell {
 	}
 	s.door = door.New(o.Fleet, []string{o.Robot}, o.Verifier, o.Warn)
 	s.out = bus.NewOutbox(s.send, o.Warn)
+	if o.Store != nil {
+		s.keeper = newKeeper(o.Store, s.put, o.Warn)
+	}
 	return s
 }
 
@@ -81,6 +90,9 @@ func (s *Shell) Run(ctx context.Context) {
 	defer close(s.stopped)
 	wait.Go(func() { s.out.Run(ctx, workers) })
 	wait.Go(func() { s.listen(ctx) })
+	if s.keeper != nil {
+		wait.Go(func() { s.keeper.run(ctx) })
+	}
 	tick := time.NewTicker(s.options.Tick)
 	defer tick.Stop()
 	for {
@@ -90,7 +102,7 @@ func (s *Shell) Run(ctx context.Context) {
 		case call := <-s.calls:
 			call()
 		case <-tick.C:
-			if err := s.handle(agent.Tick{}); err != nil {
+			if _, err := s.handle(agent.Tick{}); err != nil {
 				s.options.Warn(fmt.Errorf("tick: %w", err))
 			}
 		}
@@ -100,29 +112,49 @@ func (s *Shell) Run(ctx context.Context) {
 // now is the time of day when the shell was made plus what has passed since: it never goes back.
 func (s *Shell) now() int64 { return s.begin.UnixNano() + int64(time.Since(s.begin)) }
 
-// handle gives the core an event and puts what it publishes into the outbox. Only the owner calls it.
-func (s *Shell) handle(e agent.Event) error {
+// handle gives the core an event; what it publishes goes into the outbox, by way of the journal if there is one. Only the owner calls
+// it. It returns the number of the newest record.
+func (s *Shell) handle(e agent.Event) (record uint64, err error) {
+	if s.keeper != nil {
+		out, record, err := s.options.Store.Handle(s.now(), e)
+		s.keeper.add(out, record)
+		return record, err
+	}
 	out, err := s.core.Handle(s.now(), e)
 	for _, p := range out {
-		s.out.Put(laneOf(&p), p)
+		s.put(p)
 	}
+	return 0, err
+}
+
+func (s *Shell) put(p agent.Publish) { s.out.Put(laneOf(&p), p) }
+
+// Measure gives the agent what its front end delivers, in one go, and returns when it is durable. It stops at the first event that is
+// refused and says why.
+func (s *Shell) Measure(ctx context.Context, events ...agent.Event) error {
+	_, err := s.Take(ctx, events...)
 	return err
 }
 
-// Measure gives the agent what its front end delivers, in one go. It stops at the first event that is refused and says why.
-func (s *Shell) Measure(ctx context.Context, events ...agent.Event) error {
+// Take is Measure and tells how many events were taken. When it is not all of them and the error is not that of ctx or ErrStopped, the
+// next one was refused; those before it are durable.
+func (s *Shell) Take(ctx context.Context, events ...agent.Event) (taken int, err error) {
 	var refused error
-	err := s.call(ctx, func() {
-		for i := range events {
-			if refused = s.handle(events[i]); refused != nil {
-				return
+	var newest uint64
+	err = s.call(ctx, func() {
+		for taken < len(events) && refused == nil {
+			if newest, refused = s.handle(events[taken]); refused == nil {
+				taken++
 			}
 		}
 	})
-	if err != nil {
-		return err
+	if err == nil && s.keeper != nil {
+		err = s.keeper.wait(ctx, newest, s.stopped)
 	}
-	return refused
+	if err != nil {
+		return 0, err
+	}
+	return taken, refused
 }
 
 // Do lets f look at the core while nobody else touches it. What f keeps of it must be a copy.
@@ -144,8 +176,8 @@ func (s *Shell) call(ctx context.Context, f func()) error {
 	}
 }
 
-// Sent tells whether the outbox is empty.
-func (s *Shell) Sent() bool { return s.out.Empty() }
+// Sent tells whether nothing waits to be sent.
+func (s *Shell) Sent() bool { return (s.keeper == nil || s.keeper.empty()) && s.out.Empty() }
 
 // Refused returns how many messages were not heard, and why.
 func (s *Shell) Refused() []door.Count { return s.door.Counts() }
