@@ -177,14 +177,16 @@ func cross(a, b [3]float64) [3]float64 {
 	return [3]float64{a[1]*b[2] - a[2]*b[1], a[2]*b[0] - a[0]*b[2], a[0]*b[1] - a[1]*b[0]}
 }
 
-// weakest bounds the least eigenvalue of a positive semidefinite m from below within a factor of three: det over the sum of the
-// products of the other two.
+// weakest bounds the least eigenvalue of a positive semidefinite m from below within a factor of three: the inverse of the sum of the
+// inverses of all. It is taken from the eigenvalues, for in a matrix of rank one a determinant is rounding, and so are the minors.
 func weakest(m *lie.Mat3) float64 {
-	r0, r1, r2 := [3]float64(m[0:3]), [3]float64(m[3:6]), [3]float64(m[6:9])
-	c0, c1, c2 := cross(r1, r2), cross(r2, r0), cross(r0, r1)
-	det := r0[0]*c0[0] + r0[1]*c0[1] + r0[2]*c0[2]
-	if minors := c0[0] + c1[1] + c2[2]; minors > 0 {
-		return det / minors
+	values, _ := eigen3(m)
+	sum := 0.0
+	for _, l := range values {
+		if !(l > 0) {
+			return 0
+		}
+		sum += 1 / l
 	}
-	return 0
+	return 1 / sum
 }

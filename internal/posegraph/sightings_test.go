@@ -449,3 +449,21 @@ func TestPlacePointsByRanges(t *testing.T) {
 		}
 	})
 }
+
+// Two ranges never place a mark, wherever from: what their matrix, of rank one, leaves of a determinant is rounding.
+func TestTwoRangesPlaceNothing(t *testing.T) {
+	both(t, func(t *testing.T, dim int) {
+		r := random(7)
+		for range 200 {
+			g := New(dim, []lie.SE3{turned(r, dim, 5, 1), turned(r, dim, 5, 1)})
+			g.Values.Points = make([][3]float64, 1)
+			s := g.AddSightings(Range)
+			for k := range int32(2) {
+				s.Add(k, 0, lie.Identity(), [3]float64{}, [3]float64{15 + r.Float64()}, &lie.Mat3{1})
+			}
+			if un := PlacePoints(g); len(un) != 1 {
+				t.Fatalf("placed at %v", g.Values.Points[0])
+			}
+		}
+	})
+}
