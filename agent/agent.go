@@ -50,10 +50,12 @@ func DefaultConfig(fleet, robot string, dim int) Config {
 	}
 }
 
-// RawPoseBytes and RawMeasurementBytes are what a pose and a measurement would take if they crossed the link themselves.
+// RawPoseBytes, RawMeasurementBytes and RawSightingBytes are what a pose, a measurement and the sighting of a mark would take if they
+// crossed the link themselves.
 const (
 	RawPoseBytes        = 58
 	RawMeasurementBytes = 144
+	RawSightingBytes    = 60
 )
 
 // Event is something that happens to an agent: [Keyframe], [Relative], [Sighting], [Tie], [Message] or [Tick].
@@ -205,7 +207,7 @@ func (a *Agent) keyframe(nowNS int64, k *Keyframe) error {
 		if len(a.sessions) == msgs.MaxParts {
 			return fmt.Errorf("keyframe %d begins session %d: there are %d already, the most a summary can hold", k.ID, k.Session, msgs.MaxParts)
 		}
-		a.sessions = slices.Insert(a.sessions, i, newSession(k.Session, a.cfg.Dim))
+		a.sessions = slices.Insert(a.sessions, i, newSession(k.Session, &a.cfg))
 	}
 	if err := a.sessions[i].addKeyframe(k); err != nil {
 		return err
@@ -220,7 +222,7 @@ func (a *Agent) relative(nowNS int64, r *Relative) error {
 	if s == nil {
 		return fmt.Errorf("relative pose from %d to %d: session %d has no keyframe", r.From, r.To, r.Session)
 	}
-	if err := s.addRelative(r, a.cfg.HoldAll); err != nil {
+	if err := s.addRelative(r); err != nil {
 		return err
 	}
 	a.lastNS = nowNS
@@ -242,6 +244,10 @@ func (a *Agent) tie(nowNS int64, t *Tie) ([]Publish, error) {
 		return nil, fmt.Errorf("tie %q: session %d is not known to %s", t.ID, own.Session, a.cfg.Robot)
 	case !own.ByStamp && !s.knows(own.ID):
 		return nil, fmt.Errorf("tie %q: keyframe %d of session %d is not known to %s", t.ID, own.ID, own.Session, a.cfg.Robot)
+	case own.ByStamp:
+		if err := s.begins(own.StampNS); err != nil {
+			return nil, fmt.Errorf("tie %q: %w", t.ID, err)
+		}
 	}
 	number := a.newest + 1
 	id := t.ID
@@ -271,30 +277,29 @@ func (a *Agent) tie(nowNS int64, t *Tie) ([]Publish, error) {
 	a.rawNow += RawMeasurementBytes
 	for _, end := range [2]*msgs.KeyRef{&t.From, &t.To} {
 		if end.Robot == a.cfg.Robot {
-			a.separate(end)
+			a.separate(end, true)
 		}
 	}
 	a.records = append(a.records, record{number: number, payload: payload, sentNS: nowNS})
 	return []Publish{{msgs.KindTie, payload, number}}, nil
 }
 
-// separate makes the keyframe that a reference names a separator, if there is one and it is none yet.
-func (a *Agent) separate(k *msgs.KeyRef) {
+// separate makes the keyframe that a reference names a separator, if it is none yet. With await, a moment that the odometry has not
+// reached is kept until it has.
+func (a *Agent) separate(k *msgs.KeyRef, await bool) {
 	s := a.session(k.Session)
 	if s == nil {
 		return
 	}
-	id := k.ID
+	v, known := s.index[k.ID]
 	if k.ByStamp {
-		known := false
-		if id, known = s.resolve(k.StampNS); !known {
-			return
+		v, known = s.answer(k.StampNS)
+		if !known && await {
+			s.await(awaited{k.StampNS, -1})
 		}
-		a.wanted = true // the next summary tells which one it is
+		a.wanted = a.wanted || known // the next summary tells which one it is
 	}
-	if i, ok := s.index[id]; ok && !s.separator[i] {
-		s.separator[i] = true
-		s.separators++
+	if known && s.separate(v) {
 		a.wanted = true
 	}
 }

@@ -19,8 +19,8 @@ func (s *session) odometry(i, j int32, r *Relative) {
 	}
 }
 
-// enter notes a factor as a closure to be judged; until then it has no weight.
-func (s *session) enter(factor int32) {
+// doubt notes a factor as a closure to be judged; until then it has no weight.
+func (s *session) doubt(factor int32) {
 	s.closures = append(s.closures, factor)
 	s.factors.W[factor] = 0
 }

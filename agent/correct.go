@@ -3,10 +3,12 @@ package agent
 import (
 	"errors"
 	"fmt"
+	"math"
 	"slices"
 
 	"selvage/internal/lie"
 	"selvage/internal/posegraph"
+	"selvage/internal/robust"
 	"selvage/internal/sparse"
 	"selvage/msgs"
 )
@@ -48,7 +50,7 @@ func (a *Agent) correct(c *msgs.Correction) error {
 		if len(p.IDs) == 0 {
 			continue
 		}
-		if s.dirty || s.told == nil {
+		if s.dirty || s.told == nil || !s.bound() {
 			continue // new measurements are waiting: the next summary says it all
 		}
 		next, err := s.model()
@@ -68,22 +70,39 @@ func (s *session) followSafely(p *msgs.CorrectedPart) error {
 	if len(p.IDs) == 0 {
 		return nil
 	}
-	datum, before := s.datum, slices.Clone(s.graph.Values.Poses)
+	v := &s.graph.Values
+	datum, poses, points := s.datum, slices.Clone(v.Poses), slices.Clone(v.Points)
 	err := s.follow(p)
-	for v := 0; err == nil && v < len(before); v++ {
-		if checkPose(&s.graph.Values.Poses[v], s.dim) != nil {
-			err = fmt.Errorf("correction of session %d carries keyframe %d out of bounds", s.id, s.keys[v])
-		}
+	if err == nil {
+		err = s.check()
 	}
 	if err != nil {
 		s.datum = datum
-		copy(s.graph.Values.Poses, before)
+		copy(v.Poses, poses)
+		copy(v.Points, points)
 	}
 	return err
 }
 
-// follow moves the session's poses after its corrected junctions: these exactly, the others first by the correction interpolated
-// along the track and then by a solve of their own with the junctions fixed.
+// check refuses a map that is out of bounds.
+func (s *session) check() error {
+	for v := range s.graph.Values.Poses {
+		if checkPose(&s.graph.Values.Poses[v], s.dim) != nil {
+			return fmt.Errorf("correction of session %d carries keyframe %d out of bounds", s.id, s.keys[v])
+		}
+	}
+	for k := range s.graph.Values.Points {
+		for _, x := range s.graph.Values.Points[k] {
+			if !(math.Abs(x) <= farthest) {
+				return fmt.Errorf("correction of session %d carries mark %s out of bounds", s.id, s.marks[s.points[k]].name)
+			}
+		}
+	}
+	return nil
+}
+
+// follow moves the session's map after its corrected junctions: these exactly, the other poses first by the correction interpolated
+// along the track and the other marks with the poses that saw them, then all by a solve of their own with the junctions fixed.
 func (s *session) follow(p *msgs.CorrectedPart) error {
 	s.datum = lie.FromQuat(p.DatumFromSession.T, p.DatumFromSession.Q)
 	inverse := s.datum.Inv()
@@ -99,6 +118,35 @@ func (s *session) follow(p *msgs.CorrectedPart) error {
 	if len(moved) == 0 {
 		return nil
 	}
+	before := slices.Clone(poses)
+	s.spread(moved, target)
+	for _, v := range moved {
+		poses[v] = target[v]
+	}
+	if s.dim == 2 {
+		for v := range poses {
+			poses[v] = lie.Planar(&poses[v]).Spatial()
+		}
+	}
+	s.carry(before)
+	fixed := moved
+	for i := range p.Points {
+		m, known := s.markOf[p.Points[i].Mark]
+		if k := s.pointOf(m, known); k >= 0 {
+			at := inverse.Apply(p.Points[i].At)
+			if s.dim == 2 {
+				at[2] = 0
+			}
+			s.graph.Values.Points[k] = at
+			fixed = append(fixed, s.graph.Point(k))
+		}
+	}
+	return s.settle(fixed)
+}
+
+// spread moves the poses by the corrections of some, interpolated along the track.
+func (s *session) spread(moved []int32, target map[int32]lie.SE3) {
+	poses := s.graph.Values.Poses
 	order := s.along()
 	place := make([]int, len(order)) // variable -> place along the track
 	for i, v := range order {
@@ -126,24 +174,19 @@ func (s *session) follow(p *msgs.CorrectedPart) error {
 			poses[v] = move.Mul(poses[v])
 		}
 	}
-	for _, v := range moved {
-		poses[v] = target[v]
-	}
-	if s.dim == 2 {
-		for v := range poses {
-			poses[v] = lie.Planar(&poses[v]).Spatial()
-		}
-	}
-	return s.settle(moved)
 }
 
-// settle solves for the interior with the given variables fixed.
+// settle solves for the interior with the given variables fixed. Sightings that nobody has judged yet are left out where they contradict
+// the rest; that decides nothing.
 func (s *session) settle(fixed []int32) error {
-	s.solved = s.factors.Len()
+	s.solved = s.measured()
+	poses := len(s.keys)
 	component, count := s.graph.Components()
 	held := make([]bool, count)
 	for _, v := range fixed {
-		held[component[v]] = true
+		if int(v) < poses { // a point does not keep a part from turning
+			held[component[v]] = true
+		}
 	}
 	for v, c := range component { // a part without a corrected junction keeps its first pose
 		if !held[c] {
@@ -151,19 +194,29 @@ func (s *session) settle(fixed []int32) error {
 			fixed = append(fixed, int32(v))
 		}
 	}
-	if len(fixed) == len(s.keys) {
+	if len(fixed) == s.graph.Variables() {
 		return nil
 	}
-	if cost := s.graph.Cost(); cost > 2*float64(s.graph.Dim*s.factors.Len()) {
-		s.tryChordal(fixed, cost)
+	var fixedPoses, fixedPoints []int32
+	for _, v := range fixed {
+		if int(v) < poses {
+			fixedPoses = append(fixedPoses, v)
+		} else {
+			fixedPoints = append(fixedPoints, v-int32(poses))
+		}
 	}
+	s.tryChordal(fixedPoses, fixedPoints)
 	solver, err := posegraph.NewSolver(s.graph, fixed, sparse.Options{})
 	if err != nil {
 		return err
 	}
 	o := posegraph.DefaultOptions()
 	o.Tolerance = 1e-14
-	solver.Optimise(o)
+	if keep, doubts := s.doubts(); doubts {
+		robust.Review(s.graph, solver, robust.Options{Adjust: o, Keep: keep})
+	} else {
+		solver.Optimise(o)
+	}
 	return nil
 }
 
@@ -176,16 +229,21 @@ type Track struct {
 	IDs              []int64
 	StampsNS         []int64
 	Poses            []lie.SE3 // session_from_keyframe; DatumFromSession times these is the map in the datum
+	Marks            []Mark    // in the order they were first seen; only those that sightings place
 }
 
 // Tracks returns a copy of the agent's map, sessions ascending.
 func (a *Agent) Tracks() []Track {
 	var out []Track
 	for _, s := range a.sessions {
-		out = append(out, Track{
+		t := Track{
 			Session: s.id, Joined: s.joined, Island: s.island, DatumFromSession: s.datum, IDs: slices.Clone(s.keys),
 			StampsNS: slices.Clone(s.stamps), Poses: slices.Clone(s.graph.Values.Poses),
-		})
+		}
+		for k, m := range s.points {
+			t.Marks = append(t.Marks, Mark{s.marks[m].name, s.graph.Values.Points[k]})
+		}
+		out = append(out, t)
 	}
 	return out
 }
@@ -203,7 +261,7 @@ func (a *Agent) Settled() bool {
 		return false
 	}
 	for _, s := range a.sessions {
-		if s.dirty && s.separators > 0 {
+		if s.dirty && s.bound() || s.news() {
 			return false
 		}
 	}

@@ -210,14 +210,14 @@ type heldModel struct {
 }
 
 func held(s *session, m *model, dim int, sigma float64) heldModel {
-	g := m.graph(s.graph.Dim, m.at)
+	g := m.graph(s.graph.Dim, &m.at)
 	n := len(g.Values.Poses)
 	rng := rand.New(rand.NewPCG(5, 5))
 	springs := g.AddBetween()
 	info := sigmas(sigma, sigma)
 	h := heldModel{Graph: g}
 	for k := range n {
-		x := motion(s.told.at[s.told.condensed.Junctions[k]], rng, dim, 0.2, 0.05)
+		x := motion(s.told.at.Poses[s.told.condensed.Junctions[k]], rng, dim, 0.2, 0.05)
 		g.Values.Poses = append(g.Values.Poses, x)
 		h.fixed = append(h.fixed, int32(n+k))
 		springs.Add(int32(n+k), int32(k), lie.Identity(), &info)

@@ -1,6 +1,7 @@
 package agent
 
 import (
+	"errors"
 	"fmt"
 	"math"
 
@@ -92,18 +93,20 @@ func (a *Agent) sighting(nowNS int64, e *Sighting) error {
 	}
 	s := a.session(e.Session)
 	if s == nil {
-		return fault(fmt.Errorf("the session has no keyframe"))
-	}
-	if !e.ByStamp && !s.knows(e.ID) {
-		return fault(fmt.Errorf("keyframe %d is not known", e.ID))
+		return fault(errors.New("the session has no keyframe"))
 	}
 	if err := checkMark(e.Mark); err != nil {
 		return fault(err)
 	}
-	if _, err := e.Sight.checked(a.cfg.Dim); err != nil {
+	sight, err := e.Sight.checked(a.cfg.Dim)
+	if err != nil {
+		return fault(err)
+	}
+	if err := s.addSighting(e, &sight); err != nil {
 		return fault(err)
 	}
 	a.lastNS = nowNS
+	a.rawNow += RawSightingBytes
 	return nil
 }
 

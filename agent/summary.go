@@ -1,6 +1,7 @@
 package agent
 
 import (
+	"cmp"
 	"errors"
 	"fmt"
 	"slices"
@@ -12,57 +13,104 @@ import (
 	"selvage/partition"
 )
 
-// model is what a summary says of one session: the condensed graph and the poses it was linearised at.
+// model is what a summary says of one session: the condensed graph and the values it was linearised at.
 type model struct {
 	condensed *partition.Condensed
-	at        []lie.SE3 // of all keyframes
+	at        posegraph.Values // of all keyframes and points
+	marks     []int32          // of the points
+	seen      []string         // marks that are no junctions, ascending
 	cost      float64
 }
 
-// graph returns the model as a graph over its junctions, at the given poses of all keyframes of the session.
-func (m *model) graph(dim int, poses []lie.SE3) *posegraph.Graph {
-	j := m.condensed.Junctions
-	at := make([]lie.SE3, len(j))
-	for k, v := range j {
-		at[k] = poses[v]
+// poses returns how many of the junctions are poses; the others are points.
+func (m *model) poses() int {
+	n, _ := slices.BinarySearch(m.condensed.Junctions, int32(len(m.at.Poses)))
+	return n
+}
+
+// point returns the point that a variable is.
+func (m *model) point(v int32) int32 { return v - int32(len(m.at.Poses)) }
+
+// fixed returns the junctions as variables of the session's graph as it is now.
+func (m *model) fixed(s *session) []int32 {
+	n := m.poses()
+	out := slices.Clone(m.condensed.Junctions[:n])
+	for _, v := range m.condensed.Junctions[n:] {
+		if k := s.marks[m.marks[m.point(v)]].point; k >= 0 {
+			out = append(out, s.graph.Point(k))
+		}
 	}
-	g := posegraph.New(dim, at)
-	cliques := g.AddCliques()
+	return out
+}
+
+// graph returns the model as a graph over its junctions, at the given values of all keyframes and points of the model.
+func (m *model) graph(dim int, v *posegraph.Values) *posegraph.Graph {
+	j, n := m.condensed.Junctions, m.poses()
+	g := posegraph.New(dim, make([]lie.SE3, n))
+	for k, w := range j[:n] {
+		g.Values.Poses[k] = v.Poses[w]
+	}
+	for _, w := range j[n:] {
+		g.Values.Points = append(g.Values.Points, v.Points[m.point(w)])
+	}
+	cliques, marked := g.AddCliques(), g.AddMarkCliques()
 	for i := range m.condensed.Cliques {
 		c := &m.condensed.Cliques[i]
-		nodes, xbar := make([]int32, len(c.Nodes)), make([]lie.SE3, len(c.Nodes))
-		for k, v := range c.Nodes {
-			p, _ := slices.BinarySearch(j, v)
-			nodes[k], xbar[k] = int32(p), m.at[v]
+		var nodes, points []int32
+		var at []lie.SE3
+		var places [][3]float64
+		for _, w := range c.Nodes {
+			p, _ := slices.BinarySearch(j, w)
+			if p < n {
+				nodes, at = append(nodes, int32(p)), append(at, m.at.Poses[w])
+			} else {
+				points, places = append(points, int32(p-n)), append(places, m.at.Points[m.point(w)])
+			}
 		}
-		cliques.Add(nodes, xbar, c.H, c.B)
+		if len(points) == 0 {
+			cliques.Add(nodes, at, c.H, c.B)
+		} else {
+			marked.Add(nodes, at, points, places, c.H, c.B)
+		}
 	}
 	return g
 }
 
-// model condenses the session at its present poses.
+// model condenses the session at its present values. Of a session that is not tied to others there is only to say what it has seen.
 func (s *session) model() (*model, error) {
-	c, err := s.condense()
-	if err != nil {
-		return nil, err
+	m := &model{cost: s.graph.Cost(), marks: slices.Clone(s.points)}
+	if s.bound() {
+		c, err := s.condense()
+		if err != nil {
+			return nil, err
+		}
+		m.condensed = c
+	} else {
+		m.condensed = &partition.Condensed{Junctions: []int32{0}}
 	}
-	return &model{condensed: c, at: slices.Clone(s.graph.Values.Poses), cost: s.graph.Cost()}, nil
+	m.at = posegraph.Values{Poses: slices.Clone(s.graph.Values.Poses), Points: slices.Clone(s.graph.Values.Points)}
+	told := make([]bool, len(m.marks))
+	for _, v := range m.condensed.Junctions[m.poses():] {
+		told[m.point(v)] = true
+	}
+	m.seen = s.names(func(k int) bool { return !told[k] })
+	return m, nil
 }
 
 // change estimates by how much F would fall if the model next were told instead of the present one, at the present poses: the two
 // disagree about the gradient there, and that disagreement moves the solution. The stiffness of the robot's own map alone is
 // counted, so the estimate is never too small. Models over different junctions differ by as much as matters: ok is false.
 func (s *session) change(next *model) (fall float64, ok bool) {
-	if s.told == nil || !slices.Equal(s.told.condensed.Junctions, next.condensed.Junctions) {
+	told := s.told
+	if told == nil || len(told.at.Poses) != len(next.at.Poses) || !slices.Equal(told.marks, next.marks) || !slices.Equal(told.condensed.Junctions, next.condensed.Junctions) {
 		return 0, false
 	}
 	if len(next.condensed.Cliques) == 0 {
 		return 0, true
 	}
-	poses := s.graph.Values.Poses
-	told, fresh := s.told.graph(s.graph.Dim, poses), next.graph(s.graph.Dim, poses)
+	stale, fresh := told.graph(s.graph.Dim, &next.at), next.graph(s.graph.Dim, &next.at)
 	fixed := fresh.Anchors()
-	a, err := posegraph.NewSolver(told, fixed, sparse.Options{})
+	a, err := posegraph.NewSolver(stale, fixed, sparse.Options{})
 	if err != nil {
 		return 0, false
 	}
@@ -80,7 +128,7 @@ func (s *session) change(next *model) (fall float64, ok bool) {
 	return fall, err == nil
 }
 
-// summarise makes the next summary of all sessions that have separators. Sessions with new measurements are brought to their own
+// summarise makes the next summary of all sessions that have separators or have seen marks. Sessions with new measurements are brought to their own
 // optimum first; the others are condensed where they are, at the base's solution. Of a session whose measurements do not hold
 // together the last summary is said again, as far as there is one; the error says why. With nothing to say the payload is nil.
 func (a *Agent) summarise() ([]byte, error) {
@@ -90,7 +138,7 @@ func (a *Agent) summarise() ([]byte, error) {
 	var refused error
 	models := make([]*model, len(a.sessions))
 	for i, s := range a.sessions {
-		if s.separators == 0 {
+		if !s.bound() && len(s.points) == 0 {
 			continue
 		}
 		next, err := s.next()
@@ -114,7 +162,8 @@ func (a *Agent) summarise() ([]byte, error) {
 	a.version++
 	for i, s := range a.sessions {
 		if models[i] != nil {
-			s.told, s.dirty = models[i], false
+			s.told = models[i]
+			s.dirty = s.dirty && !s.bound()
 		}
 	}
 	return payload, refused
@@ -122,7 +171,7 @@ func (a *Agent) summarise() ([]byte, error) {
 
 // next makes the model of the next summary.
 func (s *session) next() (*model, error) {
-	if s.dirty {
+	if s.dirty && s.bound() {
 		if err := s.optimise(); err != nil {
 			return nil, err
 		}
@@ -136,28 +185,39 @@ func (s *session) next() (*model, error) {
 
 // part writes a model for the wire.
 func (s *session) part(m *model) msgs.Part {
-	p := msgs.Part{Session: s.id, Cost: m.cost, Keyframes: len(m.at)}
-	order := slices.Clone(m.condensed.Junctions) // by id, as the wire wants it
-	slices.SortFunc(order, func(a, b int32) int {
-		if s.keys[a] < s.keys[b] {
-			return -1
-		}
-		return 1
-	})
-	place := make(map[int32]int, len(order))
-	for i, v := range order {
+	p := msgs.Part{Session: s.id, Cost: m.cost, Keyframes: len(m.at.Poses), Seen: m.seen}
+	n := m.poses()
+	place := make(map[int32]int, len(m.condensed.Junctions))
+	poses := slices.Clone(m.condensed.Junctions[:n]) // by id, as the wire wants it
+	slices.SortFunc(poses, func(a, b int32) int { return cmp.Compare(s.keys[a], s.keys[b]) })
+	for i, v := range poses {
 		place[v] = i
 		p.Junctions = append(p.Junctions, msgs.Junction{
-			ID: s.keys[v], Pose: wirePose(&m.at[v], s.dim), TravelM: s.travel[v], StampNS: s.stamps[v], Resolved: s.resolved[v],
+			ID: s.keys[v], Pose: wirePose(&m.at.Poses[v], s.dim), TravelM: s.travel[v], StampNS: s.stamps[v], Resolved: s.resolved[v],
 		})
+	}
+	name := func(v int32) string { return s.marks[m.marks[m.point(v)]].name }
+	points := slices.Clone(m.condensed.Junctions[n:]) // by name
+	slices.SortFunc(points, func(a, b int32) int { return cmp.Compare(name(a), name(b)) })
+	for i, v := range points {
+		place[v] = i
+		p.Points = append(p.Points, msgs.Point{Mark: name(v), At: m.at.Points[m.point(v)]})
+	}
+	if first, is := place[0]; is && s.level > 0 && len(m.condensed.Cliques) > 0 {
+		up := s.front[0].R
+		p.Levels = []msgs.Level{{Node: first, Up: [3]float64{up[6], up[7], up[8]}, Sigma: s.level}}
 	}
 	for i := range m.condensed.Cliques {
 		c := &m.condensed.Cliques[i]
-		nodes := make([]int, len(c.Nodes))
-		for k, v := range c.Nodes {
-			nodes[k] = place[v]
+		q := msgs.Clique{H: c.H, B: c.B}
+		for _, v := range c.Nodes {
+			if int(v) < len(m.at.Poses) {
+				q.Nodes = append(q.Nodes, place[v])
+			} else {
+				q.Points = append(q.Points, place[v])
+			}
 		}
-		p.Cliques = append(p.Cliques, msgs.Clique{Nodes: nodes, H: c.H, B: c.B})
+		p.Cliques = append(p.Cliques, q)
 	}
 	return p
 }

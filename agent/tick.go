@@ -53,12 +53,16 @@ func (a *Agent) tick(nowNS int64) ([]Publish, error) {
 
 // due tells whether a new summary is to be made now.
 func (a *Agent) due(nowNS int64) bool {
-	separators, changed := 0, a.wanted
+	bound, changed := false, a.wanted
 	for _, s := range a.sessions {
-		separators += s.separators
-		changed = changed || s.dirty
+		if s.bound() {
+			bound = true
+			changed = changed || s.dirty
+		} else if s.news() {
+			bound, changed = true, true
+		}
 	}
-	if separators == 0 || !changed && !a.relinear {
+	if !bound || !changed && !a.relinear {
 		return false
 	}
 	if a.sentNS == never {
@@ -142,7 +146,12 @@ func (a *Agent) want(nowNS int64, w *msgs.Want) ([]Publish, error) {
 	}
 	a.met(w.Epoch.Incarnation)
 	for i := range w.Keys {
-		a.separate(&w.Keys[i])
+		a.separate(&w.Keys[i], false)
+	}
+	for _, name := range w.Marks {
+		for _, s := range a.sessions {
+			a.wanted = s.want(name) || a.wanted
+		}
 	}
 	if w.Journal != a.cfg.Journal || w.Epoch.Incarnation < a.incarnation {
 		return nil, nil // it counts in another journal, or speaks for a store that is gone
