@@ -13,11 +13,10 @@ import (
 
 // meeting joins two islands of whole poses by what is less: sightings of each other, and marks that both know.
 type meeting struct {
-	units   [2]int // one of each; the second is the number of all units for the control points
-	ties    []int
-	marks   int // beside the ties
-	least   int // of both together, or it joins nothing
-	control bool
+	units [2]int // one of each; the second is the number of all units for the control points
+	ties  []int
+	marks int // beside the ties
+	least int // of both together, or it joins nothing
 }
 
 // align joins islands by ties that are less than a pose, by marks, and with the control points; it moves the starts along and holds the ties
@@ -33,8 +32,9 @@ func (c *Coordinator) align(n *network, w *weighed) {
 	for _, m := range w.island {
 		bodies = max(bodies, m+1)
 	}
+	level := c.upright(n, w, bodies)
 	glimpses, ties := c.glimpses(n, w, bodies)
-	met := evidence.Meet(bodies+1, nil, glimpses, c.cfg.Evidence)
+	met := evidence.Meet(bodies+1, level, glimpses, c.cfg.Evidence)
 	of := make([]int, bodies+1) // body -> one of its units
 	for u := len(n.units) - 1; u >= 0; u-- {
 		of[w.island[u]] = u
@@ -47,7 +47,10 @@ func (c *Coordinator) align(n *network, w *weighed) {
 		if !m.Held {
 			continue
 		}
-		x := meeting{units: [2]int{of[m.A], of[m.B]}, least: c.cfg.Dim, control: m.B == bodies}
+		x := meeting{units: [2]int{of[m.A], of[m.B]}, least: c.cfg.Dim}
+		if level[m.A] && level[m.B] {
+			x.least = 2
+		}
 		for _, k := range m.Supports {
 			if t := ties[k]; t >= 0 {
 				x.ties = append(x.ties, t)
@@ -64,7 +67,7 @@ func (c *Coordinator) align(n *network, w *weighed) {
 		}
 		w.meetings = append(w.meetings, x)
 	}
-	c.fix(n, w, &met, glimpses, of)
+	c.fix(n, w, &met, glimpses, of, level)
 	for u := range w.start {
 		b := w.island[u]
 		w.start[u] = met.Pose[b].Mul(w.start[u])
@@ -183,10 +186,10 @@ func (c *Coordinator) flat(p [3]float64) [3]float64 {
 
 // fix brings groups to the control points that these hold by their number alone: two in the plane, three in space, if nothing contradicts. A person
 // has measured them; where there are more, they are weighed like any marks.
-func (c *Coordinator) fix(n *network, w *weighed, met *evidence.Met, glimpses []evidence.Glimpse, of []int) {
+func (c *Coordinator) fix(n *network, w *weighed, met *evidence.Met, glimpses []evidence.Glimpse, of []int, level []bool) {
 	control := len(of) - 1
 	for {
-		var body int = -1
+		body, least := -1, 0
 		var from, to [][3]float64
 		var sigma []float64
 		for b := range control { // the first group that is not there
@@ -199,7 +202,11 @@ func (c *Coordinator) fix(n *network, w *weighed, met *evidence.Met, glimpses []
 					from, to, sigma = append(from, met.Pose[g.A].Apply(g.InA)), append(to, g.InB), append(sigma, g.Sigma)
 				}
 			}
-			if x, ok := fitAll(c.cfg.Dim, from, to, sigma); ok {
+			least = c.cfg.Dim
+			if level[b] && level[control] {
+				least = 2
+			}
+			if x, ok := fitAll(least == 2, from, to, sigma); ok {
 				body = b
 				// x is control_from_group.
 				if root := met.Group[control]; root == control { // nobody is there yet
@@ -219,17 +226,68 @@ func (c *Coordinator) fix(n *network, w *weighed, met *evidence.Met, glimpses []
 		if body < 0 {
 			return
 		}
-		w.meetings = append(w.meetings, meeting{units: [2]int{of[body], len(n.units)}, marks: len(from), least: c.cfg.Dim, control: true})
+		w.meetings = append(w.meetings, meeting{units: [2]int{of[body], len(n.units)}, marks: len(from), least: least})
 	}
 }
 
-// fitAll fits a motion to points of which all must agree.
-func fitAll(dim int, from, to [][3]float64, sigma []float64) (lie.SE3, bool) {
-	if len(from) < dim {
+// upright turns the islands in space that know the vertical so that z points up, and tells which these are; the last is the frame of the control
+// points.
+func (c *Coordinator) upright(n *network, w *weighed, bodies int) []bool {
+	level := make([]bool, bodies+1)
+	if c.cfg.Dim == 2 {
+		return level
+	}
+	level[bodies] = c.cfg.LevelDatum
+	turn := slices.Repeat([]lie.SE3{lie.Identity()}, bodies)
+	for u := range n.units {
+		if b, up, ok := w.island[u], [3]float64{}, false; !level[b] {
+			if up, ok = n.units[u].vertical(); ok {
+				level[b] = true
+				turn[b].R = uprighted(w.start[u].R.Apply(up))
+			}
+		}
+	}
+	for u, b := range w.island {
+		w.start[u] = turn[b].Mul(w.start[u])
+	}
+	return level
+}
+
+// vertical returns up in the frame of a unit, if its map knows that.
+func (u *unit) vertical() (up [3]float64, ok bool) {
+	for i := range u.part.Levels {
+		if l := &u.part.Levels[i]; u.model.inMain(l.Node) {
+			return u.model.poses[l.Node].R.Apply(l.Up), true
+		}
+	}
+	return up, false
+}
+
+// uprighted returns the rotation that turns a unit vector up by the shortest way.
+func uprighted(v [3]float64) lie.Mat3 {
+	flat := math.Hypot(v[0], v[1])
+	angle := math.Atan2(flat, v[2])
+	if angle == 0 {
+		return lie.Identity().R
+	}
+	axis := [3]float64{1, 0, 0}
+	if flat > 0 {
+		axis = [3]float64{v[1] / flat, -v[0] / flat, 0}
+	}
+	return lie.ExpSO3([3]float64{angle * axis[0], angle * axis[1], 0})
+}
+
+// fitAll fits a motion to points of which all must agree; flat, it turns about z alone.
+func fitAll(flat bool, from, to [][3]float64, sigma []float64) (lie.SE3, bool) {
+	least := 3
+	if flat {
+		least = 2
+	}
+	if len(from) < least {
 		return lie.Identity(), false
 	}
-	x, ok := lie.FitPoints(dim == 2, from, to, nil)
-	if !ok || len(from) < dim {
+	x, ok := lie.FitPoints(flat, from, to, nil)
+	if !ok {
 		return x, false
 	}
 	worst := slices.Max(sigma)
@@ -240,12 +298,12 @@ func fitAll(dim int, from, to [][3]float64, sigma []float64) (lie.SE3, bool) {
 		if squared(p, to[i]) > evidence.DefaultFrameOptions().Bound*sigma[i]*sigma[i] {
 			return x, false
 		}
-		far = math.Max(far, math.Sqrt(squared(to[i], to[0])))
+		far = math.Max(far, math.Hypot(to[i][0]-to[0][0], to[i][1]-to[0][1]))
 	}
 	if far < 3*worst {
 		return x, false
 	}
-	if dim == 3 {
+	if !flat {
 		for i := range to {
 			for k := range to {
 				off = math.Max(off, offLine(to[0], to[i], to[k]))

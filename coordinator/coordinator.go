@@ -28,6 +28,7 @@ type Config struct {
 	RetryNS     int64                // first waiting time before something unanswered is sent again; it doubles up to sixteen times
 	HoldAll     bool                 // take every tie as true
 	Marks       []Mark               // whose coordinates are known
+	LevelDatum  bool                 // in space: z points up in these coordinates
 	Evidence    evidence.Options
 }
 
@@ -115,6 +116,7 @@ type island struct {
 	pose   lie.SE3 // of that junction, for as long as the datum lives
 
 	control bool // no junction carries it: control marks hold it
+	level   bool // z points up
 }
 
 // controlBorn is the birth number of the datum of the control marks.

@@ -190,6 +190,7 @@ func (c *Coordinator) pose(n *network, w *weighed) (*joint, error) {
 	}
 	c.addControl(j, w)
 	c.chooseDatums(j, w, size)
+	j.addLevels()
 	j.anchorStrays()
 	best, bestCost := posegraph.Values{}, math.Inf(1)
 	for _, candidate := range []func(*joint, *weighed) bool{c.startFromLast, startFromEvidence, c.startFromTies} {
@@ -229,7 +230,7 @@ func (c *Coordinator) chooseDatums(j *joint, w *weighed, size map[int]int) {
 	for m := range j.islands {
 		u := &j.n.units[lowest[m]]
 		if m == w.control {
-			j.islands[m] = island{born: controlBorn, control: true}
+			j.islands[m] = island{born: controlBorn, control: true, level: c.cfg.LevelDatum}
 			continue
 		}
 		if size[m] < 2 {
@@ -242,11 +243,20 @@ func (c *Coordinator) chooseDatums(j *joint, w *weighed, size map[int]int) {
 		}
 		node, found := u.find(j.islands[m].key)
 		if i := &j.islands[m]; i.born == 0 || i.anchor != u.id || !found || !u.model.inMain(node) { // a new datum, or its junction is gone
+			if i.born == 0 {
+				u = j.upright(w, m, u)
+			}
 			node = slices.Index(u.model.part, u.model.main)
 			if i.born == 0 {
 				c.datums++
 				i.born = c.datums
+				if at, ok := u.levelled(); ok {
+					node, i.level = at, true
+				}
 				i.pose = u.model.poses[node]
+				if up, ok := u.vertical(); ok {
+					i.pose = lie.SE3{R: uprighted(up)}.Mul(i.pose)
+				}
 			} else if p, ok := c.places[u.id]; ok && len(p.poses) > 0 {
 				node, i.pose = u.heir(&p, node)
 			}
@@ -262,6 +272,44 @@ func (c *Coordinator) chooseDatums(j *joint, w *weighed, size map[int]int) {
 			for _, k := range j.pointsOf[u] {
 				j.anchors = append(j.anchors, j.graph.Point(k))
 			}
+		}
+	}
+}
+
+// upright returns the lowest unit of an island that knows the vertical, or else the one given.
+func (j *joint) upright(w *weighed, island int, otherwise *unit) *unit {
+	for u := range j.n.units {
+		if _, ok := j.n.units[u].levelled(); ok && w.island[u] == island {
+			return &j.n.units[u]
+		}
+	}
+	return otherwise
+}
+
+// levelled returns the first junction of the main part whose vertical is known.
+func (u *unit) levelled() (junction int, ok bool) {
+	for i := range u.part.Levels {
+		if u.model.inMain(u.part.Levels[i].Node) {
+			return u.part.Levels[i].Node, true
+		}
+	}
+	return 0, false
+}
+
+// addLevels enters what the robots know of the vertical, in datums that are level.
+func (j *joint) addLevels() {
+	var set *posegraph.Levels
+	for u := range j.n.units {
+		unit := &j.n.units[u]
+		if len(unit.part.Levels) == 0 || !j.islands[j.member[u]].level {
+			continue
+		}
+		if set == nil {
+			set = j.graph.AddLevels()
+		}
+		for i := range unit.part.Levels {
+			l := &unit.part.Levels[i]
+			set.Add(unit.base+int32(l.Node), l.Up, l.Sigma)
 		}
 	}
 }
@@ -380,7 +428,7 @@ func startFromEvidence(j *joint, w *weighed) bool {
 
 // startFromTies starts from the chordal solution over ties and the relative poses within the cliques.
 func (c *Coordinator) startFromTies(j *joint, w *weighed) bool {
-	if len(w.meetings) > 0 { // ties and maps alone do not connect the islands
+	if len(w.meetings) > 0 || len(j.points) > 0 { // whole poses alone do not connect what marks do
 		return false
 	}
 	for u := range j.n.units {

@@ -35,14 +35,16 @@ type walker struct {
 	seen   []string // point -> mark
 	ends   map[int]bool
 	wanted []string
-	version,
-	level uint64
+
+	version uint64
+	up      *[3]float64 // in the frame of its first pose, when the robot knows the vertical
 }
 
 const (
 	sensorRange = 15.0
 	linkM       = 0.02
 	linkRad     = 0.004
+	levelRad    = 0.01
 )
 
 func newYard(dim, robots, poses, marks int, seed uint64) *yard {
@@ -143,6 +145,18 @@ func (y *yard) sightInfo() (m lie.Mat3) {
 	return m
 }
 
+// upright turns the map of a robot so that z points up, but for an error of its first pose, and lets it know.
+func (r *walker) upright() {
+	first := r.real[0].Mul(lie.SE3{R: lie.ExpSO3([3]float64{levelRad * r.y.rng.NormFloat64(), levelRad * r.y.rng.NormFloat64(), 0})})
+	turn := lie.SE3{R: lie.ExpSO3([3]float64{0, 0, 2 * r.y.rng.NormFloat64()}), T: [3]float64{5, 9, 2}}
+	move := turn.Mul(first).Mul(r.g.Values.Poses[0].Inv())
+	for k, x := range r.g.Values.Poses {
+		r.g.Values.Poses[k] = move.Mul(x)
+	}
+	m := &r.g.Values.Poses[0].R
+	r.up = &[3]float64{m[6], m[7], m[8]}
+}
+
 // look lets a robot see the marks around it now and then, under the names that call gives.
 func (r *walker) look(call func(mark int) string) {
 	info := r.y.sightInfo()
@@ -241,6 +255,9 @@ func (r *walker) summarise(t testing.TB, b *base) {
 	}
 	r.version++
 	part := msgs.Part{Session: 1, Keyframes: len(r.real), Cost: r.g.Cost()}
+	if r.up != nil {
+		part.Levels = []msgs.Level{{Node: 0, Up: *r.up, Sigma: levelRad}}
+	}
 	var points []int32
 	for _, v := range c.Junctions {
 		if int(v) < len(r.real) {
@@ -394,6 +411,11 @@ func (y *yard) whole(b *base) (*posegraph.Graph, []int32) {
 		info := lie.Mat3(m.Sight.Info)
 		sets[s].Add(first[m.From.Robot]+int32(m.From.ID/10), first[m.To.Robot]+int32(m.To.ID/10), lie.Identity(), [3]float64{}, m.Sight.Value, &info)
 	}
+	for _, r := range y.robots {
+		if r.up != nil {
+			g.AddLevels().Add(first[r.name], *r.up, levelRad)
+		}
+	}
 	priors := g.AddPointPriors()
 	for i := range b.cfg.Marks {
 		m := &b.cfg.Marks[i]
@@ -488,6 +510,179 @@ func TestSightingsJoin(t *testing.T) {
 			}
 			if gap := y.gap(t, b); !(math.Abs(gap) <= 1e-9) {
 				t.Errorf("dimension %d, seed %d: gap %g", dim, seed, gap)
+			}
+		}
+	}
+}
+
+// TestLevelMapsJoin: three robots that know the vertical, of which two share three marks with the next, come to one level map, that of
+// the adjustment in one piece.
+func TestLevelMapsJoin(t *testing.T) {
+	for seed := range uint64(3) {
+		y := newYard(3, 3, 70, 24, seed)
+		for _, r := range y.robots {
+			r.upright()
+			r.look(own)
+		}
+		b := newBase(t, 3, func(c *Config) { c.HoldAll = false })
+		y.exchange(t, b, 8)
+		if n := joined(b); n != 3 {
+			t.Fatalf("seed %d: %d robots joined", seed, n)
+		}
+		if gap := y.gap(t, b); !(math.Abs(gap) <= 1e-9) {
+			t.Errorf("seed %d: gap %g", seed, gap)
+		}
+		for i, p := range b.Map() {
+			if tilt := math.Acos(p.DatumFromSession.R[8]); !(tilt < 5*levelRad) {
+				t.Errorf("seed %d: the frame of robot %d is tilted by %.3f", seed, i+1, tilt)
+			}
+		}
+	}
+}
+
+// off is how far the poses of a robot's map in the datum are from the truth, at most.
+func (r *walker) off() (worst float64) {
+	for k, x := range r.real {
+		worst = math.Max(worst, math.Sqrt(squared(x.T, r.g.Values.Poses[k].T)))
+	}
+	return worst
+}
+
+// TestControlMarksHoldTheDatum: with the least number of control marks, or more, the map stands in their coordinates, robots that
+// share nothing else too; check marks come out where they are and have no say.
+func TestControlMarksHoldTheDatum(t *testing.T) {
+	for _, dim := range []int{2, 3} {
+		for _, controls := range []int{dim, 6} {
+			for _, shared := range []bool{true, false} {
+				y := newYard(dim, 3, 70, 24, 5)
+				for _, r := range y.robots {
+					r.look(func(m int) string {
+						if shared || m < controls {
+							return own(m)
+						}
+						return r.name + own(m)
+					})
+				}
+				b := newBase(t, dim, func(c *Config) {
+					c.HoldAll = false
+					for m := range 10 {
+						k := Mark{Name: own(m), Role: Check, At: y.marks[m], Sigma: [3]float64{0.01, 0.01, 0.01}}
+						if m < controls {
+							k.Role = Control
+						} else if m < 8 {
+							continue
+						} else {
+							k.At[0] += 3 // to show that it does not matter
+						}
+						c.Marks = append(c.Marks, k)
+					}
+				})
+				y.exchange(t, b, 8)
+				for _, p := range b.Map() {
+					if p.Island != "control" {
+						t.Fatalf("dimension %d, %d control marks, shared %v: %s in the datum %q", dim, controls, shared, p.Robot, p.Island)
+					}
+				}
+				for _, r := range y.robots {
+					if off := r.off(); !(off < 1.5) {
+						t.Errorf("dimension %d, %d control marks, shared %v: %s is off by %.2f m", dim, controls, shared, r.name, off)
+					}
+				}
+				if gap := y.gap(t, b); !(math.Abs(gap) <= 1e-9) {
+					t.Errorf("dimension %d, %d control marks, shared %v: gap %g", dim, controls, shared, gap)
+				}
+				marks, err := b.Marks()
+				if err != nil {
+					t.Fatal(err)
+				}
+				checks := 0
+				for _, m := range marks {
+					if m.Role == Check && shared {
+						checks++
+						if dx := m.Known[0] - m.At[0]; !(math.Abs(dx-3) < 0.5) || !(m.Cov[0] > 0 && m.Cov[0] < 0.1) {
+							t.Errorf("dimension %d: check mark %s came out %.2f m off the coordinate that is 3 m wrong, variance %g", dim, m.Mark, dx, m.Cov[0])
+						}
+					}
+				}
+				if shared && checks != 2 {
+					t.Errorf("%d check marks", checks)
+				}
+			}
+		}
+	}
+}
+
+// TestWrongRobot: whole meetings with another robot than was thought join nothing; among true ones they are refused.
+func TestWrongRobot(t *testing.T) {
+	for _, dim := range []int{2, 3} {
+		for n := 2; n <= 6; n += 2 {
+			for seed := range uint64(3) {
+				y := newYard(dim, n+1, 120, 12, seed)
+				for _, r := range y.robots {
+					r.look(func(m int) string { return r.name + own(m) })
+				}
+				for i, a := range y.robots[:n] {
+					who := y.robots[(i+1+y.rng.IntN(n))%(n+1)]
+					o := y.robots[(i+1)%n]
+					if o == who {
+						who = y.robots[n]
+					}
+					for _, k := range y.near(a, who) {
+						y.encounter(a, o, who, k, msgs.RangeBearing)
+					}
+				}
+				b := newBase(t, dim, func(c *Config) { c.HoldAll = false })
+				y.exchange(t, b, 3)
+				if k := joined(b); k > 0 {
+					t.Errorf("dimension %d, %d robots, seed %d: %d joined", dim, n, seed, k)
+				}
+				for _, f := range b.Findings() {
+					if f.Verdict != msgs.Open || f.Reason == "" {
+						t.Errorf("dimension %d, %d robots, seed %d: %v, %s", dim, n, seed, f.Verdict, f.Reason)
+					}
+				}
+			}
+		}
+	}
+}
+
+// TestRangesAmongJoined: a range and a bearing join nothing by themselves; once marks have, the true ones are held, the false refused.
+func TestRangesAmongJoined(t *testing.T) {
+	for _, dim := range []int{2, 3} {
+		for _, marked := range []bool{false, true} {
+			y := newYard(dim, 2, 100, 24, 2)
+			for _, r := range y.robots {
+				r.look(func(m int) string {
+					if marked {
+						return own(m)
+					}
+					return r.name + own(m)
+				})
+			}
+			a, o := y.robots[0], y.robots[1]
+			near := y.near(a, o)
+			if len(near) < 4 {
+				t.Fatalf("%d meetings", len(near))
+			}
+			y.encounter(a, o, o, near[0], msgs.Range)
+			y.encounter(o, a, a, near[1], msgs.Bearing)
+			false1 := y.encounter(a, o, o, near[2], msgs.Range)
+			false1.Sight.Value[0] += 5
+			false2 := y.encounter(o, a, a, near[3], msgs.Bearing)
+			false2.Sight.Value[1] = math.Remainder(false2.Sight.Value[1]+1, 2*math.Pi)
+			b := newBase(t, dim, func(c *Config) { c.HoldAll = false })
+			y.exchange(t, b, 4)
+			for i, f := range b.Findings() { // of each robot first the true one
+				expected := []msgs.VerdictKind{msgs.Held, msgs.Refused}[b.order[i].msg.Header.Number-1]
+				if !marked {
+					expected = msgs.Open
+				}
+				if f.Verdict != expected {
+					t.Errorf("dimension %d, marks %v: tie %d is %v: %s", dim, marked, i, f.Verdict, f.Reason)
+				}
+				if marked && (f.Limit < 10 || f.Statistic == 0 || f.DoF != b.order[i].sight.dof) {
+					t.Errorf("evidence %+v", f.Evidence)
+				}
 			}
 		}
 	}

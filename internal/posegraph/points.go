@@ -134,14 +134,21 @@ func (g *Graph) absolute() bool {
 	return false
 }
 
-// held tells of each component whether control points determine its place: two apart in the plane, three not in line in space.
+// held tells of each component whether control points determine its place: two apart in the plane, three not in line in space, or two
+// that are not one above the other where something knows the vertical.
 func (g *Graph) held(component []int32, count int) []bool {
 	held := make([]bool, count)
 	if !g.absolute() {
 		return held
 	}
 	places := make([][][3]float64, count)
+	level := make([]bool, count)
 	for _, s := range g.Sets {
+		if l, ok := s.(*Levels); ok {
+			for _, v := range l.Pose {
+				level[component[v]] = true
+			}
+		}
 		c, ok := s.(*PointPriors)
 		if !ok {
 			continue
@@ -152,7 +159,12 @@ func (g *Graph) held(component []int32, count int) []bool {
 		}
 	}
 	for i, p := range places {
-		if far, off := extent(p); g.Dim == 3 {
+		if level[i] {
+			for k := range p {
+				p[k][2] = 0
+			}
+		}
+		if far, off := extent(p); g.Dim == 3 || level[i] {
 			held[i] = far > 0
 		} else {
 			held[i] = off > 1e-6*far
