@@ -3,19 +3,16 @@ package scenarios
 import (
 	"context"
 	"errors"
-	"os"
 	"testing"
 	"time"
 )
 
 // TestClosuresJudged gives every front end a share of false loop closures and demands that the agents refuse at least 95 % of them and at
-// most 2 % of the true ones, and that the fleet joins and holds no false tie as without them. With SELVAGE_LONG=1 ten seeds a scenario,
+// most 2 % of the true ones, and that the fleet joins and holds no false tie as without them. With SELVAGE_LONG=1 ten seeds a scenario (SELVAGE_SEEDS: that many),
 // each run without false closures as well; otherwise one, of which it is known that all robots join.
 func TestClosuresJudged(t *testing.T) {
-	seeds, long := uint64(1), os.Getenv("SELVAGE_LONG") == "1"
-	if long {
-		seeds = 10
-	}
+	seeds := seedsOf(t, 1, 10)
+	long := seeds > 1
 	for _, name := range BuiltinNames() {
 		t.Run(name, func(t *testing.T) {
 			var right, wrong Verdicts
