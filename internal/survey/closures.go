@@ -1,11 +1,8 @@
 package survey
 
 import (
-	"errors"
 	"fmt"
 	"math"
-	"os"
-	"path/filepath"
 	"slices"
 )
 
@@ -54,19 +51,7 @@ func WriteClosures(dir string, all []ResultClosure, note string) error {
 		w.optional(int64(c.DoF), known)
 		w.end()
 	}
-	path := filepath.Join(dir, filepath.FromSlash(closuresName))
-	if err := os.MkdirAll(filepath.Dir(path), 0o755); err != nil {
-		return fmt.Errorf("survey: %w", err)
-	}
-	tmp := path + ".new"
-	err := writeFile(tmp, w.b)
-	if err == nil {
-		err = os.Rename(tmp, path)
-	}
-	if err != nil {
-		return fmt.Errorf("survey: %w", errors.Join(err, os.Remove(tmp)))
-	}
-	return nil
+	return putResult(dir, closuresName, w.b)
 }
 
 func validVerdict(s string) bool { return s == "held" || s == "refused" || s == "open" }

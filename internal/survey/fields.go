@@ -31,6 +31,15 @@ func (t *table) int64(c int) (int64, bool) {
 	return v, err == nil
 }
 
+// uint64 returns the whole number in column c and whether it is one.
+func (t *table) uint64(c int) (uint64, bool) {
+	v, err := strconv.ParseUint(string(t.text(c)), 10, 64)
+	if err != nil {
+		t.faultAt(c, quote(string(t.text(c))), "a whole number of 64 bits")
+	}
+	return v, err == nil
+}
+
 // stamp returns the integer in column c, which may be empty or absent.
 func (t *table) stamp(c int) (ns int64, has bool) {
 	if len(t.text(c)) == 0 {
