@@ -27,12 +27,13 @@ func (r *Run) page(s *Score, places []place, poses [][]survey.ResultPose, made, 
 		Attention: r.attention(s, places, truth),
 		Plans:     []report.Plan{r.plan(places, poses, t, truth)},
 		Charts:    r.charts(s),
-		Tables:    slices.Concat([]report.Table{s.robotTable(), s.tieTable()}, s.closureTables(), []report.Table{s.acceptanceTable()}, s.islandTables(), []report.Table{r.doubtTable(truth)}),
+		Tables:    slices.Concat([]report.Table{s.robotTable(), s.tieTable()}, s.closureTables(), []report.Table{s.acceptanceTable()}, s.islandTables(), []report.Table{r.doubtTable(truth)}, r.historyTables()),
 		Method:    r.method(s),
 		Files: []report.File{
 			{Name: "summary.json", About: "the figures of this page: acceptance, robots, ties, islands"},
 			{Name: "poses.csv", About: "every keyframe in the datum of its island, m and quaternions, with covariances"},
 			{Name: "verdicts.csv", About: "every tie with its verdict, the reason and the evidence"},
+			{Name: "verdict_history.csv", About: "every change of a verdict, with its time, the solution that brought it and the reason"},
 			{Name: "closures.csv", About: "every loop closure with the verdict of its robot's agent, the reason and the evidence"},
 			{Name: "datum_from_session.csv", About: "where the frame of every session lies"},
 			{Name: "../survey.yaml", About: "what was measured: with robots/, ties.csv and truth.csv the survey behind this page"},
@@ -153,6 +154,7 @@ func (r *Run) attention(s *Score, places []place, truth []bool) []string {
 		out = append(out, fmt.Sprintf("%s and %s are held together by the single tie %s; %s.", p.a, p.b, p.tie, what))
 	}
 	out = append(out, r.ruled()...)
+	out = append(out, r.lost()...)
 	out = append(out, r.doubts()...)
 	if s.Refusals > 0 {
 		out = append(out, fmt.Sprintf("%s refused by the receiver; the first: %s", countOf(s.Refusals, "message"), r.Refusals[0]))

@@ -30,6 +30,7 @@ func (s *Score) Text(w io.Writer, width int) error {
 		ties += ", unheard " + each(func(v *Verdicts) int { return v.Unheard })
 	}
 	line("ties", ties)
+	line("changed", fmt.Sprintf("%s after the first verdict; %d held once and no more", count(s.TiesChanged, "tie"), s.TiesLost))
 	line("rounds", fmt.Sprintf("%d after the last measurement; epoch %d", s.Rounds, s.Epoch))
 	switch {
 	case s.GapRelative != nil:

@@ -110,6 +110,9 @@ func (r *Run) fill(dir string, score *Score, made, version string) error {
 	if err := survey.WriteResults(dir, slices.Concat(poses...), r.Verdicts(), r.resultDatum(places), r.note(score)); err != nil {
 		return err
 	}
+	if err := survey.WriteHistory(dir, r.Changes(), fmt.Sprintf("rehearsal %s, every verdict on every tie, from the first on; stamps on the clock of the base", score.Name)); err != nil {
+		return err
+	}
 	if err := survey.WriteClosures(dir, r.Closures(), r.note(score)); err != nil {
 		return err
 	}

@@ -6,8 +6,10 @@ import (
 	"encoding/json"
 	"encoding/xml"
 	"errors"
+	"fmt"
 	"html"
 	"io"
+	"math"
 	"os"
 	"path/filepath"
 	"reflect"
@@ -73,7 +75,7 @@ func TestWrite(t *testing.T) {
 			t.Fatalf("report.html: %v", err)
 		}
 	}
-	for _, want := range []string{s.Finding(), "seed 4, virtual time", "Position error against truth", "Bytes sent by each robot", "summary.json"} {
+	for _, want := range []string{s.Finding(), "seed 4, virtual time", "Position error against truth", "Bytes sent by each robot", "summary.json", "Verdicts that changed", fmt.Sprintf("The verdict on %d ties changed", s.TiesChanged)} {
 		if !strings.Contains(html.UnescapeString(string(data["results/report.html"])), want) {
 			t.Errorf("report.html lacks %q", want)
 		}
@@ -90,6 +92,34 @@ func TestWrite(t *testing.T) {
 	}
 	if count["held"] != s.Ties.All.Held || count["refused"] != s.Ties.All.Refused || len(verdicts) != len(back.Ties) {
 		t.Errorf("verdicts.csv: %v of %d, score %+v", count, len(verdicts), s.Ties.All)
+	}
+	// Their history ends with them, and what was tested says against which bound.
+	changes, err := survey.ReadHistory(a, back)
+	if err != nil {
+		t.Fatal(err)
+	}
+	last, turned, lost := map[string]survey.ResultChange{}, map[string]bool{}, 0
+	once := map[string]bool{}
+	for _, x := range changes {
+		if x.Old != "" && x.Old != x.New {
+			turned[x.Tie] = true
+		}
+		once[x.Tie] = once[x.Tie] || x.New == "held"
+		last[x.Tie] = x
+	}
+	for _, v := range verdicts {
+		if x, told := last[v.Tie]; told && (x.New != v.Verdict) || told != (v.Reason != unheard) {
+			t.Errorf("tie %s: %+v, its history ends with %+v", v.Tie, v, x)
+		}
+		if once[v.Tie] && v.Verdict != "held" {
+			lost++
+		}
+		if math.IsNaN(v.ChiSquare) != math.IsNaN(v.Threshold) || v.Verdict == "refused" && !(v.ChiSquare >= v.Threshold) || v.Verdict == "held" && !(v.ChiSquare < v.Threshold) {
+			t.Errorf("tie %s: %s, chi square %g, threshold %g", v.Tie, v.Verdict, v.ChiSquare, v.Threshold)
+		}
+	}
+	if s.TiesChanged != len(turned) || s.TiesLost != lost || len(turned) == 0 || changes[len(changes)-1].StampNS > r.EndNS {
+		t.Errorf("%d ties changed and %d lost, score %d and %d", len(turned), lost, s.TiesChanged, s.TiesLost)
 	}
 	places := r.places()
 	rows := 0

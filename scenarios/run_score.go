@@ -46,6 +46,10 @@ type Score struct {
 	Robots []RobotScore `json:"robots"`
 	// The ties measured before the run ended, counted by truth and verdict.
 	Ties TieScore `json:"ties"`
+	// Ties whose verdict changed after the first one.
+	TiesChanged int `json:"ties_changed"`
+	// Of them those that were held once and are held no more.
+	TiesLost int `json:"ties_lost"`
 	// The loop closures delivered before the run ended, counted by truth and verdict. Their own agents judge them.
 	Closures TieScore `json:"closures"`
 	// Sets of two and more sessions that share a datum; the first is the map's datum.
@@ -172,6 +176,7 @@ func (r *Run) Score() (*Score, error) {
 	if err := r.countTies(&out.Ties, t); err != nil {
 		return nil, err
 	}
+	r.countChanges(out)
 	r.countClosures(out)
 	if !r.Interrupted { // what had been measured but not yet used would count as a gap
 		if err := r.scoreIslands(out, places); err != nil {
