@@ -61,6 +61,9 @@ func (c *auditCmd) Run(ctx context.Context, con *console) error {
 			in.Verdicts[i] = ruled(in.Verdicts[i], r)
 		}
 	}
+	if in.History, err = survey.ReadHistory(c.Survey, s); err != nil {
+		return err
+	}
 	a, err := interruptible(ctx, func() (*audit.Audit, error) { return audit.Run(ctx, in) })
 	if errors.Is(err, audit.ErrUndetermined) {
 		return badInput("%s: %w; nothing was written", c.Survey, err)

@@ -15,6 +15,7 @@ type Input struct {
 	Verdicts []survey.ResultVerdict // on the ties of the survey, at most one each; ties without one are open
 	Decided  string                 // who decided on the ties, as it is to be printed: "the coordinator, as results/verdicts.csv has it"
 	Place    bool                   // control points take no part in the adjustment: the map is placed on them afterwards, as a whole
+	History  []survey.ResultChange  // every verdict that a tie ever had, in the order of time; may be nil
 	Progress func(phase string)     // is told what begins; may be nil
 }
 
@@ -42,6 +43,7 @@ type Audit struct {
 	Basin      string      `json:"starting_basin"`        // certified or not decided
 	BasinTest  BasinTest   `json:"starting_basin_test"`
 	Positions  *Positions  `json:"positions,omitempty"` // of marks whose places were surveyed
+	History    []Turned    `json:"verdicts_that_changed,omitempty"`
 
 	plan     report.Plan
 	unclosed bool // no loops were closed: ties that are no whole pose stand in the way
@@ -227,5 +229,6 @@ func Run(ctx context.Context, in Input) (*Audit, error) {
 			return nil, err
 		}
 	}
+	w.out.History = turned(in.History)
 	return &w.out, nil
 }

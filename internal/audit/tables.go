@@ -17,7 +17,7 @@ func (a *Audit) tables() []report.Table {
 	if a.Positions != nil {
 		out = append(out, cut(a.Positions.Table(), "audit.json"))
 	}
-	for _, t := range []report.Table{a.nextTable(), a.testTable(), a.hiddenTable(), a.leftTable(), a.setTable(), a.loopTable(), a.spreadTable()} {
+	for _, t := range []report.Table{a.nextTable(), a.testTable(), a.hiddenTable(), a.leftTable(), a.historyTable(), a.setTable(), a.loopTable(), a.spreadTable()} {
 		if len(t.Rows) > 0 {
 			out = append(out, t)
 		}
