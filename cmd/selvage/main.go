@@ -25,6 +25,7 @@ type cli struct {
 	Audit    auditCmd    `cmd:"" help:"Tell how far every tie of a finished survey is checked, and where to go next."`
 	Split    splitCmd    `cmd:"" help:"Cut the survey of one robot into connected pieces."`
 	Convert  convertCmd  `cmd:"" help:"Turn data in another format into a survey."`
+	Enrol    enrolCmd    `cmd:"" help:"Make keys, certificates and a ready folder for the base and each robot of a fleet."`
 	Rule     ruleCmd     `cmd:"" help:"Hold or refuse a tie, or all ties of a robot or session, whatever the evidence says."`
 	Show     versionCmd  `cmd:"" name:"version" help:"Print the version of the program."`
 }

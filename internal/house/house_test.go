@@ -32,6 +32,8 @@ var (
 		"internal/bus":         nil,
 		"internal/keys":        nil,
 		"internal/door":        {"internal/keys", "msgs"},
+		"internal/config":      {"internal/keys"},
+		"internal/enrol":       {"internal/config", "internal/keys"},
 		"internal/journal":     nil,
 		"internal/survey":      nil,
 		"internal/report":      nil,
@@ -52,7 +54,7 @@ var (
 		"agent/shell":          append(append([]string{"agent", "agent/record"}, outside...), cores...),
 		"coordinator/shell":    append(append([]string{"coordinator"}, outside...), cores...),
 		"scenarios":            append([]string{"internal/audit"}, below...),
-		"cmd/selvage":          append([]string{"scenarios", "internal/audit"}, below...),
+		"cmd/selvage":          append([]string{"scenarios", "internal/audit", "internal/config", "internal/enrol"}, below...),
 	}
 )
 
