@@ -40,7 +40,8 @@ func Sign(subject string, payload []byte, s Signer) ([]byte, error) {
 	return attach(body, signature), nil
 }
 
-// Verify tells whether a message was signed by the party that a subject belongs to, and for this subject.
+// Verify tells whether a message was signed by the party that a subject belongs to, and for this subject. A ruling belongs to the
+// base: whoever rules does so with its key.
 func Verify(subject string, storedNS int64, payload []byte, v Verifier) error {
 	at, err := ParseSubject(subject)
 	if err != nil {

@@ -50,8 +50,10 @@ func TestEnrol(t *testing.T) {
 
 	// A folder that cannot be written to is the environment's fault.
 	closed := filepath.Join(dir, "closed")
-	if err := os.Mkdir(closed, 0o755); err != nil {
-		t.Fatal(err)
+	for _, step := range []error{os.Mkdir(closed, 0o755), os.Chmod(dir, 0o755), os.Chmod(filepath.Dir(dir), 0o755)} {
+		if step != nil {
+			t.Fatal(step)
+		}
 	}
 	finish(t, unprivileged(prepare(closed, "enrol", "f", "--robots", "r1", "--host", "base"))).want(t, exitEnvironment, "permission denied")
 }

@@ -37,7 +37,7 @@ const (
 // Others is the sender of what cannot be said to be anybody's.
 const Others = "others"
 
-// Base is the sender of what is on the subjects of the base. No robot may be confused with it: it is no name.
+// Base is the sender of what is on the subjects of the base, rulings among them. No robot may be confused with it: it is no name.
 const Base = "(base)"
 
 var (
@@ -98,7 +98,7 @@ func (d *Door) check(subject string, storedNS int64, payload []byte) error {
 		return fmt.Errorf("%w: %w", errForeign, err)
 	case at.Fleet != d.fleet:
 		return errForeign
-	case at.Kind != msgs.KindLease && !slices.Contains(d.robots, at.Robot):
+	case at.Robot != "" && !slices.Contains(d.robots, at.Robot):
 		return errUnknown
 	case d.verifier == nil:
 		return nil
@@ -140,11 +140,11 @@ func (d *Door) refuse(nowNS int64, subject string, err error, group func(Count) 
 
 func (d *Door) classify(subject string, err error) Count {
 	c := Count{Source: Others, Reason: Unwanted}
-	if t := strings.SplitN(subject, ".", 4); len(t) > 2 && t[1] == d.fleet {
+	if t := strings.SplitN(subject, ".", 4); len(t) > 1 && t[1] == d.fleet {
 		switch {
-		case t[0] == "down":
+		case t[0] != "up":
 			c.Source = Base
-		case t[0] == "up" && slices.Contains(d.robots, t[2]):
+		case len(t) > 2 && slices.Contains(d.robots, t[2]):
 			c.Source = t[2]
 		}
 	}

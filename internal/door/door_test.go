@@ -55,7 +55,8 @@ func TestDoor(t *testing.T) {
 	d := New("f", []string{"r1", "r2", "r3"}, ring, func(err error) { told = append(told, err.Error()) })
 	body := beat(t)
 	const hb = "up.f.r1.hb"
-	if !d.Admit(0, hb, 0, sign(t, hb, body, r1)) || !d.Admit(0, "down.f._lease", 0, sign(t, "down.f._lease", body, base)) || !d.Admit(0, "up.f.r2.hb", 49, sign(t, "up.f.r2.hb", body, r2)) {
+	if !d.Admit(0, hb, 0, sign(t, hb, body, r1)) || !d.Admit(0, "down.f._lease", 0, sign(t, "down.f._lease", body, base)) || !d.Admit(0, "rule.f", 0, sign(t, "rule.f", body, base)) ||
+		!d.Admit(0, "up.f.r2.hb", 49, sign(t, "up.f.r2.hb", body, r2)) {
 		t.Fatal("kept out:", told)
 	}
 	for _, c := range []struct {
@@ -65,22 +66,22 @@ func TestDoor(t *testing.T) {
 		{hb, body}, {hb, sign(t, hb, body, r2)}, {hb, sign(t, "up.f.r1.tie", body, r1)}, {hb, []byte{0x80}},
 		{"up.f.r2.hb", sign(t, "up.f.r2.hb", body, r2)}, {"up.f.r3.hb", sign(t, "up.f.r3.hb", body, r1)},
 		{"up.f.r9.hb", body}, {"up.f.r8.tie", body}, {"up.g.r1.hb", sign(t, "up.g.r1.hb", body, r1)}, {"nonsense", nil},
-		{"up.f.r1.summary.c.0", body}, {"down.f._lease", body}, {"down.f.r1.corr", sign(t, "down.f.r1.corr", body, r1)},
+		{"up.f.r1.summary.c.0", body}, {"rule.f", sign(t, "rule.f", body, r1)}, {"rule.g", body}, {"down.f._lease", body}, {"down.f.r1.corr", sign(t, "down.f.r1.corr", body, r1)},
 	} {
 		if d.Admit(100, c.subject, 100, c.payload) {
 			t.Errorf("%s: %x came in", c.subject, c.payload)
 		}
 	}
 	want := []Count{
-		{Base, "corr", Forged, 1}, {Base, msgs.KindLease, Unsigned, 1},
-		{Others, "", Foreign, 2}, {Others, "hb", Unknown, 1}, {Others, "tie", Unknown, 1},
+		{Base, "corr", Forged, 1}, {Base, msgs.KindLease, Unsigned, 1}, {Base, "rule", Forged, 1},
+		{Others, "", Foreign, 3}, {Others, "hb", Unknown, 1}, {Others, "tie", Unknown, 1},
 		{"r1", "", Foreign, 1}, {"r1", "hb", Forged, 2}, {"r1", "hb", Malformed, 1}, {"r1", "hb", Unsigned, 1},
 		{"r2", "hb", Revoked, 1}, {"r3", "hb", Unknown, 1},
 	}
 	if diff := cmp.Diff(want, d.Counts()); diff != "" {
 		t.Errorf("counts (-want +got):\n%s", diff)
 	}
-	if want := []string{"up.f.r1.hb: no sig", "up.f.r2.hb: the key was", "up.f.r3.hb: nobody", "up.f.r9.hb: a robot", "down.f._lease: no sig"}; !begin(told, want) {
+	if want := []string{"up.f.r1.hb: no sig", "up.f.r2.hb: the key was", "up.f.r3.hb: nobody", "up.f.r9.hb: a robot", "rule.f: the sig"}; !begin(told, want) {
 		t.Errorf("told %q, want %q", told, want)
 	}
 }
