@@ -24,7 +24,7 @@ var (
 	estimation = append([]string{"internal/posegraph", "internal/evidence", "internal/robust", "internal/reliability"}, ground...)
 	cores      = append([]string{"partition", "msgs"}, estimation...) // what a protocol core may build on
 	outside    = []string{"internal/bus", "internal/keys", "internal/journal", "internal/door", "internal/survey", "internal/report"}
-	below      = append(append([]string{"internal/adjust", "agent", "agent/record", "agent/shell", "coordinator", "coordinator/shell"}, outside...), cores...)
+	below      = append(append([]string{"internal/adjust", "agent", "agent/intake", "agent/record", "agent/shell", "coordinator", "coordinator/shell"}, outside...), cores...)
 
 	rooms = map[string][]string{
 		"internal/lie":         nil,
@@ -50,6 +50,7 @@ var (
 		"msgs/internal/pb":     nil,
 		"agent":                cores,
 		"coordinator":          cores,
+		"agent/intake":         append([]string{"agent", "internal/survey"}, cores...),
 		"agent/record":         append([]string{"agent", "internal/journal"}, cores...),
 		"agent/shell":          append(append([]string{"agent", "agent/record"}, outside...), cores...),
 		"coordinator/shell":    append(append([]string{"coordinator"}, outside...), cores...),
