@@ -5,6 +5,7 @@ import (
 	"errors"
 	"fmt"
 	"path/filepath"
+	"slices"
 	"time"
 
 	"selvage/internal/audit"
@@ -21,7 +22,7 @@ type auditCmd struct {
 }
 
 func (auditCmd) Help() string {
-	return `Which ties hold the map together, how well each is checked, how large an error could hide in it and how far that would move the map, where loops do not close, whether the stated sigmas were met, and where the fleet should go next. It needs no bus. Ties keep the verdicts of results/verdicts.csv; where there is no such file, the coordinator decides on them as it would have on site.
+	return `Which ties hold the map together, how well each is checked, how large an error could hide in it and how far that would move the map, where loops do not close, whether the stated sigmas were met, and where the fleet should go next. It needs no bus. Ties keep the verdicts of results/verdicts.csv; where there is no such file, the coordinator decides on whole poses as it would have on site, and ties that are less than a pose are held if they fit the others. So are sightings of marks.
 
 It writes results/audit.html, results/audit.json and results/ties.csv.
 
@@ -49,9 +50,6 @@ func (c *auditCmd) Run(ctx context.Context, con *console) error {
 	if len(s.Robots) == 0 {
 		return badInput("%s has no robots: there is nothing to audit", c.Survey)
 	}
-	if err := s.PosesOnly(); err != nil {
-		return badInput("%s cannot be audited: %w", c.Survey, err)
-	}
 	in := audit.Input{Survey: s, Place: c.Place != "", Progress: p.begin}
 	if in.Verdicts, in.Decided, err = c.verdicts(ctx, s, p); err != nil {
 		return err
@@ -61,6 +59,7 @@ func (c *auditCmd) Run(ctx context.Context, con *console) error {
 			in.Verdicts[i] = ruled(in.Verdicts[i], r)
 		}
 	}
+	in.Verdicts = slices.DeleteFunc(in.Verdicts, func(v survey.ResultVerdict) bool { return v.Verdict == "" })
 	if in.History, err = survey.ReadHistory(c.Survey, s); err != nil {
 		return err
 	}
@@ -95,8 +94,8 @@ func (c *auditCmd) Run(ctx context.Context, con *console) error {
 	return nil
 }
 
-// verdicts returns one verdict for each tie, in the order of the survey, and who says so. It takes the loop closures that are not
-// held out of s.
+// verdicts returns one verdict for each tie, in the order of the survey, and who says so; one that is empty is left to the fit. It takes
+// the loop closures that are not held out of s.
 func (c *auditCmd) verdicts(ctx context.Context, s *survey.Survey, p *progress) ([]survey.ResultVerdict, string, error) {
 	all := make([]survey.ResultVerdict, len(s.Ties))
 	for i := range all {
@@ -132,10 +131,28 @@ func (c *auditCmd) verdicts(ctx context.Context, s *survey.Survey, p *progress) 
 	return all, decided, nil
 }
 
-// decide has agents and coordinator judge the survey, all of it delivered at once.
+// decide has agents and coordinator judge the whole poses of the survey, all delivered at once. Ties that are less than a pose get no
+// verdict.
 func (c *auditCmd) decide(ctx context.Context, s *survey.Survey, p *progress) ([]survey.ResultVerdict, string, error) {
+	const fit = "the robust fit, for all else that was seen at once"
+	out := make([]survey.ResultVerdict, len(s.Ties))
+	poses := *s
+	poses.Ties, poses.Marks, poses.Robots = nil, nil, slices.Clone(s.Robots)
+	var at []int // of each of these ties, in s
+	for i := range s.Ties {
+		out[i].Tie = s.Ties[i].ID
+		if s.Ties[i].Kind == survey.WholePose {
+			poses.Ties, at = append(poses.Ties, s.Ties[i]), append(at, i)
+		}
+	}
+	for i := range poses.Robots {
+		poses.Robots[i].Sightings = nil
+	}
+	if len(at) == 0 {
+		return out, fit, nil
+	}
 	p.begin("deciding on the ties")
-	run, err := scenarios.Virtual(ctx, scenarios.Recorded(s), scenarios.Settings{})
+	run, err := scenarios.Virtual(ctx, scenarios.Recorded(&poses), scenarios.Settings{})
 	if err != nil {
 		return nil, "", err
 	}
@@ -143,6 +160,9 @@ func (c *auditCmd) decide(ctx context.Context, s *survey.Survey, p *progress) ([
 		return nil, "", context.Canceled
 	}
 	verdicts, closures := run.Verdicts(), run.Closures()
+	for k, v := range verdicts {
+		out[at[k]] = v
+	}
 	for i := range s.Robots {
 		r := &s.Robots[i]
 		kept := make([]survey.Relative, 0, len(r.Relatives))
@@ -158,5 +178,9 @@ func (c *auditCmd) decide(ctx context.Context, s *survey.Survey, p *progress) ([
 		}
 		r.Relatives = kept
 	}
-	return verdicts, "the coordinator, from the whole survey at once", nil
+	by := "the coordinator, from the whole survey at once"
+	if len(at) < len(s.Ties) {
+		by += ", for whole poses, and " + fit
+	}
+	return out, by, nil
 }

@@ -33,6 +33,7 @@ type Problem struct {
 	Keys    []Key         // variable -> keyframe
 	Var     map[Key]int32 // keyframe -> variable
 	Tie     []int         // tie of the survey -> factor, -1 when it is no whole pose or not in the adjustment
+	Ends    [][2]int32    // tie of the survey -> variables of its two ends, -1 where there is none
 	Anchors []int32       // the fixed variables: one of each island that no control points hold
 	Island  []int32       // variable -> island
 	Islands int
@@ -41,11 +42,12 @@ type Problem struct {
 	// Apart keeps the control points out of the adjustment, for [Problem.Place] to use them afterwards. It is set before Begin.
 	Apart bool
 
-	body   []int32   // pose -> what whole relative poses hold together, mostly a session; nil before a start with sightings
-	own    []lie.SE3 // the own map of each body where it was found to stand, before the bodies were adjusted together
-	sights []sighted // sightings of marks and ties that are less than a pose, in the order of the survey
-	marks  []survey.Mark
-	placed []bool // island -> it was placed on its control points; nil before Place
+	body     []int32   // pose -> what whole relative poses hold together, mostly a session; nil before a start with sightings
+	own      []lie.SE3 // the own map of each body where it was found to stand, before the bodies were adjusted together
+	sights   []sighted // sightings of marks and ties that are less than a pose, in the order of the survey
+	marks    []survey.Mark
+	released []bool // mark of the survey -> its coordinates take no part; nil for none
+	placed   []bool // island -> it was placed on its control points; nil before Place
 
 	solver  *posegraph.Solver // nil before the analysis
 	workers int               // that it was made for
@@ -65,7 +67,14 @@ const (
 
 // New builds the pose graph of s with the ties for which held is true; nil holds all. Ties by stamp go to the keyframe at that
 // moment, which is made between two others where there is none.
-func New(s *survey.Survey, held func(tie int) bool) (*Problem, error) {
+func New(s *survey.Survey, held func(tie int) bool) (*Problem, error) { return build(s, held, false) }
+
+// NewWithEnds is [New], but makes the keyframes at the moments of all ties, so that those that are not held can be tested too.
+func NewWithEnds(s *survey.Survey, held func(tie int) bool) (*Problem, error) {
+	return build(s, held, true)
+}
+
+func build(s *survey.Survey, held func(tie int) bool, ends bool) (*Problem, error) {
 	keyframes, factors, byStamp := 0, len(s.Ties), false
 	for i := range s.Robots {
 		keyframes += len(s.Robots[i].Keyframes)
@@ -79,7 +88,7 @@ func New(s *survey.Survey, held func(tie int) bool) (*Problem, error) {
 			byStamp = byStamp || s.Robots[i].Sightings[k].ByStamp
 		}
 	}
-	p := &Problem{Keys: make([]Key, 0, keyframes), Var: make(map[Key]int32, keyframes), Tie: make([]int, len(s.Ties))}
+	p := &Problem{Keys: make([]Key, 0, keyframes), Var: make(map[Key]int32, keyframes), Tie: make([]int, len(s.Ties)), Ends: make([][2]int32, len(s.Ties))}
 	moments := moments{problem: p, tracks: map[Key]*track{}}
 	poses := make([]lie.SE3, 0, keyframes)
 	for i := range s.Robots {
@@ -105,17 +114,25 @@ func New(s *survey.Survey, held func(tie int) bool) (*Problem, error) {
 	}
 	for k := range s.Ties {
 		t := &s.Ties[k]
-		p.Tie[k] = -1
-		if held != nil && !held(k) {
+		p.Tie[k], p.Ends[k] = -1, [2]int32{-1, -1}
+		out := held != nil && !held(k)
+		if out && !ends {
 			continue
 		}
 		from, err := moments.end(t.FromRobot, t.FromSession, t.FromKey, t.FromStampNS, t.FromByStamp)
-		if err != nil {
+		if err != nil && !out {
 			return nil, fmt.Errorf("tie %s: %w", t.ID, err)
+		} else if err != nil {
+			continue
 		}
 		to, err := moments.end(t.ToRobot, t.ToSession, t.ToKey, t.ToStampNS, t.ToByStamp)
-		if err != nil {
+		if err != nil && !out {
 			return nil, fmt.Errorf("tie %s: %w", t.ID, err)
+		} else if err != nil {
+			continue
+		}
+		if p.Ends[k] = [2]int32{from, to}; out {
+			continue
 		}
 		if from == to {
 			return nil, fmt.Errorf("tie %s: both ends are keyframe %d of robot %s, session %d", t.ID, t.FromKey, t.FromRobot, t.FromSession)

@@ -211,7 +211,7 @@ func (p *Problem) priors(g *posegraph.Graph) (anchors []int32, free []bool) {
 	priors := g.AddPointPriors()
 	for k := range p.Points {
 		m := &p.marks[p.Points[k].Mark]
-		if p.Apart || m.Role != survey.ControlPoint {
+		if p.Apart || m.Role != survey.ControlPoint || p.released != nil && p.released[p.Points[k].Mark] {
 			continue
 		}
 		var info lie.Mat3

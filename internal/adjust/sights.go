@@ -25,6 +25,7 @@ type sighted struct {
 	spot  [3]float64
 	z     [3]float64
 	info  lie.Mat3
+	out   bool // for good: see LeaveOut
 	Sight
 }
 
@@ -167,6 +168,9 @@ func (p *Problem) enter(label []int32, coarse bool, lost map[place]bool) {
 	for i := range p.sights {
 		e := &p.sights[i]
 		e.Set = nil
+		if e.out {
+			continue
+		}
 		l := int32(0)
 		if label != nil {
 			l = label[e.from]

@@ -12,7 +12,7 @@ import (
 // Input is what [Run] needs.
 type Input struct {
 	Survey   *survey.Survey
-	Verdicts []survey.ResultVerdict // on the ties of the survey, at most one each; ties without one are open
+	Verdicts []survey.ResultVerdict // on the ties of the survey, at most one each; a tie without one is open or, where it is less than a pose, held if it fits
 	Decided  string                 // who decided on the ties, as it is to be printed: "the coordinator, as results/verdicts.csv has it"
 	Place    bool                   // control points take no part in the adjustment: the map is placed on them afterwards, as a whole
 	History  []survey.ResultChange  // every verdict that a tie ever had, in the order of time; may be nil
@@ -32,21 +32,25 @@ type Audit struct {
 	Adjustment Adjustment  `json:"adjustment"`
 	Islands    []Island    `json:"islands"`
 	Ties       []Tie       `json:"ties"`
-	Removal    []string    `json:"ties_to_remove"`        // held ties that data snooping strikes out, in that order
-	Bridges    []string    `json:"bridges"`               // held ties whose loss would part the fleet
-	Places     []Place     `json:"single_places"`         // whose loss would part the fleet
-	Sets       []Set       `json:"sets_not_told_apart"`   // of measurements
-	Loops      []Loop      `json:"loops"`                 // independent ones
-	Spread     []Spread    `json:"real_spread"`           // per robot and class of measurement
-	Arrived    bool        `json:"real_spread_converged"` // of the iteration that estimates it
-	Next       []Candidate `json:"next"`                  // where a further tie would help most, best first
-	Basin      string      `json:"starting_basin"`        // certified or not decided
+	Removal    []string    `json:"ties_to_remove"`           // held ties that data snooping strikes out, in that order
+	Controls   []string    `json:"control_points_to_remove"` // likewise
+	Bridges    []string    `json:"bridges"`                  // held ties whose loss would part the fleet
+	Places     []Place     `json:"single_places"`            // whose loss would part the fleet
+	Sets       []Set       `json:"sets_not_told_apart"`      // of measurements
+	Loops      []Loop      `json:"loops"`                    // independent ones
+	Marks      []Mark      `json:"marks"`                    // that tie robots to each other or to the datum
+	LeftOut    []LeftOut   `json:"sightings_left_out"`       // of marks, by robot
+	Spread     []Spread    `json:"real_spread"`              // per robot and class of measurement
+	Arrived    bool        `json:"real_spread_converged"`    // of the iteration that estimates it
+	Next       []Candidate `json:"next"`                     // where a further tie would help most, best first
+	Basin      string      `json:"starting_basin"`           // certified or not decided
 	BasinTest  BasinTest   `json:"starting_basin_test"`
 	Positions  *Positions  `json:"positions,omitempty"` // of marks whose places were surveyed
 	History    []Turned    `json:"verdicts_that_changed,omitempty"`
 
 	plan     report.Plan
 	unclosed bool // no loops were closed: ties that are no whole pose stand in the way
+	sighted  bool // there are sightings of marks or ties that are less than a pose
 	hidden   bool // the plan does not show all ties
 	main     int  // the island that the plan is in
 }
@@ -72,10 +76,11 @@ type Keyframe struct {
 
 func (k Keyframe) String() string { return fmt.Sprintf("%s %d", k.Robot, k.Key) }
 
-// Island is a set of sessions that held ties join.
+// Island is a set of sessions that held ties and marks join.
 type Island struct {
-	Sessions []string `json:"sessions"`
-	Gauge    Keyframe `json:"gauge"` // held fixed: shifts and covariances are relative to it
+	Sessions []string  `json:"sessions"`
+	Gauge    *Keyframe `json:"gauge,omitempty"`          // held fixed: shifts and covariances are relative to it
+	Controls []string  `json:"control_points,omitempty"` // that hold it instead
 }
 
 // Status is what an audit says of a tie.
@@ -91,10 +96,13 @@ const (
 	Untested    Status = "untested"    // not held, and no map to test it with
 )
 
-// Tie is the audit of one tie. Residual, its normalised form and the detectable errors are by component: x, y, z, rx, ry, rz in space,
-// x, y, rz in the plane, metres and radians along the axes of the far end.
+// Tie is the audit of one tie. Residual, its normalised form and the detectable errors are by component. Those of a pose are x, y, z,
+// rx, ry, rz in space and x, y, rz in the plane, metres and radians along the axes of the far end; those of what is less than a pose
+// are what its kind measures, a position along the axes of the sensor.
 type Tie struct {
 	ID      string   `json:"id"`
+	Kind    string   `json:"kind"`
+	Parts   []string `json:"components"`
 	From    Keyframe `json:"from"`
 	To      Keyframe `json:"to"`
 	Verdict string   `json:"verdict"`
@@ -126,10 +134,12 @@ type Tie struct {
 	Place  bool `json:"single_place"`  // the ties of its place are all that joins two parts of the fleet
 	Set    int  `json:"set,omitempty"` // from 1: index into the sets that no test can tell apart
 
-	held      bool
+	held      bool    // and in the adjustment
+	free      bool    // less than a pose, and to be held if it fits
 	placed    bool    // not held, and both ends lie in one island
-	i, j      int32   // the ends, as variables
-	factor    int     // in the problem, -1: not held
+	i, j      int32   // the ends, as variables, -1 where there is none
+	apart     float64 // distance of the ends, m
+	m         measurement
 	effect    float64 // largest reliability.Figures.Effect
 	component int     // of which it is
 }
@@ -143,7 +153,7 @@ type Shift struct {
 	Exact     bool      `json:"exact"`               // else M is a bound that the shift does not exceed
 	Component string    `json:"component,omitempty"` // of the tie
 	At        *Keyframe `json:"at,omitempty"`        // that moves most
-	Gauge     Keyframe  `json:"gauge"`               // that does not move
+	Gauge     *Keyframe `json:"gauge,omitempty"`     // that does not move; missing where control points hold the island
 }
 
 // Place is a place whose ties are all that joins two parts of the fleet.
@@ -154,9 +164,10 @@ type Place struct {
 
 // Set is a set of measurements that no test can tell apart: an error in one shows equally in all.
 type Set struct {
-	Ties     []string `json:"ties"`
-	Odometry int      `json:"odometry_steps"`
-	Closures int      `json:"closures"`
+	Ties      []string `json:"ties"`
+	Odometry  int      `json:"odometry_steps"`
+	Closures  int      `json:"closures"`
+	Sightings int      `json:"sightings"` // of marks
 }
 
 // Loop is an independent loop: a tie against the way that the ties of a spanning tree and the robots' own maps make.
@@ -175,7 +186,7 @@ type Loop struct {
 // Spread says how the errors of a class of measurements compare with their stated sigmas.
 type Spread struct {
 	Robot        string   `json:"robot"`
-	Class        string   `json:"class"` // odometry, closure, tie
+	Class        string   `json:"class"` // odometry, closure, tie, partial tie, sighting
 	Measurements int      `json:"measurements"`
 	Redundancy   float64  `json:"redundancy"`
 	Ratio        *float64 `json:"ratio,omitempty"` // real sigma over stated sigma
@@ -212,6 +223,7 @@ func Run(ctx context.Context, in Input) (*Audit, error) {
 		{"certifying the starting basin", w.basin},
 		{"searching bridges and places", w.search},
 		{"testing every tie", w.test},
+		{"testing the marks", w.testMarks},
 		{"following undetected errors through the map", w.effects},
 		{"closing loops", w.loops},
 		{"removing what stands out", w.snoop},

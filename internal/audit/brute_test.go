@@ -112,8 +112,8 @@ func TestAgainstAdjustingAgain(t *testing.T) {
 			}
 		}
 		sum := 0.0
-		for k := range w.b.I {
-			f := reliability.Assess(w.residual(k), w.b.Info(k), w.predicted(k))
+		for _, m := range w.all {
+			f := w.assess(m, w.residual(m))
 			sum += f.Total()
 		}
 		near(t, "sum of redundancies", sum, float64(w.out.Adjustment.DoF), 1e-6)
@@ -181,7 +181,7 @@ func TestAgainstAdjustingAgain(t *testing.T) {
 func shifted(t *testing.T, s *survey.Survey, verdicts []survey.ResultVerdict, w *work, k int) {
 	t.Helper()
 	x := &w.out.Ties[k]
-	c := slices.Index(w.components(), x.Shift.Component)
+	c := slices.Index(x.Parts, x.Shift.Component)
 	const part = 1e-4
 	size := float64(x.Detectable[c]) * part
 	other := *s

@@ -30,11 +30,17 @@ type work struct {
 	d      int // of a pose: 3 or 6
 	units  []unit
 	unit   []int32 // variable -> unit
-	parts  int     // islands
 	solver *posegraph.Solver
 	sigma  posegraph.Covariance
 	cost   float64
-	bridge []bool // factor: on no loop
+	all    []measurement // of the adjustment; the relative poses come first, each in its place
+	sort   []class       // of each
+	owner  []int         // robot that made it, -1 for a control point
+	tie    []int         // that it is, else -1
+	at     map[measurement]int
+	alone  []bool           // on no loop, whatever a sighting may hold
+	rigid  *adjust.Rigidity // of the own maps; nil without sightings
+	wrong  []int            // marks whose coordinates are left out
 }
 
 // build makes the pose graph of everything that is held.
@@ -47,45 +53,38 @@ func (w *work) build() error {
 	w.out = Audit{
 		Survey: s.Meta.Name, Datum: s.Meta.Datum.Name, Dimension: s.Meta.Dimension, Robots: len(s.Robots), Decided: w.in.Decided,
 		Basin: "not decided",
-		Ties:  make([]Tie, len(s.Ties)), Removal: []string{}, Bridges: []string{}, Places: []Place{}, Sets: []Set{}, Loops: []Loop{}, Spread: []Spread{}, Next: []Candidate{},
+		Ties:  make([]Tie, len(s.Ties)), Removal: []string{}, Controls: []string{}, Marks: []Mark{}, LeftOut: []LeftOut{}, Bridges: []string{}, Places: []Place{}, Sets: []Set{}, Loops: []Loop{}, Spread: []Spread{}, Next: []Candidate{},
 	}
 	for i := range s.Ties {
 		f := &s.Ties[i]
-		t := Tie{ID: f.ID, Verdict: "open", Reason: "has no verdict", Status: Untested, factor: -1,
+		t := Tie{ID: f.ID, Kind: f.Kind.String(), Verdict: "open", Reason: "has no verdict", Status: Untested,
 			From: Keyframe{f.FromRobot, f.FromSession, f.FromKey}, To: Keyframe{f.ToRobot, f.ToSession, f.ToKey}}
+		if f.FromByStamp {
+			t.From.Key = -f.FromStampNS
+		}
 		if f.ToByStamp {
 			t.To.Key = -f.ToStampNS
 		}
-		if v := verdict[f.ID]; v != nil {
+		switch v := verdict[f.ID]; {
+		case v != nil:
 			t.Verdict, t.Reason = v.Verdict, v.Reason
+			t.held = v.Verdict == "held"
+		case f.Kind != survey.WholePose:
+			t.held, t.free = true, true
 		}
-		t.held = t.Verdict == "held"
 		w.out.Ties[i] = t
 	}
 	var err error
 	// Only what is held is in the graph: false ties join what lies far apart, and would fill the factor.
-	w.p, err = adjust.New(s, func(k int) bool { return w.out.Ties[k].held })
+	w.p, err = adjust.NewWithEnds(s, func(k int) bool { return w.out.Ties[k].held })
 	if err != nil {
 		return err
 	}
 	w.p.Apart = w.in.Place
 	w.b, w.d = w.p.Factors, w.p.Graph.Dim
 	w.out.Keyframes = len(w.p.Keys)
-	for k, f := range w.p.Tie {
-		t := &w.out.Ties[k]
-		t.factor = f
-		if f >= 0 {
-			t.i, t.j = w.b.I[f], w.b.J[f]
-			t.To = keyframe(w.p.Keys[t.j])
-			continue
-		}
-		var from, to bool
-		t.i, from = w.p.Var[adjust.Key{Robot: t.From.Robot, Session: t.From.Session, ID: t.From.Key}]
-		t.j, to = w.p.Var[adjust.Key{Robot: t.To.Robot, Session: t.To.Session, ID: t.To.Key}]
-		t.placed = from && to && t.i != t.j && w.p.Island[t.i] == w.p.Island[t.j]
-	}
+	w.out.sighted = len(w.p.Sights()) > 0
 	w.findUnits()
-	w.findIslands()
 	return nil
 }
 
@@ -121,14 +120,21 @@ func (w *work) unitName(u int32) string {
 	return fmt.Sprintf("%s/%d", w.units[u].robot, w.units[u].session)
 }
 
-// findIslands names the sessions of each island and its first keyframe, which is held fixed.
+// findIslands names the sessions of each island, and what holds it: its first keyframe, or control points.
 func (w *work) findIslands() {
-	w.parts = len(w.p.Anchors)
+	w.out.Islands = make([]Island, w.p.Islands)
 	for _, v := range w.p.Anchors {
-		w.out.Islands = append(w.out.Islands, Island{Gauge: keyframe(w.p.Keys[v])})
+		k := keyframe(w.p.Keys[v])
+		w.out.Islands[w.p.Island[v]].Gauge = &k
+	}
+	if priors, mark := w.p.Controls(); priors != nil {
+		for k, m := range mark {
+			i := &w.out.Islands[w.p.Island[w.p.Graph.Point(priors.Point(k))]]
+			i.Controls = append(i.Controls, w.s.Marks[m].Name)
+		}
 	}
 	seen := map[[2]int32]bool{}
-	for v, i := range w.p.Island {
+	for v, i := range w.p.Island[:len(w.p.Keys)] {
 		if at := [2]int32{i, w.unit[v]}; !seen[at] {
 			seen[at] = true
 			w.out.Islands[i].Sessions = append(w.out.Islands[i].Sessions, w.unitName(w.unit[v]))
@@ -168,8 +174,18 @@ func (w *work) adjust() error {
 	if err := w.p.Begin(adjust.Auto); err != nil {
 		return err
 	}
+	if w.out.sighted {
+		if err := w.fit(); err != nil {
+			return err
+		}
+	}
 	if err := w.p.Analyse(2); err != nil {
 		return err
+	}
+	w.findIslands()
+	w.list()
+	if w.out.sighted {
+		w.rigid = w.p.Rigidity()
 	}
 	w.solver = w.p.Solver()
 	r, err := w.solve()
@@ -179,18 +195,89 @@ func (w *work) adjust() error {
 	w.cost = r.Cost
 	a := &w.out.Adjustment
 	a.Stop, a.Iterations, a.T = r.Stop.String(), r.Iterations, 2*r.Cost
-	for k := range w.b.I {
-		if w.b.W[k] != 0 {
-			a.DoF += w.measured(k)
+	for _, m := range w.all {
+		if *m.weight() != 0 {
+			a.DoF += w.measured(m)
 		}
 	}
-	a.DoF -= w.d * (len(w.p.Keys) - len(w.p.Anchors))
+	a.DoF -= w.d*(len(w.p.Keys)-len(w.p.Anchors)) + w.turns()*len(w.p.Points)
 	if a.DoF > 0 {
 		a.P = distuv.ChiSquared{K: float64(a.DoF)}.Survival(a.T)
 	} else {
 		a.DoF, a.P = 0, 1
 	}
+	for k := range w.out.Ties {
+		t := &w.out.Ties[k]
+		if t.i >= 0 && t.j >= 0 {
+			t.apart = distance(w.p.Graph.Values.Poses[t.i].T, w.p.Graph.Values.Poses[t.j].T)
+		}
+	}
 	return nil
+}
+
+// list notes what is in the adjustment, and the ends of all ties.
+func (w *work) list() {
+	w.at = map[measurement]int{}
+	add := func(m measurement, sort class, owner, tie int) {
+		if m.poses == nil {
+			w.at[m] = len(w.all)
+		}
+		w.all, w.sort, w.owner, w.tie = append(w.all, m), append(w.sort, sort), append(w.owner, owner), append(w.tie, tie)
+	}
+	robot := make(map[string]int, len(w.s.Robots))
+	for i := range w.s.Robots {
+		robot[w.s.Robots[i].ID] = i
+	}
+	for k := range w.b.I {
+		add(measurement{poses: w.b, k: k}, odometry, robot[w.p.Keys[w.b.I[k]].Robot], -1)
+	}
+	// The measurements of the robots come first, in their order; what was added behind them is a tie, or the second half of an odometry
+	// step that was split at a moment.
+	k := 0
+	for i := range w.s.Robots {
+		for _, r := range w.s.Robots[i].Relatives {
+			if r.Kind != 0 {
+				w.sort[k] = closure
+			}
+			k++
+		}
+	}
+	for k, f := range w.p.Tie {
+		t := &w.out.Ties[k]
+		t.held = false
+		t.i, t.j = w.p.Ends[k][0], w.p.Ends[k][1]
+		if f >= 0 {
+			t.held, t.m = true, w.all[f]
+			w.sort[f], w.tie[f] = between, k
+		}
+	}
+	for _, e := range w.p.Sights() {
+		switch m := (measurement{sights: e.Set, k: e.K}); {
+		case e.Set == nil:
+		case e.Tie >= 0:
+			t := &w.out.Ties[e.Tie]
+			t.held, t.m = true, m
+			add(m, partial, robot[w.p.Keys[t.i].Robot], e.Tie)
+		default:
+			add(m, sighting, e.Robot, -1)
+		}
+	}
+	if priors, mark := w.p.Controls(); priors != nil {
+		for k := range mark {
+			add(measurement{priors: priors, k: k}, control, -1, -1)
+		}
+	}
+	for k := range w.out.Ties {
+		t := &w.out.Ties[k]
+		if t.i >= 0 {
+			t.From = keyframe(w.p.Keys[t.i])
+		}
+		if t.j >= 0 {
+			t.To = keyframe(w.p.Keys[t.j])
+		}
+		t.placed = !t.held && t.i >= 0 && t.j >= 0 && t.i != t.j && w.p.Island[t.i] == w.p.Island[t.j]
+		t.Parts = w.components(w.like(w.s.Ties[k].Kind))
+	}
 }
 
 // solve brings the graph to its optimum with the weights as they are, and the covariances with it.
@@ -202,7 +289,7 @@ func (w *work) solve() (posegraph.Result, error) {
 	case posegraph.Interrupted:
 		return r, w.ctx.Err()
 	case posegraph.Undetermined:
-		return r, fmt.Errorf("%w in some direction: %s, session %d", ErrUndetermined, keyframe(w.p.Keys[r.Weakest]), w.p.Keys[r.Weakest].Session)
+		return r, fmt.Errorf("%w in some direction: %s", ErrUndetermined, w.p.Describe(r.Weakest))
 	}
 	return r, w.covariance()
 }
@@ -221,46 +308,10 @@ func (w *work) again() (err error) {
 	return err
 }
 
-// measured counts the components that a factor measures.
-func (w *work) measured(k int) int {
-	n := 0
-	info := w.b.Info(k)
-	for c := range w.d {
-		if info[c*(w.d+1)] > 0 {
-			n++
-		}
-	}
-	return n
-}
-
-// residual returns the residual of a factor in the components of the survey.
-func (w *work) residual(k int) []float64 {
-	r := w.b.Residual(k, &w.p.Graph.Values)
-	if w.d == 3 {
-		return []float64{r[0], r[1], r[5]}
-	}
-	return r[:]
-}
-
-// predicted returns the covariance with which the map predicts the residual of a factor.
-func (w *work) predicted(k int) []float64 {
-	p := make([]float64, w.d*w.d)
-	w.b.Predicted(k, &w.p.Graph.Values, w.sigma, p)
-	return p
-}
-
 // turns is the number of the first component that is a rotation.
 func (w *work) turns() int {
 	if w.d == 3 {
 		return 2
 	}
 	return 3
-}
-
-// components are the names of the components.
-func (w *work) components() []string {
-	if w.d == 3 {
-		return []string{"x", "y", "rz"}
-	}
-	return []string{"x", "y", "z", "rx", "ry", "rz"}
 }

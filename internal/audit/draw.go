@@ -13,14 +13,14 @@ const drawn = 1000
 // draw makes the plan: tracks, and the ties whose two ends share a datum. The island with the most sessions is the one whose frame
 // the plan is in; the others get plans of their own.
 func (w *work) draw() error {
-	order := make([]int, w.parts)
+	order := make([]int, w.p.Islands)
 	for i := range order {
 		order[i] = i
 	}
 	slices.SortStableFunc(order, func(a, b int) int {
 		return cmp.Compare(len(w.out.Islands[b].Sessions), len(w.out.Islands[a].Sessions))
 	})
-	number := make([]int, w.parts)
+	number := make([]int, w.p.Islands)
 	for n, i := range order {
 		number[i] = n
 	}

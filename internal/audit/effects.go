@@ -23,8 +23,8 @@ func (w *work) effects() error {
 		if !t.held || t.T == nil {
 			continue
 		}
-		island := w.p.Island[w.b.I[t.factor]]
-		t.Shift = &Shift{M: t.effect * largest[island], Component: w.components()[t.component], Gauge: w.out.Islands[island].Gauge}
+		island := w.p.Island[t.i]
+		t.Shift = &Shift{M: t.effect * largest[island], Component: t.Parts[t.component], Gauge: w.out.Islands[island].Gauge}
 		jobs = append(jobs, t)
 	}
 	slices.SortStableFunc(jobs, func(a, b *Tie) int { return cmp.Compare(b.Shift.M, a.Shift.M) })
@@ -52,35 +52,24 @@ func (w *work) effects() error {
 
 // load writes J' Omega e_c times the detectable error of component c to vector c.
 func (w *work) load(t *Tie, vectors []float64, scalars int) {
-	d := w.d
-	ji, jj := make([]float64, d*d), make([]float64, d*d)
-	w.b.Jacobians(t.factor, &w.p.Graph.Values, ji, jj)
-	info := w.b.Info(t.factor)
+	d, info := w.derivative(t.m), w.info(t.m)
+	n := d.rows
+	m := make([]float64, n*n)
 	for c, x := range t.Detectable {
 		if math.IsNaN(float64(x)) {
 			continue
 		}
-		v := vectors[c*scalars:]
-		for _, end := range []struct {
-			at int
-			j  []float64
-		}{{w.sigma.Offset(w.b.I[t.factor]), ji}, {w.sigma.Offset(w.b.J[t.factor]), jj}} {
-			if end.at < 0 {
-				continue
-			}
-			for a := range d {
-				for r := range d {
-					v[end.at+a] += end.j[r*d+a] * info[r*d+c] * float64(x)
-				}
-			}
+		for r := range n {
+			m[r*n+c] = info[r*n+c] * float64(x)
 		}
 	}
+	d.scatter(w.sigma, m, n, vectors, scalars)
 }
 
 // worst reads the largest shift of a position from the vectors of a tie.
 func (w *work) worst(t *Tie, vectors []float64, scalars int) {
 	most, at, component := 0.0, int32(-1), 0
-	for c := range w.d {
+	for c := range t.Parts {
 		v := vectors[c*scalars : (c+1)*scalars]
 		for k := range w.p.Keys {
 			o := w.sigma.Offset(int32(k))
@@ -100,13 +89,13 @@ func (w *work) worst(t *Tie, vectors []float64, scalars int) {
 	t.Shift.Component, t.Shift.At = "", nil
 	if at >= 0 {
 		k := keyframe(w.p.Keys[at])
-		t.Shift.Component, t.Shift.At = w.components()[component], &k
+		t.Shift.Component, t.Shift.At = t.Parts[component], &k
 	}
 }
 
 // largestSigmas returns, for each island, the largest standard deviation of a position in any direction.
 func (w *work) largestSigmas() []float64 {
-	out := make([]float64, w.parts) // squared
+	out := make([]float64, w.p.Islands) // squared
 	n := w.turns()
 	for v := range w.p.Keys {
 		if w.sigma.Scalars() == 0 {

@@ -5,8 +5,6 @@ import (
 	"math"
 	"slices"
 
-	"selvage/internal/adjust"
-	"selvage/internal/posegraph"
 	"selvage/internal/reliability"
 )
 
@@ -18,62 +16,49 @@ const judged = 2.5e8
 // solutions of their own. Since the covariance of a difference is at most twice the sum of the covariances, a test with
 // that sum is never too strict: where it rejects, and there is no room for the exact one, it is enough.
 func (w *work) judge() error {
-	scratch := posegraph.New(w.d, w.p.Graph.Values.Poses)
-	b := scratch.AddBetween()
 	type job struct {
 		t *Tie
-		k int // in b
+		d derivative
 	}
 	var jobs []job
-	d := w.d
-	sum, ji, jj := make([]float64, d*d), make([]float64, d*d), make([]float64, d*d)
 	for k := range w.out.Ties {
 		t := &w.out.Ties[k]
-		if t.held || !t.placed {
+		if !t.placed {
 			continue
 		}
-		info, err := w.s.Ties[k].Cov.Information(w.out.Dimension)
-		if err != nil {
+		var err error
+		if t.m, err = w.outside(k); err != nil {
 			return err
 		}
-		j := job{t, b.Len()}
-		b.Add(t.i, t.j, adjust.Pose(w.s.Ties[k].Pose), &info)
-		r := b.Residual(j.k, &scratch.Values)
-		t.Residual = r[:]
-		if d == 3 {
-			t.Residual = []float64{r[0], r[1], r[5]}
-		}
-		m, rad := w.lengths(t.Residual)
-		t.ResidualM, t.ResidualRad, t.ApartM, t.ApartRad = &m, &rad, &m, &rad
-		b.Jacobians(j.k, &scratch.Values, ji, jj)
-		clear(sum)
-		w.addForm(sum, ji, t.i)
-		w.addForm(sum, jj, t.j)
-		w.conclude(t, b.Info(j.k), sum)
+		t.Residual = w.residual(t.m)
+		m, rad := w.lengths(t.m, t.Residual)
+		t.ResidualM, t.ResidualRad = w.lengthOf(t.m, m), w.angleOf(t.m, rad)
+		t.ApartM, t.ApartRad = t.ResidualM, t.ResidualRad
+		j := job{t, w.derivative(t.m)}
+		w.conclude(t, w.apartForm(&j.d))
 		t.AtLeast = true
 		jobs = append(jobs, j)
 	}
 	// Those that the weak test leaves in doubt come first.
 	slices.SortStableFunc(jobs, func(x, y job) int { return cmp.Compare(x.t.strength(), y.t.strength()) })
 	scalars := w.sigma.Scalars()
-	exact := min(len(jobs), int(judged)/max(1, scalars*d))
+	exact := min(len(jobs), int(judged)/max(1, scalars*w.d))
 	const together = 8
-	vectors := make([]float64, min(together, max(1, exact))*d*scalars)
+	vectors := make([]float64, min(together, max(1, exact))*w.d*scalars)
 	for first := 0; first < exact; first += together {
 		if err := w.ctx.Err(); err != nil {
 			return err
 		}
 		batch := jobs[first:min(first+together, exact)]
-		columns := vectors[:len(batch)*d*scalars]
+		columns := vectors[:len(batch)*w.d*scalars]
 		clear(columns)
-		for i, j := range batch {
-			w.jacobian(b, j.k, &scratch.Values, columns[i*d*scalars:], scalars)
+		for i := range batch {
+			batch[i].d.spread(w.sigma, columns[i*w.d*scalars:], scalars)
 		}
-		w.sigma.Apply(columns, len(batch)*d)
-		for i, j := range batch {
-			p := make([]float64, d*d)
-			w.across(b, j.k, &scratch.Values, columns[i*d*scalars:], scalars, p)
-			w.conclude(j.t, b.Info(j.k), p)
+		w.sigma.Apply(columns, len(batch)*w.d)
+		for i := range batch {
+			j := &batch[i]
+			w.conclude(j.t, j.d.gather(w.sigma, columns[i*w.d*scalars:], scalars, j.d.rows))
 			j.t.AtLeast = false
 		}
 	}
@@ -94,8 +79,8 @@ func (t *Tie) strength() float64 {
 }
 
 // conclude tests a tie outside the map with the covariance p of what the map predicts.
-func (w *work) conclude(t *Tie, info, p []float64) {
-	stat, dof := reliability.Judge(t.Residual, info, p)
+func (w *work) conclude(t *Tie, p []float64) {
+	stat, dof := reliability.Judge(t.Residual, w.info(t.m), p)
 	if dof == 0 {
 		return
 	}
@@ -107,60 +92,24 @@ func (w *work) conclude(t *Tie, info, p []float64) {
 	}
 }
 
-// addForm adds 2 J Q J' for one end.
-func (w *work) addForm(sum, j []float64, variable int32) {
-	q := w.sigma.Of(variable)
-	if q == nil {
-		return
-	}
-	d := w.d
-	for r := range d {
-		for c := range d {
-			for k := range d {
-				for l := range d {
-					sum[r*d+c] += 2 * j[r*d+k] * q[k*d+l] * j[c*d+l]
+// apartForm returns the sum of 2 J Q J' of the two ends.
+func (w *work) apartForm(d *derivative) []float64 {
+	sum := make([]float64, d.rows*d.rows)
+	for e, j := range d.by {
+		q := w.sigma.Of(d.at[e])
+		if q == nil {
+			continue
+		}
+		width := len(j) / d.rows
+		for r := range d.rows {
+			for c := range d.rows {
+				for k := range width {
+					for l := range width {
+						sum[r*d.rows+c] += 2 * j[r*width+k] * q[k*width+l] * j[c*width+l]
+					}
 				}
 			}
 		}
 	}
-}
-
-// jacobian writes J' of a factor, one vector for each component of its residual.
-func (w *work) jacobian(b *posegraph.Between, factor int, v *posegraph.Values, vectors []float64, scalars int) {
-	d := w.d
-	ji, jj := make([]float64, d*d), make([]float64, d*d)
-	b.Jacobians(factor, v, ji, jj)
-	for c := range d {
-		x := vectors[c*scalars:]
-		if o := w.sigma.Offset(b.I[factor]); o >= 0 {
-			copy(x[o:o+d], ji[c*d:(c+1)*d])
-		}
-		if o := w.sigma.Offset(b.J[factor]); o >= 0 {
-			copy(x[o:o+d], jj[c*d:(c+1)*d])
-		}
-	}
-}
-
-// across writes J times the vectors to p: row r for component r of the factor, column c for vector c.
-func (w *work) across(b *posegraph.Between, factor int, v *posegraph.Values, vectors []float64, scalars int, p []float64) {
-	d := w.d
-	ji, jj := make([]float64, d*d), make([]float64, d*d)
-	b.Jacobians(factor, v, ji, jj)
-	for c := range d {
-		x := vectors[c*scalars:]
-		for r := range d {
-			sum := 0.0
-			if o := w.sigma.Offset(b.I[factor]); o >= 0 {
-				for i := range d {
-					sum += ji[r*d+i] * x[o+i]
-				}
-			}
-			if o := w.sigma.Offset(b.J[factor]); o >= 0 {
-				for i := range d {
-					sum += jj[r*d+i] * x[o+i]
-				}
-			}
-			p[r*d+c] = sum
-		}
-	}
+	return sum
 }

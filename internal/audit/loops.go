@@ -6,12 +6,16 @@ import (
 	"slices"
 
 	"selvage/internal/reliability"
+	"selvage/internal/survey"
 )
 
 // loops closes the independent loops. The ties of a spanning tree over the robots' own maps are kept, each is then a bridge and met
 // exactly; every other held tie closes one loop, and what it lies off the map of the tree is the misclosure, with the covariance of
-// all that the loop runs over, the robots' own closures included.
+// all that the loop runs over, the robots' own closures included. Where there are sightings, that is done with the relative poses alone.
 func (w *work) loops() error {
+	if w.out.sighted {
+		return w.loopsOfPoses()
+	}
 	tree, way := w.tree()
 	restore := w.keep()
 	defer restore()
@@ -19,7 +23,7 @@ func (w *work) loops() error {
 	for k := range w.out.Ties {
 		t := &w.out.Ties[k]
 		if t.held && !tree[k] {
-			w.b.W[t.factor] = 0
+			*t.m.weight() = 0
 			closing = append(closing, t)
 		}
 	}
@@ -33,24 +37,62 @@ func (w *work) loops() error {
 		return err
 	}
 	for _, t := range closing {
-		r := w.residual(t.factor)
-		stat, dof := reliability.Judge(r, w.b.Info(t.factor), w.predicted(t.factor))
+		r := w.residual(t.m)
+		stat, dof := reliability.Judge(r, w.info(t.m), w.predicted(t.m))
 		if dof == 0 {
 			continue
 		}
 		l := Loop{Tie: t.ID, Way: way(t), T: stat, DoF: dof, P: reliability.Survival(stat, dof), Sigmas: math.Sqrt(stat / float64(dof))}
-		l.M, l.Rad = w.lengths(r)
+		l.M, l.Rad = w.lengths(t.m, r)
 		w.out.Loops = append(w.out.Loops, l)
 	}
 	return nil
 }
 
+// loopsOfPoses closes loops in the survey without what is less than a pose.
+func (w *work) loopsOfPoses() error {
+	only := *w.s
+	only.Ties, only.Marks, only.Robots = nil, nil, slices.Clone(w.s.Robots)
+	for i := range only.Robots {
+		only.Robots[i].Sightings = nil
+	}
+	var verdicts []survey.ResultVerdict
+	for k := range w.out.Ties {
+		if t := &w.out.Ties[k]; t.held && t.m.poses != nil {
+			only.Ties = append(only.Ties, w.s.Ties[k])
+			verdicts = append(verdicts, survey.ResultVerdict{Tie: t.ID, Verdict: "held"})
+		}
+	}
+	if len(only.Ties) < 2 {
+		return nil
+	}
+	sub := &work{ctx: w.ctx, in: &Input{Survey: &only, Verdicts: verdicts}, s: &only}
+	for _, do := range []func() error{sub.build, sub.adjust, sub.loops} {
+		if err := do(); errors.Is(err, ErrUndetermined) { // sightings hold what is free here
+			w.out.unclosed = true
+			return nil
+		} else if err != nil {
+			return err
+		}
+	}
+	w.out.Loops, w.out.unclosed = sub.out.Loops, sub.out.unclosed
+	return nil
+}
+
 // keep returns what brings weights and values back to what they are now. The covariances are not brought back.
 func (w *work) keep() (restore func()) {
-	weights, poses := slices.Clone(w.b.W), slices.Clone(w.p.Graph.Values.Poses)
+	weights := make([]float64, len(w.all))
+	for i, m := range w.all {
+		weights[i] = *m.weight()
+	}
+	v := &w.p.Graph.Values
+	poses, points := slices.Clone(v.Poses), slices.Clone(v.Points)
 	return func() {
-		copy(w.b.W, weights)
-		copy(w.p.Graph.Values.Poses, poses)
+		for i, m := range w.all {
+			*m.weight() = weights[i]
+		}
+		copy(v.Poses, poses)
+		copy(v.Points, points)
 	}
 }
 
@@ -72,7 +114,7 @@ func (w *work) tree() (in []bool, way func(t *Tie) []string) {
 	touching := map[int32][]int{} // part -> ties
 	for k := range w.out.Ties {
 		if t := &w.out.Ties[k]; t.held {
-			for _, v := range [2]int32{w.b.I[t.factor], w.b.J[t.factor]} {
+			for _, v := range [2]int32{t.i, t.j} {
 				touching[group.root(v)] = append(touching[group.root(v)], k)
 			}
 		}
@@ -95,10 +137,10 @@ func (w *work) tree() (in []bool, way func(t *Tie) []string) {
 		for queue := []int32{v}; len(queue) > 0; queue = queue[1:] {
 			at := queue[0]
 			for _, k := range touching[at] {
-				f := w.out.Ties[k].factor
-				next := group.root(w.b.I[f])
+				t := &w.out.Ties[k]
+				next := group.root(t.i)
 				if next == at {
-					next = group.root(w.b.J[f])
+					next = group.root(t.j)
 				}
 				if _, seen := steps[next]; !seen {
 					steps[next] = step{at, k, steps[at].depth + 1}
@@ -109,7 +151,7 @@ func (w *work) tree() (in []bool, way func(t *Tie) []string) {
 		}
 	}
 	return in, func(t *Tie) []string {
-		a, b := group.root(w.b.I[t.factor]), group.root(w.b.J[t.factor])
+		a, b := group.root(t.i), group.root(t.j)
 		var there, back []string
 		for a != b {
 			if steps[a].depth >= steps[b].depth {

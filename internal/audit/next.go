@@ -8,9 +8,11 @@ import (
 	"gonum.org/v1/gonum/mat"
 	"gonum.org/v1/gonum/stat"
 
+	"selvage/internal/adjust"
 	"selvage/internal/evidence"
 	"selvage/internal/lie"
 	"selvage/internal/reliability"
+	"selvage/internal/survey"
 )
 
 const (
@@ -21,9 +23,9 @@ const (
 
 // meeting is a pair of keyframes of two units within reach of each other.
 type meeting struct {
-	a, b   int32
-	apart  float64
-	factor int
+	a, b  int32
+	apart float64
+	m     measurement
 }
 
 // next looks for the tie that is missing most. A tie measured between two places would have the sigmas that ties usually have; what it
@@ -39,17 +41,7 @@ func (w *work) next() error {
 	if len(near) == 0 {
 		return nil
 	}
-	usual := w.usual()
-	for i := range near {
-		m := &near[i]
-		m.factor = w.b.Len()
-		z := w.p.Graph.Values.Poses[m.a].Between(w.p.Graph.Values.Poses[m.b])
-		if w.d == 3 {
-			z = lie.Planar(&z).Spatial()
-		}
-		w.b.Add(m.a, m.b, z, &usual)
-		w.b.W[m.factor] = 0
-	}
+	w.suppose(near)
 	if err := w.again(); err != nil {
 		return err
 	}
@@ -72,12 +64,14 @@ func (w *work) next() error {
 		columns := vectors[:len(batch)*w.d*scalars]
 		clear(columns)
 		for i, t := range batch {
-			w.jacobian(w.b, t.factor, &w.p.Graph.Values, columns[i*w.d*scalars:], scalars)
+			d := w.derivative(t.m)
+			d.spread(w.sigma, columns[i*w.d*scalars:], scalars)
 		}
 		w.sigma.Apply(columns, len(batch)*w.d)
 		for i, t := range batch {
+			now := w.predicted(t.m)
 			for n := range near {
-				left[n][first+i] = w.after(t, &near[n], columns[i*w.d*scalars:], scalars)
+				left[n][first+i] = w.after(t, now, &near[n], columns[i*w.d*scalars:], scalars)
 			}
 		}
 	}
@@ -89,7 +83,7 @@ func (w *work) next() error {
 func (w *work) weak() []*Tie {
 	var out []*Tie
 	for k := range w.out.Ties {
-		if t := &w.out.Ties[k]; t.held && (t.Status == Unchecked || t.DetectableM != nil) {
+		if t := &w.out.Ties[k]; t.held && (t.Status == Unchecked || !math.IsInf(t.detectable(), 1)) {
 			out = append(out, t)
 		}
 	}
@@ -97,42 +91,93 @@ func (w *work) weak() []*Tie {
 	return out[:min(len(out), weakest)]
 }
 
-// detectable is the largest detectable error in metres, infinite where nothing checks the tie.
+// detectable is the largest detectable error in metres, across the line of sight for what measures angles alone; infinite where nothing
+// checks the tie.
 func (t *Tie) detectable() float64 {
-	if t.Status == Unchecked || t.DetectableM == nil {
-		return math.Inf(1)
+	switch {
+	case t.Status == Unchecked:
+	case t.DetectableM != nil:
+		return *t.DetectableM
+	case t.DetectableRad != nil:
+		return *t.DetectableRad * t.apart
 	}
-	return *t.DetectableM
+	return math.Inf(1)
 }
 
 // reach is how far apart two keyframes may be for a tie: 95 % of the ties of the survey are no longer.
 func (w *work) reach() float64 {
 	var lengths []float64
 	for k := range w.s.Ties {
-		if w.out.Ties[k].held {
+		if t := &w.out.Ties[k]; t.held && w.s.Ties[k].Kind == survey.WholePose {
 			lengths = append(lengths, distance(w.s.Ties[k].Pose.T, [3]float64{}))
+		} else if t.held {
+			lengths = append(lengths, t.apart)
 		}
 	}
 	slices.Sort(lengths)
 	return max(1, stat.Quantile(0.95, stat.Empirical, lengths, nil))
 }
 
-// usual is the information of a tie with the median sigmas of those that are held.
-func (w *work) usual() (info [36]float64) {
-	for c := range 6 {
-		var all []float64
-		for k := range w.s.Ties {
-			if s := w.s.Ties[k].Cov.Sigma[c]; w.out.Ties[k].held && !math.IsInf(s, 1) {
-				all = append(all, s)
+// suppose adds the candidates to the graph with no weight, as ties of the kind that most held ties are, with the median sigmas of these.
+func (w *work) suppose(near []meeting) {
+	var count [survey.Bearing + 1]int
+	kind := survey.WholePose
+	for k := range w.s.Ties {
+		if w.out.Ties[k].held {
+			if count[w.s.Ties[k].Kind]++; count[w.s.Ties[k].Kind] > count[kind] {
+				kind = w.s.Ties[k].Kind
 			}
 		}
-		if len(all) > 0 {
-			slices.Sort(all)
-			m := stat.Quantile(0.5, stat.Empirical, all, nil)
-			info[7*c] = 1 / (m * m)
-		}
 	}
-	return info
+	usual := func(c int) float64 {
+		var all []float64
+		for k := range w.s.Ties {
+			if t := &w.s.Ties[k]; w.out.Ties[k].held && t.Kind == kind {
+				s := t.Cov.Sigma[c]
+				if kind != survey.WholePose {
+					s = t.Sight.Sigma[c]
+				}
+				if !math.IsInf(s, 1) {
+					all = append(all, s)
+				}
+			}
+		}
+		if len(all) == 0 {
+			return 0
+		}
+		slices.Sort(all)
+		m := stat.Quantile(0.5, stat.Empirical, all, nil)
+		return 1 / (m * m)
+	}
+	poses := w.p.Graph.Values.Poses
+	if kind == survey.WholePose {
+		var info [36]float64
+		for c := range 6 {
+			info[7*c] = usual(c)
+		}
+		for i := range near {
+			m := &near[i]
+			z := poses[m.a].Between(poses[m.b])
+			if w.d == 3 {
+				z = lie.Planar(&z).Spatial()
+			}
+			m.m = measurement{poses: w.b, k: w.b.Len()}
+			w.b.Add(m.a, m.b, z, &info)
+			*m.m.weight() = 0
+		}
+		return
+	}
+	var info lie.Mat3
+	for c := range 3 {
+		info[4*c] = usual(c)
+	}
+	set := w.p.Graph.AddEncounters(adjust.SenseOf(kind))
+	for i := range near {
+		m := &near[i]
+		m.m = measurement{sights: set, k: set.Len()}
+		set.Add(m.a, m.b, lie.Identity(), [3]float64{}, [3]float64{}, &info) // what it would measure does not matter
+		*m.m.weight() = 0
+	}
 }
 
 // meetings finds where tracks of two units of one island pass within reach of each other: around each weak tie the nearest ones that
@@ -232,19 +277,21 @@ func (w *work) around(pairs []meeting, weak []*Tie) []meeting {
 	return out
 }
 
-// after returns the detectable error of t with the candidate measured, given the vectors Q J' of t; NaN where nothing would check it.
-func (w *work) after(t *Tie, m *meeting, vectors []float64, scalars int) float64 {
+// after returns the detectable error of t with the candidate measured, given what the map predicts for t and the vectors Q J' of it;
+// NaN where nothing would check it.
+func (w *work) after(t *Tie, now []float64, m *meeting, vectors []float64, scalars int) float64 {
 	if w.onePlace(t, m) {
 		if t.Status == Unchecked {
 			return math.NaN()
 		}
 		return t.detectable()
 	}
-	d := w.d
-	x := mat.NewDense(d, d, nil) // J_n Q J_k'
-	w.across(w.b, m.factor, &w.p.Graph.Values, vectors, scalars, x.RawMatrix().Data)
+	n := len(t.Parts)
+	cand := w.derivative(m.m)
+	d := cand.rows
+	x := mat.NewDense(d, n, cand.gather(w.sigma, vectors, scalars, n)) // J_n Q J_k'
 	s := mat.NewSymDense(d, nil)
-	p, info := w.predicted(m.factor), w.b.Info(m.factor)
+	p, info := w.predicted(m.m), w.info(m.m)
 	for i := range d {
 		for j := i; j < d; j++ {
 			s.SetSym(i, j, p[i*d+j])
@@ -259,6 +306,8 @@ func (w *work) after(t *Tie, m *meeting, vectors []float64, scalars int) float64
 		if math.IsInf(s.At(i, i), 1) {
 			for j := range d {
 				s.SetSym(i, j, 0)
+			}
+			for j := range n {
 				x.Set(i, j, 0)
 			}
 			s.SetSym(i, i, 1)
@@ -270,13 +319,14 @@ func (w *work) after(t *Tie, m *meeting, vectors []float64, scalars int) float64
 		return t.detectable()
 	}
 	fall.Mul(x.T(), &y)
-	now := w.predicted(t.factor)
-	for i := range now {
-		now[i] -= fall.RawMatrix().Data[i]
+	then := slices.Clone(now)
+	for i := range then {
+		then[i] -= fall.RawMatrix().Data[i]
 	}
-	f := reliability.Assess(make([]float64, d), w.b.Info(t.factor), now)
-	if most := largest(f.Detectable[:w.turns()]); most != nil {
-		return *most
+	f := reliability.Assess(make([]float64, n), w.info(t.m), then)
+	later := Tie{DetectableM: largest(f.Detectable[:w.metres(t.m)]), DetectableRad: largest(f.Detectable[w.metres(t.m):]), apart: t.apart}
+	if worst := later.detectable(); !math.IsInf(worst, 1) {
+		return worst
 	}
 	return math.NaN()
 }
@@ -285,7 +335,7 @@ func (w *work) after(t *Tie, m *meeting, vectors []float64, scalars int) float64
 func (w *work) onePlace(t *Tie, m *meeting) bool {
 	reach := evidence.DefaultOptions(w.out.Dimension).PlaceM
 	at := func(v int32) [3]float64 { return w.p.Graph.Values.Poses[v].T }
-	for _, u := range [2]int32{w.b.I[t.factor], w.b.J[t.factor]} {
+	for _, u := range [2]int32{t.i, t.j} {
 		if distance(at(u), at(m.a)) <= reach || distance(at(u), at(m.b)) <= reach {
 			return true
 		}
@@ -316,9 +366,9 @@ func (w *work) rank(near []meeting, weak []*Tie, left [][]float64) {
 			s.c.LargestM = max(s.c.LargestM, x)
 			gain := math.Log(t.detectable() / x)
 			if gain > s.gain || math.IsInf(gain, 1) && x < s.c.AfterM {
-				s.gain, s.c.Helps, s.c.AfterM, s.c.BeforeM = gain, t.ID, x, t.DetectableM
-				if t.Status == Unchecked {
-					s.c.BeforeM = nil
+				s.gain, s.c.Helps, s.c.AfterM, s.c.BeforeM = gain, t.ID, x, nil
+				if now := t.detectable(); !math.IsInf(now, 1) {
+					s.c.BeforeM = &now
 				}
 			}
 		}

@@ -52,14 +52,23 @@ func (a *Audit) Finding() string {
 	var b strings.Builder
 	n := a.statuses()
 	held := n[Passed] + n[Failed] + n[Unchecked]
+	marks := a.shared()
 	switch {
+	case marks > 0:
 	case len(a.Ties) == 0:
 		fmt.Fprintf(&b, "No ties: %s in %s, and nothing that joins them", count(a.Sessions, "session"), count(len(a.Islands), "island"))
 		return b.String() + "."
 	case held == 0:
 		return fmt.Sprintf("None of %s is held: %s lie in %s.", count(len(a.Ties), "tie"), count(a.Sessions, "session"), count(len(a.Islands), "island"))
 	}
-	fmt.Fprintf(&b, "%s hold%s the map together", count(held, "tie"), map[bool]string{true: "s"}[held == 1])
+	var holders []string
+	if held > 0 {
+		holders = append(holders, count(held, "tie"))
+	}
+	if marks > 0 {
+		holders = append(holders, count(marks, "shared mark"))
+	}
+	fmt.Fprintf(&b, "%s hold%s the map together", list(holders), map[bool]string{true: "s"}[held+marks == 1])
 	if len(a.Islands) > 1 {
 		fmt.Fprintf(&b, " in %d islands", len(a.Islands))
 	}
@@ -73,7 +82,16 @@ func (a *Audit) Finding() string {
 	if n[Unchecked] > 0 {
 		parts = append(parts, fmt.Sprintf("%d that nothing checks", n[Unchecked]))
 	}
-	b.WriteString(": " + list(parts))
+	if len(parts) > 0 {
+		of := ": "
+		if marks > 0 {
+			of = ", of the ties "
+		}
+		b.WriteString(of + list(parts))
+	}
+	if wrong := a.wrong(); len(wrong) > 0 {
+		fmt.Fprintf(&b, "; the coordinates of %s %s disagree with what was seen", plural(len(wrong), "control point"), list(wrong))
+	}
 	if error, shift := a.worst(); error != nil {
 		fmt.Fprintf(&b, "; an error of up to %s m could hide in one", short(*error.DetectableM))
 		if shift != nil {
@@ -104,6 +122,8 @@ func (a *Audit) cautions() []string {
 	}
 	if a.unclosed {
 		out = append(out, "Loops were not closed: some ties do not measure all of a pose, and one alone does not join two robots.")
+	} else if a.sighted && len(a.Loops) > 0 {
+		out = append(out, "Loops were closed over whole poses alone, without sightings and ties that are less.")
 	}
 	if a.hidden {
 		out = append(out, fmt.Sprintf("The plan shows %d ties, those that need an eye and then the weakest; all stand in ties.csv.", drawn))
@@ -124,6 +144,9 @@ func (a *Audit) attention() []string {
 		}
 		out = append(out, all...)
 	}
+	controls, marks, left := a.badMarks()
+	add(controls, "control points disagree with what was seen")
+	add(marks, "marks are seen in several places")
 	if a.Positions != nil {
 		out = append(out, a.Positions.Lines()...)
 	}
@@ -150,8 +173,8 @@ func (a *Audit) attention() []string {
 	for _, s := range a.Sets {
 		if len(s.Ties) > 1 {
 			with := ""
-			if s.Odometry+s.Closures > 0 {
-				with = fmt.Sprintf(" (nor from %s on the same loop)", count(s.Odometry+s.Closures, "measurement"))
+			if n := s.Odometry + s.Closures + s.Sightings; n > 0 {
+				with = fmt.Sprintf(" (nor from %s on the same loop)", count(n, "measurement"))
 			}
 			sets = append(sets, fmt.Sprintf("Ties %s cannot be told apart%s: a test that finds an error in one finds it in all, and a person has to say which it is.", list(s.Ties), with))
 		}
@@ -178,7 +201,7 @@ func (a *Audit) attention() []string {
 		}
 		out = append(out, fmt.Sprintf("%s not joined to the datum of %s.", sentenceOf(slices.Compact(names)), list(a.Islands[a.main].Sessions)))
 	}
-	out = append(out, a.leftOut()...)
+	out = append(append(out, left...), a.leftOut()...)
 	for i := range a.Next {
 		if i == 3 {
 			break
@@ -201,7 +224,11 @@ func (a *Audit) failures() []string {
 	}
 	out = append(out, fmt.Sprintf("%s %s failed the test, which a sound tie does once in %d.", map[bool]string{true: "Tie", false: "Ties"}[len(failed) == 1], list(failed), int(1/reliability.Alpha)))
 	switch n := len(a.Removal); {
-	case n == removed:
+	case n == 0 && len(a.Controls) > 0:
+		out = append(out, "They stood out only with the control points.")
+	case n == 0:
+		out = append(out, "Without it the map would come apart.")
+	case n+len(a.Controls) == removed:
 		out = append(out, fmt.Sprintf("Even with %s taken out one after the other, others fail or may: look at the verdicts before the figures.", list(a.Removal)))
 	case n >= len(failed) && n > 1:
 		out = append(out, fmt.Sprintf("They fail each by itself: taking out %s one after the other, and adjusting again after each, leaves none.", list(a.Removal)))
@@ -238,7 +265,7 @@ func (a *Audit) leftOut() []string {
 		out = append(out, fmt.Sprintf("%s not held although the map agrees with %s.", isAre(n[Fits], "tie"), map[bool]string{true: "it", false: "them"}[n[Fits] == 1]))
 	}
 	if n[Untested] > 0 {
-		out = append(out, fmt.Sprintf("%s neither held nor could be tested: their ends share no datum, or they name a moment.", count(n[Untested], "tie")))
+		out = append(out, fmt.Sprintf("%s could not be tested: nothing that fits holds their ends in one datum.", count(n[Untested], "tie")))
 	}
 	return out
 }

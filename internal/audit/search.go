@@ -8,28 +8,17 @@ import (
 	"selvage/internal/reliability"
 )
 
-// search decides by graph search what no number can: bridges, sets that no test can tell apart, and places that carry alone.
+// search decides by graph search what no number can: bridges, sets that no test can tell apart, and places that carry alone. Sightings
+// and ties that are less than a pose count as if they held all of a pose: what lies on no loop even so is checked by nothing, and
+// what two cuts part even so are on the same loops. What they do hold is a matter of rank, and of numbers.
 func (w *work) search() error {
-	class, factor := w.cuts()
-	tie := make(map[int]int, len(w.p.Tie)) // factor -> tie
-	for k, f := range w.p.Tie {
-		if f >= 0 {
-			tie[f] = k
-		}
-	}
-	kinds := w.kinds()
-	w.bridge = make([]bool, w.b.Len())
+	cut := w.cuts()
+	w.alone = make([]bool, len(w.all))
 	sets := map[int32]*Set{}
 	var order []int32
-	for i, c := range class {
-		k := factor[i]
-		t, isTie := tie[k]
-		if c == 0 {
-			w.bridge[k] = true
-			if isTie {
-				w.out.Ties[t].Bridge = true
-				w.out.Bridges = append(w.out.Bridges, w.out.Ties[t].ID)
-			}
+	for i, c := range cut {
+		if c <= 0 {
+			w.alone[i] = c == 0
 			continue
 		}
 		s := sets[c]
@@ -39,69 +28,111 @@ func (w *work) search() error {
 			order = append(order, c)
 		}
 		switch {
-		case isTie:
-			s.Ties = append(s.Ties, w.out.Ties[t].ID)
-		case kinds[k] == closure:
+		case w.tie[i] >= 0:
+			s.Ties = append(s.Ties, w.out.Ties[w.tie[i]].ID)
+		case w.sort[i] == closure:
 			s.Closures++
-		default:
+		case w.sort[i] == sighting:
+			s.Sightings++
+		case w.sort[i] == odometry:
 			s.Odometry++
 		}
 	}
 	number := map[int32]int{}
 	for _, c := range order {
-		if s := sets[c]; len(s.Ties) > 0 && len(s.Ties)+s.Odometry+s.Closures > 1 {
+		if s := sets[c]; len(s.Ties) > 0 && len(s.Ties)+s.Odometry+s.Closures+s.Sightings > 1 {
 			w.out.Sets = append(w.out.Sets, *s)
 			number[c] = len(w.out.Sets)
 		}
 	}
-	for i, c := range class {
-		if t, isTie := tie[factor[i]]; isTie {
+	for i, c := range cut {
+		if t := w.tie[i]; t >= 0 && c > 0 {
 			w.out.Ties[t].Set = number[c]
 		}
 	}
+	w.bridges()
 	w.places()
 	return nil
 }
 
-// cuts returns the factors that count and their classes, see [reliability.Cuts].
-func (w *work) cuts() (class []int32, factor []int) {
+// cuts returns the class of every measurement, see [reliability.Cuts]; -1 for those that do not count.
+func (w *work) cuts() []int32 {
+	out := make([]int32, len(w.all))
 	var edges [][2]int32
-	for k := range w.b.I {
-		if w.b.W[k] != 0 {
-			edges, factor = append(edges, [2]int32{w.b.I[k], w.b.J[k]}), append(factor, k)
+	var at []int
+	datum := int32(w.p.Graph.Variables()) // what control points are measured from
+	for i, m := range w.all {
+		out[i] = -1
+		if *m.weight() == 0 {
+			continue
 		}
+		var e [2]int32
+		switch {
+		case m.poses != nil:
+			e = [2]int32{m.poses.I[m.k], m.poses.J[m.k]}
+		case m.priors != nil:
+			e = [2]int32{datum, w.p.Graph.Point(m.priors.Point(m.k))}
+		case m.sights.OfPoints():
+			e = [2]int32{m.sights.From[m.k], w.p.Graph.Point(m.sights.To[m.k])}
+		default:
+			e = [2]int32{m.sights.From[m.k], m.sights.To[m.k]}
+		}
+		edges, at = append(edges, e), append(at, i)
 	}
-	return reliability.Cuts(len(w.p.Keys), edges), factor
+	for k, c := range reliability.Cuts(int(datum)+1, edges) {
+		out[at[k]] = c
+	}
+	return out
 }
 
-// Classes of measurement.
+// loners says of every measurement whether it lies on no loop.
+func (w *work) loners() []bool {
+	out := make([]bool, len(w.all))
+	for i, c := range w.cuts() {
+		out[i] = c == 0
+	}
+	return out
+}
+
+// class of measurement.
+type class int
+
 const (
-	odometry = iota
+	odometry class = iota
 	closure
 	between
+	partial
+	sighting
+	control
 )
 
-var classNames = [...]string{odometry: "odometry", closure: "closure", between: "tie"}
+// classNames are those of which a robot has sigmas.
+var classNames = [...]string{odometry: "odometry", closure: "closure", between: "tie", partial: "partial tie", sighting: "sighting"}
 
-// kinds returns the class of every factor: the measurements of the robots come first, in their order; what was added behind them is a
-// tie, or the second half of an odometry step that was split at a moment.
-func (w *work) kinds() []int {
-	all := make([]int, w.b.Len())
-	k := 0
-	for i := range w.s.Robots {
-		for _, r := range w.s.Robots[i].Relatives {
-			if r.Kind != 0 {
-				all[k] = closure
-			}
-			k++
+// index is the place of a held measurement in the list of all.
+func (w *work) index(m measurement) int {
+	if m.poses != nil {
+		return m.k
+	}
+	return w.at[m]
+}
+
+// bridges notes the held ties whose loss would part the fleet: whole poses on no loop. Where there are sightings, those without
+// which frames would be loose by rank; such a tie may still be checked in part.
+func (w *work) bridges() {
+	wanted := make([]bool, len(w.out.Ties))
+	if w.out.sighted {
+		for _, k := range w.rigid.Wanted() {
+			wanted[k] = true
 		}
 	}
-	for _, f := range w.p.Tie {
-		if f >= 0 {
-			all[f] = between
+	for k := range w.out.Ties {
+		t := &w.out.Ties[k]
+		if t.held && (wanted[k] || t.m.poses != nil && w.alone[t.m.k]) {
+			t.Bridge = true
+			w.out.Bridges = append(w.out.Bridges, t.ID)
 		}
 	}
-	return all
 }
 
 // places finds the places whose ties are all that joins two parts of an island. Ties belong to one place when they lie within the
@@ -126,7 +157,7 @@ func (w *work) places() {
 		if !t.held {
 			continue
 		}
-		ends := [2]int32{w.b.I[t.factor], w.b.J[t.factor]}
+		ends := [2]int32{t.i, t.j}
 		island := w.p.Island[ends[0]]
 		var home *place
 	search:
@@ -135,8 +166,7 @@ func (w *work) places() {
 			for o := range 27 {
 				near := [3]int32{int32(o%3) - 1, int32(o/3%3) - 1, int32(o/9) - 1}
 				for _, p := range cells[cell(at, near)] {
-					f := w.out.Ties[p.ties[0]].factor
-					if w.p.Island[w.b.I[f]] != island {
+					if w.p.Island[w.out.Ties[p.ties[0]].i] != island {
 						continue
 					}
 					if distance(at, p.centres[0]) <= reach || distance(at, p.centres[1]) <= reach {
@@ -178,21 +208,33 @@ func (w *work) places() {
 // nothing falls apart. Sessions that fall apart by themselves count as one.
 func (w *work) lost(ties []int) []int32 {
 	without := newGroups(len(w.units))
-	island := w.p.Island[w.b.I[w.out.Ties[ties[0]].factor]]
-	next := 0
+	island := w.p.Island[w.out.Ties[ties[0]].i]
 	members := map[int32]bool{}
+	gone := make(map[int]bool, len(ties))
+	for _, k := range ties {
+		gone[k] = true
+	}
 	for k := range w.out.Ties {
 		t := &w.out.Ties[k]
-		if !t.held || w.p.Island[w.b.I[t.factor]] != island {
+		if !t.held || w.p.Island[t.i] != island {
 			continue
 		}
-		a, b := w.unit[w.b.I[t.factor]], w.unit[w.b.J[t.factor]]
+		a, b := w.unit[t.i], w.unit[t.j]
 		members[a], members[b] = true, true
-		if next < len(ties) && ties[next] == k {
-			next++
-			continue
+		if !gone[k] && t.m.poses != nil {
+			without.join(a, b)
 		}
-		without.join(a, b)
+	}
+	if w.out.sighted && !without.one(members) {
+		first := map[int32]int32{} // group -> unit
+		for v, g := range w.rigid.Islands(func(tie, _ int) bool { return tie >= 0 && gone[tie] }) {
+			u := w.unit[v]
+			if f, seen := first[g]; seen {
+				without.join(f, u)
+			} else {
+				first[g] = u
+			}
+		}
 	}
 	size := map[int32]int{}
 	var roots []int32
@@ -221,6 +263,19 @@ func (w *work) lost(ties []int) []int32 {
 		}
 	}
 	return out
+}
+
+// one tells whether all members are in one set.
+func (g groups) one(members map[int32]bool) bool {
+	first := int32(-1)
+	for u := range members {
+		if r := g.root(u); first < 0 {
+			first = r
+		} else if r != first {
+			return false
+		}
+	}
+	return true
 }
 
 func distance(a, b [3]float64) float64 {

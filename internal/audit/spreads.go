@@ -13,42 +13,37 @@ func (w *work) rounds() int { return min(100, max(8, 3_000_000/max(1, w.sigma.Sc
 // spreads estimates, per robot and class of measurement, how the errors that were met compare with the stated sigmas. A tie counts for
 // the robot that measured it.
 func (w *work) spreads() error {
-	kinds := w.kinds()
-	robot := make(map[string]int, len(w.s.Robots))
-	for i := range w.s.Robots {
-		robot[w.s.Robots[i].ID] = i
-	}
-	group := make([]int, w.b.Len())
+	group := make([]int, len(w.all))
 	count := make([]int, len(classNames)*len(w.s.Robots))
-	for k := range group {
-		group[k] = -1
-		if w.b.W[k] != 0 {
-			group[k] = len(classNames)*robot[w.p.Keys[w.b.I[k]].Robot] + kinds[k]
-			count[group[k]]++
+	for i, m := range w.all {
+		group[i] = -1
+		if *m.weight() != 0 && w.owner[i] >= 0 {
+			group[i] = len(classNames)*w.owner[i] + int(w.sort[i])
+			count[group[i]]++
 		}
 	}
 	restore := w.keep()
 	defer restore()
 	all, arrived, err := reliability.Spreads(len(count), w.rounds(), func(scale []float64) (squares, redundancy []float64, err error) {
-		for k, g := range group {
+		for i, g := range group {
 			if g >= 0 {
-				w.b.W[k] = 1 / scale[g]
+				*w.all[i].weight() = 1 / scale[g]
 			}
 		}
 		if _, err := w.solve(); err != nil {
 			return nil, nil, err
 		}
 		squares, redundancy = make([]float64, len(count)), make([]float64, len(count))
-		p := make([]float64, w.d*w.d)
-		for k, g := range group {
-			if g < 0 || w.bridge[k] {
+		for i, g := range group {
+			if g < 0 || w.alone[i] {
 				continue
 			}
-			squares[g] += w.b.W[k] * w.b.Chi2(k, &w.p.Graph.Values)
-			w.b.Predicted(k, &w.p.Graph.Values, w.sigma, p)
-			left := float64(w.measured(k))
-			for i, o := range w.b.Info(k) {
-				left -= w.b.W[k] * o * p[i] // trace of the product of two symmetric matrices
+			m := w.all[i]
+			weight := *m.weight()
+			squares[g] += weight * w.square(m)
+			left, info, p := float64(w.measured(m)), w.info(m), w.predicted(m)
+			for c, o := range info {
+				left -= weight * o * p[c] // trace of the product of two symmetric matrices
 			}
 			redundancy[g] += left
 		}
@@ -78,14 +73,15 @@ func (s *Spread) words() string {
 	class := s.Class
 	switch class {
 	case "closure":
-		class = "closures"
-	case "tie":
-		class = "ties measured by"
+		class = "closures of"
+	case "tie", "partial tie":
+		class += "s measured by"
+	case "sighting":
+		class = "sightings by"
+	default:
+		class += " of"
 	}
-	what := fmt.Sprintf("%s of %s", class, s.Robot)
-	if s.Class == "tie" {
-		what = fmt.Sprintf("%s %s", class, s.Robot)
-	}
+	what := class + " " + s.Robot
 	switch {
 	case s.Ratio == nil:
 		return what + ": too little checks it to tell the real spread"

@@ -5,8 +5,10 @@ import (
 	"fmt"
 	"math"
 	"slices"
+	"strings"
 
 	"selvage/internal/report"
+	"selvage/internal/survey"
 )
 
 // shown is how many rows a table of the page has at most; the files have all.
@@ -17,7 +19,7 @@ func (a *Audit) tables() []report.Table {
 	if a.Positions != nil {
 		out = append(out, cut(a.Positions.Table(), "audit.json"))
 	}
-	for _, t := range []report.Table{a.nextTable(), a.testTable(), a.hiddenTable(), a.leftTable(), a.historyTable(), a.setTable(), a.loopTable(), a.spreadTable()} {
+	for _, t := range []report.Table{a.nextTable(), a.controlTable(), a.markTable(), a.testTable(), a.hiddenTable(), a.leftTable(), a.sightTable(), a.historyTable(), a.setTable(), a.loopTable(), a.spreadTable()} {
 		if len(t.Rows) > 0 {
 			out = append(out, t)
 		}
@@ -99,7 +101,7 @@ func (a *Audit) tieTable() wide {
 	})
 	bounded := false
 	for _, x := range ties {
-		const none = "nothing checks this tie"
+		const none = "nothing checks this tie, or it does not measure that"
 		w, shift := report.Missing(none), report.Missing(none)
 		if x.W != nil {
 			most := 0.0
@@ -115,6 +117,9 @@ func (a *Audit) tieTable() wide {
 			}
 		}
 		finding := string(x.Status)
+		if x.Kind != survey.WholePose.String() {
+			finding = strings.ReplaceAll(x.Kind, "_", " and ") + ", " + finding
+		}
 		if x.Bridge {
 			finding += ", bridge"
 		} else if x.Place {
@@ -124,9 +129,13 @@ func (a *Audit) tieTable() wide {
 			figure(x.T, none), probability(x.P, none), fraction(x.RedundancyTranslation), fraction(x.RedundancyRotation), figure(x.DetectableM, none), degrees(x.DetectableRad, none), shift, figure(x.ApartM, none)})
 	}
 	if len(a.Islands) > 0 {
-		t.Note = "Shifts are relative to " + a.Islands[a.main].Gauge.String() + ", which is held fixed"
+		if g := a.Islands[a.main].Gauge; g != nil {
+			t.Note = "Shifts are relative to " + g.String() + ", which is held fixed"
+		} else {
+			t.Note = "Shifts are relative to the datum, which control points hold"
+		}
 		if len(a.Islands) > 1 {
-			t.Note += ", and in the other islands to their first keyframe"
+			t.Note += ", and in the other islands to their first keyframe or control points"
 		}
 		t.Note += "."
 	}
@@ -158,7 +167,7 @@ func (a *Audit) leftTable() report.Table {
 		if x.held {
 			continue
 		}
-		const none = "its ends share no datum, or it names a moment"
+		const none = "its ends share no datum, or it does not measure that"
 		stat := figure(x.T, none)
 		if x.AtLeast {
 			stat = "≥ " + stat
@@ -171,16 +180,16 @@ func (a *Audit) leftTable() report.Table {
 func (a *Audit) setTable() report.Table {
 	t := report.Table{
 		Caption: "Measurements that no test can tell apart",
-		Columns: []report.Column{{Name: "ties"}, number("odometry steps with them", ""), number("closures with them", "")},
+		Columns: []report.Column{{Name: "ties"}, number("odometry steps with them", ""), number("closures with them", ""), number("sightings of marks with them", "")},
 	}
 	for _, s := range a.Sets {
 		if len(s.Ties) > 1 {
-			t.Rows = append(t.Rows, []string{list(s.Ties), fmt.Sprint(s.Odometry), fmt.Sprint(s.Closures)})
+			t.Rows = append(t.Rows, []string{list(s.Ties), fmt.Sprint(s.Odometry), fmt.Sprint(s.Closures), fmt.Sprint(s.Sightings)})
 		}
 	}
 	single := len(a.Sets) - len(t.Rows)
 	if single > 0 {
-		t.Note = fmt.Sprintf("Besides, %s with odometry or closures only.", map[bool]string{true: "1 tie shares a set", false: fmt.Sprintf("%d ties share sets", single)}[single == 1])
+		t.Note = fmt.Sprintf("Besides, %s with odometry, closures or sightings only.", map[bool]string{true: "1 tie shares a set", false: fmt.Sprintf("%d ties share sets", single)}[single == 1])
 	}
 	return cut(t, "audit.json")
 }

@@ -14,28 +14,32 @@ func (w *work) test() error {
 		if !t.held {
 			continue
 		}
-		r := w.residual(t.factor)
-		m, rad := w.lengths(r)
-		t.Residual, t.ResidualM, t.ResidualRad = r, &m, &rad
-		if w.bridge[t.factor] {
-			zero := 0.0
-			t.Status, t.Redundancy, t.RedundancyTranslation, t.RedundancyRotation = Unchecked, &zero, &zero, &zero
+		r := w.residual(t.m)
+		m, rad := w.lengths(t.m, r)
+		t.Residual, t.ResidualM, t.ResidualRad = r, w.lengthOf(t.m, m), w.angleOf(t.m, rad)
+		if w.alone[w.index(t.m)] {
+			w.unchecked(t)
 			continue
 		}
-		w.assess(t, r)
+		w.figures(t, r)
 	}
 	return w.judge()
 }
 
-// assess fills in the figures of a held tie that is no bridge.
-func (w *work) assess(t *Tie, r []float64) {
-	f := reliability.Assess(r, w.b.Info(t.factor), w.predicted(t.factor))
-	turns := w.turns()
-	t.Redundancy, t.RedundancyTranslation, t.RedundancyRotation =
-		w.mean(t.factor, f.Redundancy, 0, w.d), w.mean(t.factor, f.Redundancy, 0, turns), w.mean(t.factor, f.Redundancy, turns, w.d)
+// unchecked says that nothing checks a held tie.
+func (w *work) unchecked(t *Tie) {
+	none := make([]float64, len(t.Parts))
+	t.Status = Unchecked
+	w.redundancies(t, none)
+}
+
+// figures fills in those of a held tie.
+func (w *work) figures(t *Tie, r []float64) {
+	f := w.assess(t.m, r)
+	w.redundancies(t, f.Redundancy)
 	t.DoF = f.DoF
 	if f.DoF == 0 {
-		t.Status = Unchecked
+		w.unchecked(t)
 		return
 	}
 	p, bound := reliability.Survival(f.T, f.DoF), reliability.Bound(f.DoF)
@@ -51,29 +55,40 @@ func (w *work) assess(t *Tie, r []float64) {
 			t.effect, t.component = f.Effect[c], c
 		}
 	}
+	turns := w.metres(t.m)
 	t.DetectableM, t.DetectableRad = largest(f.Detectable[:turns]), largest(f.Detectable[turns:])
-	if m, rad := w.lengths(f.Apart); !math.IsNaN(m) && !math.IsNaN(rad) {
-		t.ApartM, t.ApartRad = &m, &rad
+	if m, rad := w.lengths(t.m, f.Apart); !math.IsNaN(m) && !math.IsNaN(rad) {
+		t.ApartM, t.ApartRad = w.lengthOf(t.m, m), w.angleOf(t.m, rad)
 	}
 }
 
-// lengths returns the translation and the rotation of a residual, metres and radians.
-func (w *work) lengths(r []float64) (m, rad float64) {
-	for c, x := range r {
-		if c < w.turns() {
-			m += x * x
-		} else {
-			rad += x * x
-		}
+// lengthOf returns a figure in metres, nil for what measures none; angleOf that in radians.
+func (w *work) lengthOf(m measurement, x float64) *float64 {
+	if w.metres(m) == 0 {
+		return nil
 	}
-	return math.Sqrt(m), math.Sqrt(rad)
+	return &x
+}
+
+func (w *work) angleOf(m measurement, x float64) *float64 {
+	if w.metres(m) == len(w.parts(m)) {
+		return nil
+	}
+	return &x
+}
+
+// redundancies fills in the means over the measured components.
+func (w *work) redundancies(t *Tie, of []float64) {
+	turns, n := w.metres(t.m), len(of)
+	t.Redundancy, t.RedundancyTranslation, t.RedundancyRotation = w.mean(t.m, of, 0, n), w.mean(t.m, of, 0, turns), w.mean(t.m, of, turns, n)
 }
 
 // mean returns the mean of the redundancies of measured components from up to before to; nil where none was measured.
-func (w *work) mean(factor int, redundancy []float64, from, to int) *float64 {
+func (w *work) mean(m measurement, redundancy []float64, from, to int) *float64 {
 	sum, n := 0.0, 0
+	info := w.info(m)
 	for c := from; c < to; c++ {
-		if w.b.Info(factor)[c*(w.d+1)] > 0 {
+		if info[c*(len(redundancy)+1)] > 0 {
 			sum += redundancy[c]
 			n++
 		}

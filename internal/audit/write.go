@@ -9,6 +9,7 @@ import (
 	"math"
 	"os"
 	"path/filepath"
+	"slices"
 	"strconv"
 
 	"selvage/internal/reliability"
@@ -73,19 +74,20 @@ func (a *Audit) Write(dir, made, version string) error {
 // csv writes the ties as a table, one row each in the order of the survey. Empty cells are figures that do not exist.
 func (a *Audit) csv() ([]byte, error) {
 	var b bytes.Buffer
-	fmt.Fprintf(&b, "# audit of %s, datum %s; residuals and detectable errors along the axes of the far end; detectable: alpha %g, power %g; shift relative to the gauge keyframe\n",
+	fmt.Fprintf(&b, "# audit of %s, datum %s; residuals and detectable errors along the axes of the far end, of a position along those of the sensor; detectable: alpha %g, power %g; shift relative to the gauge keyframe, or to control points where there is none\n",
 		a.Survey, a.Datum, reliability.Alpha, reliability.Power)
-	names := []string{"x", "y", "z", "rx", "ry", "rz"}
+	names := []string{"x", "y", "z", "rx", "ry", "rz", "range", "bearing", "elevation"}
 	if a.Dimension == 2 {
-		names = []string{"x", "y", "rz"}
+		names = []string{"x", "y", "rz", "range", "bearing"}
 	}
 	unit := func(c int) string {
-		if names[c][0] == 'r' {
-			return "_rad"
+		switch names[c] {
+		case "x", "y", "z", "range":
+			return "_m"
 		}
-		return "_m"
+		return "_rad"
 	}
-	head := []string{"tie", "from_robot", "from_session", "from_key", "to_robot", "to_session", "to_key", "verdict", "reason", "status", "bridge", "single_place", "set"}
+	head := []string{"tie", "kind", "from_robot", "from_session", "from_key", "to_robot", "to_session", "to_key", "verdict", "reason", "status", "bridge", "single_place", "set"}
 	for c, n := range names {
 		head = append(head, "r_"+n+unit(c))
 	}
@@ -114,14 +116,14 @@ func (a *Audit) csv() ([]byte, error) {
 		if t.Set > 0 {
 			set = strconv.Itoa(t.Set)
 		}
-		row := []string{t.ID, t.From.Robot, fmt.Sprint(t.From.Session), fmt.Sprint(t.From.Key), t.To.Robot, fmt.Sprint(t.To.Session), fmt.Sprint(t.To.Key),
+		row := []string{t.ID, t.Kind, t.From.Robot, fmt.Sprint(t.From.Session), fmt.Sprint(t.From.Key), t.To.Robot, fmt.Sprint(t.To.Session), fmt.Sprint(t.To.Key),
 			t.Verdict, t.Reason, string(t.Status), strconv.FormatBool(t.Bridge), strconv.FormatBool(t.Place), set}
 		for c := range names {
-			row = append(row, number(at(t.Residual, c)))
+			row = append(row, number(at(t, t.Residual, names[c])))
 		}
 		row = append(row, number(t.ResidualM), number(t.ResidualRad))
 		for c := range names {
-			row = append(row, number(at(t.W, c)))
+			row = append(row, number(at(t, t.W, names[c])))
 		}
 		is := ""
 		switch {
@@ -133,18 +135,22 @@ func (a *Audit) csv() ([]byte, error) {
 		}
 		row = append(row, number(t.T), is, strconv.Itoa(t.DoF), number(t.P), number(t.Bound), number(t.Redundancy), number(t.RedundancyTranslation), number(t.RedundancyRotation))
 		for c := range names {
-			row = append(row, number(at(t.Detectable, c)))
+			row = append(row, number(at(t, t.Detectable, names[c])))
 		}
 		if s := t.Shift; s != nil {
 			is := "bound"
-			where := []string{"", "", ""}
+			where, gauge := []string{"", "", ""}, []string{"", "", ""}
 			if s.Exact {
 				is = "exact"
 			}
 			if s.At != nil {
 				where = []string{s.At.Robot, fmt.Sprint(s.At.Session), fmt.Sprint(s.At.Key)}
 			}
-			row = append(row, number(&s.M), is, s.Component, where[0], where[1], where[2], s.Gauge.Robot, fmt.Sprint(s.Gauge.Session), fmt.Sprint(s.Gauge.Key))
+			if g := s.Gauge; g != nil {
+				gauge = []string{g.Robot, fmt.Sprint(g.Session), fmt.Sprint(g.Key)}
+			}
+			row = append(row, number(&s.M), is, s.Component)
+			row = append(append(row, where...), gauge...)
 		} else {
 			row = append(row, make([]string, 9)...)
 		}
@@ -157,9 +163,10 @@ func (a *Audit) csv() ([]byte, error) {
 	return b.Bytes(), w.Error()
 }
 
-// at returns a component, nil where there is none.
-func at[T ~float64](all []T, c int) *float64 {
-	if c >= len(all) {
+// at returns a component by name, nil where there is none.
+func at[T ~float64](t *Tie, all []T, name string) *float64 {
+	c := slices.Index(t.Parts, name)
+	if c < 0 || c >= len(all) {
 		return nil
 	}
 	x := float64(all[c])

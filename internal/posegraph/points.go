@@ -53,6 +53,7 @@ type PointPriors struct {
 	point []int32
 	at    [][3]float64
 	info  []lie.Mat3
+	W     []float64 // weight of each, 1 unless it is left out
 }
 
 // AddPointPriors appends an empty batch of control points to g and returns it.
@@ -69,7 +70,21 @@ func (c *PointPriors) Add(point int32, at [3]float64, info *lie.Mat3) {
 		at[2] = 0
 		m[2], m[5], m[6], m[7], m[8] = 0, 0, 0, 0, 0
 	}
-	c.point, c.at, c.info = append(c.point, point), append(c.at, at), append(c.info, m)
+	c.point, c.at, c.info, c.W = append(c.point, point), append(c.at, at), append(c.info, m), append(c.W, 1)
+}
+
+// Len returns the number of control points.
+func (c *PointPriors) Len() int { return len(c.point) }
+
+// Point returns the point of control point k.
+func (c *PointPriors) Point(k int) int32 { return c.point[k] }
+
+// Info returns the information matrix of control point k; it may be written.
+func (c *PointPriors) Info(k int) *lie.Mat3 { return &c.info[k] }
+
+// Residual returns the place of control point k less the known one.
+func (c *PointPriors) Residual(k int, v *Values) [3]float64 {
+	return minus(v.Points[c.point[k]], c.at[k])
 }
 
 // Keep removes the control points for which keep is false.
@@ -77,11 +92,11 @@ func (c *PointPriors) Keep(keep func(point int32) bool) {
 	n := 0
 	for k, p := range c.point {
 		if keep(p) {
-			c.point[n], c.at[n], c.info[n] = p, c.at[k], c.info[k]
+			c.point[n], c.at[n], c.info[n], c.W[n] = p, c.at[k], c.info[k], c.W[k]
 			n++
 		}
 	}
-	c.point, c.at, c.info = c.point[:n], c.at[:n], c.info[:n]
+	c.point, c.at, c.info, c.W = c.point[:n], c.at[:n], c.info[:n], c.W[:n]
 }
 
 // Couplings implements [FactorSet]: a control point couples nothing.
@@ -100,13 +115,14 @@ func (c *PointPriors) Cost(v *Values) float64 {
 	return sum / 2
 }
 
-// residual returns r, the place less the known one, and Omega r.
+// residual returns r, the place less the known one, and the weight times Omega r.
 func (c *PointPriors) residual(k int, v *Values) (r, or [3]float64) {
-	p := &v.Points[c.point[k]]
-	for i := range r {
-		r[i] = p[i] - c.at[k][i]
+	r = c.Residual(k, v)
+	or = c.info[k].Apply(r)
+	for i := range or {
+		or[i] *= c.W[k]
 	}
-	return r, c.info[k].Apply(r)
+	return r, or
 }
 
 // Linearise implements [FactorSet].
@@ -117,7 +133,9 @@ func (c *PointPriors) Linearise(v *Values, a *Assembly) float64 {
 		sum += r[0]*or[0] + r[1]*or[1] + r[2]*or[2]
 		variable := c.g.Point(c.point[k])
 		if d := a.Diag(variable); d != nil {
-			add9(d, &c.info[k])
+			for i, x := range c.info[k] {
+				d[i] += c.W[k] * x
+			}
 			add3(a.Grad(variable), &or)
 		}
 	}

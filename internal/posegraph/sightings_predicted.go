@@ -54,6 +54,22 @@ func (s *Sightings) Predicted(k int, v *Values, sigma Covariance) (p lie.Mat3) {
 	return p
 }
 
+// Jacobians writes the derivatives of the residual of sighting k at v by the tangent of pose From, 3 x Dim row-major, and by that of
+// what is seen, 3 x Dim for a robot and 3 x 3 for a point. Rows of what is not measured are zero.
+func (s *Sightings) Jacobians(k int, v *Values, ji, jj []float64) {
+	var li, lj [18]float64
+	_, a := s.evaluate(k, s.seen(k, v), true)
+	di, dj := s.spreads(k, v, &li, &lj)
+	for r := range 3 {
+		for c := range di {
+			ji[r*di+c] = a[3*r]*li[c] + a[3*r+1]*li[di+c] + a[3*r+2]*li[2*di+c]
+		}
+		for c := range dj {
+			jj[r*dj+c] = a[3*r]*lj[c] + a[3*r+1]*lj[dj+c] + a[3*r+2]*lj[2*dj+c]
+		}
+	}
+}
+
 // Innovation returns r' (J Sigma J' + C)^-1 r of sighting k, C its own covariance: how far it lies from what the others predict,
 // chi-square with as many degrees of freedom as it measures when it is true. It must not be part of the solution (weight zero).
 func (s *Sightings) Innovation(k int, v *Values, sigma Covariance) float64 {
