@@ -4,7 +4,9 @@ import (
 	"fmt"
 
 	"selvage/internal/adjust"
+	"selvage/internal/evidence"
 	"selvage/internal/posegraph"
+	"selvage/internal/robust"
 	"selvage/internal/survey"
 )
 
@@ -17,28 +19,25 @@ type LeftOut struct {
 	Of      int    `json:"of"`
 }
 
-const (
-	fitsOthers = "fits the others"
-	fitsNot    = "does not fit the others"
-	joinsNot   = "its frames are not held to each other by what fits"
-)
+const joinsNot = "its frames are not held to each other by what fits"
 
 // fit decides which sightings and which ties that are less than a pose are in the adjustment, and takes the others out of the graph.
 // Ties with a verdict keep it. Where most of what was seen of a control point is left out, its coordinates disagree with all that was
 // seen of it: they are taken away, the fit is repeated, and the mark is tested against them thereafter.
 func (w *work) fit() error {
+	var decided robust.Result
 	for {
 		if err := w.p.Analyse(2); err != nil {
 			return err
 		}
 		o := posegraph.DefaultOptions()
 		o.Watch = func(int, float64, float64) bool { return w.ctx.Err() == nil }
-		r, _ := w.p.SolveRobust(o, func(tie int) bool { return !w.out.Ties[tie].free })
-		switch r.Stop {
+		decided = w.p.SolveRobust(o, func(tie int) bool { return !w.out.Ties[tie].free })
+		switch decided.Stop {
 		case posegraph.Interrupted:
 			return w.ctx.Err()
 		case posegraph.Undetermined:
-			return fmt.Errorf("%w in some direction: %s", ErrUndetermined, w.p.Describe(r.Weakest))
+			return fmt.Errorf("%w in some direction: %s", ErrUndetermined, w.p.Describe(decided.Weakest))
 		}
 		wrong := w.disbelieved()
 		if len(wrong) == 0 {
@@ -49,10 +48,14 @@ func (w *work) fit() error {
 			return err
 		}
 	}
-	before := w.p.Sights()
-	cut := make([]bool, len(before))
-	for i, e := range before {
-		cut[i] = e.Set != nil && e.Set.W[e.K] < 0.5
+	finding := map[measurement]*robust.Finding{}
+	for i := range decided.Findings {
+		f := &decided.Findings[i]
+		finding[measurement{sights: f.Set, k: f.K}] = f
+	}
+	found := make([]*robust.Finding, len(w.p.Sights()))
+	for i, e := range w.p.Sights() {
+		found[i] = finding[measurement{sights: e.Set, k: e.K}]
 	}
 	if err := w.p.LeaveOut(); err != nil {
 		return err
@@ -65,11 +68,12 @@ func (w *work) fit() error {
 		switch t := &w.out.Ties[e.Tie]; {
 		case e.Set == nil && !t.free:
 			t.Reason += "; " + joinsNot
-		case e.Set != nil && t.free:
-			t.Verdict, t.Reason = "held", fitsOthers
-		case cut[i]:
-			t.Verdict, t.Reason = "refused", fitsNot
-		case t.free:
+		case !t.free:
+		case e.Set != nil:
+			t.Verdict, t.Reason = "held", found[i].Reason()
+		case found[i] != nil && found[i].Verdict == evidence.Refused:
+			t.Verdict, t.Reason = "refused", found[i].Reason()
+		default:
 			t.Verdict, t.Reason = "open", joinsNot
 		}
 	}

@@ -42,6 +42,8 @@ type Control struct {
 	P           *float64 `json:"p,omitempty"`
 	Redundancy  *float64 `json:"redundancy,omitempty"`
 	DetectableM *float64 `json:"detectable_m,omitempty"`
+	LiesAt      string   `json:"lies_at,omitempty"` // another known place that is as good as met: they may be exchanged
+	LiesAtM     *float64 `json:"lies_at_m,omitempty"`
 	index       int      // into the list of all measurements, -1 where left out
 }
 
@@ -203,10 +205,32 @@ func (w *work) testControl(point, mark, prior int, held bool) *Control {
 	t, dof := reliability.Judge(r, info, cov)
 	p := reliability.Survival(t, dof)
 	c.ApartM, c.T, c.DoF, c.P, c.Status = &apart, &t, dof, &p, Fits
+	c.LiesAt, c.LiesAtM = w.liesAt(point, mark, apart)
 	if t > reliability.Bound(dof) {
 		c.Status = Contradicts
 	}
 	return c
+}
+
+// liesAt names the mark of known place that a point is nearest to, if it is ten times nearer than to its own coordinates.
+func (w *work) liesAt(point, mark int, apart float64) (name string, m *float64) {
+	at, best := w.p.Graph.Values.Points[point], apart/10
+	for k := range w.s.Marks {
+		x := &w.s.Marks[k]
+		if k == mark || x.Role == survey.PlainMark {
+			continue
+		}
+		d := 0.0
+		for c := range w.turns() {
+			if !math.IsInf(x.Sigma[c], 1) {
+				d = math.Hypot(d, at[c]-x.T[c])
+			}
+		}
+		if d < best {
+			best, name, m = d, x.Name, &d
+		}
+	}
+	return name, m
 }
 
 // split tests whether one session sees a point elsewhere than all else has it; nil where nothing else says where it is.

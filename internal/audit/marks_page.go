@@ -72,7 +72,11 @@ func (a *Audit) badMarks() (controls, marks, rest []string) {
 		c := m.Control
 		switch {
 		case c.Status == Contradicts && c.ApartM != nil:
-			controls = append(controls, fmt.Sprintf("Control point %s is not where its coordinates say: %s put it %s m away. The coordinates are left out of the adjustment; look at the point, and at who gave it.", m.Mark, count(m.Sightings, "sighting"), short(*c.ApartM)))
+			where := ""
+			if c.LiesAt != "" {
+				where = fmt.Sprintf(", %s m from those of %s: the two may be exchanged", short(*c.LiesAtM), c.LiesAt)
+			}
+			controls = append(controls, fmt.Sprintf("Control point %s is not where its coordinates say: %s put it %s m away%s. Its coordinates are left out.", m.Mark, count(m.Sightings, "sighting"), short(*c.ApartM), where))
 		case c.Status == Contradicts:
 			controls = append(controls, fmt.Sprintf("Control point %s: what was seen of it agrees neither with its coordinates nor with itself, and all %s are left out.", m.Mark, count(m.LeftOut, "sighting")))
 		case c.Status == Failed && c.ApartM != nil:
