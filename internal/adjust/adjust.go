@@ -49,6 +49,8 @@ type Problem struct {
 	released []bool // mark of the survey -> its coordinates take no part; nil for none
 	placed   []bool // island -> it was placed on its control points; nil before Place
 
+	verticals []vertical
+
 	solver  *posegraph.Solver // nil before the analysis
 	workers int               // that it was made for
 }
@@ -153,6 +155,7 @@ func build(s *survey.Survey, held func(tie int) bool, ends bool) (*Problem, erro
 	if err := p.addSightings(s, &moments); err != nil {
 		return nil, err
 	}
+	p.addVerticals(s)
 	p.connect(nil, false)
 	return p, nil
 }

@@ -64,6 +64,7 @@ func (p *Problem) beginSighted(start Start) error {
 	p.own = slices.Clone(p.Graph.Values.Poses)
 	for _, coarse := range [2]bool{true, false} {
 		p.reconnect(body, coarse)
+		p.erect()
 		if err := p.control(coarse); err != nil {
 			return err
 		}
@@ -224,6 +225,9 @@ func (p *Problem) priors(g *posegraph.Graph) (anchors []int32, free []bool) {
 	}
 	island, count := g.Components()
 	anchors, free = g.Anchors(), make([]bool, count)
+	if g == p.Graph {
+		anchors = p.anchors(g)
+	}
 	for _, v := range anchors {
 		free[island[v]] = true
 	}
@@ -240,7 +244,15 @@ func (p *Problem) toDatum(island int32) error {
 			from, to = append(from, g.Values.Points[k]), append(to, m.T)
 		}
 	}
-	move, ok := lie.FitPoints(g.Dim == 3, from, to, nil)
+	flat := g.Dim == 3
+	if up, ok := p.uprightBy(island); ok {
+		p.move(island, &up)
+		for k := range from {
+			from[k] = up.Apply(from[k])
+		}
+		flat = true
+	}
+	move, ok := lie.FitPoints(flat, from, to, nil)
 	if !ok {
 		return fmt.Errorf("the control points lie so close or so much in line that they leave the map free to turn")
 	}

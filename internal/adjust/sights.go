@@ -146,7 +146,7 @@ func (p *Problem) connect(label []int32, coarse bool) {
 		posegraph.PlacePoints(p.Graph)
 	}
 	p.Island, p.Islands = p.Graph.Components()
-	p.Anchors = p.Graph.Anchors()
+	p.Anchors = p.anchors(p.Graph)
 	for k := range p.Points {
 		p.Points[k].Island = p.Island[p.Graph.Point(int32(k))]
 	}
@@ -162,6 +162,7 @@ type place struct {
 func (p *Problem) enter(label []int32, coarse bool, lost map[place]bool) {
 	g := p.Graph
 	g.Sets = append(g.Sets[:0], p.Factors)
+	p.addLevels(g)
 	g.Values.Points, p.Points, p.solver = nil, nil, nil
 	point := map[place]int32{}
 	sets := sets{graph: g}

@@ -38,8 +38,25 @@ type Grid struct {
 type RobotMeta struct {
 	ID             string   `yaml:"id"`
 	Sessions       []uint32 `yaml:"sessions,flow"`
-	GravityAligned bool     `yaml:"gravity_aligned"` // the z axes of its session frames point up
+	GravityAligned bool     `yaml:"gravity_aligned"`             // the z axes of its session frames point up
+	GravitySigma   float64  `yaml:"gravity_sigma_rad,omitempty"` // within this; 0 is DefaultGravitySigma
 	Mounting       []Mount  `yaml:"mounting,omitempty"`
+}
+
+// DefaultGravitySigma is how well a robot is taken to know the vertical that says no more than that it does, radians: half a degree and a
+// little, as of an accelerometer that is not calibrated (common practice).
+const DefaultGravitySigma = 0.01
+
+// Vertical returns the standard deviation of the direction of the z axes of the robot's session frames from the vertical, radians; 0 when
+// they are not aligned with it.
+func (r *RobotMeta) Vertical() float64 {
+	switch {
+	case !r.GravityAligned:
+		return 0
+	case r.GravitySigma > 0:
+		return r.GravitySigma
+	}
+	return DefaultGravitySigma
 }
 
 // Mount is the pose in base_link of a sensor, or of what other robots see on
@@ -123,6 +140,9 @@ func (m *Meta) check(report func(path, found, expected string)) {
 func (r *RobotMeta) check(path string, name func(path, s string), number func(path string, v, most float64), report func(path, found, expected string)) {
 	if n := len(r.Sessions); n == 0 || n > maxSessions {
 		report(path+".sessions", fmt.Sprintf("%d sessions", n), fmt.Sprintf("1 to %d", maxSessions))
+	}
+	if s := r.GravitySigma; !(s >= 0 && s <= math.Pi) || s > 0 && !r.GravityAligned {
+		report(path+".gravity_sigma_rad", fmt.Sprint(s), "above 0, at most half a turn, of a robot that is gravity_aligned")
 	}
 	sessions := make(map[uint32]bool)
 	for j, s := range r.Sessions {
