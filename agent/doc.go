@@ -8,10 +8,12 @@
 // What it does with an event:
 //
 //	keyframe, relative pose     into the pose graph of their session
+//	sighting of a mark          into the graph of its session, with the mark as a point; a moment between keyframes becomes one
+//	                            by splitting the odometry, when that has come
 //	tie                         numbered, kept until the base says it is safe, published; its keyframe becomes a separator
-//	want                        names separators the base needs, records it misses, and the number below which all is safe
+//	want                        names separators and marks the base needs, records it misses, and the number below which all is safe
 //	a base of a new incarnation its store is empty: nothing is safe any more, ties and summary are said again
-//	correction                  junctions go where the base found them, interior poses follow by a solve of their own; the
+//	correction                  junctions go where the base found them, interior poses and marks follow by a solve of their own; the
 //	                            robot's frame keeps its place, where it stands in the datum is kept beside it
 //	tick                        what is due: ties again that are not safe yet, a new summary, the old one again, a heartbeat
 //
@@ -21,6 +23,12 @@
 //
 // Loop closures may be false, and a false one would bend the map before it reaches the base: whenever the map is brought up to date
 // they are judged anew against the robot's own odometry and each other, and only those that are held have weight ([Agent.Closures]).
+//
+// Sightings of marks may name the wrong one. Whenever the robot's map is brought to its own optimum they are decided anew by what the
+// robot itself has measured, and only what is held takes part ([Agent.Sightings]). A mark takes part while the sightings of it that are
+// held place it. Of its marks a summary tells the names; those that the base asks for, because others have seen them too, stay in the summary
+// as points. What a front end knows of the vertical ([Config.Level]) is told beside the summary and not in it, for a summary
+// says nothing of where its frame lies.
 //
 // The robot's own poses never jump: they stay in the session's frame, and [Agent.Tracks] gives them there together with the
 // transform into the datum.

@@ -114,6 +114,9 @@ func newFleet(t testing.TB, seed uint64, c plan, hold bool) *fleet {
 			}
 			e.Sigma[i], e.Value[i] = sigma[i], value[i]+sigma[i]*r.NormFloat64()
 		}
+		if kind != survey.Position {
+			e.Value[0] = math.Abs(e.Value[0])
+		}
 		return e
 	}
 	event := func(kind survey.Kind, e *survey.Sight) Sight {
@@ -259,6 +262,17 @@ func (f *fleet) ask() {
 	}
 }
 
+// identity names a mark as the base takes it: where a robot holds a wrong sighting, which nothing that it knows speaks against, the base
+// has found its mark to be another one.
+func (f *fleet) identity(robot int, mark string) string {
+	for k, e := range f.agents[robot].Sightings() {
+		if e.Mark == mark && e.Verdict == msgs.Held && f.wrong[fmt.Sprint(f.survey.Robots[robot].ID, k)] {
+			return fmt.Sprintf("%s@%d", mark, robot)
+		}
+	}
+	return mark
+}
+
 // solve is the base: cliques, ties and marks of all summaries in one graph, then a correction for each robot.
 func (f *fleet) solve() {
 	f.t.Helper()
@@ -284,8 +298,8 @@ func (f *fleet) solve() {
 				g.Values.Poses = append(g.Values.Poses, x)
 			}
 			for _, q := range part.Points {
-				if _, known := point[q.Mark]; !known {
-					point[q.Mark] = int32(len(g.Values.Points))
+				if _, known := point[f.identity(i, q.Mark)]; !known {
+					point[f.identity(i, q.Mark)] = int32(len(g.Values.Points))
 					g.Values.Points = append(g.Values.Points, f.start[i].Apply(q.At))
 				}
 			}
@@ -305,7 +319,7 @@ func (f *fleet) solve() {
 				}
 				for _, n := range c.Points {
 					q := &part.Points[n]
-					points, places = append(points, point[q.Mark]), append(places, q.At)
+					points, places = append(points, point[f.identity(i, q.Mark)]), append(places, q.At)
 				}
 				if len(points) == 0 {
 					cliques.Add(nodes, at, c.H, c.B)
@@ -374,7 +388,7 @@ func (f *fleet) solve() {
 				}
 			}
 			for _, m := range part.Points {
-				q.Points = append(q.Points, msgs.Point{Mark: m.Mark, At: g.Values.Points[point[m.Mark]]})
+				q.Points = append(q.Points, msgs.Point{Mark: m.Mark, At: g.Values.Points[point[f.identity(i, m.Mark)]]})
 			}
 			c.Parts = append(c.Parts, q)
 		}
@@ -406,9 +420,12 @@ func (f *fleet) gap() (gap float64, whole posegraph.Result) {
 	for i, a := range f.agents { // what is not held sees a mark of its own, which costs nothing; its keyframe is there all the same
 		part.Robots[i].Sightings = slices.Clone(f.survey.Robots[i].Sightings)
 		for k, e := range a.Sightings() {
+			name := f.identity(i, e.Mark)
 			if e.Verdict != msgs.Held {
-				name := fmt.Sprintf("out%d-%d", i, k)
-				part.Robots[i].Sightings[k].Mark = name
+				name = fmt.Sprintf("out%d-%d", i, k)
+			}
+			part.Robots[i].Sightings[k].Mark = name
+			if !slices.ContainsFunc(part.Marks, func(m survey.Mark) bool { return m.Name == name }) {
 				part.Marks = append(part.Marks, survey.Mark{Name: name})
 			}
 		}
@@ -432,7 +449,7 @@ func (f *fleet) gap() (gap float64, whole posegraph.Result) {
 			p.Graph.Values.Poses[v] = x
 		}
 		for _, m := range track.Marks {
-			places[m.Name] = track.DatumFromSession.Apply(m.Place)
+			places[f.identity(i, m.Name)] = track.DatumFromSession.Apply(m.Place)
 		}
 	}
 	if err := p.Begin(adjust.Given); err != nil {

@@ -3,6 +3,7 @@ package agent
 import (
 	"math/rand/v2"
 	"slices"
+	"strings"
 	"testing"
 
 	"selvage/internal/lie"
@@ -27,13 +28,23 @@ func bent(a *Agent, version, n uint64) *msgs.Correction {
 			continue
 		}
 		p := msgs.CorrectedPart{Session: s.id, Joined: true, Island: "x", DatumFromSession: wirePose(&datum, a.cfg.Dim)}
-		junctions := slices.Clone(s.told.condensed.Junctions)
+		n := s.told.poses()
+		junctions := slices.Clone(s.told.condensed.Junctions[:n])
 		slices.SortFunc(junctions, func(v, w int32) int { return int(s.keys[v] - s.keys[w]) })
 		for _, v := range junctions {
 			x := motion(datum.Mul(s.graph.Values.Poses[v]), rng, a.cfg.Dim, 0.05, 0.02)
 			p.IDs = append(p.IDs, s.keys[v])
 			p.Poses = append(p.Poses, wirePose(&x, a.cfg.Dim))
 		}
+		for _, v := range s.told.condensed.Junctions[n:] {
+			m := s.told.marks[s.told.point(v)]
+			at := s.graph.Values.Points[s.marks[m].point]
+			for i := range a.cfg.Dim {
+				at[i] += 0.05 * rng.NormFloat64()
+			}
+			p.Points = append(p.Points, msgs.Point{Mark: s.marks[m].name, At: datum.Apply(at)})
+		}
+		slices.SortFunc(p.Points, func(a, b msgs.Point) int { return strings.Compare(a.Mark, b.Mark) })
 		c.Parts = append(c.Parts, p)
 	}
 	return c

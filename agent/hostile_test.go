@@ -7,6 +7,7 @@ import (
 	"testing"
 
 	"selvage/internal/lie"
+	"selvage/internal/posegraph"
 	"selvage/msgs"
 )
 
@@ -17,6 +18,8 @@ func siege(t testing.TB, rng *rand.Rand) {
 	r := newRobot(t, dim)
 	r.walk(1, 0, 25, rng.Uint64())
 	r.see(1, 5)
+	r.glance(1, 2, 9, "a", lie.Identity())
+	r.glance(1, 12, 20, "b", lie.Identity())
 	number := func() float64 { return []float64{0, 1, -3, 1e3, -1e6, 9e8, 1e9}[rng.IntN(7)] }
 	pose := func() msgs.Pose {
 		a := number()
@@ -38,6 +41,7 @@ func siege(t testing.TB, rng *rand.Rand) {
 				}
 				w.Keys = append(w.Keys, k)
 			}
+			w.Marks = [][]string{nil, {"a"}, {"b", "nowhere"}}[rng.IntN(3)]
 			if rng.IntN(2) == 0 {
 				w.Gaps = [][2]uint64{{w.Safe + 1, math.MaxUint64}}
 			}
@@ -49,6 +53,9 @@ func siege(t testing.TB, rng *rand.Rand) {
 				for id := int64(-1); id < 30; id += 1 + rng.Int64N(9) {
 					p.IDs = append(p.IDs, id)
 					p.Poses = append(p.Poses, pose())
+				}
+				for _, m := range [][]string{nil, {"a", "nowhere"}, {"b"}}[rng.IntN(3)] {
+					p.Points = append(p.Points, msgs.Point{Mark: m, At: pose().T})
 				}
 				c.Parts = append(c.Parts, p)
 			}
@@ -62,6 +69,12 @@ func siege(t testing.TB, rng *rand.Rand) {
 			}
 		case 3:
 			r.see(1, rng.Int64N(25))
+			stamp := []int64{0, 3, 1 << 62, math.MaxInt64, -1, r.now + 7}[rng.IntN(6)]
+			sight := Sight{Sense: posegraph.Sense(1 + rng.IntN(4)), Value: [3]float64{math.Abs(number()), 1, 0.1}, Info: lie.Mat3{400, 0, 0, 0, 400, 0, 0, 0, 400}, Mount: lie.Identity()}
+			mark := []string{"a", "b", fmt.Sprint("c", rng.IntN(3))}[rng.IntN(3)]
+			_, _ = r.Handle(r.now, Sighting{Session: 1, ID: rng.Int64N(26), Mark: mark, Sight: sight}) // refused or not
+			_, _ = r.Handle(r.now, Sighting{Session: 1, ByStamp: true, StampNS: stamp, Mark: mark, Sight: sight})
+			_, _ = r.Handle(r.now, Tie{From: msgs.KeyRef{Robot: "r1", Session: 1, ByStamp: true, StampNS: stamp}, To: msgs.KeyRef{Robot: "r2", Session: 1, ID: 7}, Sight: &sight})
 		}
 	}
 	r.do(Keyframe{Session: 1, ID: 100, StampNS: r.now, Pose: lie.Identity()})

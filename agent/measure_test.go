@@ -7,6 +7,7 @@ import (
 	"testing"
 
 	"selvage/internal/lie"
+	"selvage/internal/posegraph"
 	"selvage/msgs"
 )
 
@@ -35,6 +36,12 @@ func TestRefusedEventsLeaveNoTrace(t *testing.T) {
 	relative := func(from, to int64, z lie.SE3, info [36]float64) Relative {
 		return Relative{Session: 1, From: from, To: to, Z: z, Info: info}
 	}
+	ranged := Sight{Sense: posegraph.Range, Value: [3]float64{5}, Info: lie.Mat3{1}, Mount: lie.Identity()}
+	sighting := func(spoil func(s *Sight)) Sighting {
+		e := Sighting{Session: 1, ID: 1, Mark: "m", Sight: ranged}
+		spoil(&e.Sight)
+		return e
+	}
 	for _, c := range []struct {
 		name string
 		e    Event
@@ -60,6 +67,27 @@ func TestRefusedEventsLeaveNoTrace(t *testing.T) {
 		{"tie that is no number", tie(own(1, 3), other, nan, info), "t"},
 		{"tie with indefinite information", tie(own(1, 3), other, lie.Identity(), indefinite), "semidefinite"},
 		{"tie to no name", tie(own(1, 3), msgs.KeyRef{Robot: "a b"}, lie.Identity(), info), "t"},
+		{"tie with a sight that is no number", Tie{ID: "t", From: own(1, 3), To: other, Sight: &Sight{Sense: posegraph.Range, Value: [3]float64{math.NaN()}, Info: lie.Mat3{1}, Mount: lie.Identity()}}, "t"},
+		{"tie at a moment before the track", Tie{ID: "t", From: msgs.KeyRef{Robot: "r1", Session: 1, ByStamp: true, StampNS: -5}, To: other, Sight: &ranged}, "before the first keyframe"},
+		{"tie at a moment of an unknown session", Tie{ID: "t", From: msgs.KeyRef{Robot: "r1", Session: 5, ByStamp: true, StampNS: 3}, To: other, Sight: &ranged}, "session 5"},
+		{"sighting in an unknown session", Sighting{Session: 5, ID: 1, Mark: "m", Sight: ranged}, "session 5"},
+		{"sighting from an unknown keyframe", Sighting{Session: 1, ID: 99, Mark: "m", Sight: ranged}, "keyframe 99"},
+		{"sighting before the track", Sighting{Session: 1, ByStamp: true, StampNS: math.MinInt64, Mark: "m", Sight: ranged}, "before the first keyframe"},
+		{"sighting of no mark", Sighting{Session: 1, ID: 1, Sight: ranged}, "mark"},
+		{"sighting of a mark with a long name", Sighting{Session: 1, ID: 1, Mark: strings.Repeat("m", 129), Sight: ranged}, "mark"},
+		{"sighting of a mark with a space", Sighting{Session: 1, ID: 1, Mark: "a b", Sight: ranged}, "mark"},
+		{"sighting without a sense", sighting(func(s *Sight) { s.Sense = 0 }), "sense 0"},
+		{"sighting by an unknown sense", sighting(func(s *Sight) { s.Sense = 5 }), "sense 5"},
+		{"sighting that measures nothing", sighting(func(s *Sight) { s.Info = lie.Mat3{4: 1} }), "nothing is measured"},
+		{"sighting that is no number", sighting(func(s *Sight) { s.Value[0] = math.NaN() }), "mark \"m\""},
+		{"sighting of infinite range", sighting(func(s *Sight) { s.Value[0] = math.Inf(1) }), "mark \"m\""},
+		{"sighting of negative range", sighting(func(s *Sight) { s.Value[0] = -1 }), "range -1"},
+		{"sighting straight through the back", sighting(func(s *Sight) {
+			s.Sense, s.Value, s.Info = posegraph.Bearing, [3]float64{0, 1, 2}, lie.Mat3{4: 1, 8: 1}
+		}), "elevation 2"},
+		{"sighting with information that is none", sighting(func(s *Sight) { s.Info[0] = math.Inf(1) }), "information"},
+		{"sighting with indefinite information", sighting(func(s *Sight) { s.Sense, s.Info = posegraph.Position, lie.Mat3{1, 2, 0, 2, 1} }), "semidefinite"},
+		{"sighting by a crooked sensor", sighting(func(s *Sight) { s.Mount = scaled }), "mounting"},
 		{"unknown kind of message", Message{Kind: "hb"}, "hb"},
 		{"message that is none", Message{Kind: msgs.KindWant, Payload: []byte{1, 2, 3}}, ""},
 	} {
@@ -118,10 +146,16 @@ func TestSameEventsSameBytes(t *testing.T) {
 // life is ten minutes of an agent with everything in it.
 func life(r *robot) (out []Publish) {
 	r.walk(1, 0, 45, 1)
+	r.glance(1, 3, 12, "a", lie.Identity())
+	r.glance(1, 20, 30, "b", lie.Identity())
 	out = append(out, r.see(1, 3)...)
 	out = append(out, r.see(1, 40)...)
 	out = append(out, r.tick(30)...)
-	out = append(out, r.want(func(w *msgs.Want) { w.Keys = []msgs.KeyRef{{Robot: "r1", Session: 1, ID: 20}}; w.Safe = 1 })...)
+	out = append(out, r.want(func(w *msgs.Want) {
+		w.Keys = []msgs.KeyRef{{Robot: "r1", Session: 1, ID: 20}}
+		w.Marks = []string{"b"}
+		w.Safe = 1
+	})...)
 	r.walk(2, 100, 25, 2)
 	out = append(out, r.see(2, 110)...)
 	out = append(out, r.tick(100)...)

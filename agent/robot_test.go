@@ -7,6 +7,7 @@ import (
 	"testing"
 
 	"selvage/internal/lie"
+	"selvage/internal/posegraph"
 	"selvage/msgs"
 )
 
@@ -154,7 +155,22 @@ func (r *robot) see(session uint32, id int64) []Publish {
 	return r.do(Tie{From: msgs.KeyRef{Robot: "r1", Session: session, ID: id}, To: msgs.KeyRef{Robot: "r2", Session: 1, ID: 7}, Z: lie.Identity(), Info: sigmas(0.1, 0.02)})
 }
 
+// glance lets the robot see a mark from some keyframes, first to last, by range and bearing: about where it is from the middle of the loop.
+func (r *robot) glance(session uint32, first, last int64, mark string, mount lie.SE3) {
+	r.t.Helper()
+	s := r.session(session)
+	place := s.front[s.index[first]].Apply([3]float64{1, 4, 0})
+	for id := first; id <= last; id++ {
+		q := s.front[s.index[id]].Mul(mount).Inv().Apply(place)
+		flat := math.Hypot(q[0], q[1])
+		r.do(Sighting{Session: session, ID: id, Mark: mark, Sight: Sight{
+			Sense: posegraph.RangeBearing, Value: [3]float64{math.Hypot(flat, q[2]), math.Atan2(q[1], q[0]), math.Atan2(q[2], flat)},
+			Info: lie.Mat3{400, 0, 0, 0, 2500, 0, 0, 0, 2500}, Mount: mount,
+		}})
+	}
+}
+
 // fingerprint is everything that can be seen of an agent.
 func fingerprint(a *Agent) string {
-	return fmt.Sprintf("%v %v %d %v", a.Tracks(), a.Applied(), a.Raw(), a.Settled())
+	return fmt.Sprintf("%v %v %v %d %v", a.Tracks(), a.Sightings(), a.Applied(), a.Raw(), a.Settled())
 }
