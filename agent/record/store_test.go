@@ -84,7 +84,14 @@ func track(seed uint64, dim, keyframes int) []told {
 		from := msgs.KeyRef{Robot: "r1", Session: session, ID: key(n)}
 		to := msgs.KeyRef{Robot: "r2", Session: 4, ByStamp: true, StampNS: now}
 		sight := agent.Sight{Sense: posegraph.Range, Value: [3]float64{3, 0, 0}, Info: lie.Mat3{0: 100}, Mount: lie.Identity()}
-		switch rng.IntN(6) {
+		moment := now - second/3 + rng.Int64N(second) // of this robot, also one that is still to come
+		switch rng.IntN(8) {
+		case 6:
+			say(agent.Tie{From: msgs.KeyRef{Robot: "r1", Session: session, ByStamp: true, StampNS: moment}, To: to, Sight: &sight})
+		case 7:
+			s := sight
+			s.Sense, s.Info, s.Value = posegraph.RangeBearing, lie.Mat3{0: 100, 4: 1000, 8: 1000}, [3]float64{3, rng.Float64(), 0}
+			say(agent.Sighting{Session: session, ByStamp: true, StampNS: moment, Mark: "n", Sight: s})
 		case 0:
 			say(agent.Tie{From: from, To: to, Z: noisy(lie.Identity(), 1), Info: info, Source: "lidar", StampNS: now})
 		case 1:
@@ -223,6 +230,15 @@ func TestCrashAndReplay(t *testing.T) {
 			i++
 			if rng.IntN(3) == 0 {
 				l.handle(t, all[i-1].atNS, agent.Tick{})
+			}
+			if rng.IntN(10) == 0 { // the base asks for a moment, which makes a keyframe that no journal knows of
+				w := msgs.Want{Fleet: "f", Robot: "r1", Epoch: msgs.Epoch{Incarnation: 1}, Term: 1, Journal: l.cfg.Journal,
+					Keys: []msgs.KeyRef{{Robot: "r1", Session: 1, ByStamp: true, StampNS: all[i-1].atNS - int64(rng.IntN(int(20*second)))}}}
+				b, err := w.Marshal()
+				if err != nil {
+					t.Fatal(err)
+				}
+				l.handle(t, all[i-1].atNS, agent.Message{Kind: msgs.KindWant, Payload: b})
 			}
 			if rng.IntN(4) == 0 {
 				l.commit(t)
