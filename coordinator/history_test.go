@@ -53,7 +53,7 @@ func TestHistory(t *testing.T) {
 	if got := story(h); got != "1 s, epoch 1: none to open; 63 s, epoch 3: open to held" {
 		t.Error(got)
 	}
-	if h[0].Reason != "waiting for the separator of r2" || h[1].Reason != "taken as true on request" || h[1].Epoch.Incarnation != b.cfg.Incarnation {
+	if h[0].Reason != "waiting for the separator of r2, which its next summary is to bring" || h[1].Reason != "taken as true on request" || h[1].Epoch.Incarnation != b.cfg.Incarnation {
 		t.Errorf("%+v", h)
 	}
 	if f := b.Findings()[0]; f.SinceNS != 63*second {

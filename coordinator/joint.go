@@ -166,7 +166,7 @@ func (c *Coordinator) pose(n *network, w *weighed) (*joint, error) {
 		j.factor[i] = -1
 		if w.island[t.from] != w.island[t.to] {
 			if t.finding.Verdict == msgs.Refused && t.ruled == nil {
-				t.judge(msgs.Open, "nothing held connects its two robots", t.finding.Evidence)
+				t.judge(msgs.Open, c.unjoined(n, i), t.finding.Evidence)
 			}
 			if t.sight != nil && w.held[i] { // its island fell apart
 				w.held[i] = false

@@ -98,11 +98,11 @@ func (c *Coordinator) layout() *network {
 		}
 		switch {
 		case missing != "":
-			t.judge(msgs.Open, "waiting for the separator of "+missing, msgs.Evidence{})
+			t.judge(msgs.Open, waitingFor(missing), msgs.Evidence{})
 		case apart != "":
-			t.judge(msgs.Open, "touches a part of the map of "+apart+" that is not connected with the rest of it", msgs.Evidence{})
+			t.judge(msgs.Open, strayIn(apart), msgs.Evidence{})
 		case u.from == u.to:
-			t.judge(msgs.Open, "both ends lie in one session: a loop closure belongs to its robot", msgs.Evidence{})
+			t.judge(msgs.Open, ofOneSession(t.msg.From.Robot), msgs.Evidence{})
 		default:
 			n.ties = append(n.ties, u)
 			n.partial = n.partial || t.sight != nil

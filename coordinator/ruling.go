@@ -114,9 +114,9 @@ func (c *Coordinator) overrule(n *network, w *weighed) {
 			case t.ruled.Verdict == msgs.Refused:
 				t.judge(msgs.Refused, reason, msgs.Evidence{})
 			case n.loose(i):
-				t.judge(msgs.Open, reason+"; but "+looseReason, msgs.Evidence{})
+				t.judge(msgs.Open, reason+"; but "+n.looseReason(i), msgs.Evidence{})
 			case t.wild():
-				t.judge(msgs.Open, reason+"; but it claims more than can be measured", msgs.Evidence{})
+				t.judge(msgs.Open, reason+"; but it "+wildReason, msgs.Evidence{})
 			case !t.regular && w.island[t.from] != w.island[t.to]:
 				t.judge(msgs.Open, reason+"; but it measures too little of a pose to join two maps", msgs.Evidence{})
 			default:

@@ -41,11 +41,11 @@ func (c *Coordinator) believe(n *network) weighed {
 				continue
 			}
 			if n.loose(i) {
-				n.ties[i].judge(msgs.Open, looseReason, msgs.Evidence{})
+				n.ties[i].judge(msgs.Open, n.looseReason(i), msgs.Evidence{})
 				continue
 			}
 			if n.ties[i].wild() {
-				n.ties[i].judge(msgs.Open, "claims more than can be measured", msgs.Evidence{})
+				n.ties[i].judge(msgs.Open, wildReason, msgs.Evidence{})
 				continue
 			}
 			w.held[i] = true
@@ -75,9 +75,9 @@ func (c *Coordinator) believe(n *network) weighed {
 		case t.ruledOut():
 		case t.sight != nil: // see align
 		case !t.regular:
-			t.judge(msgs.Open, "measures too little of a pose to be weighed", msgs.Evidence{})
+			t.judge(msgs.Open, n.lessThanPose(i), msgs.Evidence{})
 		case n.loose(i):
-			t.judge(msgs.Open, looseReason, msgs.Evidence{})
+			t.judge(msgs.Open, n.looseReason(i), msgs.Evidence{})
 		default:
 			judged = append(judged, i)
 		}
@@ -86,8 +86,8 @@ func (c *Coordinator) believe(n *network) weighed {
 	for k, i := range judged {
 		t := &n.ties[i]
 		ties[k] = evidence.Tie{
-			From: evidence.End{Unit: t.from, Node: touched[t.from][t.fromNode]},
-			To:   evidence.End{Unit: t.to, Node: touched[t.to][t.toNode]}, Z: t.z, Cov: t.cov,
+			Name: t.msg.ID, From: evidence.End{Unit: t.from, Node: touched[t.from][t.fromNode]},
+			To: evidence.End{Unit: t.to, Node: touched[t.to][t.toNode]}, Z: t.z, Cov: t.cov,
 		}
 	}
 	r := evidence.Decide(units, ties, c.cfg.Evidence)
@@ -107,8 +107,6 @@ func (c *Coordinator) believe(n *network) weighed {
 	}
 	return w
 }
-
-const looseReason = "the map of one of its robots does not hold together"
 
 // loose tells whether a unit of tie i has a summary that leaves a junction free.
 func (n *network) loose(i int) bool {

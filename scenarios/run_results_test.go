@@ -114,6 +114,9 @@ func TestWrite(t *testing.T) {
 		if once[v.Tie] && v.Verdict != "held" {
 			lost++
 		}
+		if told := v.Reason != unheard; v.Verdict == "open" && told && !strings.Contains(v.Reason, " would settle ") && !strings.Contains(v.Reason, " is to bring") {
+			t.Errorf("tie %s is open, and nothing says what would settle it: %s", v.Tie, v.Reason)
+		}
 		if math.IsNaN(v.ChiSquare) != math.IsNaN(v.Threshold) || v.Verdict == "refused" && !(v.ChiSquare >= v.Threshold) || v.Verdict == "held" && !(v.ChiSquare < v.Threshold) {
 			t.Errorf("tie %s: %s, chi square %g, threshold %g", v.Tie, v.Verdict, v.ChiSquare, v.Threshold)
 		}

@@ -1,7 +1,6 @@
 package evidence
 
 import (
-	"fmt"
 	"math"
 
 	"selvage/internal/lie"
@@ -75,16 +74,16 @@ func (b *body) against(l *link, e *lie.Tangent, c cov, ways int) prediction {
 	return prediction{mahalanobis(e, &c, b.o.Dim), b.share(&c, l.a, l.b), ways}
 }
 
-// crossing tests tie t against the shortest way through other units, if there is one. Ties of one pair may all be wrong alike:
+// crossing tests tie t against the shortest way through other units, if there is one, and returns the ties of that way. Ties of one pair may all be wrong alike:
 // an aisle taken for its neighbour gives false ties at many places, which bear each other out.
-func (b *body) crossing(t int, a *atlas) prediction {
+func (b *body) crossing(t int, a *atlas) (prediction, []int) {
 	l := &b.links[t]
 	ties, ok := a.walk(l, b.sibling(l))
 	if !ok {
-		return prediction{}
+		return prediction{}, nil
 	}
 	e, c := b.around(l, ties)
-	return b.against(l, &e, c, 1)
+	return b.against(l, &e, c, 1), ties
 }
 
 // sibling returns a test for ties of the same pair as l.
@@ -184,8 +183,4 @@ func invert(m *[36]float64, n int) bool {
 		}
 	}
 	return true
-}
-
-func (b *body) names(l *link) string {
-	return fmt.Sprintf("%s and %s", b.tracks[l.a].Name, b.tracks[l.b].Name)
 }

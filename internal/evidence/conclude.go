@@ -73,14 +73,17 @@ func (b *body) conclude(f *fleet, w weighed) Result {
 			continue
 		}
 		x := &r.Ties[t]
-		b.find(x, l, &ps[t], tight)
+		var mates []int
+		if i, ok := at[[2]int{l.a, l.b}]; ok {
+			mates = same[i]
+		}
+		b.find(x, t, &ps[t], tight, mates)
 		if x.Verdict != Held {
 			continue
 		}
-		if q := b.crossing(t, a); q.ways > 0 && q.squared >= b.refusal(&q) {
+		if q, way := b.crossing(t, a); q.ways > 0 && q.squared >= b.refusal(&q) {
 			x.Verdict, x.Statistic, x.Limit = Open, q.squared, b.refusal(&q)
-			x.Reason = fmt.Sprintf("agrees with the ties between %s, but a way through other robots contradicts these: misclosure %.1f, bound %.1f",
-				b.names(l), q.squared, b.refusal(&q))
+			x.Reason = b.crossed(t, &q, way)
 		}
 	}
 	b.part(&r)
@@ -100,10 +103,10 @@ func tightness(shares []float64, accidents float64) float64 {
 	return math.Inf(1)
 }
 
-// find writes the verdict on a tie within an island.
-func (b *body) find(x *Finding, l *link, p *prediction, tight float64) {
+// find writes the verdict on tie t within an island; mates are the ties of its pair that are held.
+func (b *body) find(x *Finding, t int, p *prediction, tight float64, mates []int) {
 	if p.ways == 0 {
-		x.Reason = fmt.Sprintf("nothing but ties of the same place speaks about it; a tie between %s at another place would settle it", b.names(l))
+		x.Reason = b.onePlace(t)
 		return
 	}
 	x.Statistic, x.DoF, x.Limit = p.squared, b.dof, b.gate
@@ -114,56 +117,13 @@ func (b *body) find(x *Finding, l *link, p *prediction, tight float64) {
 		x.Verdict, x.Limit = Refused, refuse
 		x.Reason = fmt.Sprintf("contradicted by the ties held: misclosure %.1f, bound %.1f, by %d ways around", p.squared, refuse, p.ways)
 	case p.squared >= b.gate:
-		x.Reason = fmt.Sprintf("fits the ties held badly: misclosure %.1f, bound %.1f", p.squared, b.gate)
+		x.Reason = b.badly(t, p)
 	case loose:
-		x.Reason = fmt.Sprintf("agrees with the ties held, but these are so far along the tracks that it might by chance; a tie between %s nearby would settle it", b.names(l))
+		x.Reason = b.faraway(t, mates)
 	default:
 		x.Verdict = Held
 		x.Reason = fmt.Sprintf("agrees with the ties held: misclosure %.1f, bound %.1f", p.squared, b.gate)
 	}
-}
-
-// undetermined explains why a tie between two islands stays open.
-func (b *body) undetermined(t int, f *fleet, w *weighed, r *Result) {
-	x := &r.Ties[t]
-	l := &b.links[t]
-	best := -1
-	for k := range f.hs {
-		if f.hs[k].a == l.a && f.hs[k].b == l.b && (best < 0 || f.hs[k].weight > f.hs[best].weight) {
-			best = k
-		}
-	}
-	if best < 0 {
-		x.Reason = "its pair was not weighed"
-		return
-	}
-	h, margin := &f.hs[best], w.margin[best]
-	need := b.o.BridgeMargin
-	if w.cycle[best] {
-		need = b.o.CycleMargin
-	}
-	pair, more := b.names(l), fmt.Sprintf("over %g m from the others", b.o.PlaceM)
-	switch {
-	case h.blurred:
-		x.Reason = fmt.Sprintf("too many sets of ties between %s contradict each other to be told apart", pair)
-	case margin < 0:
-		x.Reason = fmt.Sprintf("the rest of the fleet speaks against the best set of ties between %s; ties at other places would settle it", pair)
-	case margin >= need:
-		x.Reason = fmt.Sprintf("the ties between %s rest on %s and might agree by chance; one more place, %s, would settle it", pair, count(len(h.spots)), more)
-	case w.cycle[best]:
-		x.Reason = fmt.Sprintf("the ties between %s rest on %s, and with all that confirms them lead by %d; %d needed: more ties %s would settle it",
-			pair, count(len(h.spots)), margin, need, more)
-	default:
-		x.Reason = fmt.Sprintf("the ties between %s rest on %s and lead by %d, with no third robot to confirm them; %d more, %s, or one that meets both would settle it",
-			pair, count(len(h.spots)), margin, need-margin, more)
-	}
-}
-
-func count(places int) string {
-	if places == 1 {
-		return "1 place"
-	}
-	return fmt.Sprintf("%d places", places)
 }
 
 // islands joins the units over the held hypotheses, the strongest first, and gives each its place in the frame of the lowest.

@@ -27,6 +27,7 @@ type End struct{ Unit, Node int }
 // Tie is one measurement Z of the pose of To seen from From, with its covariance in its own tangent (row-major 6 x 6; in the
 // plane rows and columns 0, 1 and 5).
 type Tie struct {
+	Name     string // what findings call it; may be empty
 	From, To End
 	Z        lie.SE3
 	Cov      [36]float64

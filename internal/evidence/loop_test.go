@@ -166,7 +166,7 @@ func TestMisclosureIsChiSquare(t *testing.T) {
 		}
 		var ties []Tie
 		for k := 0; k < 2; k++ {
-			ties = append(ties, Tie{End{0, k}, End{1, 1 - k}, truth[0][k].Between(truth[1][1-k]).Mul(lie.Exp(noise(rng, 3, root))), c36})
+			ties = append(ties, Tie{From: End{0, k}, To: End{1, 1 - k}, Z: truth[0][k].Between(truth[1][1-k]).Mul(lie.Exp(noise(rng, 3, root))), Cov: c36})
 		}
 		o := DefaultOptions(3)
 		o.BiasYaw = 0

@@ -22,8 +22,9 @@ type body struct {
 	o      Options
 	tracks []*track
 	links  []link
-	gate   float64 // bound on squared Mahalanobis distances
-	refuse float64 // the same for refusal
+	ids    []string // of the ties
+	gate   float64  // bound on squared Mahalanobis distances
+	refuse float64  // the same for refusal
 	dof    int
 	give   []float64    // per unit: how far its heading may be off from end to end, rad
 	reach  []float64    // per unit: root mean square distance of its nodes from their mean, m
@@ -54,8 +55,9 @@ func newBody(units []Unit, ties []Tie, o Options) *body {
 		b.spread[i] = t.spread()
 		b.reach[i] = math.Sqrt(b.spread[i][0] + b.spread[i][2])
 	}
-	b.links = make([]link, len(ties))
+	b.links, b.ids = make([]link, len(ties)), make([]string, len(ties))
 	for i := range ties {
+		b.ids[i] = ties[i].Name
 		b.links[i] = linkOf(&ties[i], o.Dim)
 	}
 	return b

@@ -284,7 +284,7 @@ func (s *simFleet) measure(rng *rand.Rand, i, j End, pose lie.SE3, ok bool) simT
 			c[7*k] = sg[k] * sg[k]
 		}
 	}
-	t := simTie{Tie{i, j, pose.Mul(lie.Exp(noise(rng, s.dim, sg))), c}, ok}
+	t := simTie{Tie{From: i, To: j, Z: pose.Mul(lie.Exp(noise(rng, s.dim, sg))), Cov: c}, ok}
 	if rng.IntN(2) == 0 {
 		z := t.Z.Inv()
 		t.From, t.To, t.Z = t.To, t.From, z // covariances are isotropic enough for a test

@@ -1,6 +1,7 @@
 package evidence
 
 import (
+	"fmt"
 	"math/rand/v2"
 	"slices"
 	"strings"
@@ -17,10 +18,11 @@ type story struct {
 	units []Unit
 	ties  []simTie
 	rng   *rand.Rand
+	dim   int
 }
 
 func newStory(t *testing.T, names ...string) *story {
-	s := &story{t: t, rng: rand.New(rand.NewPCG(8, 8))}
+	s := &story{t: t, rng: rand.New(rand.NewPCG(8, 8)), dim: 3}
 	for k, name := range names {
 		u := Unit{Name: name, Covariance: func(i, j int) (c [36]float64) {
 			n := float64(j - i)
@@ -48,10 +50,10 @@ func (s *story) tie(a, i, b, j int, off lie.Tangent) {
 		c[7*k] = sg[k] * sg[k]
 	}
 	small := sigmas(.02, .2*deg)
-	s.ties = append(s.ties, simTie{Tie{End{a, i}, End{b, j}, z.Mul(lie.Exp(noise(s.rng, 3, small))), c}, off == lie.Tangent{}})
+	s.ties = append(s.ties, simTie{Tie{Name: fmt.Sprintf("t%04d", len(s.ties)+1), From: End{a, i}, To: End{b, j}, Z: z.Mul(lie.Exp(noise(s.rng, s.dim, small))), Cov: c}, off == lie.Tangent{}})
 }
 
-func (s *story) decide() Result { return Decide(s.units, bare(s.ties), DefaultOptions(3)) }
+func (s *story) decide() Result { return Decide(s.units, bare(s.ties), DefaultOptions(s.dim)) }
 
 func (s *story) want(r Result, tie int, v Verdict, word string) {
 	s.t.Helper()

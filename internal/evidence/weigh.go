@@ -9,6 +9,7 @@ type weighed struct {
 	cycle    []bool
 	expected []float64
 	held     []bool
+	frail    []bool // two places struck out would part its units
 }
 
 // weigh finds the best configuration, tests what it satisfies by loops, and asks each hypothesis for its margin. pairs is how
@@ -22,7 +23,7 @@ func (f *fleet) weigh(pairs int) weighed {
 	}
 	limit := max(o.CycleMargin, o.BridgeMargin)
 	n := len(f.hs)
-	w := weighed{config{}, f.margins(&c, limit), make([]bool, n), make([]float64, n), make([]bool, n)}
+	w := weighed{config{}, f.margins(&c, limit), make([]bool, n), make([]float64, n), make([]bool, n), make([]bool, n)}
 	w.c = c
 	f.load(&c)
 	class := f.firm(&c)
@@ -33,7 +34,7 @@ func (f *fleet) weigh(pairs int) weighed {
 			continue
 		}
 		if class[h.a] != class[h.b] {
-			w.margin[k] = min(w.margin[k], strikes, o.CycleMargin-1)
+			w.margin[k], w.frail[k] = min(w.margin[k], strikes, o.CycleMargin-1), true
 		}
 		w.cycle[k] = f.confirmed(h)
 		need := o.BridgeMargin
