@@ -82,6 +82,9 @@ func record(sc *Scenario, r *survey.Robot, l *leg, seed uint64) (wrong int, err 
 			length := t.travel[k] - t.travel[k-1]
 			c := f.Odometry.scaled(math.Sqrt(length / sc.Fleet.KeyframeSpacing)).cov(dim)
 			xi := noise(rng, &c.Sigma)
+			for i := range xi {
+				xi[i] *= f.OdometrySpread
+			}
 			xi[5] += bias * length
 			z := t.pose[k-1].Between(t.pose[k]).Plus(xi)
 			r.Relatives = append(r.Relatives, survey.Relative{

@@ -109,6 +109,8 @@ type FleetSpec struct {
 type FrontEndSpec struct {
 	// Error of one odometry step, sigmas; a longer or shorter step has them scaled by the root of its length.
 	Odometry Sigmas `yaml:"odometry"`
+	// Real spread of the odometry over the sigmas that its measurements state: at 2 the errors are twice as large as said.
+	OdometrySpread float64 `yaml:"odometry_spread" range:"[0.1, 10]"`
 	// Heading drift that the sigmas do not cover: each session of a robot draws its own, once, with this sigma.
 	HeadingBias float64 `yaml:"heading_bias_rad_per_m" unit:"rad/m" range:"[0, 0.01]"`
 	// Error of a loop closure.
@@ -255,7 +257,7 @@ func Default() *Scenario {
 		},
 		Fleet: FleetSpec{Robots: 6, StartSpread: 300, SpeedMin: 0.5, SpeedMax: 1, KeyframeSpacing: 1, Reach: 120},
 		FrontEnd: FrontEndSpec{
-			Odometry: Sigmas{0.02, 0.0017}, HeadingBias: 0.0001,
+			Odometry: Sigmas{0.02, 0.0017}, OdometrySpread: 1, HeadingBias: 0.0001,
 			Closure: Sigmas{0.05, 0.005}, ClosureRange: 2, ClosureSpacing: 5, Latency: 0.5,
 		},
 		Ties: TiesSpec{
@@ -263,7 +265,7 @@ func Default() *Scenario {
 			RevisitRange: 3, Revisit: Sigmas{0.08, 0.009},
 			Recall: 0.8, Spacing: 20, EncounterKind: "pose", Sight: SightSigmas{0.05, 0.008},
 		},
-		Marks: MarksSpec{Surveyed: 0.01, Range: 8, Spacing: 4, Kind: "range_bearing", Sight: SightSigmas{0.03, 0.005}},
+		Marks:     MarksSpec{Surveyed: 0.01, Range: 8, Spacing: 4, Kind: "range_bearing", Sight: SightSigmas{0.03, 0.005}},
 		FalseTies: FalseTiesSpec{Independent: 0.1, Clustered: 0.05, ClusterSize: 4, ClusterSpacing: 12},
 		Radio: RadioSpec{
 			Range: 250, Loss: 0.05, Delay: 0.02, Jitter: 0.03, Bandwidth: 20000, Queue: 30,
