@@ -497,24 +497,31 @@ func TestKill(t *testing.T) {
 	}
 }
 
-// FuzzOpen opens what may be a journal. What opens can be read, written on and opened again.
+// FuzzOpen opens what may be a journal of one segment or two. What opens can be read, written on and opened again.
 func FuzzOpen(f *testing.F) {
 	m := NewMemory(1)
-	j := fill(f, m, 5, usual)
-	f.Add(bytes.Clone(m.names["00000001.seg"].now))
+	j := fill(f, m, 5, limits{segment: 200, held: 4000})
+	one, two := bytes.Clone(m.names["00000001.seg"].now), bytes.Clone(m.names["00000002.seg"].now)
+	f.Add(one, []byte{})
+	f.Add(one, two)
 	if err := j.Close(); err != nil {
 		f.Fatal(err)
 	}
-	whole := m.names["00000001.seg"].now
-	f.Add(whole)
-	f.Add(whole[:headerSize+90])
-	f.Add(whole[:headerSize])
-	f.Add([]byte{})
-	f.Fuzz(func(t *testing.T, b []byte) {
-		d := holding("00000001.seg", bytes.Clone(b))
+	for _, second := range [][]byte{m.names["00000002.seg"].now, two[:headerSize+40], two[:headerSize]} {
+		f.Add(one, second)
+		f.Add(second, []byte{})
+	}
+	f.Add(one[:headerSize+90], two)
+	f.Fuzz(func(t *testing.T, b, c []byte) {
+		d, segments := holding("00000001.seg", bytes.Clone(b)), 1
+		if len(c) > 0 {
+			d.names["00000002.seg"] = holding("00000002.seg", bytes.Clone(c)).names["00000002.seg"]
+			d.disk["00000002.seg"] = d.names["00000002.seg"]
+			segments = 2
+		}
 		j, err := Open(d, owner)
 		if err != nil {
-			if !bytes.Equal(d.names["00000001.seg"].now, b) || len(d.names) != 1 {
+			if !bytes.Equal(d.names["00000001.seg"].now, b) || len(d.names) != segments {
 				t.Fatal("refused, and changed")
 			}
 			return
