@@ -66,8 +66,13 @@ func (s *session) judged(by rule, o robust.Options) (robust.Result, error) {
 
 // conclude notes what a rule finds, and solves with what it holds.
 func (s *session) conclude(by rule) (posegraph.Result, error) {
-	o := robust.Options{Adjust: posegraph.DefaultOptions()}
-	r, err := s.judged(by, o)
+	o := posegraph.DefaultOptions()
+	if s.trusting || len(s.points) == 0 {
+		return s.adjust(o)
+	}
+	near := o
+	near.MaxIterations = 50 // there are many rounds, and where one does not come to rest it shows enough of what fits
+	r, err := s.judged(by, robust.Options{Adjust: near})
 	if err != nil || r.Stop == posegraph.Undetermined {
 		return r.Result, err
 	}
@@ -77,16 +82,16 @@ func (s *session) conclude(by rule) (posegraph.Result, error) {
 	}
 	for i := range s.sightings {
 		e := &s.sightings[i]
-		if e.decided = e.set != nil && len(r.Findings) > 0; e.decided {
+		if e.decided = e.set != nil; e.decided {
 			e.finding = r.Findings[first[e.asked.Sense]+e.k]
 			e.finding.Set = nil
 		}
 	}
-	if r.Refused == 0 {
+	if r.Refused == 0 && r.Stop == posegraph.Converged {
 		return r.Result, nil
 	}
 	s.enter(false, false)
-	return s.adjust(o.Adjust)
+	return s.adjust(o)
 }
 
 // adjust solves with the first variable of each part fixed.

@@ -72,9 +72,14 @@ func siege(t testing.TB, rng *rand.Rand) {
 			stamp := []int64{0, 3, 1 << 62, math.MaxInt64, -1, r.now + 7}[rng.IntN(6)]
 			sight := Sight{Sense: posegraph.Sense(1 + rng.IntN(4)), Value: [3]float64{math.Abs(number()), 1, 0.1}, Info: lie.Mat3{400, 0, 0, 0, 400, 0, 0, 0, 400}, Mount: lie.Identity()}
 			mark := []string{"a", "b", fmt.Sprint("c", rng.IntN(3))}[rng.IntN(3)]
-			_, _ = r.Handle(r.now, Sighting{Session: 1, ID: rng.Int64N(26), Mark: mark, Sight: sight}) // refused or not
-			_, _ = r.Handle(r.now, Sighting{Session: 1, ByStamp: true, StampNS: stamp, Mark: mark, Sight: sight})
-			_, _ = r.Handle(r.now, Tie{From: msgs.KeyRef{Robot: "r1", Session: 1, ByStamp: true, StampNS: stamp}, To: msgs.KeyRef{Robot: "r2", Session: 1, ID: 7}, Sight: &sight})
+			var e Event = Sighting{Session: 1, ID: rng.Int64N(26), Mark: mark, Sight: sight}
+			switch rng.IntN(4) {
+			case 0:
+				e = Sighting{Session: 1, ByStamp: true, StampNS: stamp, Mark: mark, Sight: sight}
+			case 1:
+				e = Tie{From: at(1, stamp), To: msgs.KeyRef{Robot: "r2", Session: 1, ID: 7}, Sight: &sight}
+			}
+			_, _ = r.Handle(r.now, e) // refused or not
 		}
 	}
 	r.do(Keyframe{Session: 1, ID: 100, StampNS: r.now, Pose: lie.Identity()})
