@@ -9,7 +9,7 @@ import (
 	"selvage/msgs"
 )
 
-// listen hears what the robots say until ctx ends. It tells began when it has heard all that the streams held, or why it could not.
+// listen hears what the robots say and people decide until ctx ends. It tells began when it has heard all that the streams held, or why it could not.
 func (s *Shell) listen(ctx context.Context, began chan<- error) {
 	var stops []func()
 	var held []<-chan struct{}
@@ -55,6 +55,18 @@ func (s *Shell) listen(ctx context.Context, began chan<- error) {
 			if err != nil {
 				return err
 			}
+		}
+		rule := msgs.RuleSubject(s.options.Fleet)
+		err := replay(bus.RuleStream(s.options.Fleet), func(subject string, storedNS int64, b []byte) {
+			switch {
+			case subject != rule:
+				s.door.Refuse(s.now(), subject, fmt.Errorf("came as an answer on %s", rule))
+			case s.door.Admit(s.now(), subject, storedNS, b):
+				s.hear(ctx, subject, coordinator.Message{Kind: msgs.KindRule, Payload: b})
+			}
+		})
+		if err != nil {
+			return err
 		}
 		return replay(bus.SummaryStream(s.options.Fleet), func(subject string, storedNS int64, b []byte) {
 			if s.door.Admit(s.now(), subject, storedNS, b) {

@@ -9,6 +9,7 @@
 //	SUMMARY+FLEET     up.FLEET.*.summary and below               the newest of each subject
 //	CORR+FLEET        down.FLEET.*.corr, .want, down.FLEET._lease the newest of each subject
 //	VERDICT+FLEET     down.FLEET.*.verdict                       all, up to a quota, then refused
+//	RULE+FLEET        rule.FLEET                                 all, up to a quota, then refused; from people, by way of the base
 //
 // Heartbeats are not kept. A robot has a tie stream of its own because message ids are shared by a whole stream: an id that
 // another robot used first would be acknowledged and not stored.

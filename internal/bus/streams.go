@@ -8,13 +8,14 @@ import (
 	"github.com/nats-io/nats.go/jetstream"
 )
 
-// Quotas in bytes. The server sets the whole quota of a stream aside, so that storeLimit holds the three streams of a fleet
-// and the tie streams of 176 robots; 16 MiB are some 40 000 ties.
+// Quotas in bytes. The server sets the whole quota of a stream aside, so that storeLimit holds the four streams of a fleet
+// and the tie streams of 175 robots; 16 MiB are some 40 000 ties, or 60 000 rulings.
 const (
 	storeLimit   = int64(4 << 30)
 	tieQuota     = 16 << 20
 	newestQuota  = 512 << 20
 	verdictQuota = 256 << 20
+	ruleQuota    = 16 << 20
 )
 
 // BaseReader is the durable reader of ties and summaries that Prepare makes for the base.
@@ -31,6 +32,9 @@ func CorrectionStream(fleet string) string { return "CORR+" + fleet }
 
 // VerdictStream is the stream of the verdicts of a fleet. Each robot has a durable reader in it, called by its name.
 func VerdictStream(fleet string) string { return "VERDICT+" + fleet }
+
+// RuleStream is the stream of what people have decided for a fleet. The base alone writes and reads it.
+func RuleStream(fleet string) string { return "RULE+" + fleet }
 
 // Prepare makes the streams and readers of a fleet and these robots, or brings them up to date. Names must be single
 // tokens of a subject.
@@ -55,7 +59,11 @@ func (c *Client) Prepare(ctx context.Context, fleet string, robots ...string) er
 	verdicts.Name, verdicts.MaxBytes = VerdictStream(fleet), verdictQuota
 	verdicts.Subjects = []string{"down." + fleet + ".*.verdict"}
 
-	streams := []jetstream.StreamConfig{summaries, corrections, verdicts}
+	rulings := all
+	rulings.Name, rulings.MaxBytes = RuleStream(fleet), ruleQuota
+	rulings.Subjects = []string{"rule." + fleet}
+
+	streams := []jetstream.StreamConfig{summaries, corrections, verdicts, rulings}
 	for _, r := range robots {
 		ties := all
 		ties.Name, ties.MaxBytes = TieStream(fleet, r), tieQuota
