@@ -22,12 +22,18 @@ type leader struct {
 
 func startLeader(t *testing.T, link *bus.Client, holder string) *leader {
 	t.Helper()
+	return startLeaderOf(t, link, holder, Options{})
+}
+
+// startLeaderOf is startLeader in a fleet that signs.
+func startLeaderOf(t *testing.T, link *bus.Client, holder string, signs Options) *leader {
+	t.Helper()
 	l := &leader{t: t, terms: make(chan uint64, 100), shell: make(chan *Shell, 100)}
 	ctx, cancel := context.WithCancel(context.Background())
 	ended := make(chan error, 1)
 	go func() {
 		ended <- Lead(ctx, link, Leadership{
-			Options: Options{Fleet: "f", Robots: []string{"r1", "r2"}, Tick: 5 * time.Millisecond, Warn: func(error) {}},
+			Options: Options{Fleet: "f", Robots: []string{"r1", "r2"}, Tick: 5 * time.Millisecond, Warn: func(error) {}, Signer: signs.Signer, Verifier: signs.Verifier},
 			Holder:  holder, TTL: time.Second,
 			Core: func(from coordinator.Config) *coordinator.Coordinator {
 				c := coordinator.DefaultConfig("f", 2)
