@@ -37,6 +37,7 @@ type Audit struct {
 	Bridges    []string    `json:"bridges"`                  // held ties whose loss would part the fleet
 	Places     []Place     `json:"single_places"`            // whose loss would part the fleet
 	Sets       []Set       `json:"sets_not_told_apart"`      // of measurements
+	Near       []Near      `json:"sets_hardly_told_apart"`   // of ties
 	Loops      []Loop      `json:"loops"`                    // independent ones
 	Marks      []Mark      `json:"marks"`                    // that tie robots to each other or to the datum
 	LeftOut    []LeftOut   `json:"sightings_left_out"`       // of marks, by robot
@@ -50,6 +51,7 @@ type Audit struct {
 
 	plan     report.Plan
 	unclosed bool // no loops were closed: ties that are no whole pose stand in the way
+	compared bool // the tests of all ties were compared with each other
 	sighted  bool // there are sightings of marks or ties that are less than a pose
 	hidden   bool // the plan does not show all ties
 	main     int  // the island that the plan is in

@@ -53,7 +53,7 @@ func (w *work) build() error {
 	w.out = Audit{
 		Survey: s.Meta.Name, Datum: s.Meta.Datum.Name, Dimension: s.Meta.Dimension, Robots: len(s.Robots), Decided: w.in.Decided,
 		Basin: "not decided",
-		Ties:  make([]Tie, len(s.Ties)), Removal: []string{}, Controls: []string{}, Marks: []Mark{}, LeftOut: []LeftOut{}, Bridges: []string{}, Places: []Place{}, Sets: []Set{}, Loops: []Loop{}, Spread: []Spread{}, Next: []Candidate{},
+		Ties:  make([]Tie, len(s.Ties)), Removal: []string{}, Controls: []string{}, Marks: []Mark{}, LeftOut: []LeftOut{}, Bridges: []string{}, Places: []Place{}, Sets: []Set{}, Near: []Near{}, Loops: []Loop{}, Spread: []Spread{}, Next: []Candidate{},
 	}
 	for i := range s.Ties {
 		f := &s.Ties[i]

@@ -30,6 +30,8 @@ func (w *work) effects() error {
 	slices.SortStableFunc(jobs, func(a, b *Tie) int { return cmp.Compare(b.Shift.M, a.Shift.M) })
 	scalars := w.sigma.Scalars()
 	exact := min(len(jobs), int(followed)/max(1, scalars*w.d))
+	shadows := w.shadows(jobs)
+	near := nearSets{g: newGroups(len(jobs)), least: map[int32]float64{}}
 	const together = 8 // ties
 	vectors := make([]float64, min(together, max(exact, 1))*w.d*scalars)
 	for first := 0; first < exact; first += together {
@@ -45,19 +47,22 @@ func (w *work) effects() error {
 		w.sigma.Apply(columns, len(batch)*w.d)
 		for i, t := range batch {
 			w.worst(t, columns[i*w.d*scalars:], scalars)
+			w.nearBy(shadows, first+i, columns[i*w.d*scalars:], scalars, near.join)
 		}
 	}
+	near.list(w, jobs)
+	w.out.compared = exact == len(jobs)
 	return nil
 }
 
-// load writes J' Omega e_c times the detectable error of component c to vector c.
+// load writes J' Omega e_c times the detectable error of component c to vector c; times one where there is none.
 func (w *work) load(t *Tie, vectors []float64, scalars int) {
 	d, info := w.derivative(t.m), w.info(t.m)
 	n := d.rows
 	m := make([]float64, n*n)
 	for c, x := range t.Detectable {
-		if math.IsNaN(float64(x)) {
-			continue
+		if math.IsNaN(float64(x)) { // nothing checks it: for the correlations alone
+			x = 1
 		}
 		for r := range n {
 			m[r*n+c] = info[r*n+c] * float64(x)
@@ -70,6 +75,9 @@ func (w *work) load(t *Tie, vectors []float64, scalars int) {
 func (w *work) worst(t *Tie, vectors []float64, scalars int) {
 	most, at, component := 0.0, int32(-1), 0
 	for c := range t.Parts {
+		if math.IsNaN(float64(t.Detectable[c])) {
+			continue
+		}
 		v := vectors[c*scalars : (c+1)*scalars]
 		for k := range w.p.Keys {
 			o := w.sigma.Offset(int32(k))

@@ -180,6 +180,11 @@ func (a *Audit) attention() []string {
 		}
 	}
 	add(sets, "sets of ties that cannot be told apart")
+	var near []string
+	for _, s := range a.Near {
+		near = append(near, fmt.Sprintf("Ties %s can hardly be told apart: their tests are correlated by %.3f.", list(s.Ties), s.Correlation))
+	}
+	add(near, "sets of ties that can hardly be told apart")
 	var loops []string
 	for _, l := range a.badLoops() {
 		loops = append(loops, fmt.Sprintf("The loop that tie %s closes%s misses by %s m and %s°, %s times its sigma.", l.Tie, through(l.Way), short(l.M), degrees(&l.Rad, ""), short(l.Sigmas)))
@@ -315,7 +320,7 @@ func (a *Audit) method() []string {
 		fmt.Sprintf("Figures of a tie with residual r, information Omega and predicted covariance P = J Q J': Q_v = Omega⁻¹ - P, redundancy diag(Q_v Omega), statistic r' Q_v⁻¹ r against the %.1f %% bound of chi-square, smallest detectable error %.3f / sqrt((Omega Q_v Omega)_cc) for a test that rejects a sound tie once in %d and finds the error in %.0f %% of cases (Baarda 1968; Teunissen 2000; Knight, Wang, Rizos 2010). Covariances are read from the sparse factor (Takahashi, Fagan, Chen 1973).",
 			100*(1-reliability.Alpha), reliability.Delta, int(1/reliability.Alpha), 100*reliability.Power),
 		"Shift: how far an error of the detectable size along one component moves the position that it moves most, Q J' Omega e, the worst component. Where it says at most, it is the bound from the largest standard deviation instead. Leave-one-out: the distance between a tie and what everything else predicts, from the same factor.",
-		"Bridges, places and sets come from the graph, not from numbers: a bridge lies on no loop; measurements that lie on the very same loops cannot be told apart (Pritchard and Thurimella 2011). Ties within the distance at which two count as two witnesses share a place.",
+		"Bridges, places and sets come from the graph, not from numbers: a bridge lies on no loop; measurements that lie on the very same loops cannot be told apart (Pritchard and Thurimella 2011). Ties that can hardly be told apart come from the correlation of their tests (Förstner 1983), the root mean square of the canonical correlations of their residuals. Ties within the distance at which two count as two witnesses share a place.",
 		"Loops: the ties of a spanning tree are kept, and every other held tie is compared with the map of the tree, each robot's own closures included. Sigmas: root mean square over the components.",
 		"Real spread: variance components from residuals and redundancies, repeated until they stay (Helmert's estimate as simplified by Förstner 1979), with 95 % bounds from chi-square on the redundancy.",
 		a.basinMethod(),

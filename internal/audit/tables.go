@@ -19,7 +19,7 @@ func (a *Audit) tables() []report.Table {
 	if a.Positions != nil {
 		out = append(out, cut(a.Positions.Table(), "audit.json"))
 	}
-	for _, t := range []report.Table{a.nextTable(), a.controlTable(), a.markTable(), a.testTable(), a.hiddenTable(), a.leftTable(), a.sightTable(), a.historyTable(), a.setTable(), a.loopTable(), a.spreadTable()} {
+	for _, t := range []report.Table{a.nextTable(), a.controlTable(), a.markTable(), a.testTable(), a.hiddenTable(), a.leftTable(), a.sightTable(), a.historyTable(), a.setTable(), a.nearTable(), a.loopTable(), a.spreadTable()} {
 		if len(t.Rows) > 0 {
 			out = append(out, t)
 		}
@@ -190,6 +190,21 @@ func (a *Audit) setTable() report.Table {
 	single := len(a.Sets) - len(t.Rows)
 	if single > 0 {
 		t.Note = fmt.Sprintf("Besides, %s with odometry, closures or sightings only.", map[bool]string{true: "1 tie shares a set", false: fmt.Sprintf("%d ties share sets", single)}[single == 1])
+	}
+	return cut(t, "audit.json")
+}
+
+func (a *Audit) nearTable() report.Table {
+	t := report.Table{
+		Caption: "Ties that a test can hardly tell apart",
+		Note:    fmt.Sprintf("Their tests are correlated by more than %.2f: an error in one is likely taken for one in another.", inseparable),
+		Columns: []report.Column{{Name: "ties"}, number("correlation", "")},
+	}
+	if !a.compared {
+		t.Note += " Only the tests of the ties with the largest shifts were compared with all others."
+	}
+	for _, s := range a.Near {
+		t.Rows = append(t.Rows, []string{list(s.Ties), fmt.Sprintf("%.4f", s.Correlation)})
 	}
 	return cut(t, "audit.json")
 }
