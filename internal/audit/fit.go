@@ -67,7 +67,10 @@ func (w *work) fit() error {
 		}
 		switch t := &w.out.Ties[e.Tie]; {
 		case e.Set == nil && !t.free:
-			t.Reason += "; " + joinsNot
+			if t.Reason != "" {
+				t.Reason += "; "
+			}
+			t.Reason += joinsNot
 		case !t.free:
 		case e.Set != nil:
 			t.Verdict, t.Reason = "held", found[i].Reason()

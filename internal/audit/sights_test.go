@@ -18,6 +18,11 @@ import (
 
 // sighted is a survey of random with marks that robots have seen and ties of every kind, all held. Every third has control points.
 func sighted(seed uint64, noise float64) (*survey.Survey, []survey.ResultVerdict) {
+	return sightedMarks(seed, noise, 5)
+}
+
+// sightedMarks has so many marks; where there are control points, all but one are.
+func sightedMarks(seed uint64, noise float64, marks int) (*survey.Survey, []survey.ResultVerdict) {
 	r := rand.New(rand.NewPCG(seed, 78))
 	dim := 2 + int(seed%2)
 	s, _ := random(r, dim, noise)
@@ -48,13 +53,13 @@ func sighted(seed uint64, noise float64) (*survey.Survey, []survey.ResultVerdict
 		}
 		return e
 	}
-	for k := range 5 {
+	for k := range marks {
 		p := [3]float64{10*r.Float64() - 2, 10*r.Float64() - 5, 0}
 		if dim == 3 {
 			p[2] = 4*r.Float64() - 2
 		}
 		m := survey.Mark{Name: fmt.Sprint("m", k)}
-		if seed%3 == 0 && k < 4 {
+		if seed%3 == 0 && k < marks-1 {
 			m.Role, m.Sigma = survey.ControlPoint, [3]float64{0.05, 0.05, 0.05}
 			for c := range dim {
 				m.T[c] = p[c] + noise*m.Sigma[c]*r.NormFloat64()
