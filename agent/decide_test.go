@@ -5,6 +5,7 @@ import (
 	"math"
 	"testing"
 
+	"selvage/internal/lie"
 	"selvage/internal/survey"
 	"selvage/msgs"
 )
@@ -53,6 +54,44 @@ func TestWrongIdentities(t *testing.T) {
 					t.Errorf("%d of %d wrong ones held, %d of %d true ones refused", wrongHeld, wrong, rightRefused, right)
 				}
 			})
+		}
+	}
+}
+
+// TestDoubtBetweenSummaries: what a joined robot sees wrongly between two summaries does not bend its map until the next one decides.
+func TestDoubtBetweenSummaries(t *testing.T) {
+	for _, dim := range []int{2, 3} {
+		r := newRobot(t, dim)
+		r.walk(1, 0, 45, 3)
+		r.glance(1, 3, 9, "a", lie.Identity())
+		for _, id := range []int64{5, 40} {
+			r.see(1, id)
+		}
+		r.tick(1)
+		if err := r.correct(bent(r.Agent, 1, 1)); err != nil {
+			t.Fatal(err)
+		}
+		s := r.sessions[0]
+		if err := s.refresh(); err != nil {
+			t.Fatal(err)
+		}
+		before := r.Tracks()[0]
+		wrong := ranged
+		wrong.Value = [3]float64{9, -2}
+		r.do(Sighting{Session: 1, ID: 25, Mark: "a", Sight: wrong})
+		if err := s.refresh(); err != nil {
+			t.Fatal(err)
+		}
+		verdict := func() msgs.VerdictKind { all := r.Sightings(); return all[len(all)-1].Verdict }
+		if off := apart(before.Poses, r.Tracks()[0].Poses); off > 1e-4 || verdict() != msgs.Open {
+			t.Errorf("dimension %d: poses moved by %g; the sighting is %v", dim, off, verdict())
+		}
+		r.tick(60)
+		if verdict() != msgs.Refused {
+			t.Errorf("dimension %d: after a summary the sighting is %v", dim, verdict())
+		}
+		if off := apart(before.Poses, r.Tracks()[0].Poses); off > 0.2 {
+			t.Errorf("dimension %d: poses moved by %g", dim, off)
 		}
 	}
 }
