@@ -26,7 +26,7 @@
 //	10   6  zero
 //	16  16  journal id
 //	32   8  number of the first record; all before are durable
-//	40   8  number of the last record that the segment had when it got its name, 0 for none
+//	40   8  number of the last record that the segment had when it got its name
 //	48   8  ordinal of the segment, as in its name
 //	56  33  fleet: length, then the name, padded with zeros
 //	89  33  robot: the same

@@ -4,6 +4,7 @@ import (
 	"errors"
 	"fmt"
 	"io"
+	"io/fs"
 	"os"
 	"path/filepath"
 	"syscall"
@@ -146,10 +147,12 @@ func readFull(f File, b []byte) error {
 	return nil
 }
 
+// temporary is the name of a file that has not got its own yet. There is one at a time.
+const temporary = "new"
+
 // publish makes a file under a name that it gets when its content is durable. The file that it returns can be written on.
 func publish(d Folder, name string, content ...[]byte) (File, error) {
-	temporary := name + ".new"
-	if err := d.Remove(temporary); err != nil && !errors.Is(err, os.ErrNotExist) {
+	if err := d.Remove(temporary); err != nil && !errors.Is(err, fs.ErrNotExist) {
 		return nil, err
 	}
 	f, err := d.Create(temporary)
@@ -167,7 +170,9 @@ func publish(d Folder, name string, content ...[]byte) (File, error) {
 	if err == nil {
 		err = d.Rename(temporary, name)
 	}
-	if err == nil {
+	if err != nil { // on a full disk others need the room; what cannot be removed now is removed by the next
+		d.Remove(temporary)
+	} else {
 		err = d.Sync()
 	}
 	if err != nil {

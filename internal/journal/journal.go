@@ -38,6 +38,7 @@ type Journal struct {
 	size    int
 	ordinal uint64 // of the newest segment there was
 	spans   []span
+	marked  bool // as finished, durably: a mark that was found when it was opened may be in memory only
 
 	mu       sync.Mutex
 	fresh    []byte // the records after heldTo
@@ -194,22 +195,23 @@ func (j *Journal) Finish() error {
 	j.syncing.Lock()
 	defer j.syncing.Unlock()
 	j.mu.Lock()
-	done, over := j.finished, j.closed
+	before, over := j.finished, j.closed
 	j.finished = true // from here on nothing comes behind the mark
 	j.mu.Unlock()
 	switch {
 	case over:
 		return ErrClosed
-	case done:
+	case j.marked:
 		return nil
 	}
-	err := j.mark(finished)
-	if err != nil {
+	if err := j.mark(finished); err != nil {
 		j.mu.Lock()
-		j.finished = false
+		j.finished = before
 		j.mu.Unlock()
+		return err
 	}
-	return err
+	j.marked = true
+	return nil
 }
 
 // mark makes all records durable, and behind them a mark. The caller holds syncing.

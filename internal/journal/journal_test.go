@@ -212,6 +212,20 @@ func TestFullDisk(t *testing.T) {
 			t.Fatalf("sync gave %d, %v", durable, err)
 		}
 	}
+	var names, bytes int
+	for range 50 { // trying again takes no more room
+		if _, err := j.Sync(); !errors.Is(err, syscall.ENOSPC) {
+			t.Fatalf("sync on a full disk: %v", err)
+		}
+		before, was := names, bytes
+		names, bytes = len(m.names), 0
+		for _, f := range m.names {
+			bytes += len(f.now)
+		}
+		if before > 0 && (names != before || bytes != was) {
+			t.Fatalf("%d files with %d bytes, before %d with %d", names, bytes, before, was)
+		}
+	}
 	if durable := int(j.Durable()); n-durable < small.held/(preamble+10) || j.Ready() == nil {
 		t.Errorf("%d records of %d are durable", durable, n)
 	}
@@ -266,6 +280,31 @@ func TestFinish(t *testing.T) {
 	}
 	if err != nil {
 		t.Error(err)
+	}
+}
+
+// A mark of the end that a failed sync has left in the memory of the system is there when the journal is opened again. It counts, but
+// Finish does not take it for one on the disk.
+func TestFinishAfterFailedSync(t *testing.T) {
+	for seed := range uint64(20) {
+		m := NewMemory(seed)
+		j := fill(t, m, 5, usual)
+		m.SetFaults(Faults{Sync: 1})
+		if err := j.Finish(); !errors.Is(err, ErrFault) || j.Ready() != nil {
+			t.Fatalf("finish: %v, ready: %v", err, j.Ready())
+		}
+		m.Restart()
+		m.SetFaults(Faults{})
+		j, err := Open(m, owner)
+		if err != nil || count(t, j) != 5 || !errors.Is(j.Ready(), ErrFinished) {
+			t.Fatalf("opened: %v, ready: %v", err, j.Ready())
+		}
+		if err := j.Finish(); err != nil {
+			t.Fatal(err)
+		}
+		if j, err = Open(m.PowerCut(), owner); err != nil || count(t, j) != 5 || !errors.Is(j.Ready(), ErrFinished) {
+			t.Fatalf("seed %d: opened after a power cut: %v, ready: %v", seed, err, j.Ready())
+		}
 	}
 }
 

@@ -200,13 +200,22 @@ type (
 	noSync      struct{ *Memory } // files are not synced
 	noNames     struct{ *Memory } // the folder is not synced
 	deaf        struct{ *Memory } // an error of a sync is not heard
-	hasty       struct{ *Memory } // a file has its name before it is durable
-	behindTail  struct{ *Memory } // the newest segment is written on behind its torn tail
 	noSyncFile  struct{ File }
 	deafFile    struct{ File }
-	bodyFile    struct{ File } // without a header of its own
 	lostWrites  struct{ *Memory }
 	lostWriting struct{ File } // an error of a write is not heard
+	hasty       struct {       // a file has its name before it is durable
+		*Memory
+		unsynced File
+	}
+	behindTail struct { // the newest segment is written on behind its torn tail
+		*Memory
+		behind bool
+	}
+	bodyFile struct { // without a header of its own
+		File
+		d *behindTail
+	}
 )
 
 func (d noSync) Create(name string) (File, error) {
@@ -229,37 +238,42 @@ func (d lostWrites) Create(name string) (File, error) {
 }
 func (f lostWriting) Write(b []byte) (int, error) { f.File.Write(b); return len(b), nil }
 
-func (d hasty) Create(name string) (File, error) {
-	return d.Memory.Create(strings.TrimSuffix(name, ".new"))
+func (d *hasty) Create(name string) (File, error) {
+	f, err := d.Memory.Create(name)
+	d.unsynced = f
+	return noSyncFile{f}, err
 }
-func (d hasty) Rename(string, string) error { return nil }
+func (d *hasty) Rename(from, to string) error {
+	if err := errors.Join(d.Memory.Rename(from, to), d.Memory.Sync()); err != nil {
+		return err
+	}
+	return d.unsynced.Sync()
+}
 
-func (d behindTail) Create(name string) (File, error) {
-	names, err := d.List()
-	if err != nil {
-		return nil, err
-	}
-	newest := ""
-	for _, n := range names {
-		if _, ok := parseName(n); ok {
-			newest = n
-		}
-	}
-	if newest == "" || name == stateName+".new" {
-		return d.Memory.Create(name)
-	}
-	f, err := d.Memory.Open(newest)
-	return bodyFile{f}, err
+func (d *behindTail) Create(name string) (File, error) {
+	f, err := d.Memory.Create(name)
+	d.behind = false
+	return &bodyFile{f, d}, err
 }
-func (f bodyFile) Write(b []byte) (int, error) {
+func (f *bodyFile) Write(b []byte) (int, error) {
 	if strings.HasPrefix(string(b), magic) {
-		return len(b), nil
+		newest := ""
+		for n := range f.d.names {
+			if _, ok := parseName(n); ok {
+				newest = max(newest, n)
+			}
+		}
+		if newest != "" {
+			segment, err := f.d.Memory.Open(newest)
+			f.File, f.d.behind = segment, true
+			return len(b), err
+		}
 	}
 	return f.File.Write(b)
 }
-func (d behindTail) Rename(from, to string) error {
-	if d.names[from] == nil {
-		return nil
+func (d *behindTail) Rename(from, to string) error {
+	if d.behind {
+		return d.Memory.Remove(from)
 	}
 	return d.Memory.Rename(from, to)
 }
@@ -274,8 +288,8 @@ func TestPlantedBugs(t *testing.T) {
 		{"names are not synced", func(m *Memory) Folder { return noNames{m} }},
 		{"errors of a sync are not heard", func(m *Memory) Folder { return deaf{m} }},
 		{"errors of a write are not heard", func(m *Memory) Folder { return lostWrites{m} }},
-		{"names come before content", func(m *Memory) Folder { return hasty{m} }},
-		{"a torn tail is written behind", func(m *Memory) Folder { return behindTail{m} }},
+		{"names come before content", func(m *Memory) Folder { return &hasty{Memory: m} }},
+		{"a torn tail is written behind", func(m *Memory) Folder { return &behindTail{Memory: m} }},
 	} {
 		found := 0
 		for seed := range uint64(300) {
