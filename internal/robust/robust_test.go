@@ -172,9 +172,9 @@ func TestReview(t *testing.T) {
 	w := newWalk(9, 3, 0)
 	s, o := w.solver(t), Options{Adjust: posegraph.DefaultOptions()}
 	set := w.g.Sets[1].(*posegraph.Sightings)
-	set.Z[5][0] += 3 // wrong
+	set.Z[5][0] += 3   // wrong
 	set.Z[6][0] += 0.8 // wrong, and kept
-	set.Z[7][0] += 3 // wrong, and takes no part
+	set.Z[7][0] += 3   // wrong, and takes no part
 	set.W[7], set.W[20] = 0, evidence.Floor
 	o.Keep = func(of *posegraph.Sightings, k int) bool { return of == set && k == 6 }
 	res := Review(w.g, s, o)
