@@ -2,6 +2,7 @@ package robust
 
 import (
 	"math"
+	"slices"
 
 	"selvage/internal/evidence"
 	"selvage/internal/posegraph"
@@ -112,7 +113,7 @@ func Decide(g *posegraph.Graph, s *posegraph.Solver, o Options) Result {
 	}
 	j.weigh()
 	j.result.InitialCost, j.began = g.Cost(), true
-	if !j.graduate() {
+	if !j.graduate() || !j.unwind() {
 		return j.conclude()
 	}
 	for i := range j.findings {
@@ -147,6 +148,24 @@ func (j *judge) graduate() bool {
 		j.measure()
 	}
 	return true
+}
+
+// unwind undoes whole turns that odometry was bent by on the way, where that lowers the cost: then the weights are found anew.
+func (j *judge) unwind() bool {
+	poses, points := slices.Clone(j.g.Values.Poses), slices.Clone(j.g.Values.Points)
+	cost := j.g.Cost()
+	if !posegraph.Unwind(j.g) {
+		return true
+	}
+	if !j.optimise(j.rough(1e-5, 30)) {
+		return false
+	}
+	if j.g.Cost() > cost {
+		copy(j.g.Values.Poses, poses)
+		copy(j.g.Values.Points, points)
+		return true
+	}
+	return j.graduate()
 }
 
 // Review goes on from the weights of the sightings of g as they stand: 1 held, 0 no part, anything less than 1/2 refused. Each is tested against
