@@ -74,9 +74,10 @@ type Closure struct {
 	Verdict  msgs.VerdictKind
 	Reason   string
 	// Statistic is the squared Mahalanobis distance from the shortest way round, chi-square with DoF degrees of freedom when the closure
-	// is true; both are 0 when there is no way round or nobody has looked yet.
+	// is true, and Limit the bound it was held against; all are 0 when there is no way round or nobody has looked yet.
 	Statistic float64
 	DoF       int
+	Limit     float64
 }
 
 // Closures returns the loop closures that the agent judges, sessions ascending, in the order they came. Those that came after the map
@@ -90,7 +91,7 @@ func (a *Agent) Closures() []Closure {
 			}
 			if c < len(s.findings) {
 				f := &s.findings[c]
-				x.Reason, x.Statistic, x.DoF = f.Reason, f.Statistic, f.DoF
+				x.Reason, x.Statistic, x.DoF, x.Limit = f.Reason, f.Statistic, f.DoF, f.Limit
 				switch f.Verdict {
 				case evidence.Held:
 					x.Verdict = msgs.Held

@@ -51,7 +51,7 @@ func (r *Run) eachClosure(visit func(robot, row int, v *survey.ResultClosure, ve
 			k := name(c.Session, c.From, c.To)
 			v := survey.ResultClosure{Reason: c.Reason, ChiSquare: math.NaN()}
 			if c.DoF > 0 && !math.IsInf(c.Statistic, 0) {
-				v.ChiSquare, v.DoF = c.Statistic, c.DoF
+				v.ChiSquare, v.DoF, v.Threshold = c.Statistic, c.DoF, c.Limit
 			}
 			found[k], verdict[k] = v, c.Verdict
 		}

@@ -26,10 +26,11 @@ const vague = 1e-6
 type ClosureFinding struct {
 	Verdict Verdict
 	Reason  string // in plain words
-	// Statistic is the squared Mahalanobis distance of the closure from the shortest way round, with DoF degrees of freedom; both are
-	// 0 when there is no way round.
+	// Statistic is the squared Mahalanobis distance of the closure from the shortest way round, with DoF degrees of freedom, and Limit
+	// the bound it was held against: above it, it speaks against the closure. All are 0 when there is no way round.
 	Statistic float64
 	DoF       int
+	Limit     float64
 }
 
 // Judge finds out which loop closures of the session are believed. Each is tested against the shortest way round: along the
@@ -415,7 +416,7 @@ func (j *judge) conclude() []ClosureFinding {
 	for t := range out {
 		x, v := &out[t], j.look(t)
 		if v.found {
-			x.Statistic, x.DoF = j.squared(&v), j.dof
+			x.Statistic, x.DoF, x.Limit = j.squared(&v), j.dof, j.gate
 		}
 		switch {
 		case j.held[t] && v.found:
@@ -423,7 +424,7 @@ func (j *judge) conclude() []ClosureFinding {
 		case j.held[t]:
 			x.Verdict, x.Reason = Held, "nothing else joins the two keyframes"
 		case x.Statistic > j.refusal(&v):
-			x.Verdict, x.Reason = Refused, fmt.Sprintf("contradicts a way round of %.0f m", v.length)
+			x.Verdict, x.Limit, x.Reason = Refused, j.refusal(&v), fmt.Sprintf("contradicts a way round of %.0f m", v.length)
 		case x.Statistic > j.gate:
 			x.Reason = fmt.Sprintf("agrees badly with a way round of %.0f m", v.length)
 		default:

@@ -181,6 +181,9 @@ func TestManyFalseClosures(t *testing.T) {
 			found := c.Judge(closures, DefaultOptions(dim))
 			refused, kept := 0, 0
 			for k, f := range found {
+				if (f.DoF > 0) != (f.Limit > 0) || f.Verdict == Refused && !(f.Statistic > f.Limit) {
+					t.Errorf("dimension %d, seed %d: closure %d, %+v", dim, seed, k, f)
+				}
 				switch {
 				case wrong[k] && f.Verdict == Held:
 					t.Errorf("dimension %d, seed %d: the false closure %d is held: %s", dim, seed, k, f.Reason)

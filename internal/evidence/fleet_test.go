@@ -93,6 +93,11 @@ func TestFindingsDoNotDependOnFramesOrOrder(t *testing.T) {
 	s := simulate(rng, 2, 6, 133, siteOf(6), .05)
 	ties := s.independent(rng, s.trueTies(rng), .3)
 	want, _ := s.decide(ties)
+	for i, f := range want.Ties { // a statistic always stands beside the bound it was held against
+		if (f.DoF > 0) != (f.Limit > 0) || f.Verdict == Refused && !(f.Statistic >= f.Limit) || f.Verdict == Held && !(f.Statistic < f.Limit) {
+			t.Errorf("tie %d: %+v", i, f)
+		}
+	}
 
 	moved := s
 	moved.units = slices.Clone(s.units)

@@ -15,13 +15,15 @@ type ResultClosure struct {
 	Verdict  string // held, refused or open
 	Reason   string
 
-	// ChiSquare is the misclosure over its sigma squared, with DoF degrees of freedom; NaN leaves both fields empty.
+	// ChiSquare is the misclosure over its sigma squared, with DoF degrees of freedom, and Threshold what it was held against; NaN in
+	// ChiSquare leaves all three fields empty.
 	ChiSquare float64
 	DoF       int
+	Threshold float64
 }
 
 var closureColumns = []column{{name: "robot"}, {name: "session"}, {name: "from"}, {name: "to"}, {name: "verdict"}, {name: "reason"},
-	{name: "chi_square"}, {name: "dof"}}
+	{name: "chi_square"}, {name: "dof"}, {name: "threshold", optional: true}}
 
 const closuresName = resultsName + "/closures.csv"
 
@@ -49,6 +51,7 @@ func WriteClosures(dir string, all []ResultClosure, note string) error {
 		known := !math.IsNaN(c.ChiSquare)
 		w.optionalFloat(c.ChiSquare, known)
 		w.optional(int64(c.DoF), known)
+		w.optionalFloat(c.Threshold, known)
 		w.end()
 	}
 	return putResult(dir, closuresName, w.b)

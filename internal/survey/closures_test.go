@@ -27,8 +27,8 @@ func TestClosuresLeftOut(t *testing.T) {
 		t.Errorf("without results: %d, %v", n, err)
 	}
 	all := []ResultClosure{
-		{Robot: "a", Session: 1, From: 0, To: 9, Verdict: "held", Reason: "agrees, \"well\"", ChiSquare: 2.5, DoF: 6},
-		{Robot: "a", Session: 1, From: 0, To: 9, Verdict: "refused", ChiSquare: 1e4, DoF: 6},
+		{Robot: "a", Session: 1, From: 0, To: 9, Verdict: "held", Reason: "agrees, \"well\"", ChiSquare: 2.5, DoF: 6, Threshold: 16.8},
+		{Robot: "a", Session: 1, From: 0, To: 9, Verdict: "refused", ChiSquare: 1e4, DoF: 6, Threshold: 22.5},
 		{Robot: "a", Session: 2, From: 3, To: 7, Verdict: "open", ChiSquare: math.NaN()},
 	}
 	if err := WriteClosures(dir, all, "epoch 7"); err != nil {
@@ -39,10 +39,10 @@ func TestClosuresLeftOut(t *testing.T) {
 		t.Fatal(err)
 	}
 	const want = `# epoch 7
-robot,session,from,to,verdict,reason,chi_square,dof
-a,1,0,9,held,"agrees, ""well""",2.5,6
-a,1,0,9,refused,,10000,6
-a,2,3,7,open,,,
+robot,session,from,to,verdict,reason,chi_square,dof,threshold
+a,1,0,9,held,"agrees, ""well""",2.5,6,16.8
+a,1,0,9,refused,,10000,6,22.5
+a,2,3,7,open,,,,
 `
 	if d := cmp.Diff(want, string(text)); d != "" {
 		t.Error(d)
