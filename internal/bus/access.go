@@ -79,7 +79,7 @@ func permissions(fleet, robot string) *server.Permissions {
 func answers(name string) string { return "_INBOX_" + name }
 
 // SetRobots lets in these robots from now on, by their public keys, and ends the connections of others; whoever stays, stays
-// connected. The server must have been started with an Access.
+// connected. The server must have been started with an Access. It is not for several goroutines at once.
 func (s *Server) SetRobots(robots map[string]string) error {
 	if s.options.Access == nil {
 		return errors.New("bus: the server lets everybody in")
@@ -96,5 +96,6 @@ func (s *Server) SetRobots(robots map[string]string) error {
 		return fmt.Errorf("bus: %w", err)
 	}
 	s.options = o
+	s.door.setRobots(access.Robots)
 	return nil
 }

@@ -18,6 +18,7 @@ import (
 	"testing"
 	"time"
 
+	"github.com/google/go-cmp/cmp"
 	"github.com/nats-io/nats.go"
 	"github.com/nats-io/nats.go/jetstream"
 	"github.com/nats-io/nkeys"
@@ -250,6 +251,7 @@ func TestRobotIsRefusedWhatIsNotItsOwn(t *testing.T) {
 	if err != nil {
 		t.Fatal(err)
 	}
+	publishes, subscribes := 0, 0
 	corr, verdict, ties := CorrectionStream("f"), VerdictStream("f"), TieStream("f", "r1")
 	for _, c := range []struct{ subject, body string }{
 		{"up.f.r2.tie", "as r2"}, {"up.f.r2.hb", "as r2"}, {"up.f.r2.summary", "as r2"}, {"up.f.r2.summary.head", "as r2"}, {"up.g.r1.tie", "another fleet"},
@@ -271,12 +273,14 @@ func TestRobotIsRefusedWhatIsNotItsOwn(t *testing.T) {
 		if err := s.PublishRequest(c.subject, "_INBOX_r1.answer", []byte(c.body)); err != nil {
 			t.Fatal(err)
 		}
+		publishes++
 		s.refused(t, c.subject)
 	}
 	for _, subject := range []string{
 		"down.f.r2.corr", "down.f.r2.want", "down.f.r2.>", "down.f.*.corr", "down.f.>", "down.>", ">", "*", "down.f.r1.>", "down.f._lease", "up.f.r2.hb", "up.f.>", "up.f.r1.hb",
 		"_INBOX_r2.>", "_INBOX_base.>", "_INBOX.>", "$JS.>", "$JS.API.>", "$JS.ACK.>", "$JS.EVENT.>", "$SYS.>",
 	} {
+		subscribes++
 		if _, err := s.Subscribe(subject, func(m *nats.Msg) { t.Errorf("%s brought %s %q", subject, m.Subject, m.Data) }); err != nil {
 			t.Fatal(err)
 		}
@@ -290,6 +294,44 @@ func TestRobotIsRefusedWhatIsNotItsOwn(t *testing.T) {
 	}
 	if len(s.errors) > 0 {
 		t.Errorf("more was refused: %v", <-s.errors)
+	}
+	want := []Refusal{{Robot: "r1", What: "publish", N: uint64(publishes)}, {Robot: "r1", What: "subscribe", N: uint64(subscribes)}}
+	if diff := cmp.Diff(want, g.Refused()); diff != "" {
+		t.Errorf("counted (-want +got):\n%s", diff)
+	}
+}
+
+// A client cannot put its refusals on another robot's account, nor fill the log.
+func TestRefusalsAreReadRight(t *testing.T) {
+	k1, k2 := newUser(t).Public(), newUser(t).Public()
+	told := 0
+	d := &doorkeeper{warn: func(string) { told++ }, count: map[Refusal]uint64{}, told: map[Refusal]time.Time{}}
+	d.setRobots(map[string]string{"r1": k1, "r2": k2})
+	at := `127.0.0.1:1 - cid:31 - `
+	for text, want := range map[string]Refusal{
+		at + `"v1:go" - "$G/nkey:` + k1 + `" - Publish Violation - Subject "up.f.r2.hb"`:                                        {Robot: "r1", What: "publish"},
+		at + `"v1:go" - "$G/nkey:` + k1 + `" - Subscription Violation - Subject ">", SID 1`:                                     {Robot: "r1", What: "subscribe"},
+		at + `"v1" - "$G/nkey:` + k2 + `" - Publish Violation - x:go" - "$G/nkey:` + k1 + `" - Publish Violation - Subject "a"`: {Robot: "r1", What: "publish"},
+		at + `"v1:go" - "$G/nkey:` + k1 + `" - Publish Violation - Subject "$G/nkey:` + k2 + `"`:                                {Robot: "r1", What: "publish"},
+		at + `"v1:go" - "$G/nkey:` + newUser(t).Public() + `" - Publish Violation - Subject "a"`:                                {What: "publish"},
+		at + `authentication error`:                                    {What: "connect"},
+		at + `authentication error - Nkey "` + k2 + `"`:                {What: "connect"},
+		at + `TLS handshake error: remote error: tls: bad certificate`: {What: "connect"},
+		`Filesystem is read only`:                                      {},
+	} {
+		got, ok := d.refusal(text)
+		if ok != (want != Refusal{}) || ok && got != want {
+			t.Errorf("%s: %+v, %v, want %+v", text, got, ok, want)
+		}
+	}
+	for range 1000 {
+		d.Errorf("%s", at+`authentication error`)
+		d.Errorf("%s", at+`"v1:go" - "$G/nkey:`+k1+`" - Publish Violation - Subject "a"`)
+	}
+	d.Warnf("something else")
+	d.Warnf("something else")
+	if told != 4 || d.count[Refusal{What: "connect"}] != 1000 || d.count[Refusal{Robot: "r1", What: "publish"}] != 1000 {
+		t.Errorf("told %d times, counted %v", told, d.count)
 	}
 }
 
@@ -387,6 +429,9 @@ func TestWhoIsNotLetIn(t *testing.T) {
 			}
 		}
 		client.Close()
+	}
+	if got := g.Refused(); len(got) != 1 || got[0].Robot != "" || got[0].What != "connect" || got[0].N < 4 {
+		t.Errorf("counted %+v", got)
 	}
 	// In the process of the server a key is needed too.
 	if c, err := nats.Connect("", nats.InProcessServer(g.nats), nats.NoReconnect()); err == nil {

@@ -26,7 +26,7 @@ var ErrStoreInUse = errors.New("another process uses this store of the bus")
 type Options struct {
 	Listen   string            // host:port to listen on, port 0 for any; "" lets only this process in
 	StoreDir string            // folder of the streams, made when missing; required
-	Warn     func(text string) // told what the server warns of; may be nil
+	Warn     func(text string) // told what the server warns of, of what it refuses once a minute; may be nil
 
 	Access      *Access // who may do what, over TLS; nil lets everybody do everything, which is for rehearsals and closed networks
 	Store       int64   // bytes that all streams may take; 0 for 4 GiB
@@ -39,6 +39,7 @@ type Server struct {
 	lock    *os.File
 	options Options
 	tls     *tls.Config
+	door    *doorkeeper
 }
 
 // Start runs a server until Close.
@@ -63,10 +64,11 @@ func Start(o Options) (*Server, error) {
 		lock.Close()
 		return nil, fmt.Errorf("bus: %w", err)
 	}
-	if o.Warn != nil {
-		ns.SetLoggerV2(warner{o.Warn}, false, false, false)
+	s := &Server{nats: ns, lock: lock, options: o, tls: secure, door: &doorkeeper{warn: o.Warn, count: map[Refusal]uint64{}, told: map[Refusal]time.Time{}}}
+	if o.Access != nil {
+		s.door.setRobots(o.Access.Robots)
 	}
-	s := &Server{nats: ns, lock: lock, options: o, tls: secure}
+	ns.SetLoggerV2(s.door, false, false, false)
 	ns.Start()
 	if !ns.ReadyForConnections(10 * time.Second) {
 		s.Close()
@@ -150,13 +152,3 @@ func (s *Server) Close() error {
 	s.nats.WaitForShutdown()
 	return s.lock.Close()
 }
-
-// warner hands on what the server warns of.
-type warner struct{ warn func(string) }
-
-func (w warner) Warnf(format string, v ...any)  { w.warn(fmt.Sprintf(format, v...)) }
-func (w warner) Errorf(format string, v ...any) { w.warn(fmt.Sprintf(format, v...)) }
-func (w warner) Fatalf(format string, v ...any) { w.warn(fmt.Sprintf(format, v...)) }
-func (w warner) Noticef(string, ...any)         {}
-func (w warner) Debugf(string, ...any)          {}
-func (w warner) Tracef(string, ...any)          {}
