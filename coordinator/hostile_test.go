@@ -79,6 +79,9 @@ func (p *program) message(robot string, dim int) (kind string, m interface{ Mars
 		for i := range d {
 			t.Info[i*(d+1)] = p.strength()
 		}
+		if p.below(3) == 0 {
+			t.Pose, t.Info, t.Sight = msgs.Pose{}, nil, p.sight(dim)
+		}
 		return msgs.KindTie, t
 	}
 	s := &msgs.Summary{Header: p.header(robot, 0), Version: uint64(p.byte()), Answers: msgs.Epoch{Number: uint64(p.byte())}, Dim: d}
@@ -98,9 +101,68 @@ func (p *program) message(robot string, dim int) (kind string, m interface{ Mars
 			}
 			part.Cliques = append(part.Cliques, c)
 		}
+		p.marks(&part, dim)
 		s.Parts = append(s.Parts, part)
 	}
 	return msgs.KindSummary, s
+}
+
+// sight picks what a sensor claims to have seen.
+func (p *program) sight(dim int) *msgs.Sight {
+	s := &msgs.Sight{Sense: msgs.Sense(1 + p.below(4)), Mount: p.pose(3), Spot: [3]float64{p.number(), p.number(), p.number()}}
+	for i := range dim {
+		switch {
+		case s.Sense == msgs.Range && i > 0, s.Sense == msgs.Bearing && i == 0:
+			continue
+		case s.Sense != msgs.Position && i == 0:
+			s.Value[i] = math.Abs(p.number())
+		case s.Sense != msgs.Position:
+			s.Value[i] = math.Remainder(p.number(), math.Pi)
+		default:
+			s.Value[i] = p.number()
+		}
+		s.Info[4*i] = p.strength()
+	}
+	if i := p.below(2); p.below(3) == 0 && s.Info[4*i] > 0 && s.Info[4*i+4] > 0 { // of lower rank
+		x := math.Sqrt(s.Info[4*i]) * math.Sqrt(s.Info[4*i+4])
+		s.Info[3*i+i+1], s.Info[3*i+3+i] = x, x
+	}
+	return s
+}
+
+// marks adds points, with cliques over them, and levels to a part.
+func (p *program) marks(part *msgs.Part, dim int) {
+	d := 3 * (dim - 1)
+	for m := range 5 {
+		at := [3]float64{p.number(), p.number()}
+		if dim == 3 {
+			at[2] = p.number()
+		}
+		switch p.below(3) {
+		case 0:
+			part.Points = append(part.Points, msgs.Point{Mark: fmt.Sprint("m", m), At: at})
+		case 1:
+			part.Seen = append(part.Seen, fmt.Sprint("m", m))
+		}
+	}
+	for range p.below(4) {
+		if len(part.Points) == 0 {
+			break
+		}
+		c := msgs.Clique{Nodes: []int{p.below(len(part.Junctions))}, Points: []int{p.below(len(part.Points))}}
+		if o := p.below(len(part.Junctions)); o != c.Nodes[0] && p.below(2) == 0 {
+			c.Nodes = append(c.Nodes, o)
+		}
+		n := d*(len(c.Nodes)-1) + 3
+		c.H, c.B = make([]float64, n*n), make([]float64, n)
+		for k := range n {
+			c.H[k*(n+1)], c.B[k] = p.strength(), p.number()
+		}
+		part.Cliques = append(part.Cliques, c)
+	}
+	if dim == 3 && p.below(3) == 0 {
+		part.Levels = []msgs.Level{{Node: p.below(len(part.Junctions)), Up: [][3]float64{{0, 0, 1}, {0, 0, -1}, {1, 0, 0}, {0.6, 0, 0.8}}[p.below(4)], Sigma: []float64{1e-12, 0.01, 1}[p.below(3)]}}
+	}
 }
 
 // siege lets hostile robots say what the program chooses, between what three honest robots say, and demands that the honest robots
@@ -109,7 +171,14 @@ func siege(t testing.TB, bytes []byte) {
 	p := &program{bytes}
 	dim := 2 + p.below(2)
 	hold := p.below(2) == 0
-	b := newBase(t, dim, func(c *Config) { c.HoldAll = hold })
+	known := p.below(4)
+	b := newBase(t, dim, func(c *Config) {
+		c.HoldAll = hold
+		for m := range known {
+			c.Marks = append(c.Marks, Mark{Name: fmt.Sprint("m", m), Role: Control, At: [3]float64{float64(m), float64(m * m), 1}, Sigma: [3]float64{0.1, 0.1, 0.1}})
+		}
+		c.LevelDatum = known%2 == 1
+	})
 	var k []*track
 	for i, robot := range []string{"r1", "r2", "r3"} {
 		k = append(k, newTrack(robot, 1, 30, dim, uint64(i)))
