@@ -687,3 +687,21 @@ func TestRangesAmongJoined(t *testing.T) {
 		}
 	}
 }
+
+// TestRefusedSessionKeepsItsMarks: a robot that a person has ruled out joins nobody by its marks.
+func TestRefusedSessionKeepsItsMarks(t *testing.T) {
+	y := newYard(2, 3, 70, 24, 1)
+	for _, r := range y.robots {
+		r.look(own)
+	}
+	b := newBase(t, 2, func(c *Config) { c.HoldAll = false })
+	if err := b.Rule(1, msgs.Ruling{Fleet: "fleet", Target: msgs.OnRobot, Robot: "r2", Verdict: msgs.Refused, By: "lead", Note: "wet lens"}); err != nil {
+		t.Fatal(err)
+	}
+	y.exchange(t, b, 3)
+	for _, p := range b.Map() {
+		if p.Joined != (p.Robot != "r2") {
+			t.Errorf("%s joined: %v", p.Robot, p.Joined)
+		}
+	}
+}

@@ -91,7 +91,7 @@ func (n *network) eachMark(f func(mark string, all []known)) {
 	for u := range n.units {
 		for p := range n.units[u].part.Points {
 			name := n.units[u].part.Points[p].Mark
-			if !n.units[u].model.inMain(len(n.units[u].model.poses) + p) {
+			if n.units[u].refused || !n.units[u].model.inMain(len(n.units[u].model.poses)+p) {
 				continue
 			}
 			if of[name] == nil {
@@ -211,10 +211,11 @@ func (j *joint) addPoints(w *weighed) {
 		for p := range part.Points {
 			here := place{part.Points[p].Mark, w.island[u]}
 			k, ok := number[here]
-			if !ok || w.apart[known{u, p}] || !j.n.units[u].model.inMain(len(j.n.units[u].model.poses)+p) {
+			alone := w.apart[known{u, p}] || j.n.units[u].refused || !j.n.units[u].model.inMain(len(j.n.units[u].model.poses)+p)
+			if !ok || alone {
 				k = int32(len(j.points))
 				j.points = append(j.points, point{mark: here.mark, island: here.island})
-				if !w.apart[known{u, p}] && j.n.units[u].model.inMain(len(j.n.units[u].model.poses)+p) {
+				if !alone {
 					number[here] = k
 				}
 			}

@@ -27,6 +27,8 @@ type unit struct {
 	part  *msgs.Part
 	model *unitModel
 	base  int32
+
+	refused bool // by a ruling: what it has seen of marks concerns nobody else
 }
 
 // usable is a tie with both ends in the network: units and junctions of its ends.
@@ -68,7 +70,8 @@ func (c *Coordinator) layout() *network {
 			}
 			id := unitID{r.name, part.Session}
 			number[id] = len(n.units)
-			n.units = append(n.units, unit{id, r, part, r.units[p], base})
+			ruled := c.rulingOnUnit(id)
+			n.units = append(n.units, unit{id: id, robot: r, part: part, model: r.units[p], base: base, refused: ruled != nil && ruled.Verdict == msgs.Refused})
 			base += int32(len(part.Junctions))
 			n.partial = n.partial || len(part.Points) > 0
 		}

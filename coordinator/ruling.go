@@ -57,6 +57,14 @@ func (c *Coordinator) Rule(nowNS int64, r msgs.Ruling) error {
 	return nil
 }
 
+// rulingOnUnit returns the ruling on a session, or else on its robot.
+func (c *Coordinator) rulingOnUnit(u unitID) *msgs.Ruling {
+	if r := c.rulings[subject{target: msgs.OnSession, robot: u.robot, session: u.session}]; r != nil {
+		return r
+	}
+	return c.rulings[subject{target: msgs.OnRobot, robot: u.robot}]
+}
+
 // rulingOn returns the ruling that counts for a tie, nil for none.
 func (c *Coordinator) rulingOn(t *msgs.Tie) *msgs.Ruling {
 	if len(c.rulings) == 0 {
@@ -65,13 +73,7 @@ func (c *Coordinator) rulingOn(t *msgs.Tie) *msgs.Ruling {
 	if r := c.rulings[subject{target: msgs.OnTie, robot: t.Header.Robot, tie: t.ID}]; r != nil {
 		return r
 	}
-	end := func(k *msgs.KeyRef) *msgs.Ruling {
-		if r := c.rulings[subject{target: msgs.OnSession, robot: k.Robot, session: k.Session}]; r != nil {
-			return r
-		}
-		return c.rulings[subject{target: msgs.OnRobot, robot: k.Robot}]
-	}
-	near, far := end(&t.From), end(&t.To)
+	near, far := c.rulingOnUnit(unitID{t.From.Robot, t.From.Session}), c.rulingOnUnit(unitID{t.To.Robot, t.To.Session})
 	if near == nil || far != nil && far.Verdict == msgs.Refused {
 		return far
 	}

@@ -96,8 +96,8 @@ type Level struct {
 }
 
 // Clique is a condensed factor over junctions and points: cost 1/2 e'He + B'e, where e stacks, of every node but the first, Log of
-// the change of its pose seen from the first, then, of every point, the change of its place seen from the first node. Its
-// information contains no frame.
+// the change of its pose seen from the first, then, of every point, the change of its place seen from the first node, turned
+// into the axes of the session at which the clique was made. Its information contains no frame.
 type Clique struct {
 	Nodes  []int     // indices into Part.Junctions, distinct, the first is the reference; two or more, or one beside points
 	Points []int     // indices into Part.Points, distinct
