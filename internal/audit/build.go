@@ -282,7 +282,15 @@ func (w *work) list() {
 
 // solve brings the graph to its optimum with the weights as they are, and the covariances with it.
 func (w *work) solve() (posegraph.Result, error) {
+	return w.solveTo(posegraph.DefaultOptions().Tolerance)
+}
+
+// nearly is the tolerance of adjustments of which no more than a few digits are used.
+const nearly = 1e-8
+
+func (w *work) solveTo(tolerance float64) (posegraph.Result, error) {
 	o := posegraph.DefaultOptions()
+	o.Tolerance = tolerance
 	o.Watch = func(int, float64, float64) bool { return w.ctx.Err() == nil }
 	r := w.solver.Optimise(o)
 	switch r.Stop {

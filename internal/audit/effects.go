@@ -6,6 +6,9 @@ import (
 	"slices"
 
 	"gonum.org/v1/gonum/mat"
+
+	"selvage/internal/posegraph"
+	"selvage/internal/sparse"
 )
 
 // followed bounds the numbers that exact shifts are computed from: vectors times their length. All ties of an ordinary survey fit, of
@@ -30,75 +33,92 @@ func (w *work) effects() error {
 	slices.SortStableFunc(jobs, func(a, b *Tie) int { return cmp.Compare(b.Shift.M, a.Shift.M) })
 	scalars := w.sigma.Scalars()
 	exact := min(len(jobs), int(followed)/max(1, scalars*w.d))
-	shadows := w.shadows(jobs)
-	near := nearSets{g: newGroups(len(jobs)), least: map[int32]float64{}}
-	const together = 8 // ties
-	vectors := make([]float64, min(together, max(exact, 1))*w.d*scalars)
-	for first := 0; first < exact; first += together {
+	c := w.newComparison(jobs)
+	for first := 0; first < exact; {
 		if err := w.ctx.Err(); err != nil {
 			return err
 		}
-		batch := jobs[first:min(first+together, exact)]
-		columns := vectors[:len(batch)*w.d*scalars]
-		clear(columns)
-		for i, t := range batch {
-			w.load(t, columns[i*w.d*scalars:], scalars)
+		last, columns := first, 0
+		for last < exact && columns+len(jobs[last].Parts) <= sparse.Together {
+			columns += len(jobs[last].Parts)
+			last++
 		}
-		w.sigma.Apply(columns, len(batch)*w.d)
-		for i, t := range batch {
-			w.worst(t, columns[i*w.d*scalars:], scalars)
-			w.nearBy(shadows, first+i, columns[i*w.d*scalars:], scalars, near.join)
+		w.follow(jobs[first:last], c)
+		column := 0
+		for k := first; k < last; k++ {
+			c.compare(k, column)
+			column += len(jobs[k].Parts)
 		}
+		first = last
 	}
-	near.list(w, jobs)
+	c.list(w)
 	w.out.compared = exact == len(jobs)
 	return nil
 }
 
-// load writes J' Omega e_c times the detectable error of component c to vector c; times one where there is none.
-func (w *work) load(t *Tie, vectors []float64, scalars int) {
-	d, info := w.derivative(t.m), w.info(t.m)
-	n := d.rows
-	m := make([]float64, n*n)
-	for c, x := range t.Detectable {
-		if math.IsNaN(float64(x)) { // nothing checks it: for the correlations alone
-			x = 1
+// follow computes the exact shifts of some ties, of no more than [sparse.Together] components in all, and what the ends of ties move by
+// for the comparison.
+func (w *work) follow(batch []*Tie, c *comparison) {
+	var loads []posegraph.Load
+	columns := 0
+	for _, t := range batch {
+		loads = w.load(t, columns, loads)
+		columns += len(t.Parts)
+	}
+	most, at := make([]float64, columns), make([]int32, columns)
+	turns, keyframes := w.turns(), int32(len(w.p.Keys))
+	sums := make([]float64, columns)
+	w.sigma.Respond(columns, loads, func(v int32, x []float64) {
+		c.keep(v, x)
+		if v >= keyframes {
+			return
 		}
-		for r := range n {
-			m[r*n+c] = info[r*n+c] * float64(x)
+		clear(sums)
+		for a := range turns {
+			for k, y := range x[a*sparse.Together : a*sparse.Together+columns] {
+				sums[k] += y * y
+			}
+		}
+		for k, sum := range sums {
+			if sum > most[k] || sum == most[k] && v < at[k] {
+				most[k], at[k] = sum, v
+			}
+		}
+	})
+	column := 0
+	for _, t := range batch {
+		t.Shift.M, t.Shift.Exact, t.Shift.Component, t.Shift.At = 0, true, "", nil
+		for part := range t.Parts {
+			if m := math.Sqrt(most[column]); m > t.Shift.M && !math.IsNaN(float64(t.Detectable[part])) {
+				k := keyframe(w.p.Keys[at[column]])
+				t.Shift.M, t.Shift.Component, t.Shift.At = m, t.Parts[part], &k
+			}
+			column++
 		}
 	}
-	d.scatter(w.sigma, m, n, vectors, scalars)
 }
 
-// worst reads the largest shift of a position from the vectors of a tie.
-func (w *work) worst(t *Tie, vectors []float64, scalars int) {
-	most, at, component := 0.0, int32(-1), 0
-	for c := range t.Parts {
-		if math.IsNaN(float64(t.Detectable[c])) {
-			continue
+// load appends J' Omega e_c times the detectable error of each component c, from a column on; times one where there is none.
+func (w *work) load(t *Tie, column int, loads []posegraph.Load) []posegraph.Load {
+	d, info := w.derivative(t.m), w.info(t.m)
+	n := d.rows
+	for c, size := range t.Detectable {
+		x := float64(size)
+		if math.IsNaN(x) { // nothing checks it: for the correlations alone
+			x = 1
 		}
-		v := vectors[c*scalars : (c+1)*scalars]
-		for k := range w.p.Keys {
-			o := w.sigma.Offset(int32(k))
-			if o < 0 {
-				continue
-			}
-			sum := 0.0
-			for _, x := range v[o : o+w.turns()] {
-				sum += x * x
-			}
-			if sum > most {
-				most, at, component = sum, int32(k), c
+		for e, j := range d.by {
+			width := len(j) / n
+			for a := range width {
+				value := 0.0
+				for r := range n {
+					value += j[r*width+a] * info[r*n+c] * x
+				}
+				loads = append(loads, posegraph.Load{Variable: d.at[e], Scalar: a, Column: column + c, Value: value})
 			}
 		}
 	}
-	t.Shift.M, t.Shift.Exact = math.Sqrt(most), true
-	t.Shift.Component, t.Shift.At = "", nil
-	if at >= 0 {
-		k := keyframe(w.p.Keys[at])
-		t.Shift.Component, t.Shift.At = t.Parts[component], &k
-	}
+	return loads
 }
 
 // largestSigmas returns, for each island, the largest standard deviation of a position in any direction.

@@ -21,16 +21,12 @@ func TestCorrelationsAgainstTheJointCovariance(t *testing.T) {
 				jobs = append(jobs, x)
 			}
 		}
-		shadows := w.shadows(jobs)
-		scalars := w.sigma.Scalars()
+		c := w.newComparison(jobs)
 		for k := range jobs {
-			vectors := make([]float64, w.d*scalars)
-			w.load(jobs[k], vectors, scalars)
-			w.sigma.Apply(vectors, w.d)
+			w.follow(jobs[k:k+1], c)
 			var got []float64
-			h := shadows[k].unload()
 			for l := k + 1; l < len(jobs); l++ {
-				got = append(got, shadows[k].correlation(&shadows[l], h, vectors, scalars))
+				got = append(got, c.correlation(&c.all[k], &c.all[l], c.all[k].unload(), 0))
 			}
 			for i, c := range got {
 				want := jointCorrelation(t, w, jobs[k], jobs[k+1+i])

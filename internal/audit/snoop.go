@@ -50,7 +50,7 @@ func (w *work) snoop() error {
 				*all[k].weight() = 0
 			}
 		}
-		if _, err := w.solve(); err != nil {
+		if _, err := w.solveTo(nearly); err != nil {
 			return nil, err
 		}
 		alone := w.loners()

@@ -30,7 +30,7 @@ func (w *work) spreads() error {
 				*w.all[i].weight() = 1 / scale[g]
 			}
 		}
-		if _, err := w.solve(); err != nil {
+		if _, err := w.solveTo(nearly); err != nil {
 			return nil, nil, err
 		}
 		squares, redundancy = make([]float64, len(count)), make([]float64, len(count))

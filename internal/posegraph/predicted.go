@@ -1,6 +1,9 @@
 package posegraph
 
-import "selvage/internal/lie"
+import (
+	"selvage/internal/lie"
+	"selvage/internal/sparse"
+)
 
 // Jacobians writes the derivatives of the residual of factor k at v by the tangents of pose I and of pose J, Dim x Dim row-major:
 // J_j = Jr^-1(r), J_i = -Jr^-1(r) Ad((X_i^-1 X_j)^-1).
@@ -59,3 +62,22 @@ func (c Covariance) Offset(variable int32) int { return int(c.s.offset[variable]
 
 // Apply multiplies n vectors, stored one after another, by the whole covariance, not only its pattern, in place.
 func (c Covariance) Apply(vectors []float64, n int) { c.s.factor.SolveMany(vectors, n) }
+
+// Load is a force on a variable: on one scalar of its tangent, in one of several columns.
+type Load struct {
+	Variable       int32
+	Scalar, Column int
+	Value          float64
+}
+
+// Respond multiplies the covariance by count columns, at most [sparse.Together], of which only the loads are not zero, and hands the result
+// over variable by variable: x[a*sparse.Together+c] is scalar a of its tangent in column c. Loads on what is fixed do nothing.
+func (c Covariance) Respond(count int, loads []Load, read func(variable int32, x []float64)) {
+	of := make([]sparse.Load, 0, len(loads))
+	for _, l := range loads {
+		if b := c.s.block[l.Variable]; b >= 0 {
+			of = append(of, sparse.Load{Block: int(b), Scalar: l.Scalar, Column: l.Column, Value: l.Value})
+		}
+	}
+	c.s.factor.Respond(count, of, func(block int, x []float64) { read(c.s.variable[block], x) })
+}

@@ -155,6 +155,21 @@ func BenchmarkSolveMany(b *testing.B) {
 	})
 }
 
+// BenchmarkRespond is for the same number, each with loads at two blocks.
+func BenchmarkRespond(b *testing.B) {
+	each(b, 1, func(b *testing.B, f *Factor, _ *Matrix) {
+		var loads []Load
+		for c := range Together {
+			for e := range 2 {
+				loads = append(loads, Load{Block: (c*7919 + e*104729) % len(f.s.dims), Column: c, Value: 1})
+			}
+		}
+		for b.Loop() {
+			f.Respond(Together, loads, func(int, []float64) {})
+		}
+	})
+}
+
 func BenchmarkSelectedInverse(b *testing.B) {
 	each(b, 1, func(b *testing.B, f *Factor, _ *Matrix) {
 		out := f.s.NewMatrix()

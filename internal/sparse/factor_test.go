@@ -131,6 +131,7 @@ func testAgainstDense(t *testing.T) {
 					}
 				}
 			}
+			checkRespond(t, f, h, &chol)
 			checkInverse(t, f, m, &chol)
 			checkSchur(t, f, m, h, b, x)
 		})
@@ -355,6 +356,44 @@ func testSingular(t *testing.T) {
 		}
 		if err := f.Factorise(m); err != nil {
 			t.Fatalf("tree of %d with weak datum: %v", n, err)
+		}
+	}
+}
+
+// checkRespond solves for loads at a few scalars, one of them twice, against the dense matrix.
+func checkRespond(t *testing.T, f *Factor, h *mat.SymDense, chol *mat.Cholesky) {
+	t.Helper()
+	rng := rand.New(rand.NewPCG(9, uint64(f.s.Size())))
+	for _, count := range []int{1, 7, Together} {
+		n := f.s.Size()
+		want := mat.NewDense(n, count, nil)
+		var loads []Load
+		for c := range count {
+			for range 3 {
+				b := rng.IntN(len(f.s.dims))
+				l := Load{Block: b, Scalar: rng.IntN(int(f.s.dims[b])), Column: c, Value: rng.NormFloat64()}
+				loads = append(loads, l)
+				row := int(f.s.offset[b]) + l.Scalar
+				want.Set(row, c, want.At(row, c)+l.Value)
+			}
+		}
+		var twin mat.Dense
+		if err := chol.SolveTo(&twin, want); err != nil {
+			t.Fatal(err)
+		}
+		seen, largest := 0, mat.Max(&twin)-mat.Min(&twin)
+		f.Respond(count, loads, func(block int, x []float64) {
+			for a := range int(f.s.dims[block]) {
+				seen++
+				for c := range count {
+					if d := math.Abs(x[a*Together+c] - twin.At(int(f.s.offset[block])+a, c)); !(d <= 1e-11*largest) {
+						t.Fatalf("Respond: scalar %d of block %d, right-hand side %d of %d is off by %g", a, block, c, count, d)
+					}
+				}
+			}
+		})
+		if seen != n {
+			t.Errorf("Respond handed over %d of %d scalars", seen, n)
 		}
 	}
 }

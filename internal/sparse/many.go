@@ -6,7 +6,13 @@ const together = 48
 
 // many is the memory of SolveMany. x holds a block of right-hand sides with those of
 // one scalar side by side: the rows of the kernels are right-hand sides.
-type many struct{ x, pivots []float64 }
+type many struct {
+	x, pivots []float64
+
+	// Of Respond: front and first row of each block, and the fronts that right-hand sides meet.
+	front, row []int32
+	live       []bool
+}
 
 // SolveMany solves for nrhs right-hand sides in place, stored one after another. One
 // worker does it. The first call allocates memory.
@@ -17,16 +23,20 @@ func (f *Factor) SolveMany(b []float64, nrhs int) {
 	}
 	w := &f.team[0]
 	w.needInverter(f.s)
-	if f.many == nil {
-		f.many = &many{
-			x:      make([]float64, together*n+8),
-			pivots: make([]float64, together*f.s.widest.k+8),
-		}
-	}
+	f.needMany()
 	for ; nrhs > 0; nrhs -= together {
 		count := min(nrhs, together)
 		f.solveTogether(b[:n*count], count, w.inv)
 		b = b[n*count:]
+	}
+}
+
+func (f *Factor) needMany() {
+	if f.many == nil {
+		f.many = &many{
+			x:      make([]float64, together*f.s.Size()+8),
+			pivots: make([]float64, together*f.s.widest.k+8),
+		}
 	}
 }
 
