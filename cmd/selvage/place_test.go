@@ -80,6 +80,13 @@ func TestAdjustPlacesOnControl(t *testing.T) {
 	if text := read(t, dir, "yard", "results", "poses.csv"); !strings.Contains(text, "on which the map was placed as a whole") {
 		t.Errorf("the poses do not say what holds the datum: %.200s", text)
 	}
+	a = selvage(t, dir, "audit", "yard", "--place", "robust")
+	a.want(t, 0)
+	for _, says := range []string{"k3 (2.00 m) contradicts the others and did not count.", "Tested 0.024 metres horizontal accuracy at 95% confidence level.", "was not decided: what is less than a relative pose takes part"} {
+		if !strings.Contains(a.stdout, says) || !strings.Contains(read(t, dir, "yard", "results", "audit.html"), says) {
+			t.Errorf("no %q on the terminal or the page of the audit:\n%s", says, a.stdout)
+		}
+	}
 	// As priors, sound control points give the same map.
 	yard(t, dir+"/held", make([][2]float64, 7))
 	if x := adjustJSON(t, 0, dir, "held/yard").Positions; x.Placed != nil || math.Abs(*x.RMSERadialM-0.01*math.Sqrt2) > 1e-6 {

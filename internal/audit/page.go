@@ -322,7 +322,7 @@ func (a *Audit) method() []string {
 		"Shift: how far an error of the detectable size along one component moves the position that it moves most, Q J' Omega e, the worst component. Where it says at most, it is the bound from the largest standard deviation instead. Leave-one-out: the distance between a tie and what everything else predicts, from the same factor.",
 		"Bridges, places and sets come from the graph, not from numbers: a bridge lies on no loop; measurements that lie on the very same loops cannot be told apart (Pritchard and Thurimella 2011). Ties that can hardly be told apart come from the correlation of their tests (Förstner 1983), the root mean square of the canonical correlations of their residuals. Ties within the distance at which two count as two witnesses share a place.",
 		"Loops: the ties of a spanning tree are kept, and every other held tie is compared with the map of the tree, each robot's own closures included. Sigmas: root mean square over the components.",
-		"Real spread: variance components from residuals and redundancies, repeated until they stay (Helmert's estimate as simplified by Förstner 1979), with 95 % bounds from chi-square on the redundancy.",
+		"Real spread: variance components from residuals and redundancies, repeated until they stay (Helmert's estimate as simplified by Förstner 1979), with 95 % bounds of first order from the information of restricted maximum likelihood, which counts how groups check each other.",
 		a.basinMethod(),
 		"All figures are of first order at the solution and conditional on the verdicts.",
 	}

@@ -48,6 +48,16 @@ func (w *work) spreads() error {
 			redundancy[g] += left
 		}
 		return squares, redundancy, w.ctx.Err()
+	}, func(scale []float64) ([]float64, error) {
+		for i, g := range group {
+			if g >= 0 {
+				*w.all[i].weight() = 1 / scale[g]
+			}
+		}
+		if _, err := w.solve(); err != nil {
+			return nil, err
+		}
+		return w.shares(group, len(count)), w.ctx.Err()
 	})
 	if err != nil {
 		return err
