@@ -257,7 +257,7 @@ func TestRobotIsRefusedWhatIsNotItsOwn(t *testing.T) {
 	for _, c := range []struct{ subject, body string }{
 		{"up.f.r2.tie", "as r2"}, {"up.f.r2.hb", "as r2"}, {"up.f.r2.summary", "as r2"}, {"up.f.r2.summary.head", "as r2"}, {"up.g.r1.tie", "another fleet"},
 		{"up.f.r1", ""}, {"up.f.r1.other", ""}, {"up.f.r1.tie.below", ""},
-		{"down.f.r1.corr", "as the base"}, {"down.f.r2.corr", "as the base"}, {"down.f.r1.verdict", "as the base"}, {"down.f._lease", "as the base"},
+		{"down.f.r1.corr", "as the base"}, {"down.f.r2.corr", "as the base"}, {"down.f.r1.verdict", "as the base"}, {"down.f._lease", "as the base"}, {"rule.f", "as a person"},
 		{"$JS.API.DIRECT.GET." + corr + ".down.f.r2.corr", ""}, {"$JS.API.DIRECT.GET." + corr + ".down.f._lease", ""},
 		{"$JS.API.DIRECT.GET." + corr, `{"last_by_subj":"down.f.r2.corr"}`}, {"$JS.API.DIRECT.GET." + corr, `{"seq":1}`},
 		{"$JS.API.STREAM.MSG.GET." + corr, `{"last_by_subj":"down.f.r2.corr"}`}, {"$JS.API.DIRECT.GET." + SummaryStream("f") + ".up.f.r2.summary", ""},
@@ -278,7 +278,7 @@ func TestRobotIsRefusedWhatIsNotItsOwn(t *testing.T) {
 		s.refused(t, c.subject)
 	}
 	for _, subject := range []string{
-		"down.f.r2.corr", "down.f.r2.want", "down.f.r2.>", "down.f.*.corr", "down.f.>", "down.>", ">", "*", "down.f.r1.>", "down.f._lease", "up.f.r2.hb", "up.f.>", "up.f.r1.hb",
+		"down.f.r2.corr", "down.f.r2.want", "down.f.r2.>", "down.f.*.corr", "down.f.>", "down.>", ">", "*", "down.f.r1.>", "down.f._lease", "rule.f", "up.f.r2.hb", "up.f.>", "up.f.r1.hb",
 		"_INBOX_r2.>", "_INBOX_base.>", "_INBOX.>", "$JS.>", "$JS.API.>", "$JS.ACK.>", "$JS.EVENT.>", "$SYS.>",
 	} {
 		subscribes++
