@@ -52,6 +52,7 @@ type Audit struct {
 	plan     report.Plan
 	unclosed bool // no loops were closed: ties that are no whole pose stand in the way
 	compared bool // the tests of all ties were compared with each other
+	unsplit  bool // not all sessions of all marks were tested
 	sighted  bool // there are sightings of marks or ties that are less than a pose
 	hidden   bool // the plan does not show all ties
 	main     int  // the island that the plan is in

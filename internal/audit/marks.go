@@ -4,7 +4,9 @@ import (
 	"math"
 	"slices"
 
+	"selvage/internal/posegraph"
 	"selvage/internal/reliability"
+	"selvage/internal/sparse"
 	"selvage/internal/survey"
 )
 
@@ -84,7 +86,7 @@ func (w *work) testMarks() error {
 			held[int(m.priors.Point(m.k))] = i
 		}
 	}
-	budget := int(judged)
+	var jobs []splitJob
 	told := map[int]bool{} // marks
 	for p := range n {
 		mark := w.p.Points[p].Mark
@@ -104,18 +106,13 @@ func (w *work) testMarks() error {
 		}
 		if len(looks[p]) > 1 {
 			for i := range looks[p] {
-				if budget -= w.turns() * w.sigma.Scalars(); budget < 0 {
-					break
-				}
-				if s := w.split(p, &looks[p][i]); s != nil && (m.Split == nil || s.P < m.Split.P || s.P == m.Split.P && s.T > m.Split.T) {
-					m.Split = s
-				}
+				jobs = append(jobs, splitJob{mark: len(w.out.Marks), look: &looks[p][i]})
 			}
 		}
 		w.out.Marks = append(w.out.Marks, m)
-		if err := w.ctx.Err(); err != nil {
-			return err
-		}
+	}
+	if err := w.splits(jobs); err != nil {
+		return err
 	}
 	for _, mark := range w.wrong { // of which nothing is left
 		if !told[mark] {
@@ -233,56 +230,102 @@ func (w *work) liesAt(point, mark int, apart float64) (name string, m *float64) 
 	return name, m
 }
 
-// split tests whether one session sees a point elsewhere than all else has it; nil where nothing else says where it is.
-func (w *work) split(point int, l *look) *Split {
-	n, scalars := w.turns(), w.sigma.Scalars()
-	a, g := make([]float64, n*n), make([]float64, n)
-	b := make([]float64, n*scalars) // J' Omega C, a vector for each coordinate
-	for _, m := range l.all {
+// splitJob tests whether one session sees a mark elsewhere than all else has it.
+type splitJob struct {
+	mark int // of the audit
+	look *look
+
+	a, g, seen []float64 // see [reliability.Hypothesis], the parameters being the shift of the place seen
+}
+
+// splits tests the sessions of all marks, as many as there is room for, and notes for each mark the session that differs most.
+func (w *work) splits(jobs []splitJob) error {
+	n := w.turns()
+	together := sparse.Together / n
+	room := int(followed) / max(1, w.sigma.Scalars()*n)
+	w.out.unsplit = len(jobs) > room
+	jobs = jobs[:min(len(jobs), room)]
+	for len(jobs) > 0 {
+		if err := w.ctx.Err(); err != nil {
+			return err
+		}
+		batch := jobs[:min(len(jobs), together)]
+		jobs = jobs[len(batch):]
+		var loads []posegraph.Load // J' Omega C
+		for k := range batch {
+			loads = w.shift(&batch[k], k*n, loads)
+		}
+		at := map[int32][]posegraph.Load{}
+		for _, l := range loads {
+			at[l.Variable] = append(at[l.Variable], l)
+		}
+		w.sigma.Respond(len(batch)*n, loads, func(v int32, x []float64) {
+			for _, l := range at[v] {
+				j, c := &batch[l.Column/n], l.Column%n
+				row := x[l.Scalar*sparse.Together+l.Column-c:]
+				for e := range n {
+					j.seen[c*n+e] -= l.Value * row[e]
+				}
+			}
+		})
+		for k := range batch {
+			j := &batch[k]
+			t, dof, shift := reliability.Hypothesis(j.a, j.seen, j.g)
+			if dof == 0 { // nothing else says where it is
+				continue
+			}
+			s := &Split{Session: w.unitName(j.look.unit), T: t, DoF: dof, P: reliability.Survival(t, dof), Failed: t > reliability.Bound(dof)}
+			if shift != nil {
+				m := 0.0
+				for _, x := range shift {
+					m = math.Hypot(m, x)
+				}
+				s.M = &m
+			}
+			if m := &w.out.Marks[j.mark]; m.Split == nil || s.excess() > m.Split.excess() {
+				m.Split = s
+			}
+		}
+	}
+	return nil
+}
+
+// shift fills in what a session saw of a mark, with C the derivative by the place seen, and appends J' Omega C from a column on.
+func (w *work) shift(j *splitJob, column int, loads []posegraph.Load) []posegraph.Load {
+	n := w.turns()
+	j.a, j.g = make([]float64, n*n), make([]float64, n)
+	for _, m := range j.look.all {
 		d, info, r := w.derivative(m), w.info(m), w.residual(m)
 		k := d.rows
 		oc := make([]float64, k*n) // Omega C
 		for i := range k {
 			for c := range n {
-				for j := range k {
-					oc[i*n+c] += info[i*k+j] * d.by[1][3*j+c]
+				for l := range k {
+					oc[i*n+c] += info[i*k+l] * d.by[1][3*l+c]
 				}
 			}
 		}
 		for i := range k {
 			for c := range n {
-				g[c] += oc[i*n+c] * r[i]
+				j.g[c] += oc[i*n+c] * r[i]
 				for e := range n {
-					a[c*n+e] += d.by[1][3*i+c] * oc[i*n+e]
+					j.a[c*n+e] += d.by[1][3*i+c] * oc[i*n+e]
 				}
 			}
 		}
-		d.scatter(w.sigma, oc, n, b, scalars)
-	}
-	q := slices.Clone(b)
-	w.sigma.Apply(q, n)
-	seen := slices.Clone(a)
-	for c := range n {
-		for e := range n {
-			x, y := b[c*scalars:(c+1)*scalars], q[e*scalars:(e+1)*scalars]
-			for i, v := range x {
-				if v != 0 {
-					seen[c*n+e] -= v * y[i]
+		for e, by := range d.by {
+			width := len(by) / k
+			for a := range width {
+				for c := range n {
+					value := 0.0
+					for i := range k {
+						value += by[i*width+a] * oc[i*n+c]
+					}
+					loads = append(loads, posegraph.Load{Variable: d.at[e], Scalar: a, Column: column + c, Value: value})
 				}
 			}
 		}
 	}
-	t, dof, shift := reliability.Hypothesis(a, seen, g)
-	if dof == 0 {
-		return nil
-	}
-	s := &Split{Session: w.unitName(l.unit), T: t, DoF: dof, P: reliability.Survival(t, dof), Failed: t > reliability.Bound(dof)}
-	if shift != nil {
-		m := 0.0
-		for _, x := range shift {
-			m = math.Hypot(m, x)
-		}
-		s.M = &m
-	}
-	return s
+	j.seen = slices.Clone(j.a)
+	return loads
 }

@@ -152,6 +152,9 @@ func (a *Audit) markTable() report.Table {
 		Note:    "Seen elsewhere: the session that differs most from all else, and by how much. Where only two have seen a mark, either may be wrong.",
 		Columns: []report.Column{{Name: "mark"}, {Name: "seen by"}, number("sightings", ""), number("left out", ""), number("redundancy", ""), number("worst misfit", "sigmas"), {Name: "seen elsewhere by"}, number("apart", "m"), number("statistic", ""), number("p", "")},
 	}
+	if a.unsplit {
+		t.Note += " There are more marks than could be tested for that."
+	}
 	for _, m := range a.seen() {
 		const none = "nothing checks it"
 		row := []string{m.Mark, list(m.Sessions), fmt.Sprint(m.Sightings), fmt.Sprint(m.LeftOut), fraction(m.Redundancy), figure(m.Worst, none)}
