@@ -61,7 +61,7 @@ func finite(x float64) *float64 {
 // basinLine says it in a sentence.
 func (a *Audit) basinLine() string {
 	if a.Basin == certified {
-		return "The starting basin is certified: the adjustment did not settle in a wrong valley."
+		return "The starting basin is certified: no other start would lead lower, as far as one weight for the rotation and one for the translation of a measurement tell."
 	}
 	return fmt.Sprintf("Whether another starting point would lead to a better map was not decided: %s.", a.BasinTest.Reason)
 }

@@ -29,8 +29,8 @@ func newSurrogate(b *posegraph.Between, dim int) *surrogate {
 				tau = 2 * det / (o[0] + o[4])
 			}
 		} else {
-			tau = 3 * traceless(o, 0)
-			kappa = 1.5 * traceless(o, 3)
+			tau = 3 * stiffness(o, 0)
+			kappa = 1.5 * stiffness(o, 3)
 		}
 		c.i, c.j, c.z = append(c.i, b.I[k]), append(c.j, b.J[k]), append(c.z, b.Z[k])
 		c.kappa, c.tau = append(c.kappa, b.W[k]*kappa), append(c.tau, b.W[k]*tau)
@@ -41,8 +41,8 @@ func newSurrogate(b *posegraph.Between, dim int) *surrogate {
 // singular is the determinant of a block, over the product of its diagonal, below which some direction of it was not measured.
 const singular = 1e-12
 
-// traceless returns 1 / tr A^-1 of the 3 x 3 block A of a 6 x 6 matrix that begins at row and column first, 0 for a singular one.
-func traceless(o []float64, first int) float64 {
+// stiffness returns 1 / tr A^-1 of the 3 x 3 block A of a 6 x 6 matrix that begins at row and column first, 0 for a singular one.
+func stiffness(o []float64, first int) float64 {
 	at := func(r, c int) float64 { return o[6*(first+r)+first+c] }
 	minor := func(a, b int) float64 { return at(a, a)*at(b, b) - at(a, b)*at(a, b) }
 	m0, m1, m2 := minor(1, 2), minor(0, 2), minor(0, 1)
