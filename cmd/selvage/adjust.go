@@ -25,6 +25,7 @@ type adjustCmd struct {
 	MaxIterations int     `default:"500" placeholder:"N" help:"Give up after so many steps (default 500)."`
 	AllTies       bool    `help:"Also use ties and loop closures that the survey's verdicts call refused or open, but not ties that were ruled refused."`
 	AllSightings  bool    `help:"Let every sighting count in full, also those that do not fit the others."`
+	FramesOnly    bool    `help:"Freeze each robot's own map, made from what it alone has seen, and find the frames of the robots only; there are no covariances."`
 	Place         string  `enum:",robust" default:"" placeholder:"HOW" help:"robust: keep control points out of the adjustment, then place the whole map on them as one piece, leaving out and naming those that contradict the others (default: control points take part, and hold the datum)."`
 	JSON          bool    `name:"json" help:"Print one JSON object instead of the table."`
 }
@@ -85,6 +86,10 @@ func (c *adjustCmd) check() error {
 		return badInput("--workers %d: expected 1 or 2", c.Workers)
 	case !(c.Tolerance > 0) || c.Tolerance > 1:
 		return badInput("--tolerance %g: expected a number above 0, at most 1", c.Tolerance)
+	case c.FramesOnly && (c.AllSightings || c.Place != ""):
+		return badInput("--frames-only goes without --all-sightings and --place")
+	case c.FramesOnly && c.Start == string(adjust.Given):
+		return badInput("--frames-only makes the robots' maps itself: expected another --start than given")
 	case c.MaxIterations < 1:
 		return badInput("--max-iterations %d: expected 1 or more", c.MaxIterations)
 	}
@@ -274,10 +279,17 @@ func (a *adjustment) optimise() error {
 		return a.ctx.Err() == nil
 	}
 	var r posegraph.Result
-	if a.report.Sightings > 0 && !a.AllSightings {
+	switch {
+	case a.FramesOnly:
+		var err error
+		if r, err = a.problem.FramesOnly(o); err != nil {
+			return badInput("%s: %w; nothing was written", a.Survey, err)
+		}
+	case a.report.Sightings > 0 && !a.AllSightings:
 		decided := a.problem.SolveRobust(o, func(tie int) bool { return a.rulings[tie] != nil && a.rulings[tie].Verdict == survey.RuledHeld })
 		r, a.report.SightingsCut = decided.Result, decided.Refused
-	} else {
+		a.judge(&decided)
+	default:
 		r = a.problem.Solve(o)
 	}
 	switch r.Stop {
@@ -309,7 +321,7 @@ func (a *adjustment) place() error {
 }
 
 func (a *adjustment) covariance() error {
-	if a.report.Stop == posegraph.NothingToAdjust.String() {
+	if a.FramesOnly || a.report.Stop == posegraph.NothingToAdjust.String() {
 		return nil
 	}
 	var err error

@@ -72,8 +72,10 @@ func (a *adjustment) write() error {
 			v := int32(len(given))
 			given = append(given, k.Pose)
 			out := survey.ResultPose{Robot: r.ID, Session: k.Session, ID: k.ID, StampNS: k.StampNS, HasStamp: k.HasStamp,
-				Pose: adjust.Folder(&p.Graph.Values.Poses[v]), HasCov: true}
-			a.fillCov(v, &out.Cov)
+				Pose: adjust.Folder(&p.Graph.Values.Poses[v]), HasCov: !a.FramesOnly}
+			if out.HasCov {
+				a.fillCov(v, &out.Cov)
+			}
 			poses = append(poses, out)
 		}
 	}
@@ -91,6 +93,9 @@ func (a *adjustment) write() error {
 		by = "its control points, on which the map was placed as a whole or, in an island that was not, by its first keyframe"
 	}
 	note := fmt.Sprintf("adjusted in one piece, %d of %d ties in it; datum %s, held by %s", a.report.TiesHeld, a.report.Ties, a.survey.Meta.Datum.Name, by)
+	if a.FramesOnly {
+		note = "each robot's own map as it is, their frames " + note
+	}
 	return survey.WriteResults(a.Out, poses, a.verdicts, datum, note)
 }
 

@@ -44,11 +44,11 @@ func (f *Finding) Reason() string {
 	case f.DoF == 0:
 		return "does not fit, and nothing else speaks of it any more"
 	case f.Kept && f.Statistic >= f.Limit:
-		return fmt.Sprintf("kept as asked, though %.1f off what the others predict, limit %.1f", f.Statistic, f.Limit)
+		return fmt.Sprintf("kept as asked, though %.1f off what the others predict (%d degrees of freedom), limit %.1f", f.Statistic, f.DoF, f.Limit)
 	case f.Verdict == evidence.Refused && f.Statistic >= f.Limit:
-		return fmt.Sprintf("contradicts what the others predict: %.1f, limit %.1f", f.Statistic, f.Limit)
+		return fmt.Sprintf("contradicts what the others predict: %.1f of %d degrees of freedom, limit %.1f", f.Statistic, f.DoF, f.Limit)
 	case f.Verdict == evidence.Refused:
-		return fmt.Sprintf("did not fit, and the others no longer predict it well enough to let it in: %.1f, limit %.1f", f.Statistic, f.Limit)
+		return fmt.Sprintf("did not fit, and the others no longer predict it well enough to let it in: %.1f of %d degrees of freedom, limit %.1f", f.Statistic, f.DoF, f.Limit)
 	}
-	return fmt.Sprintf("agrees with what the others predict: %.1f, limit %.1f", f.Statistic, f.Limit)
+	return fmt.Sprintf("agrees with what the others predict: %.1f of %d degrees of freedom, limit %.1f", f.Statistic, f.DoF, f.Limit)
 }

@@ -248,7 +248,7 @@ func (r *reader) others() error {
 	}
 	for _, name := range names {
 		switch strings.TrimSuffix(name, ".gz") {
-		case metaName, robotsName, marksName, tiesName, rulingsName, truthName, resultsName:
+		case metaName, robotsName, marksName, tiesName, rulingsName, truthName, resultsName, injectedName:
 		default:
 			r.sink.warn("%s: not read by this version", name)
 		}

@@ -39,7 +39,7 @@ type logSighting struct {
 	observer, subject int
 	atNS              int64
 	rangeM, bearing   float64
-	changed           bool // its identity was made wrong on purpose
+	was               int // the subject before its identity was made wrong on purpose, else 0
 }
 
 type truthRow struct {

@@ -93,8 +93,7 @@ type LogCount struct {
 	Changed int // of those kept: identity made wrong on purpose
 }
 
-// wrongSource is the source of a tie whose identity was made wrong on purpose.
-const logSource, wrongSource = "camera", "camera, identity changed on purpose"
+const logSource = "camera"
 
 const logSession = 1
 
@@ -142,23 +141,20 @@ func (l *SightingLog) Survey(o SightingLogOptions) (*Survey, LogCount, error) {
 		m := &kept[i]
 		stamp := l.originNS + m.atNS
 		sight := Sight{Value: [3]float64{m.rangeM, m.bearing}, Sigma: [3]float64{o.SigmaRange, o.SigmaBearing, math.Inf(1)}}
-		if m.changed {
+		if m.was > 0 {
 			count.Changed++
 		}
 		if l.commands[m.subject] != nil {
 			t := Tie{ID: fmt.Sprintf("s%06d", len(s.Ties)+1), FromRobot: robotName(m.observer), FromSession: logSession, FromKey: keys[m.observer][stamp],
 				ToRobot: robotName(m.subject), ToSession: logSession, ToStampNS: stamp, ToByStamp: true,
 				Kind: RangeBearing, Sight: sight, Source: logSource, StampNS: stamp, HasStamp: true}
-			if m.changed {
-				t.Source = wrongSource
-			}
 			s.Ties = append(s.Ties, t)
+			if m.was > 0 {
+				s.Injected = append(s.Injected, Injected{Robot: t.FromRobot, Session: logSession, Key: t.FromKey, Tie: t.ID, Was: robotName(m.was), Named: t.ToRobot})
+			}
 			continue
 		}
-		name := fmt.Sprintf("m%d", m.subject)
-		if o.Marks == PrivateMarks {
-			name = robotName(m.observer) + "." + name
-		}
+		name := o.markName(m.observer, m.subject)
 		if !marks[name] {
 			marks[name] = true
 			mark := Mark{Name: name}
@@ -170,8 +166,20 @@ func (l *SightingLog) Survey(o SightingLogOptions) (*Survey, LogCount, error) {
 		}
 		r := &s.Robots[number[m.observer]]
 		r.Sightings = append(r.Sightings, Sighting{Session: logSession, Key: keys[m.observer][stamp], Mark: name, Kind: RangeBearing, Sight: sight})
+		if m.was > 0 {
+			s.Injected = append(s.Injected, Injected{Robot: r.ID, Session: logSession, Key: keys[m.observer][stamp], Row: len(r.Sightings), Was: o.markName(m.observer, m.was), Named: name})
+		}
 	}
 	return s, count, nil
+}
+
+// markName is the name of a landmark that a robot has seen.
+func (o *SightingLogOptions) markName(observer, subject int) string {
+	name := fmt.Sprintf("m%d", subject)
+	if o.Marks == PrivateMarks {
+		name = robotName(observer) + "." + name
+	}
+	return name
 }
 
 // keep returns the sightings that are asked for, at the moments that they show.
@@ -271,7 +279,7 @@ func (l *SightingLog) makeWrong(kept []logSighting, o *SightingLogOptions) {
 		}
 		to := others[rng.IntN(len(others))]
 		for _, i := range rows {
-			kept[i].subject, kept[i].changed = to, true
+			kept[i].subject, kept[i].was = to, kept[i].subject
 		}
 		left -= len(rows)
 	}

@@ -6,6 +6,7 @@ import (
 	"math/rand/v2"
 	"os"
 	"path/filepath"
+	"slices"
 	"strings"
 	"testing"
 
@@ -356,16 +357,43 @@ func TestWrongIdentities(t *testing.T) {
 				t.Errorf("%s became %s", truth[at], subject)
 			}
 		}
-		for _, m := range s.Ties {
-			if m.Source == wrongSource {
+		for _, x := range s.Injected {
+			var sight *Sight
+			named := ""
+			if x.Tie != "" {
 				marked++
-				if m.ToRobot == truth[m.Sight.Value[1]] || m.ToRobot == m.FromRobot {
-					t.Errorf("tie %s is marked as wrong and goes to %s", m.ID, m.ToRobot)
+				tie := &s.Ties[slices.IndexFunc(s.Ties, func(m Tie) bool { return m.ID == x.Tie })]
+				sight, named = &tie.Sight, tie.ToRobot
+				if tie.FromRobot != x.Robot || tie.FromKey != x.Key || named == x.Robot {
+					t.Errorf("%+v is on record for %+v", x, tie)
+				}
+			} else {
+				r := &s.Robots[slices.IndexFunc(s.Robots, func(r Robot) bool { return r.ID == x.Robot })]
+				m := &r.Sightings[x.Row-1]
+				sight, named = &m.Sight, m.Mark
+				if m.Key != x.Key {
+					t.Errorf("%+v is on record for %+v", x, m)
 				}
 			}
+			if x.Was != truth[sight.Value[1]] || x.Named != named || x.Was == x.Named {
+				t.Errorf("%+v is on record for %s said to be %s", x, truth[sight.Value[1]], named)
+			}
 		}
-		if changed != count.Changed || marked == 0 || marked == changed {
-			t.Errorf("meetings %v: %d identities changed, %d ties marked, %+v", meetings, changed, marked, count)
+		if changed != count.Changed || len(s.Injected) != changed || marked == 0 || marked == changed {
+			t.Errorf("meetings %v: %d identities changed, %d on record, %d of ties, %+v", meetings, changed, len(s.Injected), marked, count)
+		}
+		out := filepath.Join(t.TempDir(), "out")
+		for range 2 { // the record does not keep a survey from being written again
+			if err := Write(out, s); err != nil {
+				t.Fatal(err)
+			}
+		}
+		text, err := os.ReadFile(filepath.Join(out, "injected.csv"))
+		if lines := strings.Count(string(text), "\n"); err != nil || lines != changed+1 || !strings.HasPrefix(string(text), "robot,session,keyframe,tie,row,was,named\n") {
+			t.Errorf("%d lines of record, error %v", lines, err)
+		}
+		if back, err := Read(out); err != nil || back.Injected != nil || len(back.Warnings) > 0 {
+			t.Errorf("read back: %v, %v, error %v", back.Injected, back.Warnings, err)
 		}
 		again, _ := convertLog(t, l, o)
 		if diff := cmp.Diff(s, again); diff != "" {

@@ -12,6 +12,9 @@ type Survey struct {
 	// Rulings are in the order in which they were made; see [Survey.TieRulings].
 	Rulings []Ruling
 
+	// Injected are the identities that were made wrong on purpose. Read does not return them.
+	Injected []Injected
+
 	// Warnings are what Read left aside, one sentence each: columns and files
 	// that this version does not know. Write ignores them.
 	Warnings []string

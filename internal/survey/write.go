@@ -141,7 +141,7 @@ func replaceable(dir string, s *Survey) error {
 	}
 	for _, e := range entries {
 		switch strings.TrimSuffix(e.Name(), ".gz") {
-		case metaName, robotsName, marksName, tiesName, rulingsName, truthName, resultsName:
+		case metaName, robotsName, marksName, tiesName, rulingsName, truthName, resultsName, injectedName:
 		default:
 			return refuse(e.Name())
 		}
@@ -206,6 +206,9 @@ func writeAll(dir string, s *Survey) error {
 	}
 	if len(s.Truth) > 0 {
 		put(truthName, encodeTruth(s.Truth))
+	}
+	if len(s.Injected) > 0 {
+		put(injectedName, encodeInjected(s.Injected))
 	}
 	if err != nil {
 		return fmt.Errorf("survey: %w", err)
