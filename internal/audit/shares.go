@@ -3,6 +3,8 @@ package audit
 import (
 	"math"
 	"math/rand/v2"
+
+	"selvage/internal/sparse"
 )
 
 // Each group is probed by so many random vectors that they have about that many measurements together, within bounds; each costs one
@@ -27,42 +29,68 @@ func (w *work) shares(group []int, groups int) []float64 {
 			members[g] = append(members[g], i)
 		}
 	}
-	out := make([]float64, groups*groups)
+	type probe struct {
+		group int
+		signs [][]float64 // of each member
+	}
+	var probes []probe
 	random := rand.New(rand.NewPCG(7, 7))
-	scalars := w.sigma.Scalars()
-	vector := make([]float64, scalars)
-	signs := make([][]float64, len(w.all))
 	for g, own := range members {
 		if len(own) == 0 {
 			continue
 		}
-		probes := min(mostProbes, 1+probed/len(own))
-		for range probes {
-			clear(vector)
-			for _, i := range own {
-				d, f := &derivatives[i], roots[i]
-				n := d.rows
+		for range min(mostProbes, 1+probed/len(own)) {
+			p := probe{g, make([][]float64, len(own))}
+			for k, i := range own {
+				f, n := roots[i], derivatives[i].rows
 				z := make([]float64, n)
 				for r := range z {
 					if f[r*(n+1)] > 0 {
 						z[r] = float64(2*random.IntN(2) - 1)
 					}
 				}
-				signs[i] = z
-				d.scatter(w.sigma, lower(f, z), 1, vector, scalars)
+				p.signs[k] = z
 			}
-			w.sigma.Apply(vector, 1)
-			for i, h := range group {
-				if h < 0 || w.alone[i] {
-					continue
+			probes = append(probes, p)
+		}
+	}
+	out := make([]float64, groups*groups)
+	scalars := w.sigma.Scalars()
+	together := min(sparse.Together, len(probes)) // one way through the factor serves them all
+	vectors := make([]float64, together*scalars)
+	place := make([]int, len(w.all)) // among the members of its group
+	for _, own := range members {
+		for k, i := range own {
+			place[i] = k
+		}
+	}
+	for len(probes) > 0 {
+		batch := probes[:min(together, len(probes))]
+		probes = probes[len(batch):]
+		n := len(batch)
+		clear(vectors[:n*scalars])
+		for c, p := range batch {
+			for k, i := range members[p.group] {
+				derivatives[i].scatter(w.sigma, lower(roots[i], p.signs[k]), 1, vectors[c*scalars:], scalars)
+			}
+		}
+		w.sigma.Apply(vectors[:n*scalars], n)
+		for i, h := range group {
+			if h < 0 || w.alone[i] {
+				continue
+			}
+			d := &derivatives[i]
+			seen, one := d.gather(w.sigma, vectors, scalars, n), make([]float64, d.rows)
+			for c, p := range batch {
+				for r := range one {
+					one[r] = seen[r*n+c]
 				}
-				d := &derivatives[i]
-				back := upper(roots[i], d.gather(w.sigma, vector, scalars, 1))
-				for r, x := range back {
-					if h == g {
-						x -= signs[i][r]
+				share := float64(min(mostProbes, 1+probed/len(members[p.group])))
+				for r, x := range upper(roots[i], one) {
+					if h == p.group {
+						x -= p.signs[place[i]][r]
 					}
-					out[g*groups+h] += x * x / float64(probes)
+					out[p.group*groups+h] += x * x / share
 				}
 			}
 		}
