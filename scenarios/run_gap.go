@@ -42,6 +42,7 @@ func (r *Run) gaps() ([]Gap, error) {
 	}
 	islandOf := map[unit]string{}
 	final := map[adjust.Key]lie.SE3{}
+	marks := map[string]map[string][3]float64{} // by island, by name; all that share one have it at one place
 	var names []string
 	members := map[string]int{}
 	for i, tracks := range r.tracks() {
@@ -55,6 +56,12 @@ func (r *Run) gaps() ([]Gap, error) {
 				names = append(names, t.Island)
 			}
 			members[t.Island]++
+			if marks[t.Island] == nil {
+				marks[t.Island] = map[string][3]float64{}
+			}
+			for _, m := range t.Marks {
+				marks[t.Island][m.Name] = t.DatumFromSession.Apply(m.Place)
+			}
 			for k := range t.IDs {
 				final[adjust.Key{Robot: id, Session: t.Session, ID: t.IDs[k]}] = t.DatumFromSession.Mul(t.Poses[k])
 			}
@@ -64,37 +71,32 @@ func (r *Run) gaps() ([]Gap, error) {
 	for _, f := range r.Coordinator.Findings() {
 		heldTie[f.Tie] = f.Verdict == msgs.Held
 	}
-	closure := r.closureVerdicts()
+	known := r.known()
 	var out []Gap
 	for _, name := range names {
 		if members[name] < 2 {
 			continue
 		}
 		g := Gap{Island: name}
-		part := &survey.Survey{Meta: s.Meta}
-		for i := range s.Robots {
-			robot := survey.Robot{ID: s.Robots[i].ID}
-			for _, k := range s.Robots[i].Keyframes {
-				if islandOf[unit{robot.ID, k.Session}] == name {
-					robot.Keyframes = append(robot.Keyframes, k)
-				}
-			}
-			for k, m := range s.Robots[i].Relatives {
-				if closure[i][k] == msgs.Held && islandOf[unit{robot.ID, m.Session}] == name {
-					robot.Relatives = append(robot.Relatives, m)
-				}
+		in := func(robot string, session uint32) bool { return islandOf[unit{robot, session}] == name }
+		part := &survey.Survey{Meta: s.Meta, Marks: known.Marks}
+		for i := range known.Robots {
+			k := &known.Robots[i]
+			robot := survey.Robot{
+				ID:        k.ID,
+				Keyframes: keep(k.Keyframes, func(x *survey.Keyframe) bool { return in(k.ID, x.Session) }),
+				Relatives: keep(k.Relatives, func(x *survey.Relative) bool { return in(k.ID, x.Session) }),
+				Sightings: keep(k.Sightings, func(x *survey.Sighting) bool { return in(k.ID, x.Session) }),
 			}
 			if len(robot.Keyframes) > 0 {
 				part.Robots = append(part.Robots, robot)
 				g.Robots = append(g.Robots, robot.ID)
 			}
 		}
-		for _, t := range s.Ties {
-			if heldTie[t.ID] && islandOf[unit{t.FromRobot, t.FromSession}] == name && islandOf[unit{t.ToRobot, t.ToSession}] == name {
-				part.Ties = append(part.Ties, t)
-			}
-		}
-		if err := g.compute(part, final); err != nil {
+		part.Ties = keep(known.Ties, func(t *survey.Tie) bool {
+			return heldTie[t.ID] && in(t.FromRobot, t.FromSession) && in(t.ToRobot, t.ToSession)
+		})
+		if err := g.compute(part, final, marks[name]); err != nil {
 			return nil, fmt.Errorf("island %s: %w", name, err)
 		}
 		out = append(out, g)
@@ -102,7 +104,17 @@ func (r *Run) gaps() ([]Gap, error) {
 	return out, nil
 }
 
-func (g *Gap) compute(part *survey.Survey, final map[adjust.Key]lie.SE3) error {
+func keep[T any](all []T, which func(*T) bool) (out []T) {
+	for i := range all {
+		if which(&all[i]) {
+			out = append(out, all[i])
+		}
+	}
+	return out
+}
+
+// compute costs the fleet's final poses and marks, and adjusts the same measurements in one piece, from its own start and from there.
+func (g *Gap) compute(part *survey.Survey, final map[adjust.Key]lie.SE3, marks map[string][3]float64) error {
 	o := posegraph.DefaultOptions()
 	o.Tolerance = 1e-14
 	g.Whole = math.Inf(1)
@@ -119,9 +131,17 @@ func (g *Gap) compute(part *survey.Survey, final map[adjust.Key]lie.SE3) error {
 				}
 				p.Graph.Values.Poses[v] = x
 			}
-			g.Fleet = p.Graph.Cost()
-		} else if err := p.Begin(start); err != nil {
+		}
+		if err := p.Begin(start); err != nil {
 			return err
+		}
+		if start == adjust.Given {
+			for k := range p.Points {
+				if at, known := marks[part.Marks[p.Points[k].Mark].Name]; known {
+					p.Graph.Values.Points[k] = at
+				}
+			}
+			g.Fleet = p.Graph.Cost()
 		}
 		if err := p.Analyse(1); err != nil {
 			return err

@@ -192,7 +192,9 @@ func (r *Run) resultPoses(places []place) ([][]survey.ResultPose, error) {
 		for k, id := range x.IDs {
 			pose := x.at(k, dim)
 			key := adjust.Key{Robot: robot, Session: x.Session, ID: id}
-			p.Graph.Values.Poses[p.Var[key]] = pose
+			if v, known := p.Var[key]; known { // not a moment of which nothing that is held speaks
+				p.Graph.Values.Poses[v] = pose
+			}
 			list[k] = survey.ResultPose{
 				Robot: robot, Session: x.Session, ID: id, StampNS: stamps[key].ns, HasStamp: stamps[key].has, Pose: adjust.Folder(&pose),
 			}
@@ -201,6 +203,9 @@ func (r *Run) resultPoses(places []place) ([][]survey.ResultPose, error) {
 	}
 	if len(p.Keys) == 0 {
 		return out, nil
+	}
+	if err := p.Begin(adjust.Given); err != nil {
+		return nil, err
 	}
 	if err := p.Analyse(1); err != nil {
 		return nil, err
@@ -212,8 +217,9 @@ func (r *Run) resultPoses(places []place) ([][]survey.ResultPose, error) {
 	for i := range out {
 		for k := range out[i] {
 			x := &out[i][k]
-			x.HasCov = true
-			x.Cov = upper(cov.Of(p.Var[adjust.Key{Robot: x.Robot, Session: x.Session, ID: x.ID}]))
+			if v, known := p.Var[adjust.Key{Robot: x.Robot, Session: x.Session, ID: x.ID}]; known {
+				x.Cov, x.HasCov = upper(cov.Of(v)), true
+			}
 		}
 	}
 	return out, nil

@@ -172,7 +172,7 @@ func (r *Run) errorsAlone(t *truthIndex) ([]*float64, error) {
 		if len(known.Robots[i].Keyframes) == 0 {
 			continue
 		}
-		p, err := adjust.New(&survey.Survey{Meta: known.Meta, Robots: known.Robots[i : i+1]}, nil)
+		p, err := adjust.New(&survey.Survey{Meta: known.Meta, Robots: known.Robots[i : i+1], Marks: known.Marks}, nil)
 		if err != nil {
 			return nil, err
 		}
@@ -204,49 +204,69 @@ func (r *Run) errorsAlone(t *truthIndex) ([]*float64, error) {
 	return out, nil
 }
 
-// keyframes returns the keyframes that the agents have.
-func (r *Run) keyframes() map[adjust.Key]bool {
-	have := map[adjust.Key]bool{}
+// reached are the ends of measurements that the agents have: keyframes, by id and by stamp.
+type reached struct{ keys, moments map[adjust.Key]bool }
+
+func (r *Run) reached() reached {
+	have := reached{map[adjust.Key]bool{}, map[adjust.Key]bool{}}
 	for i, tracks := range r.tracks() {
 		for _, t := range tracks {
-			for _, id := range t.IDs {
-				have[adjust.Key{Robot: r.Outing.Survey.Robots[i].ID, Session: t.Session, ID: id}] = true
+			key := adjust.Key{Robot: r.Outing.Survey.Robots[i].ID, Session: t.Session}
+			for k := range t.IDs {
+				key.ID = t.IDs[k]
+				have.keys[key] = true
+				key.ID = t.StampsNS[k]
+				have.moments[key] = true
 			}
 		}
 	}
 	return have
 }
 
+func (h *reached) end(robot string, session uint32, key, stamp int64, byStamp bool) bool {
+	if byStamp {
+		return h.moments[adjust.Key{Robot: robot, Session: session, ID: stamp}]
+	}
+	return h.keys[adjust.Key{Robot: robot, Session: session, ID: key}]
+}
+
+func (h *reached) from(t *survey.Tie) bool {
+	return h.end(t.FromRobot, t.FromSession, t.FromKey, t.FromStampNS, t.FromByStamp)
+}
+
+func (h *reached) to(t *survey.Tie) bool {
+	return h.end(t.ToRobot, t.ToSession, t.ToKey, t.ToStampNS, t.ToByStamp)
+}
+
 // known returns the survey as far as it had been delivered when the run ended: the keyframes that the agents have, and the
-// measurements among them, without the loop closures that an agent does not hold.
+// measurements among them, without the loop closures and sightings that an agent does not hold.
 func (r *Run) known() *survey.Survey {
 	s := r.Outing.Survey
-	have := r.keyframes()
-	out := &survey.Survey{Meta: s.Meta}
-	closure := r.closureVerdicts()
-	stamped := map[adjust.Key]bool{} // by stamp
+	have := r.reached()
+	out := &survey.Survey{Meta: s.Meta, Marks: s.Marks}
+	closure, sighting := r.closureVerdicts(), r.sightingVerdicts()
 	for i := range s.Robots {
 		robot := survey.Robot{ID: s.Robots[i].ID}
 		for _, k := range s.Robots[i].Keyframes {
-			if have[adjust.Key{Robot: robot.ID, Session: k.Session, ID: k.ID}] {
+			if have.end(robot.ID, k.Session, k.ID, 0, false) {
 				robot.Keyframes = append(robot.Keyframes, k)
-				stamped[adjust.Key{Robot: robot.ID, Session: k.Session, ID: k.StampNS}] = k.HasStamp
 			}
 		}
 		for k, m := range s.Robots[i].Relatives {
-			if closure[i][k] == msgs.Held && have[adjust.Key{Robot: robot.ID, Session: m.Session, ID: m.From}] && have[adjust.Key{Robot: robot.ID, Session: m.Session, ID: m.To}] {
+			if closure[i][k] == msgs.Held && have.end(robot.ID, m.Session, m.From, 0, false) && have.end(robot.ID, m.Session, m.To, 0, false) {
 				robot.Relatives = append(robot.Relatives, m)
+			}
+		}
+		for k, m := range s.Robots[i].Sightings {
+			if sighting[i][k] == msgs.Held && have.end(robot.ID, m.Session, m.Key, m.StampNS, m.ByStamp) {
+				robot.Sightings = append(robot.Sightings, m)
 			}
 		}
 		out.Robots = append(out.Robots, robot)
 	}
-	for _, t := range s.Ties {
-		to := have[adjust.Key{Robot: t.ToRobot, Session: t.ToSession, ID: t.ToKey}]
-		if t.ToByStamp {
-			to = stamped[adjust.Key{Robot: t.ToRobot, Session: t.ToSession, ID: t.ToStampNS}]
-		}
-		if to && have[adjust.Key{Robot: t.FromRobot, Session: t.FromSession, ID: t.FromKey}] {
-			out.Ties = append(out.Ties, t)
+	for i := range s.Ties {
+		if t := &s.Ties[i]; have.from(t) && have.to(t) {
+			out.Ties = append(out.Ties, *t)
 		}
 	}
 	return out
@@ -269,11 +289,10 @@ func (r *Run) verdicts() map[string]*coordinator.Finding {
 // measured tells for each tie whether its robot had come to its keyframe before the run ended.
 func (r *Run) measured() []bool {
 	s := r.Outing.Survey
-	have := r.keyframes()
+	have := r.reached()
 	out := make([]bool, len(s.Ties))
 	for i := range s.Ties {
-		t := &s.Ties[i]
-		out[i] = have[adjust.Key{Robot: t.FromRobot, Session: t.FromSession, ID: t.FromKey}]
+		out[i] = have.from(&s.Ties[i])
 	}
 	return out
 }
