@@ -204,11 +204,11 @@ func (r *Run) errorsAlone(t *truthIndex) ([]*float64, error) {
 	return out, nil
 }
 
-// reached are the ends of measurements that the agents have: keyframes, by id and by stamp.
-type reached struct{ keys, moments map[adjust.Key]bool }
+// arrived holds the ends of measurements that the agents have: keyframes, by id and by stamp.
+type arrived struct{ keys, moments map[adjust.Key]bool }
 
-func (r *Run) reached() reached {
-	have := reached{map[adjust.Key]bool{}, map[adjust.Key]bool{}}
+func (r *Run) arrived() arrived {
+	have := arrived{map[adjust.Key]bool{}, map[adjust.Key]bool{}}
 	for i, tracks := range r.tracks() {
 		for _, t := range tracks {
 			key := adjust.Key{Robot: r.Outing.Survey.Robots[i].ID, Session: t.Session}
@@ -223,18 +223,18 @@ func (r *Run) reached() reached {
 	return have
 }
 
-func (h *reached) end(robot string, session uint32, key, stamp int64, byStamp bool) bool {
+func (h *arrived) end(robot string, session uint32, key, stamp int64, byStamp bool) bool {
 	if byStamp {
 		return h.moments[adjust.Key{Robot: robot, Session: session, ID: stamp}]
 	}
 	return h.keys[adjust.Key{Robot: robot, Session: session, ID: key}]
 }
 
-func (h *reached) from(t *survey.Tie) bool {
+func (h *arrived) from(t *survey.Tie) bool {
 	return h.end(t.FromRobot, t.FromSession, t.FromKey, t.FromStampNS, t.FromByStamp)
 }
 
-func (h *reached) to(t *survey.Tie) bool {
+func (h *arrived) to(t *survey.Tie) bool {
 	return h.end(t.ToRobot, t.ToSession, t.ToKey, t.ToStampNS, t.ToByStamp)
 }
 
@@ -242,7 +242,7 @@ func (h *reached) to(t *survey.Tie) bool {
 // measurements among them, without the loop closures and sightings that an agent does not hold.
 func (r *Run) known() *survey.Survey {
 	s := r.Outing.Survey
-	have := r.reached()
+	have := r.arrived()
 	out := &survey.Survey{Meta: s.Meta, Marks: s.Marks}
 	closure, sighting := r.closureVerdicts(), r.sightingVerdicts()
 	for i := range s.Robots {
@@ -289,7 +289,7 @@ func (r *Run) verdicts() map[string]*coordinator.Finding {
 // measured tells for each tie whether its robot had come to its keyframe before the run ended.
 func (r *Run) measured() []bool {
 	s := r.Outing.Survey
-	have := r.reached()
+	have := r.arrived()
 	out := make([]bool, len(s.Ties))
 	for i := range s.Ties {
 		out[i] = have.from(&s.Ties[i])
