@@ -43,6 +43,7 @@ func (c *Coordinator) align(n *network, w *weighed) {
 	weighing := map[[2]int]*evidence.Meeting{}
 	for i := range met.Meetings {
 		m := &met.Meetings[i]
+		println("DBG", m.A, m.B, "places", m.Places, "margin", m.Margin, "supports", len(m.Supports), "chance1e6", int(1e6*m.Chance), m.Held)
 		weighing[[2]int{m.A, m.B}] = m
 		if !m.Held {
 			continue
@@ -127,7 +128,7 @@ const slow = 4
 // glimpses collects what the islands know of each other's frames, each in that of the island; the control points are one more body. It returns the
 // tie behind each, -1 for marks.
 func (c *Coordinator) glimpses(n *network, w *weighed, bodies int) (out []evidence.Glimpse, ties []int) {
-	number := n.meetings(4 * c.cfg.Evidence.PlaceM)
+	number := n.meetings(c.cfg.Evidence.PlaceM)
 	for i := range n.ties {
 		t := &n.ties[i]
 		a, b := w.island[t.from], w.island[t.to]

@@ -461,7 +461,8 @@ func (c *Coordinator) startFromTies(j *joint, w *weighed) bool {
 		}
 		b.Add(j.n.units[t.from].base+int32(t.fromNode), j.n.units[t.to].base+int32(t.toNode), t.z, &t.info)
 	}
-	if posegraph.Chordal(g, j.anchors) != nil {
+	fixed := slices.DeleteFunc(slices.Clone(j.anchors), func(v int32) bool { return int(v) >= len(g.Values.Poses) }) // no marks here
+	if posegraph.Chordal(g, fixed) != nil {
 		return false
 	}
 	copy(j.graph.Values.Poses, g.Values.Poses)

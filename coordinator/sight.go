@@ -158,18 +158,23 @@ func (c *Coordinator) limitOf(t *tie) (limit float64, dof int) {
 	return c.limit, c.width()
 }
 
+// pauseNS ends a meeting: whoever is seen again after it has to be recognised again.
+const pauseNS = 10 * second
+
 // meetings numbers the meetings of robots that ties which are less than a pose tell of, tie by tie: between two units a meeting goes on
-// while neither drives far without a sighting.
+// while there is no pause between sightings, and neither drives far without one.
 func (n *network) meetings(apartM float64) []int {
 	type seen struct {
 		pair   [2]int
 		travel [2]float64
+		ns     int64
 		tie    int
 	}
 	var all []seen
 	for i := range n.ties {
 		if t := &n.ties[i]; t.sight != nil {
-			s := seen{[2]int{t.from, t.to}, [2]float64{n.units[t.from].part.Junctions[t.fromNode].TravelM, n.units[t.to].part.Junctions[t.toNode].TravelM}, i}
+			from, to := &n.units[t.from].part.Junctions[t.fromNode], &n.units[t.to].part.Junctions[t.toNode]
+			s := seen{[2]int{t.from, t.to}, [2]float64{from.TravelM, to.TravelM}, to.StampNS, i}
 			if t.from > t.to {
 				s.pair[0], s.pair[1] = s.pair[1], s.pair[0]
 				s.travel[0], s.travel[1] = s.travel[1], s.travel[0]
@@ -185,7 +190,7 @@ func (n *network) meetings(apartM float64) []int {
 	for k := range all {
 		if k > 0 {
 			a, b := &all[k-1], &all[k]
-			if a.pair != b.pair || b.travel[0]-a.travel[0] > apartM || math.Abs(b.travel[1]-a.travel[1]) > apartM {
+			if a.pair != b.pair || b.travel[0]-a.travel[0] > apartM || math.Abs(b.travel[1]-a.travel[1]) > apartM || b.ns-a.ns > pauseNS {
 				number++
 			}
 		}

@@ -157,7 +157,7 @@ func Virtual(ctx context.Context, o *Outing, set Settings) (*Run, error) {
 	r.track = newTruthIndex(o.Survey)
 	dim := o.Survey.Meta.Dimension
 	config := coordinator.DefaultConfig(fleetName, dim)
-	config.HoldAll = set.HoldAll
+	config.HoldAll, config.Marks = set.HoldAll, known(o.Survey)
 	r.Coordinator = coordinator.New(config)
 	if err := rule(r.Coordinator, o.Survey); err != nil {
 		return nil, err

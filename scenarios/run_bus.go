@@ -101,7 +101,7 @@ func (r *busRun) run(ctx context.Context, server *bus.Server, set Settings) (err
 
 	dim := r.Outing.Survey.Meta.Dimension
 	config := coordinator.DefaultConfig(fleetName, dim)
-	config.HoldAll = set.HoldAll
+	config.HoldAll, config.Marks = set.HoldAll, known(r.Outing.Survey)
 	config.SolveNS, config.PromptNS, config.RetryNS = busSolveNS, busPromptNS, busRetryNS
 	r.Coordinator = coordinator.New(config)
 	if err := rule(r.Coordinator, r.Outing.Survey); err != nil {

@@ -4,6 +4,7 @@ import (
 	"fmt"
 
 	"selvage/agent"
+	"selvage/coordinator"
 	"selvage/internal/adjust"
 	"selvage/internal/lie"
 	"selvage/internal/posegraph"
@@ -53,13 +54,14 @@ func sightingEvent(s *survey.Survey, robot int, m *survey.Sighting) (agent.Event
 // tieEvent is a tie as the agent of the robot that made it takes it.
 func tieEvent(s *survey.Survey, t *survey.Tie) (agent.Event, error) {
 	out := agent.Tie{
-		ID:   t.ID,
-		From: msgs.KeyRef{Robot: t.FromRobot, Session: t.FromSession, ID: t.FromKey, ByStamp: t.FromByStamp, StampNS: t.FromStampNS},
-		To:   msgs.KeyRef{Robot: t.ToRobot, Session: t.ToSession, ID: t.ToKey, ByStamp: t.ToByStamp, StampNS: t.ToStampNS},
-		Z:    adjust.Pose(t.Pose), Source: t.Source, StampNS: t.StampNS,
+		ID:     t.ID,
+		From:   msgs.KeyRef{Robot: t.FromRobot, Session: t.FromSession, ID: t.FromKey, ByStamp: t.FromByStamp, StampNS: t.FromStampNS},
+		To:     msgs.KeyRef{Robot: t.ToRobot, Session: t.ToSession, ID: t.ToKey, ByStamp: t.ToByStamp, StampNS: t.ToStampNS},
+		Source: t.Source, StampNS: t.StampNS,
 	}
 	var err error
 	if t.Kind == survey.WholePose {
+		out.Z = adjust.Pose(t.Pose)
 		out.Info, err = t.Cov.Information(s.Meta.Dimension)
 		return out, err
 	}
@@ -72,6 +74,17 @@ func tieEvent(s *survey.Survey, t *survey.Tie) (agent.Event, error) {
 	if err != nil {
 		return nil, fmt.Errorf("tie %s: %w", t.ID, err)
 	}
-	out.Sight, out.Z = &x, lie.Identity()
+	out.Sight = &x
 	return out, nil
+}
+
+// known lists the marks whose coordinates the base knows.
+func known(s *survey.Survey) (out []coordinator.Mark) {
+	role := map[survey.Role]coordinator.Role{survey.ControlPoint: coordinator.Control, survey.CheckPoint: coordinator.Check}
+	for i := range s.Marks {
+		if m := &s.Marks[i]; m.Role != survey.PlainMark {
+			out = append(out, coordinator.Mark{Name: m.Name, Role: role[m.Role], At: m.T, Sigma: m.Sigma})
+		}
+	}
+	return out
 }

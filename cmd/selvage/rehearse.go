@@ -117,9 +117,6 @@ func (c *rehearseCmd) plan() (func() (rehearsal, error), *survey.Survey, error) 
 		if err != nil {
 			return nil, nil, err
 		}
-		if err := s.PosesOnly(); err != nil {
-			return nil, nil, badInput("%s: %w", c.Survey, err)
-		}
 		if len(s.Robots) == 0 {
 			return nil, nil, badInput("%s has no robots: there is nothing to rehearse", c.Survey)
 		}

@@ -28,8 +28,8 @@ type Met struct {
 // Meet finds which units may be joined by glimpses, and how their frames stand to each other. What [Frames] proposes is believed only as far
 // as the evidence goes, for a whole meeting may be with another robot than was thought: the glimpses of two units must agree at
 // enough separate places, clearly more than speak for any other answer ([Options.CycleMargin] where other units confirm it,
-// [Options.BridgeMargin] where none does), and by accident no more often than [Options.Chance] allows. Glimpses less than half of
-// [Options.PlaceM] apart are one place, and no meeting counts for more than three, or two along a straight line. A mark that both know by its name counts as two places: a name is rarely mistaken, and each mistake is one of its
+// [Options.BridgeMargin] where none does), and by accident no more often than [Options.Chance] allows. Glimpses that are near
+// each other (half of [Options.PlaceM], less in a small site) are one place, and no meeting counts for more than three, or two along a straight line. A mark that both know by its name counts as two places: a name is rarely mistaken, and each mistake is one of its
 // own. Level tells which units have z pointing up (nil: none); two glimpses determine the frames of two such units, three of others in
 // space.
 func Meet(units int, level []bool, glimpses []Glimpse, o Options) Met {
@@ -165,9 +165,21 @@ const (
 	mostInLine    = 2
 )
 
+// onePlace is the distance below which glimpses of two units are one place: half of [Options.PlaceM], in a small site an eighth of it, but
+// what the glimpses can tell apart.
+func onePlace(all []Glimpse, o Options) float64 {
+	own := 0.0
+	for i := range all {
+		own += all[i].Sigma * all[i].Sigma / float64(len(all))
+	}
+	long, _ := extent(all)
+	return math.Min(o.PlaceM/2, math.Max(long/8, 3*math.Sqrt(own)))
+}
+
 // places counts separate places, and named marks beside them, among some glimpses.
 func (f *framing) places(all []Glimpse, set []int, o Options) (places, marks int) {
-	near := o.PlaceM * o.PlaceM / 4
+	radius := onePlace(all, o)
+	near := radius * radius
 	for _, i := range set {
 		if all[i].Named {
 			marks++
@@ -186,7 +198,7 @@ func (f *framing) places(all []Glimpse, set []int, o Options) (places, marks int
 			}
 		}
 		most := mostOfMeeting
-		if _, off := stretch(all, group); off < o.PlaceM/2 {
+		if _, off := stretch(all, group); off < radius {
 			most = mostInLine
 		}
 		var spots []*Glimpse
@@ -230,11 +242,31 @@ func stretch(all []Glimpse, set []int) (far, off float64) {
 // falls by accident into its gate, and those that do are as far apart in both frames by accident. Only the horizontal counts, for
 // unrelated places may well have the same floor under them.
 func (f *framing) chance(all []Glimpse, set []int, places int, variance float64, pairs int, o Options) float64 {
-	var sum, moment [2][2]float64
-	var cross [2]float64
 	every := make([]int, len(all))
 	for i := range all {
 		every[i] = i
+	}
+	long, short := extent(all)
+	gate := math.Sqrt(f.o.Bound * variance)
+	spot := math.Min(1, 2*gate/long) * math.Min(1, 2*gate/short)
+	least := min(f.least(all[0].A, all[0].B), places)
+	span := math.Min(1, 2*gate/long)
+	m, marks := f.places(all, every, o)
+	m = max(m+marks, places)
+	if places < 2 {
+		return float64(pairs)
+	}
+	a, _ := math.Lgamma(float64(m + 1))
+	c, _ := math.Lgamma(float64(places + 1))
+	d, _ := math.Lgamma(float64(m - places + 1))
+	return float64(pairs) * math.Exp(a-c-d) * math.Pow(math.Max(spot, 1e-12), float64(places-least)) * span
+}
+
+// extent is how far the glimpses of two units lie apart along and across, the mean of what the two frames say.
+func extent(all []Glimpse) (long, short float64) {
+	var sum, moment [2][2]float64
+	var cross [2]float64
+	for i := range all {
 		for k, p := range [2]*[3]float64{&all[i].InA, &all[i].InB} {
 			for c := range 2 {
 				sum[k][c] += p[c]
@@ -250,20 +282,7 @@ func (f *framing) chance(all []Glimpse, set []int, places int, variance float64,
 		yy += moment[k][1]/n - sum[k][1]*sum[k][1]/n/n
 		xy += cross[k]/n - sum[k][0]*sum[k][1]/n/n
 	}
-	long, short := sides(xx/2, xy/2, yy/2)
-	gate := math.Sqrt(f.o.Bound * variance)
-	spot := math.Min(1, 2*gate/long) * math.Min(1, 2*gate/short)
-	least := min(f.least(all[0].A, all[0].B), places)
-	span := math.Min(1, 2*gate/long)
-	m, marks := f.places(all, every, o)
-	m = max(m+marks, places)
-	if places < 2 {
-		return float64(pairs)
-	}
-	a, _ := math.Lgamma(float64(m + 1))
-	c, _ := math.Lgamma(float64(places + 1))
-	d, _ := math.Lgamma(float64(m - places + 1))
-	return float64(pairs) * math.Exp(a-c-d) * math.Pow(math.Max(spot, 1e-12), float64(places-least)) * span
+	return sides(xx/2, xy/2, yy/2)
 }
 
 // decide holds the meetings that stand, and numbers the groups that these connect. The weakest that does not reach its margin goes
