@@ -34,7 +34,11 @@ func (c *Coordinator) align(n *network, w *weighed) {
 	}
 	level := c.upright(n, w, bodies)
 	glimpses, ties := c.glimpses(n, w, bodies)
-	met := evidence.Meet(bodies+1, level, glimpses, c.cfg.Evidence)
+	asked := c.cfg.Evidence
+	if c.cfg.HoldAll {
+		asked.Chance, asked.CycleMargin, asked.BridgeMargin = math.Inf(1), 1, 1
+	}
+	met := evidence.Meet(bodies+1, level, glimpses, asked)
 	of := make([]int, bodies+1) // body -> one of its units
 	for u := len(n.units) - 1; u >= 0; u-- {
 		of[w.island[u]] = u
@@ -43,7 +47,6 @@ func (c *Coordinator) align(n *network, w *weighed) {
 	weighing := map[[2]int]*evidence.Meeting{}
 	for i := range met.Meetings {
 		m := &met.Meetings[i]
-		println("DBG", m.A, m.B, "places", m.Places, "margin", m.Margin, "supports", len(m.Supports), "chance1e6", int(1e6*m.Chance), m.Held)
 		weighing[[2]int{m.A, m.B}] = m
 		if !m.Held {
 			continue

@@ -16,6 +16,8 @@ type Meeting struct {
 	Cycle    bool    // other units confirm it
 	Supports []int   // the glimpses that agree, as indices
 	Held     bool
+
+	odds odds
 }
 
 // Met is what [Meet] found.
@@ -28,7 +30,8 @@ type Met struct {
 // Meet finds which units may be joined by glimpses, and how their frames stand to each other. What [Frames] proposes is believed only as far
 // as the evidence goes, for a whole meeting may be with another robot than was thought: the glimpses of two units must agree at
 // enough separate places, clearly more than speak for any other answer ([Options.CycleMargin] where other units confirm it,
-// [Options.BridgeMargin] where none does), and by accident no more often than [Options.Chance] allows. Glimpses that are near
+// [Options.BridgeMargin] where none does), and by accident no more often than [Options.Chance] allows. Groups of units are joined in
+// the same way by all that they have seen of each other. Glimpses that are near
 // each other (half of [Options.PlaceM], less in a small site) are one place, and no meeting counts for more than three, or two along a straight line. A mark that both know by its name counts as two places: a name is rarely mistaken, and each mistake is one of its
 // own. Level tells which units have z pointing up (nil: none); two glimpses determine the frames of two such units, three of others in
 // space.
@@ -110,12 +113,12 @@ func (f *framing) meeting(a, b int, pose lie.SE3, pairs int, o Options) (m Meeti
 		}
 	}
 	m.Margin = m.Places - rival
-	m.Chance = f.chance(all, m.Supports, places+marks, variance, pairs, o)
+	m.odds = f.odds(all, places+marks, variance, o)
 	if !f.flat(a, b) { // glimpses along one line leave the frames free to turn about it
-		if _, off := stretch(all, m.Supports); off*off < 9*variance {
-			m.Chance = math.Inf(1)
-		}
+		_, off := stretch(all, m.Supports)
+		m.odds.line = off*off < 9*variance
 	}
+	m.Chance = float64(pairs) * together([]*odds{&m.odds})
 	return m, true
 }
 
@@ -238,30 +241,6 @@ func stretch(all []Glimpse, set []int) (far, off float64) {
 	return far, off
 }
 
-// chance is the expected number of answers with so many places among unrelated glimpses: beyond those that make an answer up, each
-// falls by accident into its gate, and those that do are as far apart in both frames by accident. Only the horizontal counts, for
-// unrelated places may well have the same floor under them.
-func (f *framing) chance(all []Glimpse, set []int, places int, variance float64, pairs int, o Options) float64 {
-	every := make([]int, len(all))
-	for i := range all {
-		every[i] = i
-	}
-	long, short := extent(all)
-	gate := math.Sqrt(f.o.Bound * variance)
-	spot := math.Min(1, 2*gate/long) * math.Min(1, 2*gate/short)
-	least := min(f.least(all[0].A, all[0].B), places)
-	span := math.Min(1, 2*gate/long)
-	m, marks := f.places(all, every, o)
-	m = max(m+marks, places)
-	if places < 2 {
-		return float64(pairs)
-	}
-	a, _ := math.Lgamma(float64(m + 1))
-	c, _ := math.Lgamma(float64(places + 1))
-	d, _ := math.Lgamma(float64(m - places + 1))
-	return float64(pairs) * math.Exp(a-c-d) * math.Pow(math.Max(spot, 1e-12), float64(places-least)) * span
-}
-
 // extent is how far the glimpses of two units lie apart along and across, the mean of what the two frames say.
 func extent(all []Glimpse) (long, short float64) {
 	var sum, moment [2][2]float64
@@ -286,7 +265,7 @@ func extent(all []Glimpse) (long, short float64) {
 }
 
 // decide holds the meetings that stand, and numbers the groups that these connect. The weakest that does not reach its margin goes
-// first: without it others may be confirmed by fewer.
+// first: without it others may be confirmed by fewer. What two groups have seen of each other then counts together.
 func (m *Met) decide(units int, o Options) {
 	for i := range m.Meetings {
 		m.Meetings[i].Held = m.Meetings[i].Chance <= o.Chance
@@ -310,6 +289,7 @@ func (m *Met) decide(units int, o Options) {
 		}
 		if worst < 0 {
 			m.Group = m.connect(units, -1)
+			m.pool(units, o)
 			return
 		}
 		m.Meetings[worst].Held = false
