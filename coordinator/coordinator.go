@@ -76,7 +76,8 @@ type Coordinator struct {
 	rest     bool                 // the present solution is to leave nothing
 	places   map[unitID]placement // of the newest epoch
 	joint    *joint               // behind it
-	datums   uint64               // counts the datums ever made
+	promise  promise
+	datums   uint64 // counts the datums ever made
 }
 
 // TieName names a tie by the robot that measured it and its id there: what a robot calls it concerns no other robot.

@@ -77,6 +77,7 @@ func (c *Coordinator) publish(j *joint) ([]Publish, error) {
 		m.Parts = append(m.Parts, part)
 	}
 	c.places, c.joint = places, j
+	c.promise.last, c.promise.next = c.promise.next, promised{}
 
 	var out []Publish
 	var failed error // what one robot makes impossible to write is no loss to the others
