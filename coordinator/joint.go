@@ -193,11 +193,14 @@ func (c *Coordinator) pose(n *network, w *weighed) (*joint, error) {
 	j.addLevels()
 	j.anchorStrays()
 	best, bestCost := posegraph.Values{}, math.Inf(1)
-	for _, candidate := range []func(*joint, *weighed) bool{c.startFromLast, startFromEvidence, c.startFromTies} {
+	for i, candidate := range []func(*joint, *weighed) bool{c.startFromLast, startFromEvidence, c.startFromTies} {
 		if !candidate(j, w) {
 			continue
 		}
 		j.placePoints()
+		if i == 0 {
+			c.recall(j)
+		}
 		if cost := j.graph.Cost(); best.Poses == nil || cost < bestCost {
 			best.Poses, best.Points = append(best.Poses[:0], j.graph.Values.Poses...), append(best.Points[:0], j.graph.Values.Points...)
 			bestCost = cost
@@ -412,6 +415,29 @@ func (c *Coordinator) startFromLast(j *joint, w *weighed) bool {
 	}
 	j.pin()
 	return true
+}
+
+// recall puts what the last solution placed exactly where that was: a robot whose summary still stands has followed it there, though its
+// summary was condensed a little beside.
+func (c *Coordinator) recall(j *joint) {
+	for u := range j.n.units {
+		unit := &j.n.units[u]
+		if j.islands[j.member[u]].born == 0 {
+			continue
+		}
+		p := c.places[unit.id]
+		for k, id := range p.ids {
+			if v, found := unit.find(id); found && unit.model.inMain(v) {
+				j.graph.Values.Poses[int(unit.base)+v] = p.poses[k]
+			}
+		}
+		for k, v := range j.pointsOf[u] {
+			mark := unit.part.Points[k].Mark
+			if i := slices.IndexFunc(p.points, func(x msgs.Point) bool { return x.Mark == mark }); i >= 0 {
+				j.graph.Values.Points[v] = p.points[i].At
+			}
+		}
+	}
 }
 
 // startFromEvidence starts every unit where the evidence put its frame.
