@@ -183,7 +183,7 @@ func (r *Run) errorsAlone(t *truthIndex) ([]*float64, error) {
 			return nil, fmt.Errorf("robot %s alone: %w", known.Robots[i].ID, err)
 		}
 		p.Solve(tight())
-		parts := make([][]pair, len(p.Anchors))
+		parts := make([][]pair, p.Islands)
 		for v, key := range p.Keys {
 			if x, ok := t.pose[key]; ok {
 				parts[p.Island[v]] = append(parts[p.Island[v]], pair{p.Graph.Values.Poses[v].T, x.T})

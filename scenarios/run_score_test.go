@@ -135,6 +135,16 @@ func TestScoreErrors(t *testing.T) {
 	}
 }
 
+// A robot that has seen control points is held by them alone, without an anchor; its error alone is found like every other.
+func TestScoreErrorsOnControl(t *testing.T) {
+	s := score(t, shortRun(t, func(sc *Scenario) { sc.Marks.Count, sc.Marks.Control, sc.FalseTies.Independent = 30, 20, 0 }))
+	for _, x := range s.Robots {
+		if x.AteAlone == nil || !(*x.AteAlone > 1e-4 && *x.AteAlone < 1) {
+			t.Errorf("robot %s: alone %v", x.ID, x.AteAlone)
+		}
+	}
+}
+
 // A false tie that is held, or one robot that hears nothing, is not accepted quietly.
 func TestScoreRefuses(t *testing.T) {
 	r := shortRun(t, nil)
