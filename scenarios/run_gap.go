@@ -3,6 +3,7 @@ package scenarios
 import (
 	"fmt"
 	"math"
+	"slices"
 
 	"selvage/agent"
 	"selvage/internal/adjust"
@@ -42,7 +43,12 @@ func (r *Run) gaps() ([]Gap, error) {
 	}
 	islandOf := map[unit]string{}
 	final := map[adjust.Key]lie.SE3{}
-	marks := map[string]map[string][3]float64{} // by island, by name; all that share one have it at one place
+	marks, err := r.sharedMarks()
+	if err != nil {
+		return nil, err
+	}
+	other := map[unit]map[string]string{} // marks that a session knows elsewhere than its island: under a name of their own
+	var more []survey.Mark
 	var names []string
 	members := map[string]int{}
 	for i, tracks := range r.tracks() {
@@ -60,7 +66,16 @@ func (r *Run) gaps() ([]Gap, error) {
 				marks[t.Island] = map[string][3]float64{}
 			}
 			for _, m := range t.Marks {
-				marks[t.Island][m.Name] = t.DatumFromSession.Apply(m.Place)
+				at, name := t.DatumFromSession.Apply(m.Place), m.Name
+				if shared, known := marks[t.Island][name]; known && distance(shared, at) > 1e-6 {
+					if other[unit{id, t.Session}] == nil {
+						other[unit{id, t.Session}] = map[string]string{}
+					}
+					name = fmt.Sprintf("%s/%s/%d", name, id, t.Session)
+					other[unit{id, t.Session}][m.Name] = name
+					more = append(more, survey.Mark{Name: name})
+				}
+				marks[t.Island][name] = at
 			}
 			for k := range t.IDs {
 				final[adjust.Key{Robot: id, Session: t.Session, ID: t.IDs[k]}] = t.DatumFromSession.Mul(t.Poses[k])
@@ -79,7 +94,7 @@ func (r *Run) gaps() ([]Gap, error) {
 		}
 		g := Gap{Island: name}
 		in := func(robot string, session uint32) bool { return islandOf[unit{robot, session}] == name }
-		part := &survey.Survey{Meta: s.Meta, Marks: known.Marks}
+		part := &survey.Survey{Meta: s.Meta, Marks: slices.Concat(known.Marks, more)}
 		for i := range known.Robots {
 			k := &known.Robots[i]
 			robot := survey.Robot{
@@ -87,6 +102,12 @@ func (r *Run) gaps() ([]Gap, error) {
 				Keyframes: keep(k.Keyframes, func(x *survey.Keyframe) bool { return in(k.ID, x.Session) }),
 				Relatives: keep(k.Relatives, func(x *survey.Relative) bool { return in(k.ID, x.Session) }),
 				Sightings: keep(k.Sightings, func(x *survey.Sighting) bool { return in(k.ID, x.Session) }),
+			}
+			for n := range robot.Sightings {
+				x := &robot.Sightings[n]
+				if name, elsewhere := other[unit{k.ID, x.Session}][x.Mark]; elsewhere {
+					x.Mark = name
+				}
 			}
 			if len(robot.Keyframes) > 0 {
 				part.Robots = append(part.Robots, robot)
@@ -102,6 +123,23 @@ func (r *Run) gaps() ([]Gap, error) {
 		out = append(out, g)
 	}
 	return out, nil
+}
+
+// sharedMarks returns where each island has the marks that several of its sessions know, by name. A session that the coordinator believes to
+// mean another mark by a name has it elsewhere.
+func (r *Run) sharedMarks() (map[string]map[string][3]float64, error) {
+	out := map[string]map[string][3]float64{}
+	placed, err := r.Coordinator.Marks()
+	for i := range placed {
+		m := &placed[i]
+		if out[m.Island] == nil {
+			out[m.Island] = map[string][3]float64{}
+		}
+		if _, known := out[m.Island][m.Mark]; !known || m.Sessions > 1 {
+			out[m.Island][m.Mark] = m.At
+		}
+	}
+	return out, err
 }
 
 func keep[T any](all []T, which func(*T) bool) (out []T) {

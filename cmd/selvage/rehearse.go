@@ -20,7 +20,8 @@ type rehearseCmd struct {
 	Seed       *uint64  `placeholder:"N" help:"Seed of everything that is drawn (default: that of the scenario)."`
 	Out        string   `short:"o" placeholder:"FOLDER" help:"Folder to write, new or of an earlier rehearsal, which is replaced (default rehearsal-NAME-SEED)."`
 	Survey     string   `placeholder:"FOLDER" help:"Rehearse with a recorded or split survey instead of a scenario."`
-	HoldAll    bool     `help:"Take every tie as true."`
+	HoldAll    bool     `help:"Take every tie, loop closure and sighting as true."`
+	Audit      bool     `help:"Audit the survey that comes out as well, as selvage audit does with its folder."`
 	RealBus    bool     `help:"Run on the embedded message bus and the clock on the wall, at full speed, instead of a virtual clock and radio."`
 	Robots     *int     `placeholder:"N" help:"Number of robots instead of the scenario's."`
 	False      *float64 `placeholder:"SHARE" help:"Share of single false ties, of all ties, instead of the scenario's."`
@@ -76,6 +77,12 @@ func (c *rehearseCmd) Run(ctx context.Context, con *console) error {
 	if err := c.show(con, score); err != nil {
 		return err
 	}
+	if c.Audit && !score.Interrupted {
+		fmt.Fprintln(con.out)
+		if err := (&auditCmd{Survey: c.Out}).Run(ctx, con); err != nil {
+			return err
+		}
+	}
 	switch {
 	case score.Interrupted:
 		return checkFailed("interrupted; %s holds what was finished", c.Out)
@@ -109,6 +116,9 @@ func (c *rehearseCmd) run(ctx context.Context, o rehearsal, w *watch) (*scenario
 
 // plan checks the command line, settles where to write, and returns what makes the outing, with the survey if it is a recorded one.
 func (c *rehearseCmd) plan() (func() (rehearsal, error), *survey.Survey, error) {
+	if c.Audit && c.JSON {
+		return nil, nil, badInput("--audit goes without --json: both print; selvage audit --json does so afterwards")
+	}
 	if c.Survey != "" {
 		if c.Scenario != "" || c.Seed != nil || c.Robots != nil || c.False != nil || c.Clustered != nil {
 			return nil, nil, badInput("--survey goes without a scenario and without --seed, --robots, --false and --clustered: they change a simulation")
