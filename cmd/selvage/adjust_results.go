@@ -156,7 +156,7 @@ func (a *adjustment) show(con *console) error {
 	if err := con.table(t); err != nil {
 		return err
 	}
-	if r.Positions != nil {
+	if r.Positions.Any() {
 		fmt.Fprintln(con.out)
 		if err := con.table(r.Positions.Table()); err != nil {
 			return err

@@ -3,6 +3,7 @@ package audit
 import (
 	"fmt"
 	"math"
+	"slices"
 
 	"selvage/internal/adjust"
 	"selvage/internal/reliability"
@@ -24,6 +25,7 @@ type Positions struct {
 	RMSERadialM   *float64  `json:"rmse_radial_m,omitempty"`
 	Horizontal95M *float64  `json:"horizontal_95_m,omitempty"` // by FGDC-STD-007.3-1998, whether or not it may be claimed
 	Vertical95M   *float64  `json:"vertical_95_m,omitempty"`
+	Doubts        []string  `json:"doubts"` // of single marks
 	Statements    []Claimed `json:"statements"`
 	Remarks       []string  `json:"remarks"`
 }
@@ -35,7 +37,7 @@ type Position struct {
 	At        []float64 `json:"at_m"`                         // adjusted, in the frame of the island
 	Off       []Figure  `json:"adjusted_minus_surveyed_m"`    // none where the island stands in no datum
 	DistanceM *float64  `json:"distance_m,omitempty"`         // over the coordinates that were surveyed
-	Agrees    *bool     `json:"agrees_with_others,omitempty"` // of a control point that the map was placed on
+	Agrees    *bool     `json:"agrees_with_others,omitempty"` // of a control point that the map was placed on; false too where most of its sightings contradict it
 	Sigma     []Figure  `json:"sigma_of_the_survey_m"`        // null where a coordinate was not surveyed
 }
 
@@ -78,13 +80,13 @@ func (w *work) positions() error {
 }
 
 // Compare compares the map of a problem that has been solved with the marks of known place; placed is what [adjust.Problem.Place]
-// returned, nil where it was not called. It returns nil when no such mark was seen.
+// returned, nil where it was not called. It returns nil when the survey has no such mark.
 func Compare(p *adjust.Problem, s *survey.Survey, placed []adjust.Placed) *Positions {
 	marks := p.Landmarks()
-	if len(marks) == 0 {
+	if !slices.ContainsFunc(s.Marks, func(m survey.Mark) bool { return m.Role != survey.PlainMark }) {
 		return nil
 	}
-	out := &Positions{Control: []Position{}, Check: []Position{}, Statements: []Claimed{}, Remarks: []string{}}
+	out := &Positions{Control: []Position{}, Check: []Position{}, Doubts: []string{}, Statements: []Claimed{}, Remarks: []string{}}
 	dim := s.Meta.Dimension
 	var checks []reliability.CheckPoint
 	for _, l := range marks {
@@ -120,6 +122,7 @@ func Compare(p *adjust.Problem, s *survey.Survey, placed []adjust.Placed) *Posit
 	if placed != nil {
 		out.place(placed, s, p.Islands > 1)
 	}
+	out.doubt(p, s)
 	out.assure(checks, p, s)
 	return out
 }
@@ -221,7 +224,7 @@ func covered(p *adjust.Problem) reliability.Area {
 	return a
 }
 
-// Lines says it in sentences: how the map lies on its control points, then what may be said of its positions.
+// Lines says it in sentences: how the map lies on its control points, which marks are doubtful, then what may be said of its positions.
 func (x *Positions) Lines() []string {
 	var out []string
 	switch on := x.Placed; {
@@ -238,11 +241,15 @@ func (x *Positions) Lines() []string {
 			out = append(out, "Some islands could not be placed: too few of their control points agree on one place.")
 		}
 	}
+	out = append(out, x.Doubts...)
 	for _, s := range x.Statements {
 		out = append(out, s.Text+".")
 	}
 	return append(out, x.Remarks...)
 }
+
+// Any tells whether a mark of known place was seen; x may be nil.
+func (x *Positions) Any() bool { return x != nil && len(x.Control)+len(x.Check) > 0 }
 
 // Table lists the marks of known place.
 func (x *Positions) Table() report.Table {
@@ -251,8 +258,11 @@ func (x *Positions) Table() report.Table {
 		Note:    "Differences are adjusted minus surveyed. Check points took no part in the adjustment.",
 		Columns: []report.Column{{Name: "mark"}, {Name: "role"}},
 	}
-	if x.Placed != nil {
+	switch {
+	case x.Placed != nil:
 		t.Note += " Nor did control points: the map was placed on them as a whole."
+	case len(x.Control) > 0:
+		t.Note += " Control points hold the map: small differences there are no proof."
 	}
 	axes := []string{"x", "y", "z"}
 	for _, all := range [][]Position{x.Control, x.Check} {
@@ -272,7 +282,7 @@ func (x *Positions) Table() report.Table {
 			row := []string{p.Mark, role}
 			const none = "no control points put it into the datum"
 			for _, v := range p.At {
-				row = append(row, fmt.Sprintf("%.3f", v))
+				row = append(row, millimetres(v))
 			}
 			for c := range axes {
 				switch {
@@ -281,10 +291,14 @@ func (x *Positions) Table() report.Table {
 				case math.IsNaN(float64(p.Off[c])):
 					row = append(row, report.Missing("not surveyed"))
 				default:
-					row = append(row, fmt.Sprintf("%.3f", float64(p.Off[c])))
+					row = append(row, millimetres(float64(p.Off[c])))
 				}
 			}
-			row = append(row, figure(p.DistanceM, none))
+			if p.DistanceM == nil {
+				row = append(row, report.Missing(none))
+			} else {
+				row = append(row, millimetres(*p.DistanceM))
+			}
 			finding := ""
 			if p.Agrees != nil {
 				finding = map[bool]string{true: "agrees", false: "contradicts the others"}[*p.Agrees]
@@ -295,4 +309,12 @@ func (x *Positions) Table() report.Table {
 	add(x.Control, survey.ControlPoint.String())
 	add(x.Check, survey.CheckPoint.String())
 	return t
+}
+
+// millimetres writes metres to the millimetre, nothing as 0.000.
+func millimetres(m float64) string {
+	if s := fmt.Sprintf("%.3f", m); s != "-0.000" {
+		return s
+	}
+	return "0.000"
 }

@@ -16,7 +16,7 @@ const shown = 150
 
 func (a *Audit) tables() []report.Table {
 	var out []report.Table
-	if a.Positions != nil {
+	if a.Positions.Any() {
 		out = append(out, cut(a.Positions.Table(), "audit.json"))
 	}
 	for _, t := range []report.Table{a.nextTable(), a.controlTable(), a.markTable(), a.testTable(), a.hiddenTable(), a.leftTable(), a.sightTable(), a.historyTable(), a.setTable(), a.nearTable(), a.loopTable(), a.spreadTable()} {
