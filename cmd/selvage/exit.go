@@ -37,6 +37,11 @@ func badInput(format string, args ...any) error {
 	return &outcome{exitInput, fmt.Errorf(format, args...)}
 }
 
+// unavailable says that disk, network or another program does not let the work begin or go on.
+func unavailable(format string, args ...any) error {
+	return &outcome{exitEnvironment, fmt.Errorf(format, args...)}
+}
+
 // exitCode sorts errors: what the file system refuses is the environment, but a name that leads nowhere is the input, and so is
 // everything else that a verb has not marked itself.
 func exitCode(err error) int {

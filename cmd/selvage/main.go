@@ -1,4 +1,5 @@
-// Command selvage makes one map out of the maps of several robots: it rehearses outings, and adjusts, converts and splits surveys.
+// Command selvage makes one map out of the maps of several robots: it runs fleets, rehearses outings, and adjusts, audits, converts and splits
+// surveys.
 //
 // Each verb is one file with one struct: its fields are the flags, Run does the work. This file builds what every verb is handed,
 // a context that ends at an interrupt and the console, and exit.go turns the outcome into an exit code.
@@ -20,14 +21,17 @@ type cli struct {
 	LogLevel string           `enum:"debug,info,warn,error" default:"info" placeholder:"LEVEL" help:"Log from this level on: debug, info (the default), warn or error."`
 	Version  kong.VersionFlag `help:"Print the version and stop."`
 
-	Rehearse rehearseCmd `cmd:"" help:"Run a whole fleet on a virtual clock and score it."`
-	Adjust   adjustCmd   `cmd:"" help:"Adjust a whole survey in one piece."`
-	Audit    auditCmd    `cmd:"" help:"Tell how far every tie of a finished survey is checked, and where to go next."`
-	Split    splitCmd    `cmd:"" help:"Cut the survey of one robot into connected pieces."`
-	Convert  convertCmd  `cmd:"" help:"Turn data in another format into a survey."`
-	Enrol    enrolCmd    `cmd:"" help:"Make keys, certificates and a ready folder for the base and each robot of a fleet."`
-	Rule     ruleCmd     `cmd:"" help:"Hold or refuse a tie, or all ties of a robot or session, whatever the evidence says."`
-	Show     versionCmd  `cmd:"" name:"version" help:"Print the version of the program."`
+	Rehearse   rehearseCmd   `cmd:"" help:"Run a whole fleet on a virtual clock and score it."`
+	Adjust     adjustCmd     `cmd:"" help:"Adjust a whole survey in one piece."`
+	Audit      auditCmd      `cmd:"" help:"Tell how far every tie of a finished survey is checked, and where to go next."`
+	Split      splitCmd      `cmd:"" help:"Cut the survey of one robot into connected pieces."`
+	Convert    convertCmd    `cmd:"" help:"Turn data in another format into a survey."`
+	Enrol      enrolCmd      `cmd:"" help:"Make keys, certificates and a ready folder for the base and each robot of a fleet."`
+	Bus        busCmd        `cmd:"" help:"Run the bus of a fleet alone."`
+	Coordinate coordinateCmd `cmd:"" help:"Run the coordinator at the base, with the bus or on one elsewhere."`
+	Agent      agentCmd      `cmd:"" help:"Run the agent on a robot."`
+	Rule       ruleCmd       `cmd:"" help:"Hold or refuse a tie, or all ties of a robot or session, whatever the evidence says."`
+	Show       versionCmd    `cmd:"" name:"version" help:"Print the version of the program."`
 }
 
 func main() {
