@@ -140,7 +140,11 @@ func (r *Run) note(score *Score) string {
 	if r.Interrupted {
 		note += ", interrupted"
 	}
-	return note + "; covariance relative to the first keyframe of the first robot of each island, from the adjustment of all data and held ties in one piece"
+	to := "the first keyframe of the first robot of each island"
+	if slices.ContainsFunc(r.Outing.Survey.Marks, func(m survey.Mark) bool { return m.Role == survey.ControlPoint }) {
+		to = "control points or, in an island that these do not hold, the first keyframe of its first robot"
+	}
+	return note + "; covariance relative to " + to + ", from the adjustment of all data and held ties in one piece"
 }
 
 // epochs names the epochs of the corrections that the robots hold: one when they agree.

@@ -315,6 +315,7 @@ func (a *adjustment) place() error {
 		if len(placed) == 0 {
 			return badInput("%s: --place robust, but no control point was seen; nothing was written", a.Survey)
 		}
+		a.islands = findIslands(a.problem)
 	}
 	a.report.Positions = audit.Compare(a.problem, a.survey, placed)
 	return nil

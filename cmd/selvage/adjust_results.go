@@ -18,8 +18,8 @@ type unit struct {
 	session uint32
 }
 
-// islands says what hangs together. Island 0 is the one whose frame is the datum: the one with the most sessions, then the most
-// keyframes, then the first.
+// islands says what hangs together. Island 0 is the one whose frame is the datum: one that control points hold, if there is any, then
+// the one with the most sessions, then the most keyframes, then the first.
 type islands struct {
 	number   []int    // island of the problem -> number
 	sessions [][]unit // number -> sessions, by the island of their first keyframe
@@ -49,8 +49,14 @@ func findIslands(p *adjust.Problem) *islands {
 	for i := range order {
 		order[i] = i
 	}
+	stands := func(island int) int {
+		if p.InDatum(int32(island)) {
+			return 1
+		}
+		return 0
+	}
 	slices.SortStableFunc(order, func(a, b int) int {
-		return cmp.Or(cmp.Compare(len(sessions[b]), len(sessions[a])), cmp.Compare(keyframes[b], keyframes[a]))
+		return cmp.Or(cmp.Compare(stands(b), stands(a)), cmp.Compare(len(sessions[b]), len(sessions[a])), cmp.Compare(keyframes[b], keyframes[a]))
 	})
 	l.number = make([]int, len(order))
 	l.sessions = make([][]unit, len(order))

@@ -64,6 +64,9 @@ func (c *auditCmd) Run(ctx context.Context, con *console) error {
 		return err
 	}
 	a, err := interruptible(ctx, func() (*audit.Audit, error) { return audit.Run(ctx, in) })
+	if errors.Is(err, audit.ErrNoControl) {
+		return badInput("%s: --place robust, but %w; nothing was written", c.Survey, err)
+	}
 	if errors.Is(err, audit.ErrUndetermined) {
 		return badInput("%s: %w; nothing was written", c.Survey, err)
 	}

@@ -100,9 +100,38 @@ func TestAdjustWithoutControl(t *testing.T) {
 	yard(t, dir, nil)
 	a := selvage(t, dir, "adjust", "yard")
 	a.want(t, 0)
-	if says := "24 check points are in a map that no control points put into the datum: they say nothing of its positions."; !strings.Contains(a.stdout, says) || strings.Contains(a.stdout, "Tested") {
+	if says := "24 check points are in a map that is not in the datum, for no control point was seen: they say nothing of its positions."; !strings.Contains(a.stdout, says) || strings.Contains(a.stdout, "Tested") {
 		t.Errorf("want %q and no accuracy in\n%s", says, a.stdout)
 	}
 	selvage(t, dir, "adjust", "yard", "--place", "robust").want(t, 2, "--place robust, but no control point was seen; nothing was written")
+	selvage(t, dir, "audit", "yard", "--place", "robust").want(t, 2, "--place robust, but no control point was seen; nothing was written")
 	selvage(t, dir, "adjust", "yard", "--place", "check").want(t, 2, `must be one of`)
+}
+
+// The island that control points hold is the datum, however many sessions hang together elsewhere.
+func TestAdjustDatumIsControl(t *testing.T) {
+	dir := t.TempDir()
+	yard(t, dir, make([][2]float64, 7))
+	folder := filepath.Join(dir, "yard")
+	s, err := survey.Read(folder)
+	if err != nil {
+		t.Fatal(err)
+	}
+	for _, id := range []string{"r2", "r3"} {
+		s.Meta.Robots = append(s.Meta.Robots, survey.RobotMeta{ID: id, Sessions: []uint32{1}})
+		s.Robots = append(s.Robots, survey.Robot{ID: id, Keyframes: s.Robots[0].Keyframes, Relatives: s.Robots[0].Relatives})
+	}
+	tie := survey.Tie{ID: "t1", FromRobot: "r2", FromSession: 1, FromKey: 3, ToRobot: "r3", ToSession: 1, ToKey: 4, Pose: survey.Identity(), Cov: s.Robots[0].Relatives[0].Cov}
+	s.Ties = append(s.Ties, tie)
+	if err := survey.Write(folder, s); err != nil {
+		t.Fatal(err)
+	}
+	for _, how := range [][]string{nil, {"--place", "robust"}} {
+		a := selvage(t, dir, append([]string{"adjust", "yard", "--all-ties"}, how...)...)
+		a.want(t, 0)
+		text := read(t, dir, "yard", "results", "datum_from_session.csv")
+		if !strings.Contains(a.stdout, "1 of 3 sessions lies in the datum") || !strings.Contains(text, "\nr1,1,true,0,") || !strings.Contains(text, "\nr2,1,false,1,") {
+			t.Errorf("%v:\n%s\n%s", how, a.stdout, text)
+		}
+	}
 }

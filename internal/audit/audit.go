@@ -210,6 +210,9 @@ type Candidate struct {
 	Unchecked int      `json:"unchecked_ties_after"` // that remain
 }
 
+// ErrNoControl says that the map was to be placed on control points, and none was seen.
+var ErrNoControl = errors.New("no control point was seen")
+
 // ErrUndetermined says that the measurements leave a keyframe free.
 var ErrUndetermined = errors.New("the measurements leave a keyframe free")
 

@@ -71,6 +71,9 @@ func (w *work) positions() error {
 		if placed, err = w.p.Place(); err != nil {
 			return fmt.Errorf("%w in some direction (%w)", ErrUndetermined, err)
 		}
+		if len(placed) == 0 {
+			return ErrNoControl
+		}
 		if err := w.covariance(); err != nil {
 			return err
 		}
@@ -169,7 +172,7 @@ func (x *Positions) place(placed []adjust.Placed, s *survey.Survey, several bool
 // assure states what the check points say of the positions.
 func (x *Positions) assure(checks []reliability.CheckPoint, p *adjust.Problem, s *survey.Survey) {
 	if left := len(x.Check) - len(checks); left > 0 {
-		x.Remarks = append(x.Remarks, fmt.Sprintf("%s in a map that no control points put into the datum: they say nothing of its positions.", isAre(left, "check point")))
+		x.Remarks = append(x.Remarks, fmt.Sprintf("%s in a map that is not in the datum, for %s: they say nothing of its positions.", isAre(left, "check point"), x.without()))
 	}
 	if len(checks) == 0 {
 		return
@@ -248,6 +251,14 @@ func (x *Positions) Lines() []string {
 	return append(out, x.Remarks...)
 }
 
+// without says why an island stands in no datum.
+func (x *Positions) without() string {
+	if len(x.Control) > 0 {
+		return "too few control points hold it"
+	}
+	return "no control point was seen"
+}
+
 // Any tells whether a mark of known place was seen; x may be nil.
 func (x *Positions) Any() bool { return x != nil && len(x.Control)+len(x.Check) > 0 }
 
@@ -261,7 +272,7 @@ func (x *Positions) Table() report.Table {
 	switch {
 	case x.Placed != nil:
 		t.Note += " Nor did control points: the map was placed on them as a whole."
-	case len(x.Control) > 0:
+	case slices.ContainsFunc(x.Control, func(c Position) bool { return c.DistanceM != nil }):
 		t.Note += " Control points hold the map: small differences there are no proof."
 	}
 	axes := []string{"x", "y", "z"}
@@ -280,7 +291,7 @@ func (x *Positions) Table() report.Table {
 	add := func(all []Position, role string) {
 		for _, p := range all {
 			row := []string{p.Mark, role}
-			const none = "no control points put it into the datum"
+			none := "not in the datum, for " + x.without()
 			for _, v := range p.At {
 				row = append(row, millimetres(v))
 			}
