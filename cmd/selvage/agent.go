@@ -40,7 +40,7 @@ func (c *agentCmd) Run(ctx context.Context, con *console) error {
 	if err != nil {
 		return err
 	}
-	client := con.client(a.Robot, func() {})
+	client := con.client(a.Robot, func(bool) {})
 	options := shell.Options{Fleet: a.Fleet, Robot: a.Robot, Tick: shellTick, Warn: con.complain}
 	if client.Roots, err = authorities(a.Bus); err != nil {
 		return err

@@ -46,10 +46,18 @@ func (c *coordinateCmd) Run(ctx context.Context, con *console) error {
 		return err
 	}
 	con.runs(ctx, b.Log, b.Fleet)
-	if b.Page != "" || b.Metrics != "" {
-		con.log.Warn().Str("page", b.Page).Str("metrics", b.Metrics).Msg("this version of the coordinator serves neither")
+	if b.Page != "" {
+		con.log.Warn().Str("page", b.Page).Msg("this version has no live page")
 	}
-	server, link, err := c.link(ctx, con, b)
+	var at seat
+	if b.Metrics != "" {
+		wait, err := at.answer(ctx, con, b)
+		if err != nil {
+			return err
+		}
+		defer wait()
+	}
+	server, link, err := c.link(ctx, con, b, &at)
 	if ctx.Err() != nil && link == nil {
 		return nil // told to stop before it began
 	}
@@ -63,7 +71,7 @@ func (c *coordinateCmd) Run(ctx context.Context, con *console) error {
 	for ctx.Err() == nil {
 		term, end := context.WithCancel(ctx)
 		ended := make(chan error, 1)
-		go func() { ended <- shell.Lead(term, link, b.leadership(term, con)) }()
+		go func() { ended <- shell.Lead(term, link, b.leadership(term, con, &at)) }()
 		for term.Err() == nil {
 			select {
 			case <-again:
@@ -86,9 +94,12 @@ func (c *coordinateCmd) Run(ctx context.Context, con *console) error {
 }
 
 // link connects to the bus, here or elsewhere, and waits until it is there.
-func (c *coordinateCmd) link(ctx context.Context, con *console, b *base) (*bus.Server, *bus.Client, error) {
+func (c *coordinateCmd) link(ctx context.Context, con *console, b *base, at *seat) (*bus.Server, *bus.Client, error) {
 	there := make(chan struct{}, 1)
-	o := con.client("base", func() {
+	o := con.client("base", func(is bool) {
+		if at.linked.Store(is); !is {
+			return
+		}
 		select {
 		case there <- struct{}{}:
 		default:
@@ -130,12 +141,12 @@ func (c *coordinateCmd) link(ctx context.Context, con *console, b *base) (*bus.S
 }
 
 // leadership says how this computer leads, with those who are enrolled by now.
-func (b *base) leadership(ctx context.Context, con *console) shell.Leadership {
-	log := con.log
+func (b *base) leadership(ctx context.Context, con *console, at *seat) shell.Leadership {
+	log, robots := con.log, b.robots()
 	var watched sync.WaitGroup
 	var unwatch context.CancelFunc
 	o := shell.Leadership{
-		Options: shell.Options{Fleet: b.Fleet, Robots: b.robots(), Tick: shellTick, Warn: con.complain},
+		Options: shell.Options{Fleet: b.Fleet, Robots: robots, Tick: shellTick, Warn: con.complain},
 		Holder:  b.Holder,
 		TTL:     leaseTTL,
 		Core: func(from coordinator.Config) *coordinator.Coordinator {
@@ -147,6 +158,7 @@ func (b *base) leadership(ctx context.Context, con *console) shell.Leadership {
 			return coordinator.New(c)
 		},
 		Leads: func(term uint64, s *shell.Shell) {
+			at.take(term, s, robots)
 			if s == nil {
 				unwatch()
 				watched.Wait()

@@ -42,18 +42,18 @@ func (c *console) runs(ctx context.Context, format, fleet string) {
 // complain logs what went wrong and can be borne.
 func (c *console) complain(err error) { c.log.Warn().Err(err).Msg("refused or not sent") }
 
-// client says how to connect to the bus; there is called whenever the link has come.
-func (c *console) client(name string, there func()) bus.ClientOptions {
+// client says how to connect to the bus; changed is called whenever the link has come or gone.
+func (c *console) client(name string, changed func(is bool)) bus.ClientOptions {
 	return bus.ClientOptions{
 		Name: name,
 		Warn: func(err error) { c.log.Warn().Err(err).Msg("bus") },
 		Connected: func(is bool) {
-			if !is {
+			if is {
+				c.log.Info().Msg("the link is up")
+			} else {
 				c.log.Warn().Msg("the link is down")
-				return
 			}
-			c.log.Info().Msg("the link is up")
-			there()
+			changed(is)
 		},
 	}
 }

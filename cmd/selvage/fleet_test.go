@@ -6,6 +6,7 @@ import (
 	"fmt"
 	"io"
 	"net"
+	"net/http"
 	"os"
 	"os/exec"
 	"path/filepath"
@@ -175,10 +176,10 @@ func straight() []string {
 // side by side, two metres apart, and r1 sees r2 at five places, as many as two robots need with nobody to confirm them.
 func TestFleet(t *testing.T) {
 	dir := t.TempDir()
-	port := freePort(t)
+	port, figures := freePort(t), "127.0.0.1:"+freePort(t)
 	selvage(t, dir, "enrol", "f", "--robots", "r1,r2", "--host", "127.0.0.1", "--port", port, "--dimension", "2").want(t, 0)
 	at := func(parts ...string) string { return filepath.Join(append([]string{dir, "f-keys"}, parts...)...) }
-	replaceIn(t, at("base", "base.yaml"), "/var/lib/selvage/store", "store", "page: 127.0.0.1:8080\n", "", "metrics: 127.0.0.1:9102", "pace: 0.02")
+	replaceIn(t, at("base", "base.yaml"), "/var/lib/selvage/store", "store", "page: 127.0.0.1:8080\n", "", "127.0.0.1:9102", figures+"\npace: 0.02")
 	for _, r := range []string{"r1", "r2"} {
 		replaceIn(t, at("robots", r, "agent.yaml"), "/var/lib/selvage/journal", "journal", "/run/selvage/intake.sock", "stdin",
 			"output: /run/selvage/map.sock", "pace: 0.02", "metrics: 127.0.0.1:9101\n", "")
@@ -205,6 +206,40 @@ func TestFleet(t *testing.T) {
 		} else if at != datum || datum == "" {
 			t.Errorf("r1 stands in datum %q, r2 in %q", datum, at)
 		}
+	}
+
+	// status says the same, and health that it does.
+	config := at("base", "base.yaml")
+	var f fleetStatus
+	for stuck := time.Now().Add(5 * time.Second); ; { // the agents tell what they have applied with their next heartbeat
+		a := selvage(t, dir, "status", config, "--json")
+		a.want(t, 0)
+		if err := json.Unmarshal([]byte(a.stdout), &f); err != nil {
+			t.Fatal(err)
+		}
+		if f.Rests || time.Now().After(stuck) {
+			break
+		}
+	}
+	if !f.Rests || !f.Leads || f.Fleet != "f" || f.Holder != "base-1" || f.Term != 1 || f.Ties != (tieCounts{Held: 5}) || len(f.Doubts) > 0 || len(f.Robots) != 2 {
+		t.Fatalf("status %+v", f)
+	}
+	for i, r := range f.Robots {
+		if r.Robot != fmt.Sprintf("r%d", i+1) || len(r.Sessions) != 1 || r.Sessions[0] != (sessionStatus{1, true, datum}) ||
+			r.Applied != f.Epoch || r.Waiting != 0 || r.NewsS == nil || *r.NewsS > 10 {
+			t.Errorf("status of %s: %+v", r.Robot, r)
+		}
+	}
+	if a := selvage(t, dir, "status", config); a.code != 0 || !strings.HasPrefix(a.stdout, "Fleet f, epoch "+f.Epoch+": 2 of 2 sessions are joined; of 5 ties 5 are held, 0 open and 0 refused; it is at rest.\n") || !strings.Contains(a.stdout, datum) {
+		t.Errorf("status says %s%s", a.stdout, a.err)
+	}
+	health, err := http.Get("http://" + figures + "/healthz")
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer health.Body.Close()
+	if word, err := io.ReadAll(health.Body); err != nil || health.StatusCode != 200 || string(word) != "leads\n" && string(word) != "solves\n" {
+		t.Errorf("health: %s, %q, %v", health.Status, word, err)
 	}
 
 	// An agent that comes back goes on from its journal, and the base from its streams.
@@ -241,6 +276,7 @@ func TestDaemonsRefuse(t *testing.T) {
 	write(t, dir, "blocked.yaml", strings.Replace(fmt.Sprintf(desk, "127.0.0.1:"+freePort(t)), "store: store", "store: taken.yaml", 1))
 	write(t, dir, "far.yaml", `{fleet: f, dimension: 2, unsigned: true, robots: [r1], bus: {url: "nats://127.0.0.1:1"}, holder: desk, log: json}`)
 	write(t, dir, "slow.yaml", strings.Replace(fmt.Sprintf(desk, "127.0.0.1:4222"), "log: json", "log: json, pace: 50", 1))
+	write(t, dir, "silent.yaml", `{fleet: f, dimension: 2, unsigned: true, robots: [r1], bus: {url: "nats://127.0.0.1:1"}, holder: desk, metrics: "127.0.0.1:1", log: json}`)
 	write(t, dir, "r1.yaml", `{fleet: f, robot: r1, dimension: 2, unsigned: true, bus: {url: "nats://127.0.0.1:1"}, journal: r1.yaml, intake: stdin, log: json}`)
 	for _, c := range []struct {
 		args string
@@ -253,6 +289,8 @@ func TestDaemonsRefuse(t *testing.T) {
 		{"coordinate taken.yaml", exitEnvironment, "address already in use"},
 		{"coordinate blocked.yaml", exitEnvironment, "not a directory"},
 		{"coordinate slow.yaml", exitInput, "pace: found 50, expected 0.02 to 10"},
+		{"status far.yaml", exitInput, "metrics: found nothing"},
+		{"status silent.yaml", exitEnvironment, "no coordinator answers"},
 		{"agent far.yaml", exitInput, "far.yaml"},
 		{"agent r1.yaml", exitEnvironment, "journal"},
 	} {

@@ -30,6 +30,7 @@ type cli struct {
 	Bus        busCmd        `cmd:"" help:"Run the bus of a fleet alone."`
 	Coordinate coordinateCmd `cmd:"" help:"Run the coordinator at the base, with the bus or on one elsewhere."`
 	Agent      agentCmd      `cmd:"" help:"Run the agent on a robot."`
+	Status     statusCmd     `cmd:"" help:"Tell where a running fleet stands and what is in doubt."`
 	Rule       ruleCmd       `cmd:"" help:"Hold or refuse a tie, or all ties of a robot or session, whatever the evidence says."`
 	Show       versionCmd    `cmd:"" name:"version" help:"Print the version of the program."`
 }

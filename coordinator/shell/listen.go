@@ -40,7 +40,7 @@ func (s *Shell) listen(ctx context.Context, began chan<- error) {
 					case subject != own:
 						s.door.Refuse(s.now(), subject, fmt.Errorf("came as an answer on %s", own))
 					case s.door.Admit(s.now(), subject, storedNS, b):
-						s.hear(ctx, subject, coordinator.Message{Robot: r, Kind: kind, Payload: b})
+						s.hear(ctx, subject, storedNS, coordinator.Message{Robot: r, Kind: kind, Payload: b})
 					}
 				}
 			}
@@ -62,7 +62,7 @@ func (s *Shell) listen(ctx context.Context, began chan<- error) {
 			case subject != rule:
 				s.door.Refuse(s.now(), subject, fmt.Errorf("came as an answer on %s", rule))
 			case s.door.Admit(s.now(), subject, storedNS, b):
-				s.hear(ctx, subject, coordinator.Message{Kind: msgs.KindRule, Payload: b})
+				s.hear(ctx, subject, storedNS, coordinator.Message{Kind: msgs.KindRule, Payload: b})
 			}
 		})
 		if err != nil {
@@ -100,14 +100,19 @@ func (s *Shell) summary(ctx context.Context, pieces map[string]*msgs.Assembler, 
 	}
 	own := msgs.UpSubject(at.Fleet, at.Robot, msgs.KindSummary)
 	if whole != nil && (subject == own || s.door.Admit(s.now(), own, storedNS, whole)) {
-		s.hear(ctx, own, coordinator.Message{Robot: at.Robot, Kind: msgs.KindSummary, Payload: whole})
+		s.hear(ctx, own, storedNS, coordinator.Message{Robot: at.Robot, Kind: msgs.KindSummary, Payload: whole})
 	}
 }
 
-// hear gives the core a message from a robot.
-func (s *Shell) hear(ctx context.Context, subject string, m coordinator.Message) {
+// hear gives the core a message that the bus has stored at storedNS.
+func (s *Shell) hear(ctx context.Context, subject string, storedNS int64, m coordinator.Message) {
 	var refused error
-	if err := s.call(ctx, func() { refused = s.core.Message(s.now(), m) }); err != nil {
+	err := s.call(ctx, func() {
+		if refused = s.core.Message(s.now(), m); refused == nil && m.Robot != "" {
+			s.heard[m.Robot] = max(s.heard[m.Robot], storedNS)
+		}
+	})
+	if err != nil {
 		return // it stops
 	}
 	if refused != nil {

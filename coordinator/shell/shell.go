@@ -20,6 +20,7 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"maps"
 	"slices"
 	"sync"
 	"time"
@@ -56,13 +57,14 @@ type Shell struct {
 	stopped chan struct{}
 	door    *door.Door
 	out     *bus.Outbox[lane, coordinator.Publish]
+	heard   map[string]int64 // the owner's: when the newest message of each robot came to the bus
 }
 
 // New makes a shell around a core. Until Run has returned the core belongs to the shell.
 func New(core *coordinator.Coordinator, link *bus.Client, o Options) *Shell {
 	o.Robots = slices.Clone(o.Robots)
 	s := &Shell{
-		core: core, link: link, options: o, begin: time.Now(), calls: make(chan func()), stopped: make(chan struct{}),
+		core: core, link: link, options: o, begin: time.Now(), calls: make(chan func()), stopped: make(chan struct{}), heard: map[string]int64{},
 	}
 	s.door = door.New(o.Fleet, o.Robots, o.Verifier, o.Warn)
 	s.out = bus.NewOutbox(s.send, o.Warn)
@@ -125,6 +127,12 @@ func (s *Shell) now() int64 { return s.begin.UnixNano() + int64(time.Since(s.beg
 // Do lets f look at the core while nobody else touches it. What f keeps of it must be a copy.
 func (s *Shell) Do(ctx context.Context, f func(*coordinator.Coordinator)) error {
 	return s.call(ctx, func() { f(s.core) })
+}
+
+// Heard returns when the newest message of each robot that the core took came to the bus, nanoseconds on the clock of the base.
+func (s *Shell) Heard(ctx context.Context) (heard map[string]int64, err error) {
+	err = s.call(ctx, func() { heard = maps.Clone(s.heard) })
+	return heard, err
 }
 
 // call lets the owner run f and waits for it.
