@@ -120,12 +120,15 @@ type island struct {
 	level   bool // z points up
 }
 
+// ControlDatum is the name of the island that the control points hold.
+const ControlDatum = "control"
+
 // controlBorn is the birth number of the datum of the control marks.
 const controlBorn = math.MaxUint64
 
 func (i *island) name() string {
 	if i.control {
-		return "control"
+		return ControlDatum
 	}
 	return fmt.Sprintf("%s.%d.%d", i.anchor.robot, i.anchor.session, i.key)
 }

@@ -6,6 +6,7 @@ import (
 	"slices"
 
 	"selvage/agent"
+	"selvage/coordinator"
 	"selvage/internal/adjust"
 	"selvage/internal/lie"
 	"selvage/internal/posegraph"
@@ -95,6 +96,11 @@ func (r *Run) gaps() ([]Gap, error) {
 		g := Gap{Island: name}
 		in := func(robot string, session uint32) bool { return islandOf[unit{robot, session}] == name }
 		part := &survey.Survey{Meta: s.Meta, Marks: slices.Concat(known.Marks, more)}
+		if name != coordinator.ControlDatum { // its control points do not hold it
+			for i := range part.Marks {
+				part.Marks[i].Role = survey.PlainMark
+			}
+		}
 		for i := range known.Robots {
 			k := &known.Robots[i]
 			robot := survey.Robot{
@@ -135,7 +141,12 @@ func (r *Run) sharedMarks() (map[string]map[string][3]float64, error) {
 		if out[m.Island] == nil {
 			out[m.Island] = map[string][3]float64{}
 		}
-		if _, known := out[m.Island][m.Mark]; !known || m.Sessions > 1 {
+		at, known := out[m.Island][m.Mark]
+		better := m.Sessions > 1
+		if m.Role == coordinator.Control { // the one that the control point holds
+			better = distance(m.At, m.Known) < distance(at, m.Known)
+		}
+		if !known || better {
 			out[m.Island][m.Mark] = m.At
 		}
 	}
