@@ -21,6 +21,11 @@ func (r *Run) plan(places []place, poses [][]survey.ResultPose, t *truthIndex, t
 		island int
 	}
 	where := map[adjust.Key]end{}
+	type moment struct {
+		stamp int64
+		end
+	}
+	when := map[adjust.Key][]moment{} // by robot and session
 	sessions := map[int]int{}
 	for i := range places {
 		sessions[places[i].robot]++
@@ -38,6 +43,10 @@ func (r *Run) plan(places []place, poses [][]survey.ResultPose, t *truthIndex, t
 			q := &poses[i][k]
 			key := adjust.Key{Robot: id, Session: q.Session, ID: q.ID}
 			where[key] = end{q.Pose.T, x.number}
+			if q.HasStamp {
+				of := adjust.Key{Robot: id, Session: q.Session}
+				when[of] = append(when[of], moment{q.StampNS, where[key]})
+			}
 			track.Points = append(track.Points, q.Pose.T)
 			if known {
 				at := [3]float64{math.NaN(), math.NaN(), math.NaN()}
@@ -52,6 +61,24 @@ func (r *Run) plan(places []place, poses [][]survey.ResultPose, t *truthIndex, t
 			p.Ellipses = append(p.Ellipses, ellipse(&poses[i][n-1]))
 		}
 	}
+	// at finds an end of a tie; one that is known by its moment is drawn at the keyframe nearest in time.
+	at := func(robot string, session uint32, key, stamp int64, byStamp bool) (end, bool) {
+		if !byStamp {
+			e, ok := where[adjust.Key{Robot: robot, Session: session, ID: key}]
+			return e, ok
+		}
+		best, least := -1, int64(math.MaxInt64)
+		all := when[adjust.Key{Robot: robot, Session: session}]
+		for i := range all {
+			if d := max(all[i].stamp-stamp, stamp-all[i].stamp); d < least {
+				best, least = i, d
+			}
+		}
+		if best < 0 {
+			return end{}, false
+		}
+		return all[best].end, true
+	}
 	unchecked := map[string]bool{}
 	for _, x := range r.singles() {
 		unchecked[x.tie] = x.bridge
@@ -59,9 +86,9 @@ func (r *Run) plan(places []place, poses [][]survey.ResultPose, t *truthIndex, t
 	verdict, measured := r.verdicts(), r.measured()
 	for i := range s.Ties {
 		tie := &s.Ties[i]
-		a, ok := where[adjust.Key{Robot: tie.FromRobot, Session: tie.FromSession, ID: tie.FromKey}]
-		b, found := where[adjust.Key{Robot: tie.ToRobot, Session: tie.ToSession, ID: tie.ToKey}]
-		if !ok || !found || !measured[i] || tie.ToByStamp || a.island != b.island {
+		a, ok := at(tie.FromRobot, tie.FromSession, tie.FromKey, tie.FromStampNS, tie.FromByStamp)
+		b, found := at(tie.ToRobot, tie.ToSession, tie.ToKey, tie.ToStampNS, tie.ToByStamp)
+		if !ok || !found || !measured[i] || a.island != b.island {
 			continue
 		}
 		mark := report.TieMark{ID: tie.ID, From: a.at, To: b.at, Island: a.island, Verdict: report.Open, Unchecked: unchecked[tie.ID]}

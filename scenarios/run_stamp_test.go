@@ -3,6 +3,8 @@ package scenarios
 import (
 	"context"
 	"testing"
+
+	"selvage/internal/report"
 )
 
 // Ties that name their far end by a moment between two keyframes: the robot that was seen makes a keyframe there, and the fleet
@@ -56,4 +58,20 @@ func TestTiesByMoment(t *testing.T) {
 		t.Errorf("%d robots joined", last.Joined)
 	}
 	checkHealed(t, r)
+
+	// The plan draws every held tie; a far end is known by its moment only.
+	places := r.places()
+	poses, err := r.resultPoses(places)
+	if err != nil {
+		t.Fatal(err)
+	}
+	drawn, held := 0, score(t, r).Ties.All.Held
+	for _, x := range r.plan(places, poses, newTruthIndex(w.Survey), nil).Ties {
+		if x.Verdict == report.Held {
+			drawn++
+		}
+	}
+	if held == 0 || drawn != held {
+		t.Errorf("%d ties drawn as held, %d are", drawn, held)
+	}
 }
