@@ -23,7 +23,7 @@ type agentCmd struct {
 }
 
 func (agentCmd) Help() string {
-	return `Runs the agent of one robot. What the front end tells it, lines of JSON on a socket or on standard input (agent/INTAKE.md), it answers when the disk has it; it sends the base a summary whenever there is a link, and needs none to go on. It outlives a power cut: started again it makes its map from the journal.
+	return `Runs the agent of one robot. What the front end tells it, lines of JSON on a socket or on standard input (agent/INTAKE.md), it answers when the disk has it; it sends the base a summary whenever there is a link, and needs none to go on. It outlives a power cut: started again it makes its map from the journal. The robot's own software reads on another socket where its sessions stand (agent/OUTPUT.md).
 
 It runs until SIGTERM or an interrupt, also when standard input has ended.
 
@@ -80,16 +80,23 @@ func (c *agentCmd) Run(ctx context.Context, con *console) error {
 	for _, t := range core.Tracks() {
 		front.Newest = max(front.Newest, t.Session)
 	}
-	if a.Output != "" || a.Metrics != "" {
-		con.log.Warn().Str("output", a.Output).Str("metrics", a.Metrics).Msg("this version of the agent serves neither")
+	if a.Metrics != "" {
+		con.log.Warn().Str("metrics", a.Metrics).Msg("this version of the agent has no figures to ask for")
 	}
 	con.log.Info().Uint32("session", front.Newest).Str("journal", a.Journal).Msg("the journal is read")
 
-	var socket net.Listener
+	var socket, output net.Listener
 	if a.Intake != "stdin" {
 		if socket, err = intake.Listen(a.Intake); err != nil {
 			return unavailable("intake: %w", err)
 		}
+		defer socket.Close()
+	}
+	if a.Output != "" {
+		if output, err = intake.Listen(a.Output); err != nil {
+			return unavailable("output: %w", err)
+		}
+		defer output.Close()
 	}
 	link, err := bus.Dial(a.Bus.URL, client)
 	if err != nil {
@@ -102,7 +109,15 @@ func (c *agentCmd) Run(ctx context.Context, con *console) error {
 	defer stop()
 	var wait sync.WaitGroup
 	defer wait.Wait()
-	wait.Go(func() { watchAgent(ctx, con, s) })
+	out := newOutlet()
+	wait.Go(func() { watchAgent(ctx, con, s, out) })
+	if output != nil {
+		wait.Go(func() {
+			if err := out.serve(ctx, output); err != nil {
+				con.log.Error().Err(err).Msg("nobody can connect to the output any more")
+			}
+		})
+	}
 	var failed error
 	if socket != nil {
 		wait.Go(func() {

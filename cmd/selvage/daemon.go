@@ -11,8 +11,6 @@ import (
 	"github.com/mattn/go-isatty"
 	"github.com/rs/zerolog"
 
-	"selvage/agent"
-	"selvage/agent/shell"
 	"selvage/internal/bus"
 	"selvage/msgs"
 )
@@ -60,31 +58,3 @@ func (c *console) client(name string, changed func(is bool)) bus.ClientOptions {
 
 // epochText writes an epoch as logs and tables have it.
 func epochText(e msgs.Epoch) string { return fmt.Sprintf("%d.%d", e.Incarnation, e.Number) }
-
-// watchAgent logs where the map of a robot stands whenever that changes.
-func watchAgent(ctx context.Context, con *console, s *shell.Shell) {
-	ticker := time.NewTicker(time.Second / 2)
-	defer ticker.Stop()
-	var last msgs.Epoch
-	for {
-		select {
-		case <-ctx.Done():
-			return
-		case <-ticker.C:
-		}
-		var now msgs.Epoch
-		var tracks []agent.Track
-		err := s.Do(ctx, func(a *agent.Agent) {
-			if now = a.State().Applied; now != last {
-				tracks = a.Tracks()
-			}
-		})
-		if err != nil || now == last {
-			continue
-		}
-		last = now
-		for _, t := range tracks {
-			con.log.Info().Str("epoch", epochText(now)).Uint32("session", t.Session).Bool("joined", t.Joined).Str("datum", t.Island).Msg("correction applied")
-		}
-	}
-}

@@ -5,6 +5,7 @@ import (
 	"encoding/json"
 	"fmt"
 	"io"
+	"math"
 	"net"
 	"net/http"
 	"os"
@@ -179,10 +180,10 @@ func TestFleet(t *testing.T) {
 	port, figures := freePort(t), "127.0.0.1:"+freePort(t)
 	selvage(t, dir, "enrol", "f", "--robots", "r1,r2", "--host", "127.0.0.1", "--port", port, "--dimension", "2").want(t, 0)
 	at := func(parts ...string) string { return filepath.Join(append([]string{dir, "f-keys"}, parts...)...) }
-	replaceIn(t, at("base", "base.yaml"), "/var/lib/selvage/store", "store", "page: 127.0.0.1:8080\n", "", "127.0.0.1:9102", figures+"\npace: 0.02")
+	replaceIn(t, at("base", "base.yaml"), "/var/lib/selvage/store", "store", "page: 127.0.0.1:8080\n", "", "127.0.0.1:9102", figures, "pace: 1 ", "pace: 0.02 ")
 	for _, r := range []string{"r1", "r2"} {
 		replaceIn(t, at("robots", r, "agent.yaml"), "/var/lib/selvage/journal", "journal", "/run/selvage/intake.sock", "stdin",
-			"output: /run/selvage/map.sock", "pace: 0.02", "metrics: 127.0.0.1:9101\n", "")
+			"/run/selvage/map.sock", "map.sock", "pace: 1 ", "pace: 0.02 ", "metrics: 127.0.0.1:9101\n", "")
 	}
 	base := begin(t, dir, "coordinate", at("base", "base.yaml"))
 	base.says(0, "that it leads", func(line map[string]any) bool {
@@ -196,7 +197,7 @@ func TestFleet(t *testing.T) {
 	}
 	r1.tell(lines...)
 	joined := func(line map[string]any) bool {
-		return line["message"] == "correction applied" && line["joined"] == true
+		return line["message"] == "map changed" && line["joined"] == true
 	}
 	var datum string
 	for i, r := range []*daemon{r1, r2} {
@@ -240,6 +241,30 @@ func TestFleet(t *testing.T) {
 	defer health.Body.Close()
 	if word, err := io.ReadAll(health.Body); err != nil || health.StatusCode != 200 || string(word) != "leads\n" && string(word) != "solves\n" {
 		t.Errorf("health: %s, %q, %v", health.Status, word, err)
+	}
+
+	// The software on r2 learns the place of its session: datum_from_session of r2 is that of r1 and two metres to the left.
+	var stands [2]placeLine
+	for i := range stands {
+		path := at("robots", fmt.Sprintf("r%d", i+1), "map.sock")
+		if info, err := os.Stat(path); err != nil || info.Mode().Perm() != 0o600 {
+			t.Errorf("%s: %v, %v", path, info, err)
+		}
+		c, err := net.Dial("unix", path)
+		if err != nil {
+			t.Fatal(err)
+		}
+		defer c.Close()
+		c.SetDeadline(time.Now().Add(5 * time.Second))
+		if err := json.NewDecoder(c).Decode(&stands[i]); err != nil {
+			t.Fatal(err)
+		}
+		if p := &stands[i]; !p.Joined || p.Datum != datum || p.Session != 1 || p.Keyframe != 6 || p.DatumFromSession == nil || math.Abs(p.SessionFromKeyframe.X-60) > 1e-6 {
+			t.Fatalf("output %+v", p)
+		}
+	}
+	if a, b := stands[0].DatumFromSession, stands[1].DatumFromSession; math.Hypot(b.X-a.X, b.Y-a.Y-2) > 1e-6 || math.Abs(b.QZ-a.QZ) > 1e-6 {
+		t.Errorf("r1 stands at %+v, r2 at %+v, want it 2 m to the left", a, b)
 	}
 
 	// An agent that comes back goes on from its journal, and the base from its streams.
