@@ -322,3 +322,30 @@ func TestDaemonsRefuse(t *testing.T) {
 		selvage(t, dir, strings.Fields(c.args)...).want(t, c.code, c.says)
 	}
 }
+
+// The bus alone, over TLS, and two coordinators on it: one leads, and the other one when the first has stopped.
+func TestStandby(t *testing.T) {
+	dir := t.TempDir()
+	port := freePort(t)
+	selvage(t, dir, "enrol", "f", "--robots", "r1", "--host", "127.0.0.1", "--port", port, "--dimension", "2").want(t, 0)
+	config := func(name string) string { return filepath.Join("f-keys", "base", name) }
+	replaceIn(t, filepath.Join(dir, config("base.yaml")), "/var/lib/selvage/store", "store", "page: 127.0.0.1:8080\n", "", "metrics: 127.0.0.1:9102\n", "")
+	for _, holder := range []string{"one", "two"} {
+		write(t, dir, config(holder+".yaml"), fmt.Sprintf(`{fleet: f, dimension: 2, bus: {url: "tls://127.0.0.1:%s", ca: ca.crt}, keys: {seed: base.seed, roster: robots.yaml}, holder: %s, log: json}`, port, holder))
+	}
+	leads := func(holder string) func(map[string]any) bool { // the term is 1 again: nobody was there to be told of the first one
+		return func(line map[string]any) bool {
+			return line["message"] == "leads" && line["holder"] == holder && line["term"] == 1.0
+		}
+	}
+	bus := begin(t, dir, "bus", config("base.yaml"))
+	bus.says(0, "that it is open", message("the bus is open"))
+	one := begin(t, dir, "coordinate", config("one.yaml"))
+	one.says(0, "that it leads", leads("one"))
+	two := begin(t, dir, "coordinate", config("two.yaml"))
+	two.says(0, "that it is connected", message("the link is up"))
+	one.stop()
+	two.says(0, "that it leads", leads("two"))
+	two.stop()
+	bus.stop()
+}
