@@ -23,6 +23,7 @@ type joint struct {
 	marks   *posegraph.MarkCliques                       // nil without marks
 	factor  []int                                        // usable tie -> factor of its batch, -1 when it has no say here
 
+	priors   *posegraph.PointPriors // of the control points; nil where they hold nothing
 	points   []point
 	pointsOf [][]int32 // unit -> its points
 	solver   *posegraph.Solver

@@ -232,6 +232,7 @@ func (c *Coordinator) addControl(j *joint, w *weighed) {
 		return
 	}
 	priors := j.graph.AddPointPriors()
+	j.priors = priors
 	for k := range j.points {
 		p := &j.points[k]
 		m := c.marks[p.mark]
@@ -293,6 +294,7 @@ type PlacedMark struct {
 	Cov      lie.Mat3   // of At, m^2
 	Sessions int        // that know it
 	Known    [3]float64 // for a control or check mark: its coordinates
+	Doubt    float64    // test statistic of a control mark's coordinates against all else, over its bound: beyond 1 they contradict it
 }
 
 // Marks returns the marks of the newest epoch, by name and then in the order of the islands.
@@ -318,7 +320,7 @@ func (c *Coordinator) Marks() ([]PlacedMark, error) {
 			x.Cov[8] = 0
 		}
 		if m := c.marks[p.mark]; m != nil {
-			x.Role, x.Known = m.Role, m.At
+			x.Role, x.Known, x.Doubt = m.Role, m.At, c.doubt(j, int32(k), sigma)
 		}
 		out = append(out, x)
 	}

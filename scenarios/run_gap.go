@@ -1,6 +1,7 @@
 package scenarios
 
 import (
+	"cmp"
 	"fmt"
 	"math"
 	"slices"
@@ -96,8 +97,8 @@ func (r *Run) gaps() ([]Gap, error) {
 		g := Gap{Island: name}
 		in := func(robot string, session uint32) bool { return islandOf[unit{robot, session}] == name }
 		part := &survey.Survey{Meta: s.Meta, Marks: slices.Concat(known.Marks, more)}
-		if name != coordinator.ControlDatum { // its control points do not hold it
-			for i := range part.Marks {
+		for i := range part.Marks {
+			if name != coordinator.ControlDatum { // its control points do not hold it
 				part.Marks[i].Role = survey.PlainMark
 			}
 		}
@@ -151,6 +152,21 @@ func (r *Run) sharedMarks() (map[string]map[string][3]float64, error) {
 		}
 	}
 	return out, err
+}
+
+// doubted names the control points whose coordinates contradict all else, the worst first.
+func (r *Run) doubted() (names []string) {
+	placed, err := r.Coordinator.Marks()
+	if err != nil {
+		return nil
+	}
+	slices.SortStableFunc(placed, func(a, b coordinator.PlacedMark) int { return cmp.Compare(b.Doubt, a.Doubt) })
+	for i := range placed {
+		if placed[i].Doubt > 1 {
+			names = append(names, placed[i].Mark)
+		}
+	}
+	return names
 }
 
 func keep[T any](all []T, which func(*T) bool) (out []T) {

@@ -145,6 +145,10 @@ func (r *Run) attention(s *Score, places []place, truth []bool) []string {
 			out = append(out, fmt.Sprintf("%s does not share the datum: %s.", x.ID, r.whyApart(i, places)))
 		}
 	}
+	if names := r.doubted(); len(names) > 0 {
+		out = append(out, "Coordinates of control points contradict all else, the worst first: "+strings.Join(names, ", ")+
+			". They hold the datum, so the map is bent wherever they are wrong: correct marks.csv, or look at what selvage audit says of them.")
+	}
 	out = append(out, misled(s)...)
 	for _, p := range r.singles() {
 		what := "a wrong one would not show"
