@@ -91,7 +91,7 @@ func TestNothingIsLostWhileTheLinkIsDown(t *testing.T) {
 	sent, warnings := runOutbox(t, 2, l, func(o *Outbox[string, string]) {
 		o.Put("a", "1")
 		o.Put("b", "1")
-		pass(10 * outboxRest)
+		pass(10*outboxRest + outboxRest/2) // between two attempts
 		o.Put("a", "2")
 		o.Put("c", "1")
 		l.mu.Lock()
