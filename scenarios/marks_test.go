@@ -45,7 +45,7 @@ func TestSightsDrawn(t *testing.T) {
 				place[markName(i)] = p
 			}
 			g := posegraph.New(3*(sc.Dimension()-1), nil)
-			one := g.AddSightings(senses[sightKinds[kind]])
+			one := g.AddSightings(adjust.SenseOf(sightKinds[kind]))
 			sum, freedoms, wrong, all := 0.0, 0, 0, 0
 			judge := func(robot string, from lie.SE3, point [3]float64, x *survey.Sight, isTrue bool) {
 				all++
@@ -57,7 +57,7 @@ func TestSightsDrawn(t *testing.T) {
 				if err != nil {
 					t.Fatal(err)
 				}
-				mount, err := mounting(s, robot, x.Sensor)
+				mount, err := adjust.Mounting(s, robot, x.Sensor)
 				if err != nil {
 					t.Fatal(err)
 				}

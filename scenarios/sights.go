@@ -7,15 +7,9 @@ import (
 	"selvage/coordinator"
 	"selvage/internal/adjust"
 	"selvage/internal/lie"
-	"selvage/internal/posegraph"
 	"selvage/internal/survey"
 	"selvage/msgs"
 )
-
-var senses = map[survey.Kind]posegraph.Sense{
-	survey.Position: posegraph.Position, survey.RangeBearing: posegraph.RangeBearing,
-	survey.Range: posegraph.Range, survey.Bearing: posegraph.Bearing,
-}
 
 // sightOf turns what a robot has seen into what its agent takes.
 func sightOf(s *survey.Survey, robot string, kind survey.Kind, x *survey.Sight) (agent.Sight, error) {
@@ -23,23 +17,8 @@ func sightOf(s *survey.Survey, robot string, kind survey.Kind, x *survey.Sight) 
 	if err != nil {
 		return agent.Sight{}, err
 	}
-	mount, err := mounting(s, robot, x.Sensor)
-	return agent.Sight{Sense: senses[kind], Value: x.Value, Info: info, Mount: mount}, err
-}
-
-// mounting returns the pose of a mounting in base_link of its robot; that of base_link itself has no name.
-func mounting(s *survey.Survey, robot, name string) (lie.SE3, error) {
-	for i := range s.Meta.Robots {
-		if m := &s.Meta.Robots[i]; m.ID == robot {
-			if x, known := m.MountPose(name); known {
-				return adjust.Pose(x), nil
-			}
-		}
-	}
-	if name == "" {
-		return lie.Identity(), nil
-	}
-	return lie.SE3{}, fmt.Errorf("robot %s has no mounting %q", robot, name)
+	mount, err := adjust.Mounting(s, robot, x.Sensor)
+	return agent.Sight{Sense: adjust.SenseOf(kind), Value: x.Value, Info: info, Mount: mount}, err
 }
 
 // sightingEvent is a sighting of a mark as its agent takes it.
@@ -68,7 +47,7 @@ func tieEvent(s *survey.Survey, t *survey.Tie) (agent.Event, error) {
 	x, err := sightOf(s, t.FromRobot, t.Kind, &t.Sight)
 	if err == nil {
 		var target lie.SE3
-		target, err = mounting(s, t.ToRobot, t.Sight.Target)
+		target, err = adjust.Mounting(s, t.ToRobot, t.Sight.Target)
 		x.Spot = target.T
 	}
 	if err != nil {

@@ -57,7 +57,7 @@ func (p *Problem) addSight(s *survey.Survey, robot string, kind survey.Kind, sig
 	if err != nil {
 		return err
 	}
-	mount, err := mounting(s, robot, sight.Sensor)
+	mount, err := Mounting(s, robot, sight.Sensor)
 	if err != nil {
 		return err
 	}
@@ -66,7 +66,8 @@ func (p *Problem) addSight(s *survey.Survey, robot string, kind survey.Kind, sig
 	return nil
 }
 
-func mounting(s *survey.Survey, robot, name string) (lie.SE3, error) {
+// Mounting returns the pose in base_link of a mounting of a robot, by its name; without a name, of base_link itself.
+func Mounting(s *survey.Survey, robot, name string) (lie.SE3, error) {
 	for i := range s.Meta.Robots {
 		if m := &s.Meta.Robots[i]; m.ID == robot {
 			if x, ok := m.MountPose(name); ok {
@@ -83,7 +84,7 @@ func mounting(s *survey.Survey, robot, name string) (lie.SE3, error) {
 // addEncounter notes tie k, which sees another robot.
 func (p *Problem) addEncounter(s *survey.Survey, k int, from, to int32) error {
 	t := &s.Ties[k]
-	target, err := mounting(s, t.ToRobot, t.Sight.Target)
+	target, err := Mounting(s, t.ToRobot, t.Sight.Target)
 	if err != nil {
 		return err
 	}
